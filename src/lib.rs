@@ -1,0 +1,14 @@
+//! truewidth corrects scanning-probe height maps for the finite probe tip and measures
+//! dimensions on them, as scanned and corrected, with uncertainties that hold.
+
+#![deny(missing_docs)]
+
+pub mod error;
+pub mod files;
+pub mod heightmap;
+pub mod leveling;
+pub mod morphology;
+pub mod progress;
+pub mod units;
+
+pub use error::{Error, ErrorKind, Result};

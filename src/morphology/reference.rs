@@ -1,0 +1,108 @@
+//! The plain twins: obviously right, slow.
+
+use super::Contacts;
+use super::certainty::{BOUNDED, NEVER, TOUCHED, VOID};
+use ndarray::{Array2, ArrayView2};
+
+/// Every tip cell inside the tip as `(dr, dc, p)`, row-major.
+fn cells(tip: ArrayView2<f32>) -> Vec<(isize, isize, f32)> {
+    let (cr, cc) = (tip.nrows() as isize / 2, tip.ncols() as isize / 2);
+    tip.indexed_iter()
+        .filter(|(_, p)| p.is_finite())
+        .map(|((i, j), &p)| (i as isize - cr, j as isize - cc, p))
+        .collect()
+}
+
+fn get<T: Copy>(map: ArrayView2<T>, r: isize, c: isize) -> Option<T> {
+    (r >= 0 && c >= 0)
+        .then(|| map.get((r as usize, c as usize)).copied())
+        .flatten()
+}
+
+pub(super) fn dilate(surface: ArrayView2<f32>, tip: ArrayView2<f32>) -> Array2<f32> {
+    contacts(surface, tip).heights
+}
+
+pub(super) fn erode(scan: ArrayView2<f32>, tip: ArrayView2<f32>) -> Array2<f32> {
+    let cells = cells(tip);
+    Array2::from_shape_fn(scan.dim(), |(r, c)| {
+        cells
+            .iter()
+            .filter_map(|&(dr, dc, p)| Some(get(scan, r as isize - dr, c as isize - dc)? - p))
+            .filter(|v| !v.is_nan())
+            .reduce(f32::min)
+            .unwrap_or(f32::NAN)
+    })
+}
+
+pub(super) fn contacts(surface: ArrayView2<f32>, tip: ArrayView2<f32>) -> Contacts {
+    let mut cells = cells(tip);
+    // A stable sort keeps row-major order among equals; a later cell must win by more.
+    cells.sort_by_key(|&(dr, dc, _)| dr * dr + dc * dc);
+    let best = |r: usize, c: usize| {
+        let mut best = (f32::NAN, [i16::MIN; 2]);
+        for &(dr, dc, p) in &cells {
+            if let Some(s) = get(surface, r as isize + dr, c as isize + dc) {
+                let v = s + p;
+                if v > best.0 || (best.0.is_nan() && !v.is_nan()) {
+                    best = (v, [dr as i16, dc as i16]);
+                }
+            }
+        }
+        best
+    };
+    let both = Array2::from_shape_fn(surface.dim(), |(r, c)| best(r, c));
+    Contacts {
+        heights: both.mapv(|b| b.0),
+        offsets: both.mapv(|b| b.1),
+    }
+}
+
+pub(super) fn certainty_map(
+    surface: ArrayView2<f32>,
+    scan: ArrayView2<f32>,
+    tip: ArrayView2<f32>,
+    tolerance: f32,
+) -> Array2<u8> {
+    let cells = cells(tip);
+    let mut map = surface.mapv(|s| if s.is_nan() { VOID } else { NEVER });
+    for ((r, c), &height) in scan.indexed_iter() {
+        if height.is_nan() {
+            continue;
+        }
+        let touched: Vec<_> = cells
+            .iter()
+            .map(|&(dr, dc, p)| (r as isize + dr, c as isize + dc, p))
+            .filter(|&(sr, sc, p)| {
+                get(surface, sr, sc).is_some_and(|s| s + p >= height - tolerance)
+            })
+            .collect();
+        let value = if touched.len() == 1 { TOUCHED } else { BOUNDED };
+        for (sr, sc, _) in touched {
+            let cell = &mut map[(sr as usize, sc as usize)];
+            *cell = (*cell).max(value);
+        }
+    }
+    map
+}
+
+pub(super) fn edge_leaning(
+    scan: ArrayView2<f32>,
+    surface: ArrayView2<f32>,
+    tip: ArrayView2<f32>,
+) -> Array2<bool> {
+    let cells = cells(tip);
+    let lowest = scan
+        .iter()
+        .copied()
+        .filter(|z| !z.is_nan())
+        .fold(f32::INFINITY, f32::min);
+    Array2::from_shape_fn(surface.dim(), |(r, c)| {
+        let here = surface[(r, c)];
+        cells.iter().any(|&(dr, dc, p)| {
+            let unseen = get(scan, r as isize - dr, c as isize - dc).is_none_or(f32::is_nan);
+            // A void surface pixel leans on nothing; NaN compares false.
+            unseen && lowest - p < here
+        })
+    })
+}
