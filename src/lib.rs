@@ -3,12 +3,15 @@
 
 #![deny(missing_docs)]
 
+pub mod dimensions;
 pub mod error;
 pub mod files;
 pub mod heightmap;
 pub mod leveling;
 pub mod morphology;
 pub mod progress;
+pub mod tip;
+pub mod uncertainty;
 pub mod units;
 
 pub use error::{Error, ErrorKind, Result};

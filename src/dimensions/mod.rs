@@ -1,0 +1,179 @@
+//! Dimensions, as scanned and corrected. One small file per kind of measurand.
+
+use crate::error::Result;
+use crate::heightmap::{HeightMap, Region};
+use crate::progress::Progress;
+use crate::tip::Tip;
+use crate::uncertainty::Component;
+use ndarray::ArrayView2;
+use serde::{Deserialize, Serialize};
+
+/// What kind of thing is measured.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Kind {
+    /// Height between a feature's top and its surroundings (ISO 5436-1).
+    StepHeight,
+    /// Width of a ridge or a trench at height fractions.
+    LineWidth,
+    /// Period of a grating.
+    Pitch,
+    /// Heights and diameters of particles on a flat.
+    Particle,
+    /// Areal texture parameters (ISO 25178-2).
+    Texture,
+}
+
+/// Which way a line or step is crossed.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[serde(rename_all = "lowercase")]
+pub enum Axis {
+    /// Crossed along x: the line runs along y.
+    X,
+    /// Crossed along y: the line runs along x.
+    Y,
+}
+
+/// One measurand asked for: a `[[dimension]]` entry of the job file.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case", deny_unknown_fields)]
+pub struct Request {
+    /// Name given by the user.
+    pub name: String,
+    /// Kind of measurand.
+    pub kind: Kind,
+    /// Where; the whole scan when absent.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub region: Option<Region>,
+    /// Height fractions (0 bottom, 1 top), line width only; absent = 0.5.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub at: Vec<f64>,
+    /// Which way it is crossed; found from the data when absent.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub across: Option<Axis>,
+}
+
+/// Relative standard uncertainties of the axes.
+#[derive(Debug, Clone, Copy, PartialEq, Default, Serialize, Deserialize)]
+#[serde(default, deny_unknown_fields)]
+pub struct Calibration {
+    /// Of x.
+    pub x: f64,
+    /// Of y.
+    pub y: f64,
+    /// Of z.
+    pub z: f64,
+}
+
+/// What the tip is known to be, for the corrected column.
+#[derive(Debug, Clone, Copy)]
+pub struct Corrected<'a> {
+    /// The tip.
+    pub tip: &'a Tip,
+    /// Reconstruction with the tip.
+    pub surface: &'a HeightMap,
+    /// Reconstruction with the sharper tip of the band (an upper bound of the surface), if any.
+    pub surface_upper: Option<&'a HeightMap>,
+    /// Reconstruction with the blunter tip of the band (a lower bound where touched), if any.
+    pub surface_lower: Option<&'a HeightMap>,
+    /// Certainty of each surface pixel, see [`crate::morphology::certainty`].
+    pub certainty: ArrayView2<'a, u8>,
+    /// Surface pixels that lean on the edge of the scan or on voids.
+    pub edge_leaning: ArrayView2<'a, bool>,
+    /// Whether the tip is known well enough to print a corrected value; otherwise only bounds.
+    pub identified: bool,
+    /// Standard uncertainty of the tip's heights, nm.
+    pub height_u_nm: f64,
+    /// Depth to which the tip is known, nm; `None` = all of it (a model or a file).
+    pub exercised_depth_nm: Option<f64>,
+    /// For a blind tip: it contains the sharpest feature's own radius, unknown unless stated.
+    pub contains_feature_radius: bool,
+}
+
+/// Everything a measurand may look at.
+#[derive(Debug, Clone, Copy)]
+pub struct Input<'a> {
+    /// The levelled scan.
+    pub scan: &'a HeightMap,
+    /// Its white-noise standard deviation, nm, where known.
+    pub noise_nm: Option<f64>,
+    /// Relative standard uncertainties of the axes.
+    pub calibration: Calibration,
+    /// The correction, where there is one.
+    pub corrected: Option<Corrected<'a>>,
+}
+
+/// A value with its standard uncertainty.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
+pub struct Value {
+    /// In the dimension's unit.
+    pub value: f64,
+    /// Standard uncertainty, same unit; `None` where it could not be had.
+    pub u: Option<f64>,
+}
+
+/// The corrected column. `low` and `high` enclose the truth with 95 % coverage.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
+pub struct CorrectedValue {
+    /// Best value; `None` where only bounds are known.
+    pub value: Option<f64>,
+    /// Standard uncertainty.
+    pub u: Option<f64>,
+    /// Expanded uncertainty k u.
+    #[serde(rename = "U")]
+    pub expanded: Option<f64>,
+    /// Coverage factor.
+    pub k: Option<f64>,
+    /// Lower end of the 95 % interval; `None` = no bound.
+    pub low: Option<f64>,
+    /// Upper end of the 95 % interval; `None` = no bound.
+    pub high: Option<f64>,
+}
+
+/// What the tip did to the points a dimension rests on.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize)]
+#[serde(rename_all = "lowercase")]
+pub enum Status {
+    /// The tip contacted both edges (all points the dimension rests on).
+    Touched,
+    /// It did not: the truth lies in an interval.
+    Bounded,
+}
+
+/// One result line.
+#[derive(Debug, Clone, PartialEq, Serialize)]
+pub struct Dimension {
+    /// Name given by the user, with what was found appended where one request gives several.
+    pub name: String,
+    /// Kind of measurand.
+    pub kind: Kind,
+    /// Which figure of the kind ("line width", "trench width", "Sq", "height", ...).
+    pub quantity: String,
+    /// Height fraction, where the kind has one.
+    pub at: Option<f64>,
+    /// Unit of all values: "nm", "deg", "" for a ratio.
+    pub unit: &'static str,
+    /// Off the levelled scan.
+    pub as_scanned: Option<Value>,
+    /// With the tip's effect taken off.
+    pub corrected: Option<CorrectedValue>,
+    /// Touched or bounded; `None` where there is no corrected column.
+    pub status: Option<Status>,
+    /// Quality flags, one plain sentence each; also why a value is missing.
+    pub flags: Vec<String>,
+    /// The budget of the corrected value (of the as-scanned one where there is no other).
+    pub budget: Vec<Component>,
+    /// What it assumes and the published source, one line.
+    pub assumptions: &'static str,
+    /// Where it was taken, for drawing: segments `[x1, y1, x2, y2]` in nm on the map.
+    #[serde(skip)]
+    pub marks: Vec<[f64; 4]>,
+}
+
+/// Measures `request`; one request may give several lines (height fractions, particles).
+///
+/// Errors of kind `Setting` (a region off the scan, a fraction outside 0..1); what the data do
+/// not allow is no error but a line without value and with the reason in its flags.
+pub fn measure(_input: &Input, _request: &Request, _progress: &Progress) -> Result<Vec<Dimension>> {
+    todo!()
+}

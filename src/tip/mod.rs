@@ -1,0 +1,134 @@
+//! Tip shapes: models, blind estimate, read-outs.
+//!
+//! Convention (contract of `tip.npy`): odd by odd, apex 0 at the centre, apex up, so heights are
+//! `<= 0`; `-inf` outside the tip. `shape[[c + i, c + j]]` is minus the height of the tip's surface
+//! at the lateral offset (i rows, j columns) from the apex, in the scan's own axes.
+
+pub mod blind;
+pub mod model;
+pub mod read_out;
+
+use crate::error::{Error, ErrorKind, Result};
+use crate::heightmap::{HeightMap, Pitch, Profile};
+use ndarray::{Array2, ArrayView2};
+
+/// A tip's shape on a grid, apex up and centred.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Tip {
+    shape: Array2<f32>,
+    pitch: Pitch,
+}
+
+impl Tip {
+    /// A tip from its grid (nm, apex 0 at the centre, `<= 0`; NaN and `-inf` = outside the tip).
+    ///
+    /// Errors of kind `Data`: an even or empty grid, a centre that is not 0, a height above it.
+    pub fn new(mut shape: Array2<f32>, pitch: Pitch) -> Result<Self> {
+        let (rows, columns) = shape.dim();
+        let fail = |what: String| {
+            Err(Error::new(ErrorKind::Data, what).remedy(
+                "A tip is an odd by odd grid with its apex, height 0, at the centre, \
+                 no height above it, and the pixel pitch of the scan",
+            ))
+        };
+        if rows % 2 == 0 || columns % 2 == 0 {
+            return fail(format!(
+                "a tip grid of {rows} x {columns} has no centre pixel"
+            ));
+        }
+        shape.mapv_inplace(|p| if p.is_nan() { f32::NEG_INFINITY } else { p });
+        let apex = shape[[rows / 2, columns / 2]];
+        if apex != 0.0 {
+            return fail(format!("the tip's centre pixel is at {apex} nm, not 0"));
+        }
+        if let Some(high) = shape.iter().find(|&&p| p > 0.0) {
+            return fail(format!("the tip rises to {high} nm above its apex"));
+        }
+        if !shape.is_standard_layout() {
+            shape = shape.as_standard_layout().into_owned();
+        }
+        Ok(Self {
+            shape,
+            pitch: pitch.checked()?,
+        })
+    }
+
+    /// A tip from a map read from a file; voids are outside the tip. Errors as [`Tip::new`].
+    pub fn from_map(map: &HeightMap) -> Result<Self> {
+        Self::new(map.heights().to_owned(), map.pitch())
+    }
+
+    /// The shape as a map, cells outside the tip as voids.
+    pub fn to_map(&self) -> Result<HeightMap> {
+        HeightMap::new(self.shape.clone(), self.pitch)
+    }
+
+    /// Heights in nm, `[row, col]`, apex 0 at the centre, `-inf` outside.
+    pub fn shape(&self) -> ArrayView2<'_, f32> {
+        self.shape.view()
+    }
+
+    /// Pixel pitch, nm.
+    pub fn pitch(&self) -> Pitch {
+        self.pitch
+    }
+
+    /// Full extent of the grid along x and y, nm.
+    pub fn support_nm(&self) -> [f64; 2] {
+        [
+            self.shape.ncols() as f64 * self.pitch.x,
+            self.shape.nrows() as f64 * self.pitch.y,
+        ]
+    }
+
+    /// Greatest depth below the apex of a cell inside the tip, nm.
+    pub fn depth_nm(&self) -> f64 {
+        let lowest = self
+            .shape
+            .iter()
+            .filter(|p| p.is_finite())
+            .fold(0.0f32, |a, &b| a.min(b));
+        -f64::from(lowest)
+    }
+
+    /// Shape height (`<= 0`, nm) at the lateral offset (nm) from the apex, bilinear;
+    /// NaN outside the grid or the tip.
+    pub fn height_at(&self, dx_nm: f64, dy_nm: f64) -> f32 {
+        // The apex sits at the centre of the middle pixel.
+        let [w, h] = self.support_nm();
+        match self.to_map() {
+            Ok(map) => map.height_at(w / 2.0 + dx_nm, h / 2.0 + dy_nm),
+            Err(_) => f32::NAN,
+        }
+    }
+
+    /// The profile through the apex at `azimuth_deg` (0 = along +x, 90 = along +y);
+    /// positions are signed distances from the apex.
+    pub fn profile(&self, azimuth_deg: f64) -> Profile {
+        let Ok(map) = self.to_map() else {
+            return Profile::default();
+        };
+        let [w, h] = self.support_nm();
+        let (sin, cos) = azimuth_deg.to_radians().sin_cos();
+        let reach = (w / 2.0 / cos.abs().max(1e-12)).min(h / 2.0 / sin.abs().max(1e-12));
+        let step = self.pitch.x.min(self.pitch.y);
+        let n = (reach / step).floor() as i64;
+        let position_nm: Vec<f64> = (-n..=n).map(|i| i as f64 * step).collect();
+        Profile {
+            height_nm: position_nm
+                .iter()
+                .map(|d| map.height_at(w / 2.0 + d * cos, h / 2.0 + d * sin))
+                .collect(),
+            position_nm,
+        }
+    }
+}
+
+/// The pair of tips between which the true one lies.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Band {
+    /// A tip inside the true one.
+    pub sharper: Tip,
+    /// A tip that encloses the true one.
+    pub blunter: Tip,
+}
