@@ -15,5 +15,7 @@ pub mod record;
 pub mod tip;
 pub mod uncertainty;
 pub mod units;
+#[cfg(feature = "window")]
+pub mod window;
 
 pub use error::{Error, ErrorKind, Result};
