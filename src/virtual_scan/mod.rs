@@ -67,7 +67,8 @@ impl Settings {
         let fine_points = self.padded(self.rows, self.pitch.y)
             * self.padded(self.columns, self.pitch.x)
             * (self.oversampling * self.oversampling) as f64;
-        if self.oversampling == 0 || !(self.support_nm > 0.0) || fine_points > 3e8 {
+        let good_support = self.support_nm > 0.0;
+        if self.oversampling == 0 || !good_support || fine_points > 3e8 {
             return Err(Error::new(
                 ErrorKind::Setting,
                 format!(

@@ -340,7 +340,9 @@ impl Bumps {
             (from, to) = ([0.0; 2], [0.0; 2]);
         }
         let count = |axis: usize| ((to[axis] - from[axis]) / cell).floor() + 1.0;
-        if !(count(0) * count(1) <= 1e7) || !bumps.iter().all(|b| foot(b) >= 0.0) {
+        let spread = count(0) * count(1);
+        // Written so that NaN fails.
+        if !(0.0..=1e7).contains(&spread) || !bumps.iter().all(|b| foot(b) >= 0.0) {
             return Err(Error::new(
                 ErrorKind::Data,
                 "round features with positions or sizes that cannot be used",
