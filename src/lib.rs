@@ -16,5 +16,6 @@ pub mod record;
 pub mod tip;
 pub mod uncertainty;
 pub mod units;
+pub mod virtual_scan;
 
 pub use error::{Error, ErrorKind, Result};
