@@ -342,46 +342,28 @@ fn tip_from_file(job: &Job, scan: &HeightMap) -> Result<(Tip, Option<String>)> {
     Ok((tip, sha256))
 }
 
-/// Opens a tip file for use with `scan`. A file without a scale is taken at the scan's pitch and
-/// in nm, as the contract of `tip.npy` says; one with another pitch is refused.
+/// Opens a tip file for use with `scan`: a tip without a pitch of its own has the scan's, one with
+/// another pitch is refused (kind `Data`). Other errors as [`files::read_tip_grid`], [`Tip::new`].
 pub fn open_tip(path: &std::path::Path, scan: &HeightMap) -> Result<Tip> {
-    let bare = files::OpenOptions::default();
-    let map = match files::open(path, &bare) {
-        Err(e)
-            if matches!(
-                e.kind(),
-                ErrorKind::MissingPitch | ErrorKind::MissingHeightUnit
-            ) && path
-                .extension()
-                .is_some_and(|e| e.eq_ignore_ascii_case("npy")) =>
-        {
-            files::open(
-                path,
-                &files::OpenOptions {
-                    pitch: Some(scan.pitch()),
-                    height_unit: Some("nm".to_owned()),
-                    map: None,
-                },
-            )?
-        }
-        other => other?,
-    };
-    if !map.pitch().agrees_with(scan.pitch()) {
-        let (a, b) = (map.pitch(), scan.pitch());
+    let grid = files::read_tip_grid(path, &files::OpenOptions::default())?;
+    if let Some(pitch) = grid.pitch
+        && !pitch.agrees_with(scan.pitch())
+    {
+        let wanted = scan.pitch();
         return Err(Error::new(
             ErrorKind::Data,
             format!(
                 "{}: the tip's pixel pitch is {} nm x {} nm, the scan's {} nm x {} nm",
                 path.display(),
-                a.x,
-                a.y,
-                b.x,
-                b.y
+                pitch.x,
+                pitch.y,
+                wanted.x,
+                wanted.y
             ),
         )
         .remedy("Give a tip on the scan's own grid"));
     }
-    Tip::from_map(&map).map_err(|e| e.context(path.display()))
+    Tip::new(grid.heights, scan.pitch()).map_err(|e| e.context(path.display()))
 }
 
 fn from_estimate(estimate: Estimate) -> TipResult {
