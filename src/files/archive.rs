@@ -114,7 +114,10 @@ pub mod tests {
         assert_eq!(archive.find("a.npy"), None);
         let index = archive.find("./in/a.npy").unwrap();
         assert_eq!(archive.read(index, 3).unwrap(), b"abc");
-        assert_eq!(archive.read(index, 2).unwrap_err().kind(), ErrorKind::Unsupported);
+        assert_eq!(
+            archive.read(index, 2).unwrap_err().kind(),
+            ErrorKind::Unsupported
+        );
     }
 
     #[test]
@@ -123,7 +126,10 @@ pub mod tests {
         let bytes = zip_of(&[("a", &zeros)]);
         let mut archive = Archive::open(&bytes).unwrap();
         assert!(bytes.len() < 4000);
-        assert_eq!(archive.read(0, 1 << 19).unwrap_err().kind(), ErrorKind::Unsupported);
+        assert_eq!(
+            archive.read(0, 1 << 19).unwrap_err().kind(),
+            ErrorKind::Unsupported
+        );
         assert_eq!(archive.read(0, 1 << 20).unwrap().len(), 1 << 20);
     }
 }

@@ -122,9 +122,16 @@ impl Inspection {
             self.pitch_source = Some(pitch.by);
         }
         if let Some(height) = scale.height {
-            let HeightScale { unit, nm_per_count, offset_nm } = height.value;
+            let HeightScale {
+                unit,
+                nm_per_count,
+                offset_nm,
+            } = height.value;
             self.range_nm = self.range_raw.map(|[low, high]| {
-                let (a, b) = (low * nm_per_count + offset_nm, high * nm_per_count + offset_nm);
+                let (a, b) = (
+                    low * nm_per_count + offset_nm,
+                    high * nm_per_count + offset_nm,
+                );
                 [a.min(b), a.max(b)]
             });
             self.height_unit = Some(unit);

@@ -3,8 +3,7 @@
 use super::archive::looks_like_zip;
 use crate::error::{Error, ErrorKind};
 
-const PICTURE: &str =
-    "A picture has no heights: export the height map itself, as 16-bit PNG, 32-bit TIFF, X3P or .npy";
+const PICTURE: &str = "A picture has no heights: export the height map itself, as 16-bit PNG, 32-bit TIFF, X3P or .npy";
 const EXPORT: &str = "Export the height map as TIFF, 16-bit PNG, X3P or .npy";
 
 /// First bytes, name, remedy.
@@ -24,7 +23,11 @@ const KINDS: &[(&[u8], &str, &str)] = &[
     (b"\xfd7zXZ\0", "an xz archive", "Unpack it first"),
     (b"7z\xbc\xaf\x27\x1c", "a 7z archive", "Unpack it first"),
     (b"Rar!", "a RAR archive", "Unpack it first"),
-    (b"\x28\xb5\x2f\xfd", "a Zstandard archive", "Unpack it first"),
+    (
+        b"\x28\xb5\x2f\xfd",
+        "a Zstandard archive",
+        "Unpack it first",
+    ),
     (b"\x7fELF", "a program", EXPORT),
     (b"MZ", "a program", EXPORT),
     (b"aISO-", "a surface data file (SDF, ISO 25178-71)", EXPORT),
@@ -64,7 +67,11 @@ pub fn not_read(bytes: &[u8]) -> Error {
         return unknown(name).remedy(EXPORT);
     }
     let first: Vec<String> = bytes.iter().take(8).map(|b| format!("{b:02x}")).collect();
-    unknown(&format!("of an unknown kind (it begins with {})", first.join(" "))).remedy(EXPORT)
+    unknown(&format!(
+        "of an unknown kind (it begins with {})",
+        first.join(" ")
+    ))
+    .remedy(EXPORT)
 }
 
 fn unknown(name: &str) -> Error {

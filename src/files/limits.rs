@@ -23,7 +23,11 @@ pub const MAX_EXPANSION: u64 = 3000;
 pub fn read_file(path: &Path) -> Result<Vec<u8>> {
     let meta = std::fs::metadata(path).map_err(|e| Error::io(path, e))?;
     if !meta.is_file() {
-        let what = if meta.is_dir() { "a folder" } else { "no regular file" };
+        let what = if meta.is_dir() {
+            "a folder"
+        } else {
+            "no regular file"
+        };
         return Err(Error::new(ErrorKind::Io, format!("this is {what}"))
             .remedy("Give the path of a height-map file"));
     }
@@ -32,7 +36,9 @@ pub fn read_file(path: &Path) -> Result<Vec<u8>> {
             ErrorKind::Unsupported,
             format!("the file has {} bytes", meta.len()),
         )
-        .remedy(format!("Files up to {MAX_FILE_BYTES} bytes are read: crop the scan")));
+        .remedy(format!(
+            "Files up to {MAX_FILE_BYTES} bytes are read: crop the scan"
+        )));
     }
     std::fs::read(path).map_err(|e| Error::io(path, e))
 }

@@ -121,7 +121,10 @@ impl<'a> Array<'a> {
 
     /// The numbers of a small array of any shape, a scalar included.
     pub fn few(&self, most: usize) -> Option<Vec<f64>> {
-        let count = self.shape.iter().try_fold(1usize, |a, &b| a.checked_mul(b))?;
+        let count = self
+            .shape
+            .iter()
+            .try_fold(1usize, |a, &b| a.checked_mul(b))?;
         let needed = count.checked_mul(self.kind.bytes())?;
         if count > most {
             return None;
@@ -150,7 +153,9 @@ fn dtype(text: &str) -> Result<(SampleType, Endian)> {
     };
     let quote = text.chars().next().filter(|c| matches!(c, '\'' | '"'));
     let Some(descr) = quote.and_then(|q| text[1..].split(q).next()) else {
-        return Err(unsupported("an array of records is no height map".to_owned()));
+        return Err(unsupported(
+            "an array of records is no height map".to_owned(),
+        ));
     };
     let (order, code) = match descr.split_at_checked(1) {
         Some((order @ ("<" | ">" | "=" | "|"), code)) => (order, code),
@@ -170,10 +175,16 @@ fn dtype(text: &str) -> Result<(SampleType, Endian)> {
         "f8" => SampleType::Float64,
         _ => {
             let shown: String = descr.chars().take(20).collect();
-            return Err(unsupported(format!("an array of type \"{shown}\" is no height map")));
+            return Err(unsupported(format!(
+                "an array of type \"{shown}\" is no height map"
+            )));
         }
     };
-    let endian = if order == ">" { Endian::Big } else { Endian::Little };
+    let endian = if order == ">" {
+        Endian::Big
+    } else {
+        Endian::Little
+    };
     Ok((kind, endian))
 }
 
@@ -200,7 +211,8 @@ mod tests {
 
     /// A file by hand, of any dtype and order.
     fn file(descr: &str, fortran: &str, shape: &str, data: &[u8]) -> Vec<u8> {
-        let header = format!("{{'descr': {descr}, 'fortran_order': {fortran}, 'shape': {shape}, }}");
+        let header =
+            format!("{{'descr': {descr}, 'fortran_order': {fortran}, 'shape': {shape}, }}");
         let mut bytes = MAGIC.to_vec();
         bytes.extend([1, 0]);
         bytes.extend((header.len() as u16).to_le_bytes());
@@ -219,7 +231,10 @@ mod tests {
             array.write_npy(&mut bytes).unwrap();
             let contents = Npy.contents(&bytes).unwrap();
             let head = &contents.maps[0];
-            assert_eq!((head.columns, head.rows, head.samples), (4, 3, SampleType::Float64));
+            assert_eq!(
+                (head.columns, head.rows, head.samples),
+                (4, 3, SampleType::Float64)
+            );
             let samples = Npy.read(&bytes, head).unwrap().samples;
             assert_eq!(samples, Samples::F64(c.iter().copied().collect()));
         }
@@ -259,12 +274,23 @@ mod tests {
             ("[('x', '<f4')]", "(2, 2)", ErrorKind::Unsupported),
             ("'<f4'", "(0, 2)", ErrorKind::Malformed),
             ("'<f4'", "(2, -2)", ErrorKind::Malformed),
-            ("'<f4'", "(99999999999, 99999999999)", ErrorKind::Unsupported),
+            (
+                "'<f4'",
+                "(99999999999, 99999999999)",
+                ErrorKind::Unsupported,
+            ),
         ] {
-            assert_eq!(contents(descr, shape).unwrap_err().kind(), kind, "{descr} {shape}");
+            assert_eq!(
+                contents(descr, shape).unwrap_err().kind(),
+                kind,
+                "{descr} {shape}"
+            );
         }
         let bytes = file("'<f4'", "False", "(8000, 8000)", &[0; 64]);
         let head = &Npy.contents(&bytes).unwrap().maps[0];
-        assert_eq!(Npy.read(&bytes, head).unwrap_err().kind(), ErrorKind::Malformed);
+        assert_eq!(
+            Npy.read(&bytes, head).unwrap_err().kind(),
+            ErrorKind::Malformed
+        );
     }
 }

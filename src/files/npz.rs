@@ -40,7 +40,9 @@ impl Format for Npz {
             let array = match Array::parse(&file) {
                 Ok(array) => array,
                 Err(e) => {
-                    contents.notes.push(format!("array \"{name}\" left aside: {}", e.what()));
+                    contents
+                        .notes
+                        .push(format!("array \"{name}\" left aside: {}", e.what()));
                     continue;
                 }
             };
@@ -49,7 +51,9 @@ impl Format for Npz {
                     MapHead::new(name.as_str(), index, (columns, rows), array.kind)
                 }) {
                     Ok(head) => contents.maps.push(head),
-                    Err(e) => contents.notes.push(format!("array \"{name}\" left aside: {}", e.what())),
+                    Err(e) => contents
+                        .notes
+                        .push(format!("array \"{name}\" left aside: {}", e.what())),
                 }
             } else if let Some(values) = array.few(2) {
                 companions.push((name, values));
@@ -74,7 +78,12 @@ fn state_pitch(contents: &mut Contents, companions: &[(String, Vec<f64>)]) {
     let bare: Vec<&str> = companions
         .iter()
         .map(|(name, _)| name.as_str())
-        .filter(|n| matches!(*n, "dx" | "dy" | "pitch" | "pitch_x" | "pitch_y" | "spacing"))
+        .filter(|n| {
+            matches!(
+                *n,
+                "dx" | "dy" | "pitch" | "pitch_x" | "pitch_y" | "spacing"
+            )
+        })
         .collect();
     if !bare.is_empty() {
         contents.notes.push(format!(
@@ -135,8 +144,12 @@ mod tests {
 
     fn npz(numbers: &[(&str, f64)]) -> Vec<u8> {
         let mut writer = NpzWriter::new_compressed(Cursor::new(Vec::new()));
-        writer.add_array("z", &Array2::<i16>::zeros((2, 3))).unwrap();
-        writer.add_array("other", &Array2::<f32>::ones((4, 5))).unwrap();
+        writer
+            .add_array("z", &Array2::<i16>::zeros((2, 3)))
+            .unwrap();
+        writer
+            .add_array("other", &Array2::<f32>::ones((4, 5)))
+            .unwrap();
         writer.add_array("x", &arr1(&[1.0, 2.0, 3.0])).unwrap();
         for (name, value) in numbers {
             writer.add_array(*name, &arr0(*value)).unwrap();
@@ -160,13 +173,22 @@ mod tests {
     fn a_pitch_counts_only_with_its_unit() {
         let pitch = |numbers: &[(&str, f64)]| {
             let contents = Npz.contents(&npz(numbers)).unwrap();
-            (contents.maps[0].pitch.clone().map(|p| p.value), contents.notes.len())
+            (
+                contents.maps[0].pitch.clone().map(|p| p.value),
+                contents.notes.len(),
+            )
         };
         assert_eq!(pitch(&[("dx", 2.0), ("dy", 2.0)]), (None, 1));
         assert_eq!(pitch(&[("dx_nm", 2.0)]), (None, 0));
         assert_eq!(
             pitch(&[("dx_um", 2.0), ("dy_um", 4.0)]),
-            (Some(Pitch { x: 2000.0, y: 4000.0 }), 0)
+            (
+                Some(Pitch {
+                    x: 2000.0,
+                    y: 4000.0
+                }),
+                0
+            )
         );
         assert_eq!(pitch(&[("pitch_nm", 2.0)]), (Some(Pitch::square(2.0)), 0));
         assert_eq!(pitch(&[("pitch_nm", 2.0), ("pitch_um", 1.0)]), (None, 1));

@@ -32,11 +32,14 @@ impl Format for Png {
         let info = reader.info();
         if head.samples == SampleType::Uint8 {
             contents.notes.push(
-                "8-bit grey: 256 steps of height at most, perhaps a picture rather than heights".to_owned(),
+                "8-bit grey: 256 steps of height at most, perhaps a picture rather than heights"
+                    .to_owned(),
             );
         }
         if info.animation_control.is_some_and(|a| a.num_frames > 1) {
-            contents.notes.push("an animation: its first frame is read".to_owned());
+            contents
+                .notes
+                .push("an animation: its first frame is read".to_owned());
         }
         if let Some(dims) = info.pixel_dims {
             match pitch(dims) {
@@ -62,7 +65,9 @@ impl Format for Png {
 }
 
 fn reader(bytes: &[u8]) -> Result<Reader<Cursor<&[u8]>>> {
-    let limits = Limits { bytes: WORKING_BYTES };
+    let limits = Limits {
+        bytes: WORKING_BYTES,
+    };
     let mut decoder = Decoder::new_with_limits(Cursor::new(bytes), limits);
     decoder.set_ignore_text_chunk(true);
     decoder.set_ignore_iccp_chunk(true);
@@ -80,7 +85,10 @@ fn head(reader: &Reader<Cursor<&[u8]>>, stored: usize) -> Result<MapHead> {
         (color, depth) => {
             return Err(Error::new(
                 ErrorKind::Unsupported,
-                format!("a PNG of {}-bit {color:?} is a picture, not heights", depth as u8),
+                format!(
+                    "a PNG of {}-bit {color:?} is a picture, not heights",
+                    depth as u8
+                ),
             )
             .remedy("Export the heights as 16-bit grey without transparency, or as TIFF"));
         }
@@ -148,10 +156,21 @@ mod tests {
 
     #[test]
     fn physical_size_only_where_plausible() {
-        let dims = |ppu, unit| Some(PixelDimensions { xppu: ppu, yppu: ppu, unit });
+        let dims = |ppu, unit| {
+            Some(PixelDimensions {
+                xppu: ppu,
+                yppu: ppu,
+                unit,
+            })
+        };
         let read = |dims| {
-            let contents = Png.contents(&png(BitDepth::Sixteen, &[0; 8], dims)).unwrap();
-            (contents.maps[0].pitch.clone().map(|p| p.value), contents.notes.len())
+            let contents = Png
+                .contents(&png(BitDepth::Sixteen, &[0; 8], dims))
+                .unwrap();
+            (
+                contents.maps[0].pitch.clone().map(|p| p.value),
+                contents.notes.len(),
+            )
         };
         let (pitch, notes) = read(dims(500_000_000, Unit::Meter));
         assert_eq!((pitch, notes), (Some(Pitch::square(2.0)), 0));

@@ -58,7 +58,8 @@ pub fn apply(description: &str, head: &mut MapHead) {
     if let Some(file) = file {
         let sha256 = sha256.map_or(String::new(), |s| format!(", SHA-256 {s}"));
         let scale = scale.map_or(String::new(), |s| format!(", scale from {s}"));
-        head.history.push(format!("Read from {file}{sha256}{scale}."));
+        head.history
+            .push(format!("Read from {file}{sha256}{scale}."));
     }
     head.history.extend(steps);
 }
@@ -66,7 +67,12 @@ pub fn apply(description: &str, head: &mut MapHead) {
 fn pitch(text: &str) -> Option<Pitch> {
     let (x, y) = text.split_once(',')?;
     let nm = |t: &str| t.parse::<Length>().ok().map(Length::nm);
-    Pitch { x: nm(x)?, y: nm(y)? }.checked().ok()
+    Pitch {
+        x: nm(x)?,
+        y: nm(y)?,
+    }
+    .checked()
+    .ok()
 }
 
 /// ASCII without line breaks: TIFF text is ASCII. A backslash begins an escape.
@@ -117,14 +123,20 @@ mod tests {
 
     #[test]
     fn scale_and_history_read_back() {
-        let pitch = Pitch { x: 0.1 + 0.2, y: 1.0 / 3.0 };
+        let pitch = Pitch {
+            x: 0.1 + 0.2,
+            y: 1.0 / 3.0,
+        };
         let map = HeightMap::from_fn(1, 1, pitch, |_, _| 0.0)
             .unwrap()
             .with_provenance(Provenance {
                 file: Some("dir/µ scan.x3p".into()),
                 sha256: Some("ab".into()),
                 scale_source: "X3P axes".into(),
-                steps: vec!["Levelled: tilt 0.1°\nper µm".into(), "Second = \\step".into()],
+                steps: vec![
+                    "Levelled: tilt 0.1°\nper µm".into(),
+                    "Second = \\step".into(),
+                ],
             });
         let text = describe(&map);
         assert!(text.is_ascii());

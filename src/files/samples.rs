@@ -237,14 +237,14 @@ impl Samples {
     ) -> (Vec<f32>, Option<String>) {
         let nm = |z: f64| z * scale.nm_per_count + scale.offset_nm;
         let lowest = match &self {
-            // What is stored in single precision has lost it already.
-            Self::F32(_) => None,
+            // Single precision has lost it already, and short integers never had it.
+            Self::F32(_) | Self::U8(_) | Self::I8(_) | Self::U16(_) | Self::I16(_) => None,
             other => other.statistics(void).range,
         }
         .map(|(a, b)| (nm(a).min(nm(b)), nm(a).max(nm(b))))
         .filter(|&(low, high)| {
             let rounding = low.abs().max(high.abs()) * f64::from(f32::EPSILON) / 2.0;
-            rounding > 0.01 && rounding > 1e-4 * (high - low)
+            high > low && rounding > 0.01 && rounding > 1e-4 * (high - low)
         })
         .map(|(low, _)| low);
         let step = lowest.map(|low| {
@@ -300,8 +300,14 @@ mod tests {
     fn bytes_of_both_orders() {
         let bytes = [1, 0, 0xff, 0xfe];
         let read = |kind, endian| Samples::from_bytes(kind, endian, &bytes).unwrap();
-        assert_eq!(read(SampleType::Uint16, Endian::Little), Samples::U16(vec![1, 0xfeff]));
-        assert_eq!(read(SampleType::Int16, Endian::Big), Samples::I16(vec![256, -2]));
+        assert_eq!(
+            read(SampleType::Uint16, Endian::Little),
+            Samples::U16(vec![1, 0xfeff])
+        );
+        assert_eq!(
+            read(SampleType::Int16, Endian::Big),
+            Samples::I16(vec![256, -2])
+        );
         // IEEE 754 binary16: 0x3c00 is 1, 0xc000 is -2.
         let half = Samples::from_bytes(SampleType::Float16, Endian::Big, &[0x3c, 0, 0xc0, 0]);
         assert_eq!(half.unwrap(), Samples::F32(vec![1.0, -2.0]));
@@ -330,7 +336,10 @@ mod tests {
         let samples = Samples::F32(vec![-3.4e38, 2.0]);
         assert_eq!(
             samples.statistics(Some(void)),
-            RawStatistics { range: Some((2.0, 2.0)), voids: 1 }
+            RawStatistics {
+                range: Some((2.0, 2.0)),
+                voids: 1
+            }
         );
         let (heights, _) = samples.into_heights(&scale(1.0, 0.0), Some(void));
         assert!(heights[0].is_nan() && heights[1] == 2.0);
@@ -345,7 +354,8 @@ mod tests {
             assert!((f64::from(*z) - i as f64).abs() < 1e-6, "{z}");
         }
         assert!(step.unwrap().contains("7000000"));
-        let (heights, step) = Samples::F64(vec![1000.0, 1000.05]).into_heights(&scale(1.0, 0.0), None);
+        let (heights, step) =
+            Samples::F64(vec![1000.0, 1000.05]).into_heights(&scale(1.0, 0.0), None);
         assert_eq!(heights, [1000.0, 1000.05]);
         assert_eq!(step, None);
     }
@@ -353,7 +363,13 @@ mod tests {
     #[test]
     fn nothing_but_voids_has_no_range() {
         let all_void = Samples::F64(vec![f64::NAN, f64::INFINITY]).statistics(None);
-        assert_eq!(all_void, RawStatistics { range: None, voids: 2 });
+        assert_eq!(
+            all_void,
+            RawStatistics {
+                range: None,
+                voids: 2
+            }
+        );
         assert_eq!(Samples::U8(vec![]).statistics(None).range, None);
     }
 }

@@ -97,7 +97,10 @@ fn paste(path: &Path, head: &MapHead, pitch: bool, height: bool) -> String {
             "height-unit = \"nm\""
         });
     }
-    format!("a file {name} with the line {}", lines.join(" and the line "))
+    format!(
+        "a file {name} with the line {}",
+        lines.join(" and the line ")
+    )
 }
 
 fn unit(name: &str) -> Result<HeightScale> {
@@ -191,7 +194,10 @@ mod tests {
         let (pitch, height, source) =
             required(Some(&sidecar), &options(Some(3.0), Some("nm"))).unwrap();
         assert_eq!((pitch.x, height.nm_per_count), (3.0, 1.0));
-        assert!(source.starts_with("pitch: option (overrides 4 nm, 4 nm from sidecar"), "{source}");
+        assert!(
+            source.starts_with("pitch: option (overrides 4 nm, 4 nm from sidecar"),
+            "{source}"
+        );
         assert!(source.contains("5 nm, 5 nm from file tags"), "{source}");
         assert!(source.ends_with("1 count = 1 nm"), "{source}");
         let (pitch, height, source) = required(Some(&sidecar), &options(None, None)).unwrap();
@@ -207,14 +213,24 @@ mod tests {
         let head = head(SampleType::Float32);
         let missing = |options: &OpenOptions| {
             let scale = Scale::resolve(&head, None, options).unwrap();
-            scale.required(Path::new("dir/scan.npy"), &head).unwrap_err()
+            scale
+                .required(Path::new("dir/scan.npy"), &head)
+                .unwrap_err()
         };
         let error = missing(&options(None, None));
         assert_eq!(error.kind(), ErrorKind::MissingPitch);
-        for part in ["--pitch", "--height-unit", "scan.npy.toml", "height-unit = \"nm\""] {
+        for part in [
+            "--pitch",
+            "--height-unit",
+            "scan.npy.toml",
+            "height-unit = \"nm\"",
+        ] {
             assert!(error.to_string().contains(part), "{error}");
         }
-        assert_eq!(missing(&options(None, Some("nm"))).kind(), ErrorKind::MissingPitch);
+        assert_eq!(
+            missing(&options(None, Some("nm"))).kind(),
+            ErrorKind::MissingPitch
+        );
         let error = missing(&options(Some(2.0), None));
         assert_eq!(error.kind(), ErrorKind::MissingHeightUnit);
         assert!(!error.to_string().contains("--pitch"), "{error}");

@@ -31,7 +31,10 @@ struct Keys {
 
 /// `"2 nm"` or `["2 nm", "4 nm"]` (x, y).
 #[derive(Deserialize)]
-#[serde(untagged, expecting = "pitch must be \"2 nm\" or [\"2 nm\", \"4 nm\"] (x, y)")]
+#[serde(
+    untagged,
+    expecting = "pitch must be \"2 nm\" or [\"2 nm\", \"4 nm\"] (x, y)"
+)]
 enum OneOrTwo {
     One(Length),
     Two([Length; 2]),
@@ -55,18 +58,28 @@ impl Sidecar {
     fn parse(name: &str, text: &str) -> Result<Self> {
         let keys: Keys = toml::from_str(text).map_err(|e| {
             let message = e.message().replace('`', "\"");
-            let line = e.span().map_or(1, |s| text[..s.start].lines().count().max(1));
+            let line = e
+                .span()
+                .map_or(1, |s| text[..s.start].lines().count().max(1));
             setting(format!("line {line}: {message}"))
         })?;
         let pitch = match keys.pitch {
             None => None,
             Some(OneOrTwo::One(p)) => Some(Pitch::square(p.nm()).checked()?),
-            Some(OneOrTwo::Two([x, y])) => Some(Pitch { x: x.nm(), y: y.nm() }.checked()?),
+            Some(OneOrTwo::Two([x, y])) => Some(
+                Pitch {
+                    x: x.nm(),
+                    y: y.nm(),
+                }
+                .checked()?,
+            ),
         };
         if let Some(unit) = &keys.height_unit
             && nanometres_per(unit).is_none()
         {
-            return Err(setting(format!("height-unit = \"{unit}\" is no unit of length")));
+            return Err(setting(format!(
+                "height-unit = \"{unit}\" is no unit of length"
+            )));
         }
         Ok(Self {
             name: name.to_owned(),
@@ -82,7 +95,9 @@ fn height_of(keys: &Keys) -> Result<Option<HeightScale>> {
     let mut scale = match (keys.height_scale, &keys.height_unit) {
         (Some(length), unit) => {
             if length.nm() == 0.0 {
-                return Err(setting("height-scale = \"0 nm\" makes every height the same"));
+                return Err(setting(
+                    "height-scale = \"0 nm\" makes every height the same",
+                ));
             }
             HeightScale {
                 unit: unit.clone().unwrap_or_else(|| "nm".to_owned()),
@@ -127,7 +142,9 @@ pub fn text_of(pitch: Pitch, height: &HeightScale, void: Option<f64>) -> String 
         ));
     }
     if let Some(void) = void {
-        text.push_str(&format!("# stored number of pixels without a height\nvoid = {void}\n"));
+        text.push_str(&format!(
+            "# stored number of pixels without a height\nvoid = {void}\n"
+        ));
     }
     text
 }
@@ -176,7 +193,10 @@ mod tests {
 
     #[test]
     fn written_text_reads_back() {
-        let pitch = Pitch { x: 1.0 / 3.0, y: 7.25 };
+        let pitch = Pitch {
+            x: 1.0 / 3.0,
+            y: 7.25,
+        };
         let height = HeightScale {
             unit: "nm".into(),
             nm_per_count: 0.1 / 3.0,

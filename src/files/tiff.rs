@@ -26,7 +26,9 @@ impl Format for Tiff {
     }
 
     fn recognises(&self, bytes: &[u8]) -> bool {
-        [b"II*\0", b"MM\0*", b"II+\0", b"MM\0+"].iter().any(|magic| bytes.starts_with(*magic))
+        [b"II*\0", b"MM\0*", b"II+\0", b"MM\0+"]
+            .iter()
+            .any(|magic| bytes.starts_with(*magic))
     }
 
     fn contents(&self, bytes: &[u8]) -> Result<Contents> {
@@ -56,7 +58,9 @@ impl Format for Tiff {
             }
             // A damaged later page must not hide the ones before it.
             if let Err(e) = decoder.next_image() {
-                contents.notes.push(format!("page {} cannot be read: {e}", page + 1));
+                contents
+                    .notes
+                    .push(format!("page {} cannot be read: {e}", page + 1));
                 break;
             }
         }
@@ -103,7 +107,9 @@ fn page_head(decoder: &mut Decoder<Stream<'_>>, page: usize) -> Result<MapHead> 
     };
     let tag = |decoder: &mut Decoder<Stream<'_>>, tag: Tag, default: u64| {
         let value = decoder.find_tag(tag).ok().flatten();
-        value.and_then(|v| v.into_u64_vec().ok()?.first().copied()).unwrap_or(default)
+        value
+            .and_then(|v| v.into_u64_vec().ok()?.first().copied())
+            .unwrap_or(default)
     };
     if tag(decoder, Tag::NewSubfileType, 0) & 1 == 1 {
         return Err(unsupported("a reduced copy of another page".to_owned()));
@@ -111,7 +117,8 @@ fn page_head(decoder: &mut Decoder<Stream<'_>>, page: usize) -> Result<MapHead> 
     // The decoder would flip the numbers; whether the heights are flipped nobody says.
     if tag(decoder, Tag::PhotometricInterpretation, 1) == 0 {
         return Err(unsupported(
-            "its grey scale is stored inverted (white is zero); save it with black as zero".to_owned(),
+            "its grey scale is stored inverted (white is zero); save it with black as zero"
+                .to_owned(),
         ));
     }
     let kind = match (tag(decoder, Tag::SampleFormat, 1), bits) {
@@ -127,7 +134,9 @@ fn page_head(decoder: &mut Decoder<Stream<'_>>, page: usize) -> Result<MapHead> 
         (3, 32) => SampleType::Float32,
         (3, 64) => SampleType::Float64,
         (format, bits) => {
-            return Err(unsupported(format!("{bits}-bit samples of format {format} are not read")));
+            return Err(unsupported(format!(
+                "{bits}-bit samples of format {format} are not read"
+            )));
         }
     };
     let compressed = tag(decoder, Tag::Compression, 1) != 1;

@@ -57,7 +57,8 @@ impl Tags<'_> {
         }
         // GeoTIFF 1.1, VerticalUnitsGeoKey 4099 = 9001: metre.
         if head.height.is_none() && geo_key(decoder, 4099) == Some(9001) {
-            head.height = HeightScale::of_unit("m").map(|h| Stated::new(h, "GeoTIFF vertical unit"));
+            head.height =
+                HeightScale::of_unit("m").map(|h| Stated::new(h, "GeoTIFF vertical unit"));
         }
     }
 }
@@ -110,7 +111,9 @@ fn number(value: Value) -> Option<f64> {
 fn geo_key(decoder: &mut Decoder<Stream<'_>>, key: u16) -> Option<u16> {
     let keys = decoder.find_tag(GEO_KEYS).ok()??.into_u16_vec().ok()?;
     let entries = keys.get(4..)?.as_chunks::<4>().0;
-    let entry = entries.iter().find(|e| e[0] == key && e[1] == 0 && e[2] == 1)?;
+    let entry = entries
+        .iter()
+        .find(|e| e[0] == key && e[1] == 0 && e[2] == 1)?;
     Some(entry[3])
 }
 
@@ -122,7 +125,11 @@ fn geo_pitch(decoder: &mut Decoder<Stream<'_>>, notes: &mut Vec<String>) -> Opti
         return None;
     };
     let metres = geo_key(decoder, 1024) == Some(1) && geo_key(decoder, 3076) == Some(9001);
-    let pitch = Pitch { x: x * 1e9, y: y * 1e9 }.checked();
+    let pitch = Pitch {
+        x: x * 1e9,
+        y: y * 1e9,
+    }
+    .checked();
     match pitch {
         Ok(pitch) if metres => Some(Stated::new(pitch, "GeoTIFF pixel scale")),
         _ => {
@@ -145,12 +152,21 @@ fn resolution_pitch(
     let (nm, name) = match unit {
         2.0 => (25.4e6, "inch"),
         3.0 => (1e7, "cm"),
+        // 1 per nothing is what writers put who have nothing to say.
+        _ if x == 1.0 && y == 1.0 => return None,
         _ => {
-            notes.push(format!("resolution tags {x} x {y} without a unit: not used"));
+            notes.push(format!(
+                "resolution tags {x} x {y} without a unit: not used"
+            ));
             return None;
         }
     };
-    let pitch = Pitch { x: nm / x, y: nm / y }.checked().ok()?;
+    let pitch = Pitch {
+        x: nm / x,
+        y: nm / y,
+    }
+    .checked()
+    .ok()?;
     if pitch.x.max(pitch.y) > COARSEST_TRUSTED_NM {
         notes.push(format!(
             "resolution tags {x} x {y} per {name} are a printer's or screen's: not used as the pixel pitch"

@@ -46,7 +46,10 @@ pub fn write(path: &Path, map: &HeightMap) -> Result<()> {
         _ => {
             return Err(Error::new(
                 ErrorKind::Setting,
-                format!("{}: no format is written under the ending \"{ending}\"", path.display()),
+                format!(
+                    "{}: no format is written under the ending \"{ending}\"",
+                    path.display()
+                ),
             )
             .remedy("Use .tif, .tiff, .npy or .png"));
         }
@@ -73,8 +76,11 @@ pub(super) fn npy<T: ndarray_npy::WritableElement>(values: ArrayView2<'_, T>) ->
 
 fn tiff(map: &HeightMap) -> Result<Vec<u8>> {
     let failed = |e: tiff::TiffError| {
-        Error::new(ErrorKind::Unsupported, format!("the map cannot be written as TIFF: {e}"))
-            .remedy("Write it as .npy")
+        Error::new(
+            ErrorKind::Unsupported,
+            format!("the map cannot be written as TIFF: {e}"),
+        )
+        .remedy("Write it as .npy")
     };
     let (columns, rows) = sides(map)?;
     let heights = map.heights();
@@ -95,13 +101,20 @@ fn tiff(map: &HeightMap) -> Result<Vec<u8>> {
 /// 16-bit grey and its scale: counts 1 to 65535 over the range, 0 for voids.
 fn png(map: &HeightMap) -> Result<(Vec<u8>, HeightScale)> {
     let failed = |e: png::EncodingError| {
-        Error::new(ErrorKind::Unsupported, format!("the map cannot be written as PNG: {e}"))
-            .remedy("Write it as .tif or .npy")
+        Error::new(
+            ErrorKind::Unsupported,
+            format!("the map cannot be written as PNG: {e}"),
+        )
+        .remedy("Write it as .tif or .npy")
     };
     let (columns, rows) = sides(map)?;
     let (low, high) = map.range().unwrap_or((0.0, 0.0));
     let (low, high) = (f64::from(low), f64::from(high));
-    let step = if high > low { (high - low) / 65534.0 } else { 1.0 };
+    let step = if high > low {
+        (high - low) / 65534.0
+    } else {
+        1.0
+    };
     let heights = map.heights();
     let data: Vec<u8> = heights
         .iter()
@@ -143,13 +156,20 @@ pub fn write_atomically(path: &Path, bytes: &[u8]) -> Result<()> {
     {
         return Err(Error::new(
             ErrorKind::Io,
-            format!("{}: the folder {} does not exist", path.display(), folder.display()),
+            format!(
+                "{}: the folder {} does not exist",
+                path.display(),
+                folder.display()
+            ),
         )
         .remedy("Create it first, or choose another place"));
     }
     if path.is_dir() {
-        return Err(Error::new(ErrorKind::Io, format!("{}: this is a folder", path.display()))
-            .remedy("Give the path of a file"));
+        return Err(Error::new(
+            ErrorKind::Io,
+            format!("{}: this is a folder", path.display()),
+        )
+        .remedy("Give the path of a file"));
     }
     let write = || -> std::io::Result<()> {
         let mut file = atomic_write_file::AtomicWriteFile::open(path)?;

@@ -77,9 +77,18 @@ impl Format for X3p {
             Data::None => return Err(malformed("Record3 links to no data and lists none")),
         };
         if let Some((link, md5)) = package.document.valid.clone() {
-            package.mark_invalid(&link, md5.as_deref(), (pixels, layers, head), &mut values, &mut notes)?;
+            package.mark_invalid(
+                &link,
+                md5.as_deref(),
+                (pixels, layers, head),
+                &mut values,
+                &mut notes,
+            )?;
         }
-        Ok(Raster { samples: Samples::F64(values), notes })
+        Ok(Raster {
+            samples: Samples::F64(values),
+            notes,
+        })
     }
 }
 
@@ -111,7 +120,12 @@ impl<'a> Package<'a> {
         let (index, folder) = main_entry(&archive).ok_or_else(|| malformed("no main.xml"))?;
         let xml = archive.read(index, MAX_XML)?;
         let document = Document::parse(&xml)?;
-        let mut package = Self { archive, folder, document, notes: Vec::new() };
+        let mut package = Self {
+            archive,
+            folder,
+            document,
+            notes: Vec::new(),
+        };
         package.check_main(&xml);
         Ok(package)
     }
@@ -124,12 +138,15 @@ impl<'a> Package<'a> {
             .and_then(|i| self.archive.read(i, 4096).ok())
             .map(|bytes| String::from_utf8_lossy(&bytes).into_owned());
         match stated {
-            None => self.notes.push("the checksum of main.xml is missing".to_owned()),
+            None => self
+                .notes
+                .push("the checksum of main.xml is missing".to_owned()),
             Some(text) => {
                 let stated = text.split_whitespace().next().unwrap_or("").to_owned();
                 if !stated.eq_ignore_ascii_case(&md5_hex(xml)) {
                     self.notes.push(
-                        "the MD5 checksum of main.xml does not match: it was changed after writing".to_owned(),
+                        "the MD5 checksum of main.xml does not match: it was changed after writing"
+                            .to_owned(),
                     );
                 }
             }
@@ -167,7 +184,10 @@ impl<'a> Package<'a> {
         check_md5(link, md5, &data, notes);
         check_claim(needed, data.len(), false)?;
         if data.len() > needed {
-            notes.push(format!("\"{link}\" holds {} bytes too many: left aside", data.len() - needed));
+            notes.push(format!(
+                "\"{link}\" holds {} bytes too many: left aside",
+                data.len() - needed
+            ));
         }
         let layer = &data[size * head.locator..size * (head.locator + 1)];
         Ok(Samples::from_bytes(head.samples, Endian::Little, layer)?.to_f64())
@@ -212,15 +232,18 @@ fn check_md5(link: &str, stated: Option<&str>, bytes: &[u8], notes: &mut Vec<Str
 /// Errors: `Unsupported` for point lists and irregular grids, `Malformed` without a size.
 fn check_grid(document: &Document) -> Result<(usize, usize, usize)> {
     let refuse = |what: &str| {
-        Err(Error::new(ErrorKind::Unsupported, what)
-            .remedy("Export a surface on a regular grid (feature type SUR with incremental x and y axes)"))
+        Err(Error::new(ErrorKind::Unsupported, what).remedy(
+            "Export a surface on a regular grid (feature type SUR with incremental x and y axes)",
+        ))
     };
     match document.feature.as_str() {
         "SUR" | "PRF" | "" => {}
         "PCL" => return refuse("the X3P holds a point cloud (feature type PCL)"),
         other => {
             let shown: String = other.chars().take(20).collect();
-            return refuse(&format!("the X3P holds an unknown feature type \"{shown}\""));
+            return refuse(&format!(
+                "the X3P holds an unknown feature type \"{shown}\""
+            ));
         }
     }
     let profile = document.feature == "PRF";
@@ -283,7 +306,9 @@ fn height(
     kind: SampleType,
     notes: &mut Vec<String>,
 ) -> Option<Stated<HeightScale>> {
-    let Axis { increment, offset, .. } = document.z;
+    let Axis {
+        increment, offset, ..
+    } = document.z;
     let stated = (increment.unwrap_or(1.0), offset.unwrap_or(0.0));
     let applies = kind.is_integer() || document.revision.contains("DAM1");
     if kind.is_integer() && increment.is_none_or(|i| i == 0.0) {
@@ -295,7 +320,11 @@ fn height(
             "the z axis of floats states increment {} and offset {} m: {}",
             stated.0,
             stated.1,
-            if applies { "applied" } else { "not applied, as the revision is older than ISO 25178-72 DAM1" },
+            if applies {
+                "applied"
+            } else {
+                "not applied, as the revision is older than ISO 25178-72 DAM1"
+            },
         ));
     }
     let (increment, offset) = if applies { stated } else { (1.0, 0.0) };
@@ -304,7 +333,8 @@ fn height(
         nm_per_count: increment * 1e9,
         offset_nm: offset * 1e9,
     };
-    if !scale.nm_per_count.is_finite() || !scale.offset_nm.is_finite() || scale.nm_per_count == 0.0 {
+    if !scale.nm_per_count.is_finite() || !scale.offset_nm.is_finite() || scale.nm_per_count == 0.0
+    {
         notes.push("the z axis states no usable increment".to_owned());
         return None;
     }

@@ -187,7 +187,11 @@ impl Document {
 fn decode(bytes: &[u8]) -> std::borrow::Cow<'_, str> {
     match std::str::from_utf8(bytes) {
         Ok(text) => text.into(),
-        Err(_) => bytes.iter().map(|&b| char::from(b)).collect::<String>().into(),
+        Err(_) => bytes
+            .iter()
+            .map(|&b| char::from(b))
+            .collect::<String>()
+            .into(),
     }
 }
 
