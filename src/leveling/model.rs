@@ -74,6 +74,14 @@ pub(super) struct Model {
 }
 
 impl Model {
+    /// The model that takes nothing off a map of `rows` rows.
+    pub(super) fn flat(rows: usize) -> Self {
+        Self {
+            plane: Plane::default(),
+            offsets: vec![0.0; rows],
+        }
+    }
+
     /// The model's height in row `r` of a `rows` x `columns` map at column 0, and per column.
     fn row(&self, r: usize, (rows, columns): (usize, usize)) -> (f64, f64) {
         let start = self.plane.at(from_middle(0, columns), from_middle(r, rows));
@@ -126,7 +134,16 @@ impl Model {
     }
 }
 
-/// Sums over the marked pixels of one row: `u` counts columns from the middle, `z` is the height
+/// Weight of a pixel that lies the share `t` of the half band off the model: 1 near the model,
+/// falling to 0 at the edge of the band, so that no pixel comes or goes at once and a refit
+/// settles instead of hopping.
+pub(super) fn weight(t: f64) -> f64 {
+    let outer = (2.5 * t.abs() - 1.5).clamp(0.0, 1.0);
+    let kept = 1.0 - outer * outer;
+    kept * kept
+}
+
+/// Weighted sums over the marked pixels of one row: `u` counts columns from the middle, `z` is the height
 /// above the model.
 #[derive(Debug, Clone, Copy, Default)]
 pub(super) struct RowMoments {
@@ -142,8 +159,13 @@ pub(super) struct RowMoments {
 }
 
 /// The sums of every row, in order: rows are summed apart, so any number of threads gives the
-/// same bits.
-pub(super) fn moments(z: &Array2<f64>, model: &Model, mask: &Array2<bool>) -> Vec<RowMoments> {
+/// same bits. An infinite `half_band` weighs all alike.
+pub(super) fn moments(
+    z: &Array2<f64>,
+    model: &Model,
+    mask: &Array2<bool>,
+    half_band: f64,
+) -> Vec<RowMoments> {
     let columns = z.ncols();
     (0..z.nrows())
         .into_par_iter()
@@ -158,12 +180,13 @@ pub(super) fn moments(z: &Array2<f64>, model: &Model, mask: &Array2<bool>) -> Ve
                 }
                 let u = from_middle(c, columns);
                 let h = z - start - slope * c as f64;
-                m.n += 1.0;
-                m.u += u;
-                m.uu += u * u;
-                m.z += h;
-                m.uz += u * h;
-                m.zz += h * h;
+                let w = weight(h / half_band);
+                m.n += w;
+                m.u += w * u;
+                m.uu += w * u * u;
+                m.z += w * h;
+                m.uz += w * u * h;
+                m.zz += w * h * h;
                 if let Some(before) = before {
                     m.zz_next += before * h;
                     m.pairs += 1.0;

@@ -46,8 +46,8 @@ pub(super) struct Shifts {
     /// surface along the fast axis that all features follow.
     pub lasting: Vec<RowJump>,
     /// For each row by how much it is shifted against the row before, where nearly all columns
-    /// are and no further than rows usually are.
-    usual: Vec<Option<f64>>,
+    /// are.
+    whole: Vec<Option<f64>>,
 }
 
 /// Compares each row with the row before it.
@@ -69,12 +69,9 @@ pub(super) fn shifts(z: &Array2<f64>, noise: f64) -> Shifts {
         scatter: scatter / std::f64::consts::SQRT_2,
         single: Vec::new(),
         lasting: Vec::new(),
-        usual: steps
+        whole: steps
             .iter()
-            .map(|s| {
-                s.filter(|s| s.moved >= 0.8 && (s.shift - usual).abs() <= 8.0 * scatter)
-                    .map(|s| s.shift)
-            })
+            .map(|s| s.filter(|s| s.moved >= 0.8).map(|s| s.shift))
             .collect(),
     };
     let mut r = 1;
@@ -131,14 +128,11 @@ fn step(z: &Array2<f64>, r: usize) -> Option<Step> {
     let shift = median(&mut differences);
     let mut off: Vec<f64> = differences.iter().map(|d| (d - shift).abs()).collect();
     let spread = 1.4826 * median(&mut off);
-    let near = |to: f64| {
-        let reach = (0.3 * shift.abs()).max(spread);
-        differences
-            .iter()
-            .filter(|d| (*d - to).abs() <= reach)
-            .count() as f64
-            / n as f64
+    let near = |to: f64, reach: f64| {
+        let close = differences.iter().filter(|d| (*d - to).abs() <= reach);
+        close.count() as f64 / n as f64
     };
+    let apart = 0.3 * shift.abs();
     let mean = |f: &dyn Fn((f64, f64, f64)) -> f64| pairs().map(f).sum::<f64>() / n as f64;
     let (x, h) = (mean(&|p| p.0), mean(&|p| p.1));
     let xx = mean(&|p| (p.0 - x).powi(2));
@@ -148,8 +142,8 @@ fn step(z: &Array2<f64>, r: usize) -> Option<Step> {
     Some(Step {
         shift,
         spread,
-        moved: near(shift),
-        stayed: near(0.0),
+        moved: near(shift, apart.max(3.0 * spread)),
+        stayed: near(0.0, apart),
         relief: (hh - straight).max(0.0).sqrt(),
     })
 }
@@ -198,15 +192,46 @@ pub(super) fn offsets(moments: &[RowMoments], columns: usize) -> Offsets {
 }
 
 impl Offsets {
-    /// Gives rows whose base pixels could not be told an offset from their shift against the row
-    /// before; `per_row` is the slope of the plane.
+    /// Gives one or two rows between known ones an offset from their shifts, where the way over
+    /// them from the one known row arrives at the other; `per_row` is the slope of the plane.
+    /// Longer runs may be features and stay without.
     pub(super) fn bridge(&mut self, shifts: &Shifts, per_row: f64) {
-        for r in 1..self.of_row.len() {
-            if let (None, Some(before), Some(shift)) =
-                (self.of_row[r], self.of_row[r - 1], shifts.usual[r])
-            {
-                self.of_row[r] = Some(before + shift - per_row);
+        for before in 0..self.of_row.len() {
+            let Some(mut here) = self.of_row[before] else {
+                continue;
+            };
+            let mut between = Vec::new();
+            for r in before + 1..(before + 4).min(self.of_row.len()) {
+                let Some(shift) = shifts.whole[r] else {
+                    break;
+                };
+                here += shift - per_row;
+                match self.of_row[r] {
+                    None => between.push((r, here)),
+                    Some(there) => {
+                        if (here - there).abs() <= 2.0 * STANDS_OUT * self.error {
+                            for (r, o) in between {
+                                self.of_row[r] = Some(o);
+                            }
+                        }
+                        break;
+                    }
+                }
             }
+        }
+    }
+
+    /// The offsets of the same rows, as they were settled in the end.
+    pub(super) fn replace(&mut self, settled: &[f64]) {
+        for (o, s) in self.of_row.iter_mut().zip(settled) {
+            *o = o.map(|_| *s);
+        }
+    }
+
+    /// Adds offsets that were taken off before.
+    pub(super) fn add(&mut self, before: &[f64]) {
+        for (o, b) in self.of_row.iter_mut().zip(before) {
+            *o = o.map(|o| o + b);
         }
     }
 

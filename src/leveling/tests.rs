@@ -126,7 +126,12 @@ fn a_tilted_step_keeps_its_height_and_the_base_is_at_zero() {
                 "{name}: {:?}",
                 leveled.warnings
             );
-            assert!((leveled.noise_nm.unwrap() / NOISE - 1.0).abs() < 0.1 || height > 10.0);
+            // Differences across edges push the noise figure up; they must not rule it.
+            assert!(
+                (0.9..2.5).contains(&(leveled.noise_nm.unwrap() / NOISE)),
+                "{name}: {:?}",
+                leveled.noise_nm
+            );
             bias += (high - low - height) / seeds as f64;
         }
         eprintln!("{name}: mean step error {bias:.5} nm");
@@ -180,7 +185,14 @@ fn dense_spikes_do_not_tilt_the_base() {
             mean_where(&leveled.map, |x, y| truth(x, y) == 0.0 && y < 64.0),
             mean_where(&leveled.map, |x, y| truth(x, y) == 0.0 && y >= 64.0),
         ];
-        eprintln!("spikes {seed}: {shares:?} {:?}", leveled.warnings);
+        let free = (0..N * N)
+            .filter(|i| truth((i % N) as f64 + 0.5, (i / N) as f64 + 0.5) == 0.0)
+            .count();
+        eprintln!(
+            "spikes {seed}: free {} {shares:?} {:?}",
+            free as f64 / (N * N) as f64,
+            leveled.warnings
+        );
         // Feet within the noise band lift the plane a little; a third of the noise is allowed.
         assert!(shares.iter().all(|s| s.abs() < NOISE / 3.0), "{shares:?}");
     }
