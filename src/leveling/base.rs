@@ -358,7 +358,7 @@ fn lowest_large(sorted: &[f64], width: f64) -> f64 {
 /// The dominant pile of the sorted heights, searched from `scale` upwards in width.
 ///
 /// A pile must fall off on both sides. Then it is a flat when it is no wider than the noise and
-/// holds a fifth of the pixels; or stands out twofold from what a Gaussian spread over the whole
+/// holds a fifth of the pixels (or a twentieth, if these are many); or stands out twofold from what a Gaussian spread over the whole
 /// range of heights would show; or has valleys on both sides and a seventh of all beyond them.
 /// `None` otherwise: one broad hill of heights is a rough surface.
 pub(super) fn dominant_pile(sorted: &[f64], scale: f64) -> Option<Pile> {
@@ -380,7 +380,8 @@ pub(super) fn dominant_pile(sorted: &[f64], scale: f64) -> Option<Pile> {
         let count = n as f64;
         let held = within(centre - 2.0 * s, centre + 2.0 * s);
         let expected = count * erf(2.0 * s / (2f64.sqrt() * hull));
-        let narrow = s <= 2.0 * scale && held >= 0.2 * count;
+        let narrow =
+            s <= 2.0 * scale && (held >= 0.2 * count || (held >= 0.05 * count && at(0.0) >= 25.0));
         let stands_out = held >= 2.0 * expected && held - expected >= 6.0 * expected.sqrt();
         let valley = |side: f64| (4..=8).any(|k| at(side * 0.5 * f64::from(k)) <= 0.15 * at(0.0));
         let apart = within(centre - 3.0 * s, centre + 3.0 * s) <= 0.86 * count

@@ -36,10 +36,7 @@ pub(super) fn level(scan: &Scan<'_>, always: bool, progress: &Progress) -> Resul
     model.plane = found.plane;
     let mut settled = settle(scan, model, 3.0 * found.scale, None, progress)?;
     progress.report(0.7);
-    let plane = settled.model.plane;
-    let slope = scan.slope(plane.per_column, plane.per_row);
-
-    let mut offsets = row_offsets(scan, &settled, &shifts);
+    let mut offsets = row_offsets(scan, &settled);
     let known = offsets.of_row.iter().flatten().count();
     let align = known > 0 && (always || offsets.stand_out(scan.finest));
     let mut how = String::new();
@@ -54,6 +51,7 @@ pub(super) fn level(scan: &Scan<'_>, always: bool, progress: &Progress) -> Resul
             ));
         }
         offsets.replace(&settled.model.offsets);
+        straighten(&mut settled.model, &mut offsets);
     } else {
         let singles: Vec<usize> = shifts.single.iter().map(|j| j.row).collect();
         if !singles.is_empty() {
@@ -67,6 +65,8 @@ pub(super) fn level(scan: &Scan<'_>, always: bool, progress: &Progress) -> Resul
         }
         offsets.add(&settled.model.offsets);
     }
+    let plane = settled.model.plane;
+    let slope = scan.slope(plane.per_column, plane.per_row);
     let share = model::count(&settled.base) as f64 / scan.usable() as f64;
     let step = format!(
         "levelled: robust plane on the dominant flat ({:.0} % of the pixels), \
@@ -158,7 +158,7 @@ fn by_row(core: &Array2<bool>, base: &Array2<bool>) -> Array2<bool> {
 }
 
 /// Offsets of the rows from the settled model, also of rows that drifted out of its band.
-fn row_offsets(scan: &Scan<'_>, settled: &Settled, shifts: &Shifts) -> Offsets {
+fn row_offsets(scan: &Scan<'_>, settled: &Settled) -> Offsets {
     let trusted = by_row(&settled.core, &settled.base);
     let sums = moments(&scan.z, &settled.model, &trusted, settled.half_band);
     let mut offsets = rows::offsets(&sums, scan.z.ncols());
@@ -185,8 +185,40 @@ fn row_offsets(scan: &Scan<'_>, settled: &Settled, shifts: &Shifts) -> Offsets {
             sure[to] = true;
         }
     }
-    offsets.bridge(shifts, settled.model.plane.per_row);
+    bridge(scan, settled, &mut offsets);
     offsets
+}
+
+/// Gives one or two rows without an offset, between rows with one, the median height of the
+/// columns that are base on both sides, where these agree on it. Longer runs may be features.
+fn bridge(scan: &Scan<'_>, settled: &Settled, offsets: &mut Offsets) {
+    let rows_n = offsets.of_row.len();
+    let known: Vec<usize> = (0..rows_n)
+        .filter(|&r| offsets.of_row[r].is_some())
+        .collect();
+    for pair in known
+        .windows(2)
+        .filter(|w| (2..=3).contains(&(w[1] - w[0])))
+    {
+        for r in pair[0] + 1..pair[1] {
+            let mut heights: Vec<f64> = (0..scan.z.ncols())
+                .filter(|&c| settled.base[[pair[0], c]] && settled.base[[pair[1], c]])
+                .map(|c| settled.model.residual(&scan.z, r, c))
+                .filter(|h| !h.is_nan())
+                .collect();
+            if heights.len() < rows::fewest_pixels(scan.z.ncols()) {
+                continue;
+            }
+            let middle = base::median(&mut heights);
+            let agree = heights
+                .iter()
+                .filter(|h| (*h - middle).abs() <= settled.half_band)
+                .count();
+            if 5 * agree >= 4 * heights.len() {
+                offsets.of_row[r] = Some(middle);
+            }
+        }
+    }
 }
 
 /// The offset of row `r` when it is within a third of the band from `start`, its neighbour's: the
@@ -238,6 +270,19 @@ fn align_rows(
         None => settled.half_band,
     };
     settle(scan, settled.model, half_band, Some(offsets), progress)
+}
+
+/// Moves the straight part of the offsets into the plane, where slopes are told; the model as a
+/// whole stays the same.
+fn straighten(model: &mut Model, offsets: &mut Offsets) {
+    let (middle, per_row) = offsets.line();
+    model.plane.at_centre += middle;
+    model.plane.per_row += per_row;
+    let rows_n = model.offsets.len();
+    for (r, o) in model.offsets.iter_mut().enumerate() {
+        *o -= middle + per_row * model::from_middle(r, rows_n);
+    }
+    offsets.replace(&model.offsets);
 }
 
 /// Least squares with an offset for each row and one slope along x, in closed form; returns the

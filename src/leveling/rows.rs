@@ -2,7 +2,7 @@
 
 use super::RowJump;
 use super::base::median;
-use super::model::RowMoments;
+use super::model::{RowMoments, from_middle};
 use ndarray::Array2;
 use ndarray::parallel::prelude::*;
 
@@ -45,9 +45,6 @@ pub(super) struct Shifts {
     /// Rows from which on everything is shifted, relief and all: a scanner jump, or a step of the
     /// surface along the fast axis that all features follow.
     pub lasting: Vec<RowJump>,
-    /// For each row by how much it is shifted against the row before, where nearly all columns
-    /// are.
-    whole: Vec<Option<f64>>,
 }
 
 /// Compares each row with the row before it.
@@ -69,10 +66,6 @@ pub(super) fn shifts(z: &Array2<f64>, noise: f64) -> Shifts {
         scatter: scatter / std::f64::consts::SQRT_2,
         single: Vec::new(),
         lasting: Vec::new(),
-        whole: steps
-            .iter()
-            .map(|s| s.filter(|s| s.moved >= 0.8).map(|s| s.shift))
-            .collect(),
     };
     let mut r = 1;
     while r < rows {
@@ -192,40 +185,28 @@ pub(super) fn offsets(moments: &[RowMoments], columns: usize) -> Offsets {
 }
 
 impl Offsets {
-    /// Gives one or two rows between known ones an offset from their shifts, where the way over
-    /// them from the one known row arrives at the other; `per_row` is the slope of the plane.
-    /// Longer runs may be features and stay without.
-    pub(super) fn bridge(&mut self, shifts: &Shifts, per_row: f64) {
-        for before in 0..self.of_row.len() {
-            let Some(mut here) = self.of_row[before] else {
-                continue;
-            };
-            let mut between = Vec::new();
-            for r in before + 1..(before + 4).min(self.of_row.len()) {
-                let Some(shift) = shifts.whole[r] else {
-                    break;
-                };
-                here += shift - per_row;
-                match self.of_row[r] {
-                    None => between.push((r, here)),
-                    Some(there) => {
-                        if (here - there).abs() <= 2.0 * STANDS_OUT * self.error {
-                            for (r, o) in between {
-                                self.of_row[r] = Some(o);
-                            }
-                        }
-                        break;
-                    }
-                }
-            }
-        }
-    }
-
     /// The offsets of the same rows, as they were settled in the end.
     pub(super) fn replace(&mut self, settled: &[f64]) {
         for (o, s) in self.of_row.iter_mut().zip(settled) {
             *o = o.map(|_| *s);
         }
+    }
+
+    /// The straight line through the offsets, `(at the middle row, per row)`, by least squares.
+    pub(super) fn line(&self) -> (f64, f64) {
+        let rows = self.of_row.len();
+        let known = || {
+            self.of_row
+                .iter()
+                .enumerate()
+                .filter_map(|(r, o)| o.map(|o| (from_middle(r, rows), o)))
+        };
+        let n = known().count().max(1) as f64;
+        let (v, o) = known().fold((0.0, 0.0), |s, k| (s.0 + k.0 / n, s.1 + k.1 / n));
+        let vv: f64 = known().map(|k| (k.0 - v).powi(2)).sum();
+        let vo: f64 = known().map(|k| (k.0 - v) * (k.1 - o)).sum();
+        let per_row = if vv > 0.0 { vo / vv } else { 0.0 };
+        (o - per_row * v, per_row)
     }
 
     /// Adds offsets that were taken off before.
