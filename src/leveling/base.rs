@@ -15,6 +15,9 @@ const SAMPLES: usize = 1 << 14;
 /// A flat that holds fewer of the pixels than this is no base.
 const SMALLEST_SHARE: f64 = 0.03;
 
+/// Share of the pixel pairs that must agree on a slope for it to be taken without a search.
+const AGREED: f64 = 0.4;
+
 /// Of two levels whose areas differ by no more than this share, the lower is the base.
 const NEARLY_EQUAL: f64 = 0.2;
 
@@ -118,11 +121,20 @@ pub(super) fn find(
         per_column,
         per_row,
     };
+    let (across, down) = (
+        local_slope(along_x, columns, noise),
+        local_slope(along_y, rows, scale),
+    );
+    let local = tilt(across.slope, down.slope);
+    // Where near and far pixels agree on the slope there is nothing to search: a step of a few
+    // times the noise piles up best when it is tilted away, and must not be.
+    if across.agreement.min(down.agreement) >= AGREED
+        && let Some(found) = refine(&points, local, scale)
+    {
+        return Some(found);
+    }
     let starts = [
-        tilt(
-            local_slope(along_x, columns, noise),
-            local_slope(along_y, rows, scale),
-        ),
+        local,
         tilt(median(&mut along_x(1)), median(&mut along_y(1))),
         least_squares(points.iter()),
         Plane::default(),
@@ -280,17 +292,28 @@ fn differences(samples: &Samples, f: impl Fn(usize, usize) -> Option<f64>) -> Ve
         .collect()
 }
 
+/// A slope and the share of the pixel pairs that agree with it, at the lag where fewest do.
+struct LocalSlope {
+    slope: f64,
+    agreement: f64,
+}
+
 /// The commonest slope per pixel: the mode of the differences at lag 1, sharpened by the median
 /// of those that agree with it at lags 2, 4, 8, ... up to a quarter of the map.
-fn local_slope(at_lag: impl Fn(usize) -> Vec<f64>, count: usize, noise: f64) -> f64 {
+fn local_slope(at_lag: impl Fn(usize) -> Vec<f64>, count: usize, noise: f64) -> LocalSlope {
     let width = 4.0 * std::f64::consts::SQRT_2 * noise;
     let mut steps = at_lag(1);
     if steps.is_empty() {
-        return 0.0;
+        // One row or one column has no slope across.
+        return LocalSlope {
+            slope: 0.0,
+            agreement: 1.0,
+        };
     }
     steps.sort_unstable_by(f64::total_cmp);
     let (first, n) = densest(&steps, width);
     let mut slope = steps[first..first + n].iter().sum::<f64>() / n as f64;
+    let mut agreement = n as f64 / steps.len() as f64;
     let mut lag = 2;
     while lag <= count / 4 {
         let all = at_lag(lag);
@@ -299,12 +322,13 @@ fn local_slope(at_lag: impl Fn(usize) -> Vec<f64>, count: usize, noise: f64) -> 
             .map(|d| d - slope * lag as f64)
             .filter(|d| d.abs() <= 0.75 * width)
             .collect();
+        agreement = agreement.min(agreeing.len() as f64 / all.len().max(1) as f64);
         if agreeing.len() >= 8 && 5 * agreeing.len() >= all.len() {
             slope += median(&mut agreeing) / lag as f64;
         }
         lag *= 2;
     }
-    slope
+    LocalSlope { slope, agreement }
 }
 
 pub(super) fn median(values: &mut [f64]) -> f64 {

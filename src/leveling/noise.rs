@@ -122,7 +122,8 @@ mod tests {
     #[test]
     fn dense_edges_do_not_pass_for_noise() {
         let mut gauss = Gauss::new(11);
-        for (period, worst) in [(8.0, 2.0), (16.0, 1.6), (32.0, 1.3)] {
+        // With half of them free the quartile is the median of the free: 0.674 / 0.319 = 2.12.
+        for (period, worst) in [(8.0, 2.2), (16.0, 1.6), (32.0, 1.3)] {
             let scan = map(128, 128, |x, _| {
                 let step = if (x / period).fract() < 0.5 {
                     0.0

@@ -139,6 +139,57 @@ fn a_tilted_step_keeps_its_height_and_the_base_is_at_zero() {
     }
 }
 
+/// The figures that the documentation tells; run with `--ignored --nocapture`.
+#[test]
+#[ignore = "prints figures"]
+fn figures() {
+    for noise in [0.3, 0.6] {
+        for (name, height, truth) in surfaces() {
+            let errors: Vec<f64> = (0..100)
+                .map(|seed| {
+                    let mut gauss = Gauss::new(5000 + seed);
+                    let (a, b) = (gauss.next(0.1), gauss.next(0.1));
+                    let scan = map(N, N, |x, y| {
+                        truth(x, y) + a * x + b * y + 500.0 + gauss.next(noise)
+                    });
+                    let leveled = level_by(&scan, Method::Auto);
+                    mean_where(&leveled.map, |x, y| truth(x, y) != 0.0)
+                        - mean_where(&leveled.map, |x, y| truth(x, y) == 0.0)
+                        - height
+                })
+                .collect();
+            let mean = errors.iter().sum::<f64>() / 100.0;
+            let sd = (errors.iter().map(|e| (e - mean).powi(2)).sum::<f64>() / 99.0).sqrt();
+            println!("noise {noise}, {name} {height} nm: bias {mean:.5}, sd {sd:.5} nm");
+        }
+    }
+    for n in [512, 1024, 4096] {
+        let mut gauss = Gauss::new(1);
+        let truth = grating(64.0, 30.0);
+        let scan = map(n, n, |x, y| truth(x, y) + 0.1 * x + gauss.next(0.3));
+        let offsets: Vec<f64> = (0..n).map(|_| gauss.next(0.5)).collect();
+        let rows = map(n, n, |x, y| {
+            truth(x, y) + 0.1 * x + offsets[y as usize] + gauss.next(0.3)
+        });
+        for (what, scan, method) in [
+            ("auto", &scan, Method::Auto),
+            ("auto, row noise", &rows, Method::Auto),
+            ("plane", &scan, Method::Plane),
+            ("order 5", &scan, Method::Polynomial { order: 5 }),
+        ] {
+            let start = std::time::Instant::now();
+            let leveled = level_by(scan, method);
+            println!(
+                "{n}: {what} {:?} {:?}",
+                start.elapsed(),
+                leveled.map.provenance().steps
+            );
+        }
+        let start = std::time::Instant::now();
+        println!("{n}: noise {:?} {:?}", noise(&scan), start.elapsed());
+    }
+}
+
 #[test]
 fn voids_change_nothing_of_that() {
     for (name, height, truth) in surfaces() {
