@@ -232,7 +232,7 @@ fn refine(points: &[[f64; 3]], mut plane: Plane, scale: f64) -> Option<Found> {
         let inliers = || {
             points
                 .iter()
-                .filter(|p| (p[2] - plane.at(p[0], p[1]) - pile.centre).abs() <= 3.0 * pile.scale)
+                .filter(|p| (p[2] - plane.at(p[0], p[1]) - pile.centre).abs() <= 2.0 * pile.scale)
         };
         if !spreads(points, inliers()) {
             return None;

@@ -199,7 +199,9 @@ impl<'a> Scan<'a> {
         // Without a chosen flat, offsets of whole rows speak of features as much as of the scanner.
         let (row_jumps, drift_nm) = match &self.allowed {
             Some(_) => {
-                let offsets = rows::offsets(&moments(&left, &flat, &base, f64::INFINITY), columns);
+                let sums = moments(&left, &flat, &base, f64::INFINITY);
+                let together = model::neighbour_correlation(&left, &flat, &base);
+                let offsets = rows::offsets(&sums, columns, together);
                 (offsets.jumps(self.finest), offsets.drift())
             }
             None => (rows::shifts(&left, self.finest).all(), None),

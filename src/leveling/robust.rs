@@ -112,27 +112,41 @@ fn settle(
 ) -> Result<Settled> {
     let allowed = scan.allowed.as_ref();
     let (rows_n, columns) = scan.z.dim();
+    let enough = 1e-5 * half_band;
     let mut base = model.near(&scan.z, half_band, allowed);
     let reach = model::core_reach(&scan.z, &base, allowed);
     let mut core = model::core(&scan.z, &base, allowed, reach);
-    for _ in 0..30 {
-        progress.check()?;
-        let change = match of_row {
-            None => {
-                let sums = moments(&scan.z, &model, &core, half_band);
-                let correction = model::plane_correction(&sums);
-                model.plane = model.plane.plus(correction);
-                correction.at_centre.abs()
-                    + correction.per_column.abs() * columns as f64
-                    + correction.per_row.abs() * rows_n as f64
-            }
-            Some(of_row) => {
-                let sums = moments(&scan.z, &model, &by_row(&core, &base), half_band);
-                correct_rows(&mut model, &sums, of_row)
-            }
+    for _ in 0..12 {
+        let trusted = match of_row {
+            None => None,
+            Some(_) => Some(by_row(&core, &base)),
         };
+        let mut moved = 0.0;
+        for _ in 0..8 {
+            progress.check()?;
+            let sums = moments(
+                &scan.z,
+                &model,
+                trusted.as_ref().unwrap_or(&core),
+                half_band,
+            );
+            let change = match of_row {
+                None => {
+                    let correction = model::plane_correction(&sums);
+                    model.plane = model.plane.plus(correction);
+                    correction.at_centre.abs()
+                        + correction.per_column.abs() * columns as f64
+                        + correction.per_row.abs() * rows_n as f64
+                }
+                Some(of_row) => correct_rows(&mut model, &sums, of_row),
+            };
+            moved += change;
+            if change < enough {
+                break;
+            }
+        }
         base = model.near(&scan.z, half_band, allowed);
-        if change < 1e-5 * half_band {
+        if moved < 10.0 * enough {
             break;
         }
         core = model::core(&scan.z, &base, allowed, reach);
@@ -161,7 +175,8 @@ fn by_row(core: &Array2<bool>, base: &Array2<bool>) -> Array2<bool> {
 fn row_offsets(scan: &Scan<'_>, settled: &Settled) -> Offsets {
     let trusted = by_row(&settled.core, &settled.base);
     let sums = moments(&scan.z, &settled.model, &trusted, settled.half_band);
-    let mut offsets = rows::offsets(&sums, scan.z.ncols());
+    let together = model::neighbour_correlation(&scan.z, &settled.model, &trusted);
+    let mut offsets = rows::offsets(&sums, scan.z.ncols(), together);
     if offsets.of_row.iter().all(Option::is_none) {
         return offsets;
     }

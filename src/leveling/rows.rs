@@ -126,11 +126,14 @@ fn step(z: &Array2<f64>, r: usize) -> Option<Step> {
         close.count() as f64 / n as f64
     };
     let apart = 0.3 * shift.abs();
-    let mean = |f: &dyn Fn((f64, f64, f64)) -> f64| pairs().map(f).sum::<f64>() / n as f64;
-    let (x, h) = (mean(&|p| p.0), mean(&|p| p.1));
-    let xx = mean(&|p| (p.0 - x).powi(2));
-    let xh = mean(&|p| (p.0 - x) * (p.1 - h));
-    let hh = mean(&|p| (p.1 - h).powi(2));
+    let count = n as f64;
+    let (x, h) = pairs().fold((0.0, 0.0), |s, p| (s.0 + p.0 / count, s.1 + p.1 / count));
+    let (mut xx, mut xh, mut hh) = (0.0, 0.0, 0.0);
+    for (px, ph, _) in pairs() {
+        xx += (px - x).powi(2) / count;
+        xh += (px - x) * (ph - h) / count;
+        hh += (ph - h).powi(2) / count;
+    }
     let straight = if xx > 0.0 { xh * xh / xx } else { 0.0 };
     Some(Step {
         shift,
@@ -150,32 +153,25 @@ pub(super) struct Offsets {
     pub error: f64,
 }
 
-/// The offsets from the sums of the base pixels above the model.
-pub(super) fn offsets(moments: &[RowMoments], columns: usize) -> Offsets {
+/// The offsets from the sums of the base pixels above the model; `together` is the correlation
+/// of neighbours along a row, which leaves fewer independent values (AR(1) model).
+pub(super) fn offsets(moments: &[RowMoments], columns: usize, together: f64) -> Offsets {
     let fewest = fewest_pixels(columns) as f64;
     let usable = |m: &&RowMoments| columns >= NARROWEST && m.n >= fewest;
     let of_row = moments
         .iter()
         .map(|m| Some(m).filter(usable).map(|m| m.z / m.n))
         .collect();
-    let (mut squares, mut degrees, mut products, mut pairs) = (0.0, 0.0, 0.0, 0.0);
+    let (mut squares, mut degrees) = (0.0, 0.0);
     let mut pixels: Vec<f64> = Vec::new();
     for m in moments.iter().filter(usable) {
         let mean = m.z / m.n;
         squares += m.zz - m.n * mean * mean;
         degrees += m.n - 1.0;
-        products += m.zz_next - m.pairs * mean * mean;
-        pairs += m.pairs;
         pixels.push(m.n);
     }
     let variance = if degrees > 0.0 {
         squares / degrees
-    } else {
-        0.0
-    };
-    // Neighbours along a row that move together leave fewer independent values (AR(1) model).
-    let together = if pairs > 0.0 && variance > 0.0 {
-        (products / pairs / variance).clamp(0.0, 0.95)
     } else {
         0.0
     };
