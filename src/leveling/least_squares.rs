@@ -80,6 +80,13 @@ impl Accumulator {
         self.fold();
     }
 
+    /// As few rows `[design | y]` as there are columns, which weigh as much as all observations
+    /// added so far.
+    pub(crate) fn reduced(mut self) -> DMatrix<f64> {
+        self.fold();
+        self.factor
+    }
+
     fn fold(&mut self) {
         let width = self.unknowns + 1;
         if self.pending.is_empty() {
