@@ -15,21 +15,26 @@ pub(super) struct Tile {
     pub(super) col: usize,
 }
 
-/// The map rows that a tile and a block touch together, from the first column on.
+/// Where in the padded map a tile and a block meet.
 #[derive(Clone, Copy)]
 pub(super) struct Window<'a> {
-    data: &'a [f32],
-    stride: usize,
-    /// Where it lies in the padded map.
+    field: &'a Field,
+    /// First padded row and column.
     pub(super) row: usize,
     pub(super) col: usize,
 }
 
-impl Window<'_> {
-    /// One vector of row `i`, `j` columns in.
+impl<'a> Window<'a> {
+    /// Its rows, each just as long as a vector and the block's columns need.
     #[inline(always)]
-    pub(super) fn load<S: Simd>(self, i: usize, j: usize) -> S::f32s {
-        load::<S>(&self.data[i * self.stride + j..])
+    pub(super) fn rows<S: Simd>(self) -> [&'a [f32]; WINDOW_ROWS] {
+        let stride = self.field.stride;
+        let width = S::F32_LANES + BLOCK - 1;
+        let mut rows: [&[f32]; WINDOW_ROWS] = [&[]; WINDOW_ROWS];
+        for (i, row) in rows.iter_mut().enumerate() {
+            *row = &self.field.data[(self.row + i) * stride + self.col..][..width];
+        }
+        rows
     }
 }
 
@@ -109,8 +114,7 @@ pub(super) fn search<'a, S: Simd, V: Visitor<'a, S>>(
                 continue;
             }
             let window = Window {
-                data: &field.data[i * BLOCK * field.stride + col..],
-                stride: field.stride,
+                field,
                 row: i * BLOCK,
                 col,
             };
@@ -156,8 +160,11 @@ impl<S: Simd> Raise<S> {
     pub(super) fn reached(&self, simd: S) -> [S::f32s; BLOCK] {
         let nothing = simd.splat_f32s(f32::NEG_INFINITY);
         let never = simd.splat_f32s(f32::INFINITY);
-        self.values
-            .map(|v| simd.select_f32s(simd.equal_f32s(v, nothing), never, v))
+        let mut reached = self.values;
+        for v in &mut reached {
+            *v = simd.select_f32s(simd.equal_f32s(*v, nothing), never, *v);
+        }
+        reached
     }
 }
 
@@ -177,17 +184,26 @@ impl<'a, S: Simd> Visitor<'a, S> for Raise<S> {
     #[inline(always)]
     fn visit(&mut self, simd: S, window: Window<'a>, block: &'a Block) {
         let mut values = self.values;
+        let rows = window.rows::<S>();
         for j in 0..BLOCK {
             let mut map = [simd.splat_f32s(0.0); WINDOW_ROWS];
-            for (i, row) in map.iter_mut().enumerate() {
-                *row = window.load::<S>(i, j);
+            for i in 0..WINDOW_ROWS {
+                map[i] = load::<S>(&rows[i][j..]);
             }
-            let cells = [0, 1, 2, 3].map(|i| simd.splat_f32s(block.cells[i][j]));
+            let mut cells = [simd.splat_f32s(0.0); BLOCK];
+            for i in 0..BLOCK {
+                cells[i] = simd.splat_f32s(block.cells[i][j]);
+            }
             for r in 0..BLOCK {
-                let sum = |i: usize| simd.add_f32s(map[r + i], cells[i]);
                 // Pairs first: half the chain of dependent maxima.
-                let pair = simd.max_f32s(sum(0), sum(1));
-                let other = simd.max_f32s(sum(2), sum(3));
+                let pair = simd.max_f32s(
+                    simd.add_f32s(map[r], cells[0]),
+                    simd.add_f32s(map[r + 1], cells[1]),
+                );
+                let other = simd.max_f32s(
+                    simd.add_f32s(map[r + 2], cells[2]),
+                    simd.add_f32s(map[r + 3], cells[3]),
+                );
                 values[r] = simd.max_f32s(values[r], simd.max_f32s(pair, other));
             }
         }
@@ -240,13 +256,14 @@ impl<'a, S: Simd> Visitor<'a, S> for FirstHit<S> {
     #[inline(always)]
     fn visit(&mut self, simd: S, window: Window<'a>, block: &'a Block) {
         let mut keys = self.keys;
+        let rows = window.rows::<S>();
         let never = simd.splat_f32s(f32::INFINITY);
         for j in 0..BLOCK {
             for i in 0..BLOCK {
                 let cell = simd.splat_f32s(block.cells[i][j]);
                 let rank = simd.splat_f32s(block.ranks[i][j]);
                 for r in 0..BLOCK {
-                    let sum = simd.add_f32s(window.load::<S>(r + i, j), cell);
+                    let sum = simd.add_f32s(load::<S>(&rows[r + i][j..]), cell);
                     let hit = simd.greater_than_or_equal_f32s(sum, self.targets[r]);
                     keys[r] = simd.min_f32s(keys[r], simd.select_f32s(hit, rank, never));
                 }

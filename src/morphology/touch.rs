@@ -3,7 +3,7 @@
 use super::certainty::{BOUNDED, NEVER, TOUCHED, VOID};
 use super::dilation::{Steps, Vector};
 use super::field::{BLOCK, Field, LEFT, TOP, WINDOW_ROWS};
-use super::search::{Tile, Visitor, Window, lowest, search};
+use super::search::{Tile, Visitor, Window, load, lowest, search};
 use super::tip::{Block, Order, Tip};
 use crate::error::Result;
 use crate::progress::Progress;
@@ -157,8 +157,11 @@ impl<'a, 't, S: Simd> Count<'a, 't, S> {
         let one = simd.splat_f32s(1.0);
         let touched = simd.splat_f32s(f32::from(TOUCHED));
         let bounded = simd.splat_f32s(f32::from(BOUNDED));
-        self.counts
-            .map(|n| simd.select_f32s(simd.equal_f32s(n, one), touched, bounded))
+        let mut values = self.counts;
+        for v in &mut values {
+            *v = simd.select_f32s(simd.equal_f32s(*v, one), touched, bounded);
+        }
+        values
     }
 }
 
@@ -179,11 +182,12 @@ impl<'a, S: Simd> Visitor<'a, S> for Count<'a, '_, S> {
     fn visit(&mut self, simd: S, window: Window<'a>, block: &'a Block) {
         let (zero, one) = (simd.splat_f32s(0.0), simd.splat_f32s(1.0));
         let mut found = [zero; BLOCK];
+        let rows = window.rows::<S>();
         for j in 0..BLOCK {
             for i in 0..BLOCK {
                 let cell = simd.splat_f32s(block.cells[i][j]);
                 for r in 0..BLOCK {
-                    let sum = simd.add_f32s(window.load::<S>(r + i, j), cell);
+                    let sum = simd.add_f32s(load::<S>(&rows[r + i][j..]), cell);
                     let hit = simd.greater_than_or_equal_f32s(sum, self.thresholds[r]);
                     found[r] = simd.add_f32s(found[r], simd.select_f32s(hit, one, zero));
                 }
@@ -214,12 +218,13 @@ fn mark<S: Simd>(
 ) -> [[S::f32s; BLOCK]; WINDOW_ROWS] {
     let zero = simd.splat_f32s(0.0);
     let mut marks = [[zero; BLOCK]; WINDOW_ROWS];
+    let rows = window.rows::<S>();
     for j in 0..BLOCK {
         let mut column = [zero; WINDOW_ROWS];
         for i in 0..BLOCK {
             let cell = simd.splat_f32s(block.cells[i][j]);
             for r in 0..BLOCK {
-                let sum = simd.add_f32s(window.load::<S>(r + i, j), cell);
+                let sum = simd.add_f32s(load::<S>(&rows[r + i][j..]), cell);
                 let hit = simd.greater_than_or_equal_f32s(sum, thresholds[r]);
                 let value = simd.select_f32s(hit, values[r], zero);
                 column[r + i] = simd.max_f32s(column[r + i], value);
