@@ -7,11 +7,14 @@ pub mod dimensions;
 pub mod error;
 pub mod files;
 pub mod heightmap;
+pub mod job;
 pub mod leveling;
 pub mod morphology;
 pub mod progress;
+pub mod record;
 pub mod tip;
 pub mod uncertainty;
 pub mod units;
+pub mod virtual_scan;
 
 pub use error::{Error, ErrorKind, Result};

@@ -26,3 +26,13 @@ pub fn open(_path: &Path, _options: &OpenOptions) -> Result<HeightMap> {
 pub fn write(_path: &Path, _map: &HeightMap) -> Result<()> {
     todo!()
 }
+
+/// SHA-256 of `bytes`, lower-case hex.
+pub fn sha256_hex(_bytes: &[u8]) -> String {
+    todo!()
+}
+
+/// Writes a file whole or not at all: on failure what was there before stays.
+pub fn write_atomically(_path: &Path, _bytes: &[u8]) -> Result<()> {
+    todo!()
+}

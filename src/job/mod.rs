@@ -1,0 +1,14 @@
+//! The job: its file, its ordered stages, what must be recomputed when a setting changes. The only
+//! door that the window and the command line use.
+
+mod ghost;
+mod spec;
+mod stages;
+mod worker;
+
+pub use ghost::{GhostTip, ghost_tip};
+pub use spec::{
+    Job, JobFile, LevelMethod, LevelSpec, ScanSpec, Threshold, TipFrom, TipShape, TipSpec,
+};
+pub use stages::{Outcome, Reliability, Stages, SurfaceResult, TipResult, open_tip};
+pub use worker::Worker;

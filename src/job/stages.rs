@@ -1,0 +1,482 @@
+//! The ordered stages, each computed anew only when a setting or an earlier stage changed.
+
+use super::spec::{Job, LevelSpec, ScanSpec, TipFrom, TipSpec};
+use crate::dimensions::{self, Calibration, Corrected, Dimension, Input, Request};
+use crate::error::{Error, ErrorKind, Result};
+use crate::files;
+use crate::heightmap::HeightMap;
+use crate::leveling::{self, Leveled};
+use crate::morphology::{self, certainty};
+use crate::progress::Progress;
+use crate::tip::blind::{self, Estimate};
+use crate::tip::read_out::{ReadOut, read_out};
+use crate::tip::{Band, Tip};
+use ndarray::Array2;
+use std::path::PathBuf;
+use std::sync::Arc;
+
+/// The tip stage's result.
+#[derive(Debug, Clone)]
+pub struct TipResult {
+    /// Where it came from.
+    pub from: TipFrom,
+    /// The tip.
+    pub tip: Tip,
+    /// Apex radius and half-angle.
+    pub read_out: ReadOut,
+    /// The blind estimate behind it, if it was one.
+    pub estimate: Option<Estimate>,
+    /// The band around it, if one could be had.
+    pub band: Option<Band>,
+    /// Whether it is known well enough for corrected values, not only bounds.
+    pub identified: bool,
+    /// Depth to which it is known, nm; `None` = all of it.
+    pub exercised_depth_nm: Option<f64>,
+    /// Standard uncertainty of its heights, nm.
+    pub height_u_nm: f64,
+    /// SHA-256 of the tip file, if from a file.
+    pub sha256: Option<String>,
+    /// Findings and what to do, plain sentences.
+    pub diagnosis: Vec<String>,
+}
+
+/// The surface stage's result.
+#[derive(Debug, Clone)]
+pub struct SurfaceResult {
+    /// The reconstruction: an upper bound of the surface, exact where touched.
+    pub surface: HeightMap,
+    /// Reconstruction with the sharper tip of the band.
+    pub upper: Option<HeightMap>,
+    /// Reconstruction with the blunter tip of the band.
+    pub lower: Option<HeightMap>,
+    /// Certainty, see [`certainty`].
+    pub certainty: Array2<u8>,
+    /// Pixels that lean on the edge of the scan or on voids.
+    pub edge_leaning: Array2<bool>,
+    /// Tolerance of the contact search, nm.
+    pub tolerance_nm: f64,
+    /// Fractions of the non-void pixels.
+    pub reliability: Reliability,
+}
+
+/// Fractions of the non-void surface pixels.
+#[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
+pub struct Reliability {
+    /// Touched for certain.
+    pub touched: f64,
+    /// Contacts only together with others.
+    pub bounded: f64,
+    /// Never a contact.
+    pub never: f64,
+}
+
+/// What the stages have given so far; cheap to clone.
+#[derive(Debug, Clone, Default)]
+pub struct Outcome {
+    /// The scan as opened.
+    pub scan: Option<Arc<HeightMap>>,
+    /// The levelled scan.
+    pub level: Option<Arc<Leveled>>,
+    /// The tip; `None` while under way, or where none could be had (then a warning says why).
+    pub tip: Option<Arc<TipResult>>,
+    /// The surface.
+    pub surface: Option<Arc<SurfaceResult>>,
+    /// The dimensions.
+    pub dimensions: Option<Arc<Vec<Dimension>>>,
+    /// Plain sentences on the whole.
+    pub warnings: Vec<String>,
+}
+
+/// A value kept with the settings and the upstream value it was computed from.
+#[derive(Debug)]
+struct Kept<K, T> {
+    held: Option<(K, Arc<T>)>,
+}
+
+impl<K, T> Default for Kept<K, T> {
+    fn default() -> Self {
+        Self { held: None }
+    }
+}
+
+impl<K: PartialEq, T> Kept<K, T> {
+    fn get(&mut self, key: K, compute: impl FnOnce() -> Result<T>) -> Result<Arc<T>> {
+        if let Some((held, value)) = &self.held
+            && *held == key
+        {
+            return Ok(Arc::clone(value));
+        }
+        let value = Arc::new(compute()?);
+        self.held = Some((key, Arc::clone(&value)));
+        Ok(value)
+    }
+}
+
+/// An upstream result as part of a key: equal only if it is the very same value.
+#[derive(Debug)]
+struct Same<T>(Arc<T>);
+
+impl<T> PartialEq for Same<T> {
+    fn eq(&self, other: &Self) -> bool {
+        Arc::ptr_eq(&self.0, &other.0)
+    }
+}
+
+/// When a file last changed and its size: what tells that it must be read again.
+type FileStamp = (PathBuf, Option<std::time::SystemTime>, u64);
+
+fn stamp(path: PathBuf) -> FileStamp {
+    let meta = std::fs::metadata(&path).ok();
+    let time = meta.as_ref().and_then(|m| m.modified().ok());
+    (path, time, meta.map_or(0, |m| m.len()))
+}
+
+/// Runs jobs and keeps what each stage gave for the next run.
+#[derive(Debug, Default)]
+pub struct Stages {
+    scan: Kept<(FileStamp, ScanSpec), HeightMap>,
+    level: Kept<(Same<HeightMap>, LevelSpec), Leveled>,
+    tip: Kept<(Same<Leveled>, TipSpec, Option<FileStamp>), std::result::Result<TipResult, String>>,
+    surface: Kept<(Same<Leveled>, Same<std::result::Result<TipResult, String>>), SurfaceResult>,
+    #[expect(clippy::type_complexity, reason = "a key is all a stage depends on")]
+    dimensions: Kept<
+        (
+            Same<Leveled>,
+            Option<Same<SurfaceResult>>,
+            Option<Calibration>,
+            Vec<Request>,
+        ),
+        Vec<Dimension>,
+    >,
+}
+
+impl Stages {
+    /// Runs `job` through all stages. `watch` sees the outcome after each stage.
+    ///
+    /// Errors: the scan or the tip file cannot be opened, a setting cannot be used, cancelled.
+    /// A tip that the data do not allow is no error: the outcome then has no tip and a warning.
+    pub fn run(
+        &mut self,
+        job: &Job,
+        progress: &Progress,
+        watch: &mut dyn FnMut(&Outcome),
+    ) -> Result<Outcome> {
+        let spec = &job.file;
+        spec.validate()?;
+        let mut outcome = Outcome::default();
+
+        progress.say("opening the scan");
+        let path = job.scan_path();
+        let scan = self
+            .scan
+            .get((stamp(path.clone()), spec.scan.clone()), || {
+                files::open(&path, &spec.scan.open_options()?)
+            })?;
+        outcome.scan = Some(Arc::clone(&scan));
+        watch(&outcome);
+
+        progress.check()?;
+        progress.say("levelling");
+        let level = self
+            .level
+            .get((Same(Arc::clone(&scan)), spec.level.clone()), || {
+                leveling::level(&scan, &spec.level.settings()?, &progress.part(0.05, 0.1))
+            })?;
+        outcome.warnings.extend(level.warnings.iter().cloned());
+        outcome.level = Some(Arc::clone(&level));
+        watch(&outcome);
+
+        progress.check()?;
+        progress.say("finding the tip");
+        let tip_file = spec.tip.file.as_ref().map(|f| stamp(job.folder.join(f)));
+        let tip_key = (Same(Arc::clone(&level)), spec.tip.clone(), tip_file);
+        let tip = self
+            .tip
+            .get(tip_key, || find_tip(job, &level, &progress.part(0.1, 0.7)))?;
+        match &*tip {
+            Ok(found) => outcome.tip = Some(Arc::new(found.clone())),
+            Err(reason) => outcome.warnings.push(format!("No tip: {reason}")),
+        }
+        watch(&outcome);
+
+        progress.check()?;
+        if let Ok(found) = &*tip {
+            progress.say("reconstructing the surface");
+            let key = (Same(Arc::clone(&level)), Same(Arc::clone(&tip)));
+            let surface = self
+                .surface
+                .get(key, || reconstruct(&level, found, &progress.part(0.7, 0.9)))?;
+            outcome.surface = Some(surface);
+            watch(&outcome);
+        }
+
+        progress.check()?;
+        progress.say("measuring");
+        let key = (
+            Same(Arc::clone(&level)),
+            outcome.surface.clone().map(Same),
+            spec.calibration,
+            spec.dimensions.clone(),
+        );
+        let dimensions = self.dimensions.get(key, || {
+            measure(
+                &level,
+                &outcome,
+                spec.calibration,
+                &spec.dimensions,
+                &progress.part(0.9, 1.0),
+            )
+        })?;
+        outcome.dimensions = Some(dimensions);
+        if spec.calibration.is_none() && !spec.dimensions.is_empty() {
+            outcome.warnings.push(
+                "No calibration uncertainty was stated for the axes, so none is in the budgets. \
+                 State it in [calibration] before a value is signed."
+                    .to_owned(),
+            );
+        }
+        progress.report(1.0);
+        watch(&outcome);
+        Ok(outcome)
+    }
+}
+
+/// Width of the tip grid where none is stated: enough for the flank of a usual probe over the
+/// features' height, within what the scan can hold.
+fn default_support_nm(map: &HeightMap) -> f64 {
+    let pitch = map.pitch();
+    let shorter = map.width_nm().min(map.length_nm());
+    (64.0 * pitch.x.max(pitch.y)).min(shorter / 2.0)
+}
+
+fn find_tip(
+    job: &Job,
+    level: &Leveled,
+    progress: &Progress,
+) -> Result<std::result::Result<TipResult, String>> {
+    let spec = &job.file.tip;
+    let scan = &level.map;
+    if spec.from == TipFrom::Blind {
+        let settings = blind::Settings {
+            support_nm: spec.support.map(|l| l.nm()),
+            threshold_nm: spec.fixed_threshold_nm(),
+            feature_radius_nm: spec.feature_radius.map(|l| l.nm()),
+            ..blind::Settings::default()
+        };
+        return match blind::estimate(scan, level.noise_nm, &settings, progress) {
+            Ok(estimate) => Ok(Ok(from_estimate(estimate))),
+            Err(e) if e.kind() == ErrorKind::Data => Ok(Err(e.to_string())),
+            Err(e) => Err(e),
+        };
+    }
+    let (tip, sha256) = match spec.model()? {
+        Some(model) => {
+            let support = spec
+                .support
+                .map_or_else(|| default_support_nm(scan), |l| l.nm());
+            (model.sample(support, scan.pitch())?, None)
+        }
+        None => tip_from_file(job, scan)?,
+    };
+    let height_u_nm = spec.uncertainty.map_or(0.0, |l| l.nm());
+    let mut diagnosis = Vec::new();
+    if spec.uncertainty.is_none() {
+        diagnosis.push(
+            "No uncertainty was stated for this tip: none is carried into the results. \
+             State it as [tip] uncertainty."
+                .to_owned(),
+        );
+    }
+    let read_out = read_out(&tip, tip.depth_nm(), height_u_nm);
+    Ok(Ok(TipResult {
+        from: spec.from,
+        band: None,
+        identified: true,
+        exercised_depth_nm: None,
+        height_u_nm,
+        sha256,
+        diagnosis,
+        read_out,
+        estimate: None,
+        tip,
+    }))
+}
+
+fn tip_from_file(job: &Job, scan: &HeightMap) -> Result<(Tip, Option<String>)> {
+    let Some(file) = &job.file.tip.file else {
+        return Err(
+            Error::new(ErrorKind::Setting, "[tip] from = \"file\" without file")
+                .remedy("Add file = \"tip.npy\""),
+        );
+    };
+    let path = job.folder.join(file);
+    let tip = open_tip(&path, scan)?;
+    let sha256 = std::fs::read(&path)
+        .map(|bytes| files::sha256_hex(&bytes))
+        .ok();
+    Ok((tip, sha256))
+}
+
+/// Opens a tip file for use with `scan`. A file without a scale is taken at the scan's pitch and
+/// in nm, as the contract of `tip.npy` says; one with another pitch is refused.
+pub fn open_tip(path: &std::path::Path, scan: &HeightMap) -> Result<Tip> {
+    let bare = files::OpenOptions::default();
+    let map = match files::open(path, &bare) {
+        Err(e)
+            if matches!(
+                e.kind(),
+                ErrorKind::MissingPitch | ErrorKind::MissingHeightUnit
+            ) && path
+                .extension()
+                .is_some_and(|e| e.eq_ignore_ascii_case("npy")) =>
+        {
+            files::open(
+                path,
+                &files::OpenOptions {
+                    pitch: Some(scan.pitch()),
+                    height_unit: Some("nm".to_owned()),
+                    map: None,
+                },
+            )?
+        }
+        other => other?,
+    };
+    if !map.pitch().agrees_with(scan.pitch()) {
+        let (a, b) = (map.pitch(), scan.pitch());
+        return Err(Error::new(
+            ErrorKind::Data,
+            format!(
+                "{}: the tip's pixel pitch is {} nm x {} nm, the scan's {} nm x {} nm",
+                path.display(),
+                a.x,
+                a.y,
+                b.x,
+                b.y
+            ),
+        )
+        .remedy("Give a tip on the scan's own grid"));
+    }
+    Tip::from_map(&map).map_err(|e| e.context(path.display()))
+}
+
+fn from_estimate(estimate: Estimate) -> TipResult {
+    let depth = estimate.exercised_depth_nm.unwrap_or(0.0);
+    let mut read_out = if depth > 0.0 {
+        read_out(&estimate.tip, depth, estimate.height_u_nm)
+    } else {
+        ReadOut::default()
+    };
+    if !estimate.apex_identified {
+        read_out.apex_radius = None;
+    }
+    let mut diagnosis: Vec<String> = estimate
+        .diagnosis
+        .iter()
+        .map(|d| format!("{}. {}", d.finding.trim_end_matches('.'), d.advice))
+        .collect();
+    diagnosis.extend(read_out.reasons.iter().cloned());
+    TipResult {
+        from: TipFrom::Blind,
+        tip: estimate.tip.clone(),
+        band: estimate.band.clone(),
+        identified: estimate.apex_identified,
+        exercised_depth_nm: Some(depth),
+        height_u_nm: estimate.height_u_nm,
+        sha256: None,
+        diagnosis,
+        read_out,
+        estimate: Some(estimate),
+    }
+}
+
+fn reconstruct(level: &Leveled, found: &TipResult, progress: &Progress) -> Result<SurfaceResult> {
+    let scan = level.map.heights();
+    let tip = found.tip.shape();
+    let eroded = morphology::erode(scan, tip, &progress.part(0.0, 0.2))?;
+    // Twice the noise keeps most true contacts and few false ones; the floor covers rounding.
+    let (low, high) = level.map.range().unwrap_or((0.0, 0.0));
+    let rounding = 4.0 * f64::from(f32::EPSILON) * f64::from(low.abs().max(high.abs()));
+    let tolerance_nm = (2.0 * level.noise_nm.unwrap_or(0.0))
+        .max(rounding)
+        .max(1e-4);
+    let certainty = morphology::certainty_map(
+        eroded.view(),
+        scan,
+        tip,
+        tolerance_nm as f32,
+        &progress.part(0.2, 0.5),
+    )?;
+    let edge_leaning =
+        morphology::edge_leaning(scan, eroded.view(), tip, &progress.part(0.5, 0.7))?;
+    let with = |tip: &Tip, name: &str, part: Progress| -> Result<HeightMap> {
+        let heights = morphology::erode(scan, tip.shape(), &part)?;
+        Ok(level
+            .map
+            .with_heights(heights, format!("eroded with the {name} tip of the band")))
+    };
+    let (upper, lower) = match &found.band {
+        Some(band) => (
+            Some(with(&band.sharper, "sharper", progress.part(0.7, 0.85))?),
+            Some(with(&band.blunter, "blunter", progress.part(0.85, 1.0))?),
+        ),
+        None => (None, None),
+    };
+    let count = |value: u8| certainty.iter().filter(|&&c| c == value).count() as f64;
+    let all = (certainty.len() as f64 - count(certainty::VOID)).max(1.0);
+    let reliability = Reliability {
+        touched: count(certainty::TOUCHED) / all,
+        bounded: count(certainty::BOUNDED) / all,
+        never: count(certainty::NEVER) / all,
+    };
+    Ok(SurfaceResult {
+        surface: level
+            .map
+            .with_heights(eroded, "tip effect taken off by erosion"),
+        upper,
+        lower,
+        certainty,
+        edge_leaning,
+        tolerance_nm,
+        reliability,
+    })
+}
+
+fn measure(
+    level: &Leveled,
+    outcome: &Outcome,
+    calibration: Option<Calibration>,
+    requests: &[Request],
+    progress: &Progress,
+) -> Result<Vec<Dimension>> {
+    let corrected = match (&outcome.tip, &outcome.surface) {
+        (Some(tip), Some(surface)) => Some(Corrected {
+            tip: &tip.tip,
+            surface: &surface.surface,
+            surface_upper: surface.upper.as_ref(),
+            surface_lower: surface.lower.as_ref(),
+            certainty: surface.certainty.view(),
+            edge_leaning: surface.edge_leaning.view(),
+            identified: tip.identified,
+            height_u_nm: tip.height_u_nm,
+            exercised_depth_nm: tip.exercised_depth_nm,
+            contains_feature_radius: tip.from == TipFrom::Blind,
+        }),
+        _ => None,
+    };
+    let input = Input {
+        scan: &level.map,
+        noise_nm: level.noise_nm,
+        calibration: calibration.unwrap_or_default(),
+        corrected,
+    };
+    let mut lines = Vec::new();
+    for (i, request) in requests.iter().enumerate() {
+        progress.check()?;
+        let n = requests.len() as f32;
+        let part = progress.part(i as f32 / n, (i + 1) as f32 / n);
+        let measured = dimensions::measure(&input, request, &part)
+            .map_err(|e| e.context(format!("dimension \"{}\"", request.name)))?;
+        lines.extend(measured);
+    }
+    Ok(lines)
+}

@@ -1,0 +1,27 @@
+//! The record of a job: result.json, report.html, the maps. Computes nothing.
+
+use crate::error::Result;
+use crate::job::{Job, Outcome};
+use std::path::{Path, PathBuf};
+
+/// Files written by [`write`].
+#[derive(Debug, Clone, PartialEq)]
+pub struct Written {
+    /// The folder.
+    pub folder: PathBuf,
+    /// `result.json`.
+    pub result: PathBuf,
+    /// `report.html`.
+    pub report: PathBuf,
+}
+
+/// Writes the record of `outcome` into `folder` (made where missing): `result.json`,
+/// `report.html`, `surface.npy`, `certainty.npy`, `tip.npy`; each atomically.
+pub fn write(_folder: &Path, _job: &Job, _outcome: &Outcome) -> Result<Written> {
+    todo!()
+}
+
+/// The machine-readable result, schema `truewidth.result/1`.
+pub fn result_json(_job: &Job, _outcome: &Outcome) -> serde_json::Value {
+    todo!()
+}
