@@ -3,6 +3,7 @@
 
 #![deny(missing_docs)]
 
+pub mod cli;
 pub mod dimensions;
 pub mod error;
 pub mod files;

@@ -36,3 +36,13 @@ pub fn sha256_hex(_bytes: &[u8]) -> String {
 pub fn write_atomically(_path: &Path, _bytes: &[u8]) -> Result<()> {
     todo!()
 }
+
+/// Writes a certainty map (uint8).
+pub fn write_npy_u8(_path: &Path, _marks: ndarray::ArrayView2<u8>) -> Result<()> {
+    todo!()
+}
+
+/// Writes a tip grid with `-inf` outside the tip.
+pub fn write_tip_npy(_path: &Path, _shape: ndarray::ArrayView2<f32>) -> Result<()> {
+    todo!()
+}
