@@ -3,6 +3,7 @@
 
 #![deny(missing_docs)]
 
+pub mod cli;
 pub mod dimensions;
 pub mod error;
 pub mod files;
@@ -15,6 +16,7 @@ pub mod record;
 pub mod tip;
 pub mod uncertainty;
 pub mod units;
+pub mod virtual_scan;
 #[cfg(feature = "window")]
 pub mod window;
 

@@ -1,5 +1,11 @@
 //! Dimensions, as scanned and corrected. One small file per kind of measurand.
 
+mod line_width;
+mod sections;
+mod statistics;
+mod step_height;
+mod wall;
+
 use crate::error::Result;
 use crate::heightmap::{HeightMap, Region};
 use crate::progress::Progress;
@@ -174,6 +180,36 @@ pub struct Dimension {
 ///
 /// Errors of kind `Setting` (a region off the scan, a fraction outside 0..1); what the data do
 /// not allow is no error but a line without value and with the reason in its flags.
-pub fn measure(_input: &Input, _request: &Request, _progress: &Progress) -> Result<Vec<Dimension>> {
-    todo!()
+pub fn measure(input: &Input, request: &Request, progress: &Progress) -> Result<Vec<Dimension>> {
+    progress.check()?;
+    sections::check_sizes(input)?;
+    match request.kind {
+        Kind::StepHeight => step_height::measure(input, request, progress),
+        Kind::LineWidth => line_width::measure(input, request, progress),
+        Kind::Pitch | Kind::Particle | Kind::Texture => todo!(),
+    }
+}
+
+/// A line without values yet.
+fn answer(
+    request: &Request,
+    kind: Kind,
+    quantity: &str,
+    unit: &'static str,
+    assumptions: &'static str,
+) -> Dimension {
+    Dimension {
+        name: request.name.clone(),
+        kind,
+        quantity: quantity.to_owned(),
+        at: None,
+        unit,
+        as_scanned: None,
+        corrected: None,
+        status: None,
+        flags: Vec::new(),
+        budget: Vec::new(),
+        assumptions,
+        marks: Vec::new(),
+    }
 }

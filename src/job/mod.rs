@@ -10,5 +10,5 @@ pub use ghost::{GhostTip, ghost_tip};
 pub use spec::{
     Job, JobFile, LevelMethod, LevelSpec, ScanSpec, Threshold, TipFrom, TipShape, TipSpec,
 };
-pub use stages::{Outcome, Reliability, Stages, SurfaceResult, TipResult, open_tip};
+pub use stages::{Outcome, Reliability, Stages, SurfaceResult, TipOrReason, TipResult, open_tip};
 pub use worker::Worker;

@@ -1,6 +1,6 @@
 //! The ordered stages, each computed anew only when a setting or an earlier stage changed.
 
-use super::spec::{Job, LevelSpec, ScanSpec, TipFrom, TipSpec};
+use super::spec::{Job, JobFile, LevelSpec, ScanSpec, TipFrom, TipSpec};
 use crate::dimensions::{self, Calibration, Corrected, Dimension, Input, Request};
 use crate::error::{Error, ErrorKind, Result};
 use crate::files;
@@ -131,23 +131,28 @@ fn stamp(path: PathBuf) -> FileStamp {
     (path, time, meta.map_or(0, |m| m.len()))
 }
 
+/// A tip, or why the data do not allow one.
+pub type TipOrReason = std::result::Result<TipResult, String>;
+
+type ScanKey = (FileStamp, ScanSpec);
+type LevelKey = (Same<HeightMap>, LevelSpec);
+type TipKey = (Same<Leveled>, TipSpec, Option<FileStamp>);
+type SurfaceKey = (Same<Leveled>, Same<TipOrReason>);
+type DimensionsKey = (
+    Same<Leveled>,
+    Option<Same<SurfaceResult>>,
+    Option<Calibration>,
+    Vec<Request>,
+);
+
 /// Runs jobs and keeps what each stage gave for the next run.
 #[derive(Debug, Default)]
 pub struct Stages {
-    scan: Kept<(FileStamp, ScanSpec), HeightMap>,
-    level: Kept<(Same<HeightMap>, LevelSpec), Leveled>,
-    tip: Kept<(Same<Leveled>, TipSpec, Option<FileStamp>), std::result::Result<TipResult, String>>,
-    surface: Kept<(Same<Leveled>, Same<std::result::Result<TipResult, String>>), SurfaceResult>,
-    #[expect(clippy::type_complexity, reason = "a key is all a stage depends on")]
-    dimensions: Kept<
-        (
-            Same<Leveled>,
-            Option<Same<SurfaceResult>>,
-            Option<Calibration>,
-            Vec<Request>,
-        ),
-        Vec<Dimension>,
-    >,
+    scan: Kept<ScanKey, HeightMap>,
+    level: Kept<LevelKey, Leveled>,
+    tip: Kept<TipKey, TipOrReason>,
+    surface: Kept<SurfaceKey, SurfaceResult>,
+    dimensions: Kept<DimensionsKey, Vec<Dimension>>,
 }
 
 impl Stages {
@@ -165,48 +170,31 @@ impl Stages {
         spec.validate()?;
         let mut outcome = Outcome::default();
 
-        progress.say("opening the scan");
-        let path = job.scan_path();
-        let scan = self
-            .scan
-            .get((stamp(path.clone()), spec.scan.clone()), || {
-                files::open(&path, &spec.scan.open_options()?)
-            })?;
+        let scan = self.scan(job, progress)?;
         outcome.scan = Some(Arc::clone(&scan));
         watch(&outcome);
 
-        progress.check()?;
-        progress.say("levelling");
-        let level = self
-            .level
-            .get((Same(Arc::clone(&scan)), spec.level.clone()), || {
-                leveling::level(&scan, &spec.level.settings()?, &progress.part(0.05, 0.1))
-            })?;
+        let level = self.level(job, &scan, &progress.part(0.05, 0.1))?;
         outcome.warnings.extend(level.warnings.iter().cloned());
         outcome.level = Some(Arc::clone(&level));
         watch(&outcome);
 
-        progress.check()?;
-        progress.say("finding the tip");
-        let tip_file = spec.tip.file.as_ref().map(|f| stamp(job.folder.join(f)));
-        let tip_key = (Same(Arc::clone(&level)), spec.tip.clone(), tip_file);
-        let tip = self
-            .tip
-            .get(tip_key, || find_tip(job, &level, &progress.part(0.1, 0.7)))?;
+        let tip = self.tip_of(job, &level, &progress.part(0.1, 0.7))?;
         match &*tip {
             Ok(found) => outcome.tip = Some(Arc::new(found.clone())),
             Err(reason) => outcome.warnings.push(format!("No tip: {reason}")),
         }
         watch(&outcome);
 
-        progress.check()?;
         if let Ok(found) = &*tip {
+            progress.check()?;
             progress.say("reconstructing the surface");
             let key = (Same(Arc::clone(&level)), Same(Arc::clone(&tip)));
-            let surface = self
-                .surface
-                .get(key, || reconstruct(&level, found, &progress.part(0.7, 0.9)))?;
-            outcome.surface = Some(surface);
+            let part = progress.part(0.7, 0.9);
+            outcome.surface = Some(
+                self.surface
+                    .get(key, || reconstruct(&level, found, &part))?,
+            );
             watch(&outcome);
         }
 
@@ -218,16 +206,11 @@ impl Stages {
             spec.calibration,
             spec.dimensions.clone(),
         );
-        let dimensions = self.dimensions.get(key, || {
-            measure(
-                &level,
-                &outcome,
-                spec.calibration,
-                &spec.dimensions,
-                &progress.part(0.9, 1.0),
-            )
-        })?;
-        outcome.dimensions = Some(dimensions);
+        let part = progress.part(0.9, 1.0);
+        outcome.dimensions = Some(
+            self.dimensions
+                .get(key, || measure(&level, &outcome, spec, &part))?,
+        );
         if spec.calibration.is_none() && !spec.dimensions.is_empty() {
             outcome.warnings.push(
                 "No calibration uncertainty was stated for the axes, so none is in the budgets. \
@@ -239,6 +222,52 @@ impl Stages {
         watch(&outcome);
         Ok(outcome)
     }
+
+    /// Runs `job` as far as its tip. Errors as [`Stages::run`].
+    pub fn tip(&mut self, job: &Job, progress: &Progress) -> Result<Arc<TipOrReason>> {
+        job.file.validate()?;
+        let scan = self.scan(job, progress)?;
+        let level = self.level(job, &scan, &progress.part(0.05, 0.1))?;
+        self.tip_of(job, &level, &progress.part(0.1, 1.0))
+    }
+
+    fn scan(&mut self, job: &Job, progress: &Progress) -> Result<Arc<HeightMap>> {
+        progress.check()?;
+        progress.say("opening the scan");
+        let spec = &job.file.scan;
+        let path = job.scan_path();
+        self.scan.get((stamp(path.clone()), spec.clone()), || {
+            files::open(&path, &spec.open_options()?)
+        })
+    }
+
+    fn level(
+        &mut self,
+        job: &Job,
+        scan: &Arc<HeightMap>,
+        progress: &Progress,
+    ) -> Result<Arc<Leveled>> {
+        progress.check()?;
+        progress.say("levelling");
+        let spec = &job.file.level;
+        self.level.get((Same(Arc::clone(scan)), spec.clone()), || {
+            leveling::level(scan, &spec.settings()?, progress)
+        })
+    }
+
+    fn tip_of(
+        &mut self,
+        job: &Job,
+        level: &Arc<Leveled>,
+        progress: &Progress,
+    ) -> Result<Arc<TipOrReason>> {
+        progress.check()?;
+        progress.say("finding the tip");
+        let spec = &job.file.tip;
+        let file = spec.file.as_ref().map(|f| stamp(job.folder.join(f)));
+        let key = (Same(Arc::clone(level)), spec.clone(), file);
+        self.tip.get(key, || find_tip(job, level, progress))
+    }
 }
 
 /// Width of the tip grid where none is stated: enough for the flank of a usual probe over the
@@ -249,11 +278,7 @@ fn default_support_nm(map: &HeightMap) -> f64 {
     (64.0 * pitch.x.max(pitch.y)).min(shorter / 2.0)
 }
 
-fn find_tip(
-    job: &Job,
-    level: &Leveled,
-    progress: &Progress,
-) -> Result<std::result::Result<TipResult, String>> {
+fn find_tip(job: &Job, level: &Leveled, progress: &Progress) -> Result<TipOrReason> {
     let spec = &job.file.tip;
     let scan = &level.map;
     if spec.from == TipFrom::Blind {
@@ -317,46 +342,28 @@ fn tip_from_file(job: &Job, scan: &HeightMap) -> Result<(Tip, Option<String>)> {
     Ok((tip, sha256))
 }
 
-/// Opens a tip file for use with `scan`. A file without a scale is taken at the scan's pitch and
-/// in nm, as the contract of `tip.npy` says; one with another pitch is refused.
+/// Opens a tip file for use with `scan`: a tip without a pitch of its own has the scan's, one with
+/// another pitch is refused (kind `Data`). Other errors as [`files::read_tip_grid`], [`Tip::new`].
 pub fn open_tip(path: &std::path::Path, scan: &HeightMap) -> Result<Tip> {
-    let bare = files::OpenOptions::default();
-    let map = match files::open(path, &bare) {
-        Err(e)
-            if matches!(
-                e.kind(),
-                ErrorKind::MissingPitch | ErrorKind::MissingHeightUnit
-            ) && path
-                .extension()
-                .is_some_and(|e| e.eq_ignore_ascii_case("npy")) =>
-        {
-            files::open(
-                path,
-                &files::OpenOptions {
-                    pitch: Some(scan.pitch()),
-                    height_unit: Some("nm".to_owned()),
-                    map: None,
-                },
-            )?
-        }
-        other => other?,
-    };
-    if !map.pitch().agrees_with(scan.pitch()) {
-        let (a, b) = (map.pitch(), scan.pitch());
+    let grid = files::read_tip_grid(path, &files::OpenOptions::default())?;
+    if let Some(pitch) = grid.pitch
+        && !pitch.agrees_with(scan.pitch())
+    {
+        let wanted = scan.pitch();
         return Err(Error::new(
             ErrorKind::Data,
             format!(
                 "{}: the tip's pixel pitch is {} nm x {} nm, the scan's {} nm x {} nm",
                 path.display(),
-                a.x,
-                a.y,
-                b.x,
-                b.y
+                pitch.x,
+                pitch.y,
+                wanted.x,
+                wanted.y
             ),
         )
         .remedy("Give a tip on the scan's own grid"));
     }
-    Tip::from_map(&map).map_err(|e| e.context(path.display()))
+    Tip::new(grid.heights, scan.pitch()).map_err(|e| e.context(path.display()))
 }
 
 fn from_estimate(estimate: Estimate) -> TipResult {
@@ -444,10 +451,10 @@ fn reconstruct(level: &Leveled, found: &TipResult, progress: &Progress) -> Resul
 fn measure(
     level: &Leveled,
     outcome: &Outcome,
-    calibration: Option<Calibration>,
-    requests: &[Request],
+    spec: &JobFile,
     progress: &Progress,
 ) -> Result<Vec<Dimension>> {
+    let requests = &spec.dimensions;
     let corrected = match (&outcome.tip, &outcome.surface) {
         (Some(tip), Some(surface)) => Some(Corrected {
             tip: &tip.tip,
@@ -466,7 +473,7 @@ fn measure(
     let input = Input {
         scan: &level.map,
         noise_nm: level.noise_nm,
-        calibration: calibration.unwrap_or_default(),
+        calibration: spec.calibration.unwrap_or_default(),
         corrected,
     };
     let mut lines = Vec::new();

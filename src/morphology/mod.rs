@@ -9,33 +9,53 @@
 //! Voids (NaN) and everything outside the map constrain nothing. Where no pixel constrains,
 //! the result is NaN.
 
-mod reference;
+//! An infinite height counts as a void, an infinite or NaN tip cell as outside the tip. Zeros in
+//! results are plain zeros, never -0. Heights and depths up to 1e30 nm cannot overflow.
+//! Everything here gives the same bits on one thread and on many, on every instruction set, and
+//! as the plain twins in `reference.rs`.
 
-use crate::error::Result;
+mod dilation;
+mod edges;
+mod field;
+#[cfg(test)]
+mod reference;
+mod search;
+#[cfg(test)]
+mod tests;
+mod tip;
+mod touch;
+
+use crate::error::{Error, ErrorKind, Result};
 use crate::progress::Progress;
 use ndarray::{Array2, ArrayView2};
+use pulp::Arch;
+use tip::Order;
 
 /// The scan that a probe of shape `tip` records of `surface`: `max over u of S(x + u) + p(u)`.
+///
+/// Errors: only when cancelled. An empty map gives an empty one, an empty tip a map of voids.
 pub fn dilate(
     surface: ArrayView2<f32>,
     tip: ArrayView2<f32>,
     progress: &Progress,
 ) -> Result<Array2<f32>> {
-    progress.check()?;
-    Ok(reference::dilate(surface, tip))
+    dilation::extreme(Arch::new(), surface, tip, Order::Max, progress)
 }
 
 /// The highest surface compatible with `scan`: `min over u of I(s - u) - p(u)`.
+///
+/// Errors: only when cancelled. An empty map gives an empty one, an empty tip a map of voids.
 pub fn erode(
     scan: ArrayView2<f32>,
     tip: ArrayView2<f32>,
     progress: &Progress,
 ) -> Result<Array2<f32>> {
-    progress.check()?;
-    Ok(reference::erode(scan, tip))
+    dilation::extreme(Arch::new(), scan, tip, Order::Min, progress)
 }
 
 /// `dilate(erode(scan))`: what of the scan the tip explains; `<= scan` everywhere.
+///
+/// Errors: only when cancelled.
 pub fn open(
     scan: ArrayView2<f32>,
     tip: ArrayView2<f32>,
@@ -45,6 +65,9 @@ pub fn open(
     dilate(eroded.view(), tip, &progress.part(0.5, 1.0))
 }
 
+/// The offset where nothing constrains.
+pub const NO_CONTACT: [i16; 2] = [i16::MIN; 2];
+
 /// For each scan pixel the tip offset that touched: `winner[[r, c]] = [dr, dc]`, so that the
 /// surface point is `(r + dr, c + dc)`. Ties go to the offset nearest the apex (squared pixel
 /// distance), then to the first in row-major order of `(dr, dc)`.
@@ -52,18 +75,19 @@ pub fn open(
 pub struct Contacts {
     /// The dilation itself.
     pub heights: Array2<f32>,
-    /// Winning offset `[dr, dc]`, `[i16::MIN; 2]` where nothing constrains.
+    /// Winning offset `[dr, dc]`, [`NO_CONTACT`] where nothing constrains.
     pub offsets: Array2<[i16; 2]>,
 }
 
 /// Dilation that keeps which offset won.
+///
+/// Errors: only when cancelled.
 pub fn contacts(
     surface: ArrayView2<f32>,
     tip: ArrayView2<f32>,
     progress: &Progress,
 ) -> Result<Contacts> {
-    progress.check()?;
-    Ok(reference::contacts(surface, tip))
+    dilation::contacts(Arch::new(), surface, tip, progress)
 }
 
 /// Certainty values (contract of `certainty.npy`).
@@ -83,6 +107,7 @@ pub mod certainty {
 /// A scan pixel `x` touches the surface pixels `x + u` with `R(x + u) + p(u) >= I(x) - tolerance`
 /// (nm). A surface pixel that is the only one touched at some `x` is `TOUCHED`; one touched only
 /// together with others `BOUNDED`; else `NEVER`. Void surface pixels are `VOID`.
+/// Errors: kind `Data` when the shapes differ, or when cancelled.
 /// Source: J. S. Villarrubia, J. Res. NIST 102, 425 (1997), doi 10.6028/jres.102.030.
 pub fn certainty_map(
     surface: ArrayView2<f32>,
@@ -91,18 +116,35 @@ pub fn certainty_map(
     tolerance: f32,
     progress: &Progress,
 ) -> Result<Array2<u8>> {
-    progress.check()?;
-    Ok(reference::certainty_map(surface, scan, tip, tolerance))
+    same_shape(surface, scan)?;
+    touch::certainty_map(Arch::new(), surface, scan, tip, tolerance, progress)
 }
 
 /// Surface pixels that lean on the edge of the scan or on a void: a pixel nobody saw, as low as
 /// the lowest of the scan, could have pulled the reconstruction down there.
+///
+/// Errors: kind `Data` when the shapes differ, or when cancelled.
 pub fn edge_leaning(
     scan: ArrayView2<f32>,
     surface: ArrayView2<f32>,
     tip: ArrayView2<f32>,
     progress: &Progress,
 ) -> Result<Array2<bool>> {
-    progress.check()?;
-    Ok(reference::edge_leaning(scan, surface, tip))
+    same_shape(surface, scan)?;
+    edges::edge_leaning(Arch::new(), scan, surface, tip, progress)
+}
+
+fn same_shape(surface: ArrayView2<f32>, scan: ArrayView2<f32>) -> Result<()> {
+    if surface.dim() == scan.dim() {
+        return Ok(());
+    }
+    let ((rows, columns), (scan_rows, scan_columns)) = (surface.dim(), scan.dim());
+    Err(Error::new(
+        ErrorKind::Data,
+        format!(
+            "a surface of {rows} x {columns} pixels does not belong to a scan of \
+             {scan_rows} x {scan_columns}"
+        ),
+    )
+    .remedy("Give the erosion of this very scan"))
 }

@@ -13,10 +13,12 @@ fn cells(tip: ArrayView2<f32>) -> Vec<(isize, isize, f32)> {
         .collect()
 }
 
-fn get<T: Copy>(map: ArrayView2<T>, r: isize, c: isize) -> Option<T> {
+/// The height there; none outside the map or where void.
+fn get(map: ArrayView2<f32>, r: isize, c: isize) -> Option<f32> {
     (r >= 0 && c >= 0)
         .then(|| map.get((r as usize, c as usize)).copied())
         .flatten()
+        .filter(|z| z.is_finite())
 }
 
 pub(super) fn dilate(surface: ArrayView2<f32>, tip: ArrayView2<f32>) -> Array2<f32> {
@@ -29,9 +31,9 @@ pub(super) fn erode(scan: ArrayView2<f32>, tip: ArrayView2<f32>) -> Array2<f32> 
         cells
             .iter()
             .filter_map(|&(dr, dc, p)| Some(get(scan, r as isize - dr, c as isize - dc)? - p))
-            .filter(|v| !v.is_nan())
             .reduce(f32::min)
-            .unwrap_or(f32::NAN)
+            // Adding zero makes -0 a plain 0.
+            .map_or(f32::NAN, |v| v + 0.0)
     })
 }
 
@@ -44,8 +46,8 @@ pub(super) fn contacts(surface: ArrayView2<f32>, tip: ArrayView2<f32>) -> Contac
         for &(dr, dc, p) in &cells {
             if let Some(s) = get(surface, r as isize + dr, c as isize + dc) {
                 let v = s + p;
-                if v > best.0 || (best.0.is_nan() && !v.is_nan()) {
-                    best = (v, [dr as i16, dc as i16]);
+                if v > best.0 || best.0.is_nan() {
+                    best = (v + 0.0, [dr as i16, dc as i16]);
                 }
             }
         }
@@ -65,9 +67,9 @@ pub(super) fn certainty_map(
     tolerance: f32,
 ) -> Array2<u8> {
     let cells = cells(tip);
-    let mut map = surface.mapv(|s| if s.is_nan() { VOID } else { NEVER });
+    let mut map = surface.mapv(|s| if s.is_finite() { NEVER } else { VOID });
     for ((r, c), &height) in scan.indexed_iter() {
-        if height.is_nan() {
+        if !height.is_finite() {
             continue;
         }
         let touched: Vec<_> = cells
@@ -95,12 +97,12 @@ pub(super) fn edge_leaning(
     let lowest = scan
         .iter()
         .copied()
-        .filter(|z| !z.is_nan())
+        .filter(|z| z.is_finite())
         .fold(f32::INFINITY, f32::min);
     Array2::from_shape_fn(surface.dim(), |(r, c)| {
         let here = surface[(r, c)];
         cells.iter().any(|&(dr, dc, p)| {
-            let unseen = get(scan, r as isize - dr, c as isize - dc).is_none_or(f32::is_nan);
+            let unseen = get(scan, r as isize - dr, c as isize - dc).is_none();
             // A void surface pixel leans on nothing; NaN compares false.
             unseen && lowest - p < here
         })

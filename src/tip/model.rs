@@ -103,7 +103,7 @@ impl Model {
         let pitch = pitch.checked()?;
         let half = |pitch: f64| ((support_nm / pitch - 1.0) / 2.0 - 1e-9).ceil().max(0.0);
         let (hx, hy) = (half(pitch.x), half(pitch.y));
-        if !(support_nm > 0.0) || hx > 2047.0 || hy > 2047.0 {
+        if support_nm.is_nan() || support_nm <= 0.0 || hx > 2047.0 || hy > 2047.0 {
             return Err(Error::new(
                 ErrorKind::Setting,
                 format!(

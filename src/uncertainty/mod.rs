@@ -1,6 +1,12 @@
 //! Budget, propagation, coverage. Knows nothing of what is measured.
 //! Source: JCGM 100:2008.
 
+mod budget;
+mod sample;
+
+pub use budget::{Budget, Combined, coverage_factor};
+pub use sample::Series;
+
 use serde::Serialize;
 
 /// Shape of the distribution behind a component.

@@ -1,0 +1,109 @@
+//! The command line: definitions, and headless runs. Holds no logic of its own.
+
+mod args;
+mod maps;
+mod run;
+mod show;
+
+pub use args::{Cli, Command, Common};
+
+use crate::error::{ErrorKind, Result};
+use clap::CommandFactory;
+use show::Show;
+use std::io::Write;
+use std::process::ExitCode;
+
+/// All done.
+const DONE: u8 = 0;
+/// An input failed; the others are done.
+const INPUT_FAILED: u8 = 1;
+/// Wrong usage.
+const WRONG_USAGE: u8 = 2;
+
+/// Does what `cli` asks for and says how it went; see the contract for the exit status.
+pub fn execute(cli: &Cli) -> ExitCode {
+    let show = Show::new(cli.common.quiet);
+    if let Some(threads) = cli.common.threads {
+        // Fails only when a pool is there already, which the first lines of the program rule out.
+        let _ = rayon::ThreadPoolBuilder::new()
+            .num_threads(usize::from(threads))
+            .build_global();
+    }
+    let done = match &cli.command {
+        None => open_window(cli, &show),
+        Some(command) => headless(command, &cli.common, &show),
+    };
+    ExitCode::from(done.unwrap_or_else(|error| {
+        show.error(&error.to_string());
+        match error.kind() {
+            ErrorKind::Setting => WRONG_USAGE,
+            _ => INPUT_FAILED,
+        }
+    }))
+}
+
+fn headless(command: &Command, common: &Common, show: &Show) -> Result<u8> {
+    match command {
+        Command::Run { jobs, out, workers } => {
+            let failed = run::run_all(jobs, out, *workers, common, show)?;
+            if failed > 0 {
+                show.note(&format!("{failed} of {} jobs failed", jobs.len()));
+                return Ok(INPUT_FAILED);
+            }
+        }
+        Command::Inspect { file, json } => maps::inspect(file, *json, common)?,
+        Command::Convert { input, output } => maps::convert(input, output, common, show)?,
+        Command::Tip {
+            scan,
+            out,
+            support,
+            threshold,
+            json,
+        } => {
+            maps::tip(scan, out, *support, *threshold, *json, common, show)?;
+        }
+        Command::Reconstruct {
+            scan,
+            tip,
+            out,
+            certainty,
+        } => {
+            maps::reconstruct(scan, tip, out, certainty.as_deref(), common, show)?;
+        }
+        Command::Simulate { surface, tip, out } => {
+            maps::simulate(surface, tip, out, common, show)?;
+        }
+        Command::Completions { shell } => {
+            let mut text = Vec::new();
+            clap_complete::generate(*shell, &mut Cli::command(), "truewidth", &mut text);
+            print_bytes(&text);
+        }
+        Command::Manual => print_bytes(&manual()),
+    }
+    Ok(DONE)
+}
+
+/// The manual: the program's page and one section for each command, from the same definitions.
+fn manual() -> Vec<u8> {
+    let mut text = Vec::new();
+    let command = Cli::command();
+    let mut pages = vec![command.clone()];
+    pages.extend(command.get_subcommands().map(|sub| {
+        let name = format!("truewidth-{}", sub.get_name());
+        sub.clone().name(name.clone()).display_name(name)
+    }));
+    for page in pages {
+        // Writing to a vector cannot fail.
+        let _ = clap_mangen::Man::new(page).render(&mut text);
+    }
+    text
+}
+
+fn print_bytes(bytes: &[u8]) {
+    // A closed pipe is the reader's choice.
+    let _ = std::io::stdout().lock().write_all(bytes);
+}
+
+fn open_window(_cli: &Cli, _show: &Show) -> Result<u8> {
+    todo!("with the window room")
+}

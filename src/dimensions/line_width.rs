@@ -1,0 +1,601 @@
+//! Line width: the distance between the two walls of a ridge or a trench at fractions of its
+//! height above the lower plateau, the plateaus taken locally from both sides.
+
+use super::sections::{self, Frame, Layout};
+use super::statistics::{self, Level};
+use super::wall::{self, Hold, Outline, Wall};
+use super::{
+    Axis, Corrected, CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer,
+};
+use crate::error::{Error, ErrorKind, Result};
+use crate::heightmap::HeightMap;
+use crate::morphology::certainty::NEVER;
+use crate::progress::Progress;
+use crate::uncertainty::{Budget, Component, Distribution, Series};
+use ndarray::ArrayView2;
+
+const ASSUMPTIONS: &str = "Height fractions between local plateaus (densest level within the \
+    feature and to both sides); edges by linear interpolation, section by section; no undercut. \
+    Threshold width: common practice; contact: J. S. Villarrubia, J. Res. NIST 102, 425 (1997)";
+
+/// Sections used for the mean course of a wall; the widths use all.
+const CURVE_SECTIONS: usize = 200;
+/// Contact windows of erosion hold a few to about 25 pixels: their expected lowest noise is 1 to
+/// 2 deviations below zero, on the plateaus more than on the walls by about this much.
+const EROSION_EXCESS: f64 = 1.0;
+
+/// Measures the width at each height fraction asked for, one line each.
+///
+/// Where the region holds several features the most central one is measured, and flagged. Errors
+/// of kind `Setting`: a fraction outside 0.02..0.98.
+pub(super) fn measure(
+    input: &Input,
+    request: &Request,
+    progress: &Progress,
+) -> Result<Vec<Dimension>> {
+    let fractions = if request.at.is_empty() {
+        vec![0.5]
+    } else {
+        request.at.clone()
+    };
+    if let Some(bad) = fractions.iter().find(|f| !(0.02..=0.98).contains(*f)) {
+        return Err(Error::new(
+            ErrorKind::Setting,
+            format!("\"{}\": height fraction {bad}", request.name),
+        )
+        .remedy("Give fractions from 0.02 (near the foot) to 0.98 (near the top)"));
+    }
+    let frame = Frame::new(input, request)?;
+    let empty = |f: f64| Dimension {
+        at: Some(f),
+        ..answer(request, Kind::LineWidth, "line width", "nm", ASSUMPTIONS)
+    };
+    let refuse = |reason: &str| {
+        let line = |f: &f64| Dimension {
+            flags: vec![reason.to_owned()],
+            ..empty(*f)
+        };
+        Ok(fractions.iter().map(line).collect())
+    };
+    let layout = match Layout::find(frame.of(input.scan), frame.noise) {
+        Ok(layout) => layout,
+        Err(reason) => return refuse(&format!("not measured: {reason}")),
+    };
+    let Some(first) = layout.central_pair() else {
+        return refuse("not measured: the region holds one edge only, a width needs two");
+    };
+    let Some(scan) = Trace::take(input.scan, &frame, &layout, first, &fractions) else {
+        return refuse("not measured: the two edges cannot be followed through the region");
+    };
+    progress.check()?;
+    let correction = input.corrected.and_then(|c| {
+        let trace = |map: &HeightMap| Trace::take(map, &frame, &layout, first, &fractions);
+        Some(Correction {
+            surface: trace(c.surface)?,
+            upper: c.surface_upper.and_then(trace),
+            lower: c.surface_lower.and_then(trace),
+            outlines: outlines(&c, frame.axis, scan.ridge),
+            given: c,
+        })
+    });
+    progress.check()?;
+    let common = common_flags(input, &frame, &layout, &scan);
+    Ok((0..fractions.len())
+        .map(|i| {
+            let mut line = empty(fractions[i]);
+            line.quantity = if scan.ridge { "line width" } else { "trench width" }.to_owned();
+            line.flags.clone_from(&common);
+            line.marks = scan.marks(&frame, i);
+            fill(&mut line, input, &frame, &scan, correction.as_ref(), i);
+            line
+        })
+        .collect())
+}
+
+/// Everything taken from the corrected maps.
+struct Correction<'a> {
+    surface: Trace,
+    upper: Option<Trace>,
+    lower: Option<Trace>,
+    /// Tip outlines that meet the left and the right wall.
+    outlines: [Outline; 2],
+    given: Corrected<'a>,
+}
+
+fn outlines(corrected: &Corrected, axis: Axis, ridge: bool) -> [Outline; 2] {
+    // The left wall of a ridge falls to the left; that of a trench to the right.
+    [!ridge, ridge].map(|positive| Outline::of(corrected.tip, axis, positive))
+}
+
+/// One map's two edges, section by section.
+struct Trace {
+    ridge: bool,
+    /// Step between the plateaus, nm.
+    height: f64,
+    /// Standard uncertainty of a threshold's height, nm.
+    level_u: f64,
+    /// Heights of the plateaus left and right of the feature differ by this much, nm.
+    imbalance: f64,
+    /// Cosine of the angle between the line's normal and the cross-sections.
+    cosine: f64,
+    /// `[fraction][section]`: left and right edge, pixels.
+    edges: Vec<[Vec<f64>; 2]>,
+    /// Mean course of the left and the right wall.
+    walls: [Wall; 2],
+    pitch: f64,
+}
+
+impl Trace {
+    fn take(
+        map: &HeightMap,
+        frame: &Frame,
+        layout: &Layout,
+        first: usize,
+        fractions: &[f64],
+    ) -> Option<Self> {
+        let sections = frame.of(map);
+        let ridge = layout.edges[first].rising;
+        let reach = [layout.reach(first), layout.reach(first + 1)];
+        let middle_of = |level: f64| {
+            [0, 1].map(|k| sections::follow(sections, layout.edges[first + k], reach[k], level))
+        };
+        let rough = middle_of(layout.low.value + 0.5 * layout.height());
+        let plateaus = Plateaus::of(sections, &rough, reach, frame.noise)?;
+        let (low, high) = plateaus.low_high(ridge);
+        let height = high.value - low.value;
+        if !(height > 0.0) {
+            return None;
+        }
+        let middle = middle_of(low.value + 0.5 * height);
+        let tangent = slope_over_sections(&middle) * frame.pitch / frame.spacing;
+        let cosine = 1.0 / tangent.hypot(1.0);
+        let crossing = |f: f64, section: usize, k: usize| {
+            let at = middle[k][section];
+            let rising = layout.edges[first + k].rising;
+            let window = (at - reach[k].0, at + reach[k].1);
+            let level = low.value + f * height;
+            let row = sections.row(section);
+            if at.is_nan() {
+                return f64::NAN;
+            }
+            sections::crossing_from(row, level, rising, at, f >= 0.5, window, frame.noise)
+                .unwrap_or(f64::NAN)
+        };
+        let count = sections.nrows();
+        let edges: Vec<[Vec<f64>; 2]> = fractions
+            .iter()
+            .map(|&f| [0, 1].map(|k| (0..count).map(|i| crossing(f, i, k)).collect()))
+            .collect();
+        if edges
+            .iter()
+            .all(|pair| pair[0].iter().zip(&pair[1]).all(|(a, b)| (a - b).is_nan()))
+        {
+            return None;
+        }
+        let every = count.div_ceil(CURVE_SECTIONS);
+        let walls = [0, 1].map(|k| {
+            let outward = if layout.edges[first + k].rising { -1.0 } else { 1.0 };
+            let grid: Vec<f64> = (1..50).map(|i| f64::from(i) * 0.02).collect();
+            let mut u = 0.0f64;
+            let outwards = grid
+                .iter()
+                .map(|&f| {
+                    // Relative to the middle, so that edge roughness cancels.
+                    let off: Vec<f64> = (0..count)
+                        .step_by(every)
+                        .map(|i| crossing(f, i, k) - middle[k][i])
+                        .collect();
+                    let kept = statistics::clipped(&off, 4.0);
+                    let n = kept.iter().filter(|v| v.is_finite()).count();
+                    if 2 * n < off.len() {
+                        return f64::NAN;
+                    }
+                    let scatter = statistics::robust_deviation(&off).unwrap_or(0.0);
+                    u = u.max(scatter / (n as f64).sqrt());
+                    outward * statistics::mean(&kept) * frame.pitch * cosine
+                })
+                .collect();
+            Wall {
+                fractions: grid,
+                outwards,
+                height,
+                u: u * frame.pitch,
+            }
+        });
+        Some(Self {
+            ridge,
+            height,
+            level_u: plateaus.u(ridge),
+            imbalance: plateaus.imbalance(),
+            cosine,
+            edges,
+            walls,
+            pitch: frame.pitch,
+        })
+    }
+
+    /// Widths at one fraction, section by section, nm; outliers beyond four robust deviations and
+    /// sections without both edges are NaN.
+    fn widths(&self, i: usize) -> Vec<f64> {
+        let [left, right] = &self.edges[i];
+        let widths: Vec<f64> = left
+            .iter()
+            .zip(right)
+            .map(|(a, b)| (b - a) * self.pitch * self.cosine)
+            .collect();
+        statistics::clipped(&widths, 4.0)
+    }
+
+    /// Mean width at one fraction, nm.
+    fn width(&self, i: usize) -> Option<Series> {
+        Series::of(&self.widths(i))
+    }
+
+    fn marks(&self, frame: &Frame, i: usize) -> Vec<[f64; 4]> {
+        let [left, right] = &self.edges[i];
+        let sections: Vec<f64> = (0..left.len()).map(|s| s as f64).collect();
+        let last = sections.len() as f64 - 1.0;
+        let fit = |edge: &[f64]| {
+            statistics::line(&sections, edge).unwrap_or((0.0, statistics::mean(edge)))
+        };
+        let (a, b) = (fit(left), fit(right));
+        let at = |line: (f64, f64), s: f64| line.1 + line.0 * s;
+        let marks = [
+            frame.segment((0.0, at(a, 0.0)), (last, at(a, last))),
+            frame.segment((0.0, at(b, 0.0)), (last, at(b, last))),
+            frame.segment((last / 2.0, at(a, last / 2.0)), (last / 2.0, at(b, last / 2.0))),
+        ];
+        marks
+            .into_iter()
+            .filter(|m| m.iter().all(|v| v.is_finite()))
+            .collect()
+    }
+}
+
+/// Slope of the line's middle over the sections, pixels per section.
+fn slope_over_sections(middle: &[Vec<f64>; 2]) -> f64 {
+    let centre: Vec<f64> = middle[0]
+        .iter()
+        .zip(&middle[1])
+        .map(|(a, b)| (a + b) / 2.0)
+        .collect();
+    let sections: Vec<f64> = (0..centre.len()).map(|s| s as f64).collect();
+    // Two or three sections tell no angle.
+    if centre.iter().filter(|c| c.is_finite()).count() < 8 {
+        return 0.0;
+    }
+    statistics::line(&sections, &centre).map_or(0.0, |l| l.0)
+}
+
+/// The plateaus a feature's height refers to.
+struct Plateaus {
+    centre: Level,
+    left: Option<Level>,
+    right: Option<Level>,
+}
+
+impl Plateaus {
+    fn of(
+        sections: ArrayView2<f32>,
+        middle: &[Vec<f64>; 2],
+        reach: [(f64, f64); 2],
+        noise: f64,
+    ) -> Option<Self> {
+        let every = (sections.len() / 60_000).max(1);
+        let collect = |zone: &dyn Fn(f64, f64) -> (f64, f64)| {
+            let mut heights = Vec::new();
+            for i in (0..sections.nrows()).step_by(every) {
+                let (from, to) = zone(middle[0][i], middle[1][i]);
+                // NaN makes both casts 0 and the range empty.
+                let from = from.ceil().max(0.0) as usize;
+                let to = ((to + 1.0).floor().max(0.0) as usize).min(sections.ncols());
+                heights.extend((from..to).map(|c| f64::from(sections[[i, c]])));
+            }
+            statistics::level(&mut heights, noise)
+        };
+        // A quarter of each zone is left to the wall; the densest level forgives the rest.
+        let centre = collect(&|a, b| (a + 0.25 * (b - a), b - 0.25 * (b - a)))?;
+        let left = collect(&|a, _| (a - reach[0].0, a - 0.25 * reach[0].0));
+        let right = collect(&|_, b| (b + 0.25 * reach[1].1, b + reach[1].1));
+        (left.is_some() || right.is_some()).then_some(Self {
+            centre,
+            left,
+            right,
+        })
+    }
+
+    fn sides(&self) -> Vec<Level> {
+        self.left.iter().chain(&self.right).copied().collect()
+    }
+
+    fn low_high(&self, ridge: bool) -> (Level, Level) {
+        let sides = self.sides();
+        let n = sides.len() as f64;
+        let outer = Level {
+            value: sides.iter().map(|l| l.value).sum::<f64>() / n,
+            deviation: sides.iter().map(|l| l.deviation).fold(0.0, f64::max),
+            count: sides.iter().map(|l| l.count).sum(),
+        };
+        if ridge {
+            (outer, self.centre)
+        } else {
+            (self.centre, outer)
+        }
+    }
+
+    fn imbalance(&self) -> f64 {
+        match (self.left, self.right) {
+            (Some(a), Some(b)) => (a.value - b.value).abs(),
+            _ => 0.0,
+        }
+    }
+
+    /// Standard uncertainty of a threshold between the plateaus, nm: their means (a hundredth of
+    /// the pixels taken as independent) and half their imbalance as a rectangular bound.
+    fn u(&self, ridge: bool) -> f64 {
+        let (low, high) = self.low_high(ridge);
+        let mean = |l: Level| l.deviation / (l.count as f64 / 100.0).max(1.0).sqrt();
+        (0.25 * mean(low).powi(2) + 0.25 * mean(high).powi(2) + self.imbalance().powi(2) / 12.0)
+            .sqrt()
+    }
+}
+
+fn common_flags(input: &Input, frame: &Frame, layout: &Layout, scan: &Trace) -> Vec<String> {
+    let mut flags = Vec::new();
+    if layout.edges.len() > 2 {
+        flags.push(format!(
+            "the region holds {} edges; the most central {} was measured",
+            layout.edges.len(),
+            if scan.ridge { "line" } else { "trench" }
+        ));
+    }
+    if scan.height < 10.0 * frame.noise {
+        flags.push(format!(
+            "the height of {:.2} nm is less than ten times the noise",
+            scan.height
+        ));
+    }
+    let voids = frame.of(input.scan).iter().filter(|z| z.is_nan()).count();
+    if voids > 0 {
+        flags.push(format!("{voids} void pixels inside the region"));
+    }
+    if scan.imbalance > (0.02 * scan.height).max(5.0 * frame.noise) {
+        flags.push(format!(
+            "the plateaus to the left and right differ by {:.2} nm",
+            scan.imbalance
+        ));
+    }
+    let skew = scan.cosine.acos().to_degrees();
+    if skew > 0.5 {
+        flags.push(format!("the line runs {skew:.1} degrees askew; widths are taken across it"));
+    }
+    flags
+}
+
+/// Symmetric part of the budget that both columns share.
+fn budget_of(trace: &Trace, i: usize, series: &Series, calibration: f64, fraction: f64) -> Budget {
+    let slope = trace.walls[0].slope(fraction) + trace.walls[1].slope(fraction);
+    let slope = if slope.is_finite() { slope } else { 0.0 };
+    let mut budget = Budget::new();
+    budget.push(
+        "axis calibration",
+        calibration,
+        Distribution::Normal,
+        series.mean,
+    );
+    // A wall that spans several pixels is interpolated better than one pixel by as many; edges
+    // that wander over the pixel grid average the rest out.
+    let pixel = |k: usize| {
+        let span = trace.walls[k].slope(fraction) * 0.25 * trace.height / trace.pitch;
+        let span = if span.is_finite() { span.max(1.0) } else { 1.0 };
+        let wander = statistics::robust_deviation(&trace.edges[i][k]).unwrap_or(0.0);
+        let average = if wander > 0.3 { series.effective.sqrt() } else { 1.0 };
+        trace.pitch / 12f64.sqrt() / span / average
+    };
+    budget.push(
+        "pixel, both edges",
+        pixel(0).hypot(pixel(1)),
+        Distribution::Rectangular,
+        1.0,
+    );
+    budget.push("plateau levels", trace.level_u, Distribution::Normal, slope);
+    budget.add(Component {
+        source: "repeatability along the line (noise, edge roughness)".to_owned(),
+        u: series.standard_error(),
+        distribution: Distribution::Normal,
+        sensitivity: 1.0,
+        degrees_of_freedom: series.degrees_of_freedom(),
+    });
+    budget
+}
+
+/// Fills one result line: height fraction number `i`.
+fn fill(
+    line: &mut Dimension,
+    input: &Input,
+    frame: &Frame,
+    scan: &Trace,
+    correction: Option<&Correction>,
+    i: usize,
+) {
+    let fraction = line.at.unwrap_or(0.5);
+    let calibration = match frame.axis {
+        Axis::X => input.calibration.x,
+        Axis::Y => input.calibration.y,
+    };
+    let Some(scanned) = scan.width(i) else {
+        line.flags.push("not measured: no section crosses this height at both walls".to_owned());
+        return;
+    };
+    if scanned.count < 3 {
+        line.flags.push(format!("too few sections: {}", scanned.count));
+    } else if scanned.count * 2 < scan.edges[i][0].len() {
+        line.flags.push(format!(
+            "only {} of {} sections cross both walls at this height",
+            scanned.count,
+            scan.edges[i][0].len()
+        ));
+    }
+    let budget = budget_of(scan, i, &scanned, calibration, fraction);
+    line.as_scanned = Some(Value {
+        value: scanned.mean,
+        u: Some(budget.combined(0.95).u),
+    });
+    match correction {
+        Some(correction) => correct(line, frame, scan, &scanned, correction, i, calibration),
+        None => {
+            if input.corrected.is_some() {
+                line.flags.push(
+                    "no corrected value: the edges are lost in the reconstructed surface".to_owned(),
+                );
+            }
+            line.budget = budget.into_components();
+        }
+    }
+}
+
+/// The corrected column of one line.
+fn correct(
+    line: &mut Dimension,
+    frame: &Frame,
+    scan: &Trace,
+    scanned: &Series,
+    correction: &Correction,
+    i: usize,
+    calibration: f64,
+) {
+    let fraction = line.at.unwrap_or(0.5);
+    let surface = &correction.surface;
+    let given = &correction.given;
+    let Some(series) = surface.width(i) else {
+        line.flags.push("no corrected value: the reconstruction has no such width".to_owned());
+        return;
+    };
+    let holds = [0, 1].map(|k| {
+        surface.walls[k].hold(&correction.outlines[k], fraction, given.height_u_nm)
+    });
+    let mut budget = budget_of(surface, i, &series, calibration, fraction);
+    let slope: f64 = holds.iter().map(|h| h.slope).filter(|s| s.is_finite()).sum();
+    tip_band(&mut budget, correction, i, slope);
+    // Outwards is wider for a ridge and narrower for a trench.
+    let inward: f64 = holds.iter().map(|h| h.slack).filter(|s| s.is_finite()).sum();
+    let mut outward = 0.0f64;
+    let mut touched = holds.iter().all(|h| h.touched);
+    explain(line, &holds, surface);
+    if let Some(depth) = given.exercised_depth_nm
+        && fraction * surface.height > depth
+    {
+        touched = false;
+        outward = outward.max(if surface.ridge {
+            scanned.mean - series.mean
+        } else {
+            series.mean - scanned.mean
+        });
+        line.flags.push(format!(
+            "the tip is known to {depth:.1} nm depth only: above it the wall lies between the \
+             corrected and the scanned one"
+        ));
+    }
+    if !given.identified {
+        touched = false;
+        outward = outward.max((scanned.mean - series.mean).abs());
+        line.flags.push("the tip is not identified: bounds only".to_owned());
+    }
+    if inward + outward > 0.0 {
+        let u = (inward + outward) / 12f64.sqrt();
+        budget.push("wall between its bounds", u, Distribution::OneSided, 1.0);
+    }
+    // The middle of what the physics leaves.
+    let sign = if surface.ridge { 1.0 } else { -1.0 };
+    let value = series.mean + sign * (outward - inward) / 2.0;
+    let half = (inward + outward) / 2.0;
+    let erosion = EROSION_EXCESS * frame.noise * slope;
+    budget.push_one_sided("noise in the reconstruction", erosion);
+    let mut out = half + erosion;
+    if given.contains_feature_radius {
+        let radius = correction.outlines[0].apex_radius().unwrap_or(0.0);
+        let shift: f64 = holds.iter().map(|h| radius * wall::shift_per_radius(h.slope)).sum();
+        budget.push_one_sided("radius of the feature that showed the tip", shift);
+        out += shift;
+        line.flags.push(format!(
+            "the tip contains the radius of the sharpest feature, unknown up to {radius:.1} nm: \
+             state it to narrow the interval"
+        ));
+    }
+    let (below, above) = if surface.ridge { (half, out) } else { (out, half) };
+    let (low, high) = budget.interval(value, below, above, 0.95);
+    let all = budget.combined(0.95);
+    let known = given.identified;
+    line.corrected = Some(CorrectedValue {
+        value: known.then_some(value),
+        u: known.then_some(all.u),
+        expanded: known.then_some(all.expanded),
+        k: known.then_some(all.k),
+        low: Some(low.max(0.0)),
+        high: Some(high.max(0.0)),
+    });
+    line.status = Some(if touched { Status::Touched } else { Status::Bounded });
+    lean(line, frame, surface, given, i);
+    if scan.height < 0.5 * surface.height {
+        line.flags.push("the scan shows less than half of the corrected height".to_owned());
+    }
+    line.budget = budget.into_components();
+}
+
+/// The tip's doubt: from the surfaces with the band's tips, else from its heights.
+fn tip_band(budget: &mut Budget, correction: &Correction, i: usize, slope: f64) {
+    let width = |t: &Option<Trace>| t.as_ref().and_then(|t| Some(t.width(i)?.mean));
+    let here = correction.surface.width(i).map_or(0.0, |s| s.mean);
+    let (upper, lower) = (width(&correction.upper), width(&correction.lower));
+    let height_u = correction.given.height_u_nm.max(0.0);
+    if upper.is_some() || lower.is_some() {
+        // The band is one of about 95 % (two standard uncertainties to each side).
+        let apart = [upper, lower].into_iter().flatten().map(|w| (w - here).abs());
+        let u = apart.fold(0.0, f64::max) / 2.0;
+        budget.push("tip band", u, Distribution::Normal, 1.0);
+    } else if height_u > 0.0 {
+        budget.push("heights of the tip", height_u, Distribution::Normal, slope);
+    }
+}
+
+fn explain(line: &mut Dimension, holds: &[Hold; 2], surface: &Trace) {
+    let which = match (holds[0].touched, holds[1].touched) {
+        (true, true) => return,
+        (false, false) => "neither wall was touched",
+        (false, true) => "the left wall was not touched",
+        (true, false) => "the right wall was not touched",
+    };
+    line.flags.push(format!(
+        "{which} at this height: it is as steep as the tip's flank or steeper; the interval runs \
+         from the {} that was touched to the reconstruction, no undercut assumed",
+        if surface.ridge { "shoulder above" } else { "rim above" }
+    ));
+}
+
+/// Flags edges that lean on the rim of the scan or that the tip never touched.
+fn lean(line: &mut Dimension, frame: &Frame, surface: &Trace, given: &Corrected, i: usize) {
+    let leaning = frame.of_array(given.edge_leaning);
+    let certainty = frame.of_array(given.certainty);
+    let (mut total, mut leans, mut never) = (0usize, 0usize, 0usize);
+    for edge in &surface.edges[i] {
+        for (section, at) in edge.iter().enumerate().filter(|(_, at)| at.is_finite()) {
+            let pixel = [section, (at.round().max(0.0) as usize).min(leaning.ncols() - 1)];
+            total += 1;
+            leans += usize::from(leaning[pixel]);
+            never += usize::from(certainty[pixel] == NEVER);
+        }
+    }
+    let percent = |n: usize| 100.0 * n as f64 / total.max(1) as f64;
+    if leans > 0 {
+        line.flags.push(format!(
+            "{:.0} % of the edge pixels lean on the edge of the scan or on voids",
+            percent(leans).max(1.0)
+        ));
+    }
+    if never * 10 > total {
+        line.flags.push(format!(
+            "{:.0} % of the edge pixels were never a contact of the tip",
+            percent(never)
+        ));
+    }
+}

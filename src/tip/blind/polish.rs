@@ -1,0 +1,442 @@
+//! Least squares on the contact graph: what the features say about the tip once it is roughly
+//! known which part of the tip touched which feature where.
+//!
+//! A sharp feature at the (sub-pixel) place `u` with height `a` shows the tip mirrored:
+//! `I(x) = a + P(u - x)` for every pixel `x` whose contact is that feature. Features, places and
+//! tip are found together by alternating least squares; the places make the tip's samples dense,
+//! so that neither pixel nor noise blunts or sharpens it. The scan itself is fitted, not a smoothed
+//! copy; smoothing only decides which contacts belong together.
+
+use super::smooth::gauss;
+use crate::error::Result;
+use crate::morphology;
+use crate::progress::Progress;
+use ndarray::{Array2, ArrayView2};
+use rayon::prelude::*;
+use std::f64::consts::PI;
+
+/// Contacts a feature needs.
+const LEAST_CONTACTS: usize = 20;
+/// Samples a tip cell needs to be believed.
+pub(super) const LEAST_SUPPORT: f32 = 3.0;
+const SECTORS: usize = 8;
+
+/// A sharp feature and the scan pixels that touched it.
+#[derive(Debug, Clone)]
+pub(super) struct Feature {
+    /// Place, pixels (row, column).
+    pub place: [f64; 2],
+    /// Height, nm.
+    pub height: f64,
+    /// Scan pixels that touch it.
+    pub pixels: Vec<(u32, u32)>,
+    /// Depth below the apex to which the tip was seen in every direction, nm.
+    pub reach: f64,
+}
+
+/// The polished tip.
+pub(super) struct Polished {
+    /// Tip heights, nm, apex not yet re-centred.
+    pub shape: Array2<f64>,
+    /// Number of samples per cell (sum of bilinear weights), 0 where the bound was kept.
+    pub support: Array2<f32>,
+    /// The features used.
+    pub features: Vec<Feature>,
+    /// The tip with each group of features left out, for the jackknife; empty with few features.
+    pub leave_out: Vec<Array2<f64>>,
+    /// Robust standard deviation of the residuals, nm.
+    pub residual: f64,
+}
+
+/// What to polish with.
+pub(super) struct Input<'a> {
+    /// The scan.
+    pub scan: ArrayView2<'a, f32>,
+    /// Noise standard deviation, nm.
+    pub noise: f64,
+    /// Smoothing that decides the contacts, pixels.
+    pub smoothing: f64,
+    /// Noise left after it, nm.
+    pub smooth_noise: f64,
+}
+
+/// Rounds of finding contacts and fitting.
+const ROUNDS: usize = 4;
+/// Sweeps over features and tip within a round.
+const SWEEPS: usize = 12;
+
+/// Polishes the bound `tip`. `None` when no sharp feature is found. Errors: `Cancelled`.
+pub(super) fn polish<'a>(
+    input: &'a Input<'a>,
+    bound: &Array2<f32>,
+    progress: &Progress,
+) -> Result<Option<Polished>> {
+    let smooth = gauss(input.scan, input.smoothing);
+    let mut tip = bound.clone();
+    let mut result: Option<Polished> = None;
+    for round in 0..ROUNDS {
+        progress.check()?;
+        let part = progress.part(round as f32 / ROUNDS as f32, (round + 1) as f32 / ROUNDS as f32);
+        let eroded = morphology::erode(smooth.view(), tip.view(), &part.part(0.0, 0.3))?;
+        let contacts = morphology::contacts(eroded.view(), tip.view(), &part.part(0.3, 0.6))?;
+        let mut features = features(input, &contacts.offsets, &tip);
+        if features.is_empty() {
+            break;
+        }
+        let mut fit = Fit::new(input, &tip);
+        for sweep in 0..SWEEPS {
+            progress.check()?;
+            // Far outliers go first, then ever more of what is not this feature.
+            fit.trim = if sweep < 3 { 6.0 } else { 3.5 };
+            features.par_iter_mut().for_each(|f| fit.place(f));
+            fit.update_scale(&features);
+            fit.update_tip(&features);
+            part.report(0.6 + 0.4 * (sweep + 1) as f32 / SWEEPS as f32);
+        }
+        for f in &mut features {
+            f.reach = fit.reach(f);
+        }
+        let (shape, support) = fit.combined(bound);
+        tip = shape.mapv(|p| p.min(0.0) as f32);
+        let centre = (tip.nrows() / 2, tip.ncols() / 2);
+        tip[centre] = 0.0;
+        let leave_out = fit.leave_out(&features, &shape, &support);
+        result = Some(Polished {
+            shape,
+            support,
+            features,
+            leave_out,
+            residual: fit.scale,
+        });
+    }
+    Ok(result)
+}
+
+/// Contacts gathered into sharp, isolated features.
+fn features(input: &Input, offsets: &Array2<[i16; 2]>, tip: &Array2<f32>) -> Vec<Feature> {
+    let (rows, columns) = offsets.dim();
+    let half = [tip.nrows() / 2, tip.ncols() / 2];
+    let margin = half.map(|h| h / 3);
+    let target = |r: usize, c: usize| -> Option<(usize, usize)> {
+        let [dr, dc] = offsets[(r, c)];
+        let inside = r >= margin[0]
+            && c >= margin[1]
+            && r + margin[0] < rows
+            && c + margin[1] < columns
+            && dr != i16::MIN
+            && !input.scan[(r, c)].is_nan();
+        inside.then(|| {
+            (
+                (r as isize + isize::from(dr)) as usize,
+                (c as isize + isize::from(dc)) as usize,
+            )
+        })
+    };
+    let mut count = Array2::<u32>::zeros((rows, columns));
+    for r in 0..rows {
+        for c in 0..columns {
+            if let Some(u) = target(r, c) {
+                count[u] += 1;
+            }
+        }
+    }
+    let around = |(r, c): (usize, usize), reach: usize| {
+        (r.saturating_sub(reach)..(r + reach + 1).min(rows))
+            .flat_map(move |i| {
+                (c.saturating_sub(reach)..(c + reach + 1).min(columns)).map(move |j| (i, j))
+            })
+    };
+    let mut seeds: Vec<(u32, usize, usize)> = count
+        .indexed_iter()
+        .filter(|(_, n)| **n >= 4)
+        .map(|((r, c), &n)| (n, r, c))
+        .collect();
+    seeds.sort_by_key(|&(n, r, c)| (std::cmp::Reverse(n), r, c));
+    // Which feature each touched surface pixel belongs to.
+    let mut owner = Array2::from_elem((rows, columns), u32::MAX);
+    let mut places = Vec::new();
+    for &(_, r, c) in &seeds {
+        if owner[(r, c)] != u32::MAX {
+            continue;
+        }
+        let near: Vec<_> = around((r, c), 1).filter(|&u| owner[u] == u32::MAX).collect();
+        let own: u32 = near.iter().map(|&u| count[u]).sum();
+        let wide: u32 = around((r, c), 3).map(|u| count[u]).sum();
+        // A feature as sharp as the tip shows gathers its contacts on one spot.
+        if (own as usize) < LEAST_CONTACTS || 2 * own < wide {
+            continue;
+        }
+        let id = places.len() as u32;
+        let mut place = [0.0; 2];
+        for &u in &near {
+            owner[u] = id;
+            let weight = f64::from(count[u]) / f64::from(own);
+            place[0] += weight * u.0 as f64;
+            place[1] += weight * u.1 as f64;
+        }
+        places.push(place);
+    }
+    let mut features: Vec<Feature> = places
+        .into_iter()
+        .map(|place| Feature {
+            place,
+            height: f64::NAN,
+            pixels: Vec::new(),
+            reach: 0.0,
+        })
+        .collect();
+    let owner_of = |r: usize, c: usize| target(r, c).map_or(u32::MAX, |u| owner[u]);
+    for r in 1..rows.saturating_sub(1) {
+        for c in 1..columns.saturating_sub(1) {
+            let id = owner_of(r, c);
+            // Pixels whose neighbours touch elsewhere may do so too.
+            let alone = |(i, j)| owner_of(i, j) == id;
+            if id != u32::MAX
+                && [(r - 1, c), (r + 1, c), (r, c - 1), (r, c + 1)].into_iter().all(alone)
+            {
+                features[id as usize].pixels.push((r as u32, c as u32));
+            }
+        }
+    }
+    features.retain(|f| {
+        f.pixels.len() >= LEAST_CONTACTS / 2
+            && reach(f, half, |i, j| -f64::from(tip[(i, j)])) > 5.0 * input.smooth_noise
+    });
+    features
+}
+
+/// Least over eight directions of the greatest depth at which the feature touched the tip.
+fn reach(feature: &Feature, half: [usize; 2], depth: impl Fn(usize, usize) -> f64) -> f64 {
+    let mut deepest = [0.0f64; SECTORS];
+    for &(r, c) in &feature.pixels {
+        let (dy, dx) = (feature.place[0] - f64::from(r), feature.place[1] - f64::from(c));
+        if dy.hypot(dx) < 0.75 {
+            continue;
+        }
+        let sector = ((dy.atan2(dx) / (2.0 * PI) + 1.0) * SECTORS as f64 + 0.5) as usize % SECTORS;
+        let i = (dy.round() + half[0] as f64).max(0.0) as usize;
+        let j = (dx.round() + half[1] as f64).max(0.0) as usize;
+        if i <= 2 * half[0] && j <= 2 * half[1] {
+            deepest[sector] = deepest[sector].max(depth(i, j));
+        }
+    }
+    deepest.into_iter().fold(f64::INFINITY, f64::min)
+}
+
+/// The alternating fit.
+struct Fit<'a> {
+    input: &'a Input<'a>,
+    tip: Array2<f64>,
+    weight: Array2<f32>,
+    scale: f64,
+    trim: f64,
+    half: [f64; 2],
+}
+
+/// A bilinear look-up: top-left cell and the weights of its four corners.
+struct Corner {
+    at: (usize, usize),
+    fraction: [f64; 2],
+}
+
+impl Corner {
+    fn weights(&self) -> [((usize, usize), f64); 4] {
+        let [fr, fc] = self.fraction;
+        let (r, c) = self.at;
+        [
+            ((r, c), (1.0 - fr) * (1.0 - fc)),
+            ((r, c + 1), (1.0 - fr) * fc),
+            ((r + 1, c), fr * (1.0 - fc)),
+            ((r + 1, c + 1), fr * fc),
+        ]
+    }
+}
+
+impl<'a> Fit<'a> {
+    fn new(input: &'a Input<'a>, tip: &Array2<f32>) -> Self {
+        Self {
+            input,
+            tip: tip.mapv(f64::from),
+            weight: Array2::zeros(tip.dim()),
+            scale: f64::INFINITY,
+            trim: 6.0,
+            half: [(tip.nrows() / 2) as f64, (tip.ncols() / 2) as f64],
+        }
+    }
+
+    fn corner(&self, place: [f64; 2], pixel: (u32, u32)) -> Option<Corner> {
+        let r = place[0] - f64::from(pixel.0) + self.half[0];
+        let c = place[1] - f64::from(pixel.1) + self.half[1];
+        let inside = r >= 0.0
+            && c >= 0.0
+            && r < (self.tip.nrows() - 1) as f64
+            && c < (self.tip.ncols() - 1) as f64;
+        inside.then(|| Corner {
+            at: (r as usize, c as usize),
+            fraction: [r.fract(), c.fract()],
+        })
+    }
+
+    /// Tip height and its slope along rows and columns.
+    fn look(&self, corner: &Corner) -> (f64, [f64; 2]) {
+        let (r, c) = corner.at;
+        let [fr, fc] = corner.fraction;
+        let t = |i: usize, j: usize| self.tip[(r + i, c + j)];
+        let top = t(0, 0) * (1.0 - fc) + t(0, 1) * fc;
+        let bottom = t(1, 0) * (1.0 - fc) + t(1, 1) * fc;
+        let left = t(0, 0) * (1.0 - fr) + t(1, 0) * fr;
+        let right = t(0, 1) * (1.0 - fr) + t(1, 1) * fr;
+        (top * (1.0 - fr) + bottom * fr, [bottom - top, right - left])
+    }
+
+    /// Residuals `(corner, scan - a - P, slope)` of the feature's pixels within the trim.
+    fn residuals(&self, f: &Feature) -> Vec<(Corner, f64, [f64; 2])> {
+        let limit = self.trim * self.scale;
+        f.pixels
+            .iter()
+            .filter_map(|&(r, c)| {
+                let corner = self.corner(f.place, (r, c))?;
+                let (p, slope) = self.look(&corner);
+                let z = f64::from(self.input.scan[(r as usize, c as usize)]);
+                let e = z - f.height - p;
+                // A misplaced feature errs more where the tip is steep.
+                let allowed = limit * (1.0 + 0.3 * slope[0].hypot(slope[1]));
+                (f.height.is_nan() || e.abs() <= allowed).then_some((corner, e, slope))
+            })
+            .collect()
+    }
+
+    /// Height and place of the feature by Gauss-Newton, the tip held.
+    fn place(&self, f: &mut Feature) {
+        if f.height.is_nan() {
+            let mut first: Vec<f64> = f
+                .pixels
+                .iter()
+                .filter_map(|&(r, c)| {
+                    let p = self.look(&self.corner(f.place, (r, c))?).0;
+                    Some(f64::from(self.input.scan[(r as usize, c as usize)]) - p)
+                })
+                .collect();
+            first.sort_by(f64::total_cmp);
+            match first.get(first.len() / 2) {
+                Some(&median) => f.height = median,
+                None => return,
+            }
+        }
+        let start = f.place;
+        for _ in 0..2 {
+            let mut normal = nalgebra::Matrix3::<f64>::zeros();
+            let mut right = nalgebra::Vector3::<f64>::zeros();
+            for (_, e, [sr, sc]) in self.residuals(f) {
+                let g = nalgebra::Vector3::new(1.0, sr, sc);
+                // Errors of place count along the slope: weigh as along the surface's normal.
+                let w = 1.0 / (1.0 + 0.1 * (sr * sr + sc * sc));
+                normal += g * g.transpose() * w;
+                right += g * (e * w);
+            }
+            // A little damping keeps flat features where they are.
+            for k in 0..3 {
+                normal[(k, k)] += 1e-3;
+            }
+            let Some(step) = normal.try_inverse().map(|inverse| inverse * right) else {
+                return;
+            };
+            f.height += step[0];
+            for k in 0..2 {
+                f.place[k] = (f.place[k] + step[k + 1].clamp(-0.3, 0.3))
+                    .clamp(start[k] - 0.5, start[k] + 0.5);
+            }
+        }
+    }
+
+    fn update_scale(&mut self, features: &[Feature]) {
+        let mut all: Vec<f64> = features
+            .par_iter()
+            .flat_map_iter(|f| {
+                f.pixels.iter().filter_map(|&(r, c)| {
+                    let (p, slope) = self.look(&self.corner(f.place, (r, c))?);
+                    let e = f64::from(self.input.scan[(r as usize, c as usize)]) - f.height - p;
+                    Some((e / (1.0 + 0.3 * slope[0].hypot(slope[1]))).abs())
+                })
+            })
+            .collect();
+        if all.is_empty() {
+            return;
+        }
+        let middle = all.len() / 2;
+        let (_, &mut median, _) = all.select_nth_unstable_by(middle, f64::total_cmp);
+        self.scale = (1.4826 * median).max(self.input.noise).max(1e-9);
+    }
+
+    /// Per cell the mean residual of the samples around it, summed in feature order.
+    fn means(&self, features: &[Feature], keep: impl Fn(usize) -> bool) -> (Array2<f64>, Array2<f32>) {
+        let mut sum = Array2::<f64>::zeros(self.tip.dim());
+        let mut weight = Array2::<f32>::zeros(self.tip.dim());
+        for (_, f) in features.iter().enumerate().filter(|(k, _)| keep(*k)) {
+            for (corner, e, _) in self.residuals(f) {
+                for (at, w) in corner.weights() {
+                    sum[at] += w * e;
+                    weight[at] += w as f32;
+                }
+            }
+        }
+        (sum, weight)
+    }
+
+    /// Moves the tip by the mean residuals (a step of simultaneous iterative reconstruction).
+    fn update_tip(&mut self, features: &[Feature]) {
+        for _ in 0..2 {
+            let (sum, weight) = self.means(features, |_| true);
+            for ((p, &s), &w) in self.tip.iter_mut().zip(&sum).zip(&weight) {
+                if w > 0.5 {
+                    *p += s / f64::from(w);
+                }
+            }
+            self.weight = weight;
+        }
+        // Only differences count: the apex cell stays at 0.
+        let apex = self.tip[(self.tip.nrows() / 2, self.tip.ncols() / 2)];
+        if self.weight[(self.tip.nrows() / 2, self.tip.ncols() / 2)] > 0.5 {
+            self.tip.mapv_inplace(|p| p - apex);
+        }
+    }
+
+    fn reach(&self, f: &Feature) -> f64 {
+        reach(f, self.half.map(|h| h as usize), |i, j| -self.tip[(i, j)])
+    }
+
+    /// The fit where it has support, the bound elsewhere.
+    fn combined(&self, bound: &Array2<f32>) -> (Array2<f64>, Array2<f32>) {
+        let mut shape = bound.mapv(f64::from);
+        let mut support = self.weight.clone();
+        for ((p, &q), s) in shape.iter_mut().zip(&self.tip).zip(support.iter_mut()) {
+            if *s >= LEAST_SUPPORT {
+                *p = q;
+            } else {
+                *s = 0.0;
+            }
+        }
+        (shape, support)
+    }
+
+    /// The tip without each of up to ten groups of features.
+    fn leave_out(&self, features: &[Feature], shape: &Array2<f64>, support: &Array2<f32>) -> Vec<Array2<f64>> {
+        let groups = features.len().min(10);
+        if groups < 3 {
+            return Vec::new();
+        }
+        (0..groups)
+            .into_par_iter()
+            .map(|g| {
+                let (sum, weight) = self.means(features, |k| k % groups != g);
+                let mut tip = shape.clone();
+                for (((p, &s), &w), &all) in tip.iter_mut().zip(&sum).zip(&weight).zip(support) {
+                    if all > 0.0 && w > 0.5 {
+                        *p += s / f64::from(w);
+                    }
+                }
+                tip
+            })
+            .collect()
+    }
+}

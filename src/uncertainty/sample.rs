@@ -1,0 +1,119 @@
+//! Repeated observations that are not independent.
+
+/// Mean, standard deviation and effective size of a series.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct Series {
+    /// Arithmetic mean.
+    pub mean: f64,
+    /// Sample standard deviation (n - 1); 0 for one value.
+    pub deviation: f64,
+    /// Number of values.
+    pub count: usize,
+    /// Number of independent values with the same standard error, 1..=n.
+    pub effective: f64,
+}
+
+impl Series {
+    /// Reads `values` in their order; not-a-numbers are skipped. `None` when nothing is left.
+    ///
+    /// `n_eff = n / (1 + 2 sum (1 - k/n) rho_k)`, the sum stopped at the first pair of lags whose
+    /// autocorrelations add up to nothing (initial positive sequence; Geyer, Statist. Sci. 7, 473
+    /// (1992), from memory).
+    pub fn of(values: &[f64]) -> Option<Self> {
+        let values: Vec<f64> = values.iter().copied().filter(|v| v.is_finite()).collect();
+        let count = values.len();
+        if count == 0 {
+            return None;
+        }
+        let n = count as f64;
+        let mean = values.iter().sum::<f64>() / n;
+        let variance = values.iter().map(|v| (v - mean).powi(2)).sum::<f64>() / n;
+        let deviation = if count > 1 {
+            (variance * n / (n - 1.0)).sqrt()
+        } else {
+            0.0
+        };
+        let rho = |lag: usize| {
+            values[lag..]
+                .iter()
+                .zip(&values)
+                .map(|(a, b)| (a - mean) * (b - mean))
+                .sum::<f64>()
+                / n
+                / variance
+        };
+        let mut sum = 0.0;
+        if variance > 0.0 {
+            // Beyond a third of the series the autocorrelation is mere noise.
+            let longest = count / 3;
+            let mut lag = 1;
+            while lag < longest {
+                let pair = rho(lag) + rho(lag + 1);
+                if pair <= 0.0 {
+                    break;
+                }
+                sum += pair;
+                lag += 2;
+            }
+        }
+        Some(Self {
+            mean,
+            deviation,
+            count,
+            effective: (n / (1.0 + 2.0 * sum)).clamp(1.0, n),
+        })
+    }
+
+    /// Standard uncertainty of the mean, from the effective size.
+    pub fn standard_error(&self) -> f64 {
+        self.deviation / self.effective.sqrt()
+    }
+
+    /// Degrees of freedom of that standard uncertainty; `None` when one value tells nothing.
+    pub fn degrees_of_freedom(&self) -> Option<f64> {
+        (self.count > 1).then(|| (self.effective - 1.0).max(1.0))
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use rand::{Rng, SeedableRng};
+
+    #[test]
+    fn independent_values_count_in_full_and_repeated_ones_once() {
+        let mut random = rand_chacha::ChaCha8Rng::seed_from_u64(5);
+        let white: Vec<f64> = (0..2000).map(|_| random.random::<f64>()).collect();
+        let series = Series::of(&white).unwrap();
+        assert!(series.effective > 1500.0, "{}", series.effective);
+        let repeated: Vec<f64> = white.iter().flat_map(|&v| [v; 8]).collect();
+        let eight = Series::of(&repeated).unwrap();
+        let ratio = eight.effective / 2000.0;
+        assert!((0.7..1.3).contains(&ratio), "{ratio}");
+    }
+
+    /// First-order autoregression: n_eff / n = (1 - a) / (1 + a), common practice.
+    #[test]
+    fn autoregressive_series_has_its_known_size() {
+        let mut random = rand_chacha::ChaCha8Rng::seed_from_u64(6);
+        let mut x = 0.0;
+        let values: Vec<f64> = (0..20_000)
+            .map(|_| {
+                x = 0.8 * x + random.random::<f64>() - 0.5;
+                x
+            })
+            .collect();
+        let ratio = Series::of(&values).unwrap().effective / 20_000.0;
+        assert!((ratio - 0.2 / 1.8).abs() < 0.03, "{ratio}");
+    }
+
+    #[test]
+    fn little_or_nothing_is_answered() {
+        assert_eq!(Series::of(&[]), None);
+        assert_eq!(Series::of(&[f64::NAN]), None);
+        let one = Series::of(&[3.0]).unwrap();
+        assert_eq!((one.mean, one.standard_error(), one.degrees_of_freedom()), (3.0, 0.0, None));
+        let same = Series::of(&[2.0; 9]).unwrap();
+        assert_eq!((same.deviation, same.effective), (0.0, 9.0));
+    }
+}

@@ -1,0 +1,277 @@
+//! The binary from outside: the commands, files and exit status of the contract.
+
+use assert_cmd::Command;
+use ndarray::{Array2, arr2};
+use ndarray_npy::{read_npy, write_npy};
+use predicates::prelude::*;
+use serde_json::Value;
+use std::path::{Path, PathBuf};
+
+fn truewidth() -> Command {
+    let mut command = Command::cargo_bin("truewidth").expect("the binary is built");
+    // No window may open, whatever machine this runs on.
+    command.env_remove("DISPLAY").env_remove("WAYLAND_DISPLAY");
+    command
+}
+
+fn folder() -> tempfile::TempDir {
+    tempfile::tempdir().expect("a temporary folder")
+}
+
+fn samples() -> PathBuf {
+    Path::new(env!("CARGO_MANIFEST_DIR")).join("sample-scans")
+}
+
+/// A tip with no symmetry: every mix-up of axes or signs shows.
+fn skew_tip() -> Array2<f32> {
+    arr2(&[[-9.0, -5.0, -8.0], [-2.0, 0.0, -3.0], [-7.0, -4.0, -6.0]])
+}
+
+#[test]
+fn a_single_spike_shows_the_tip_mirrored() {
+    let folder = folder();
+    let path = |name: &str| folder.path().join(name);
+    let mut surface = Array2::from_elem((7, 9), -100.0f32);
+    surface[[3, 4]] = 10.0;
+    write_npy(path("surface.npy"), &surface).unwrap();
+    write_npy(path("tip.npy"), &skew_tip()).unwrap();
+
+    truewidth()
+        .args(["simulate", "--quiet", "--pitch", "2nm,3nm", "--height-unit", "nm"])
+        .arg(path("surface.npy"))
+        .arg("--tip")
+        .arg(path("tip.npy"))
+        .arg("--out")
+        .arg(path("scan.npy"))
+        .assert()
+        .success()
+        .stderr("");
+    let scan: Array2<f32> = read_npy(path("scan.npy")).unwrap();
+    for i in 0..3usize {
+        for j in 0..3usize {
+            // scan(x) = H + tip(-x), interface contract.
+            assert_eq!(scan[[3 + i - 1, 4 + j - 1]], 10.0 + skew_tip()[[2 - i, 2 - j]]);
+        }
+    }
+
+    truewidth()
+        .args(["reconstruct", "--quiet", "--pitch", "2nm,3nm", "--height-unit", "nm"])
+        .arg(path("scan.npy"))
+        .arg("--tip")
+        .arg(path("tip.npy"))
+        .arg("--out")
+        .arg(path("back.npy"))
+        .arg("--certainty")
+        .arg(path("certainty.npy"))
+        .assert()
+        .success();
+    let back: Array2<f32> = read_npy(path("back.npy")).unwrap();
+    let certainty: Array2<u8> = read_npy(path("certainty.npy")).unwrap();
+    assert_eq!(back[[3, 4]], 10.0);
+    assert_eq!(certainty[[3, 4]], 2);
+    // Next to the spike the tip never reached down: an upper bound, never a contact.
+    assert!(back[[3, 5]] > -100.0);
+    assert_eq!(certainty[[3, 5]], 0);
+}
+
+#[test]
+fn conversion_keeps_heights_scale_and_voids() {
+    let folder = folder();
+    let path = |name: &str| folder.path().join(name);
+    let mut map = Array2::from_shape_fn((5, 8), |(r, c)| (r * 8 + c) as f32 * 0.25);
+    map[[2, 3]] = f32::NAN;
+    write_npy(path("a.npy"), &map).unwrap();
+    let convert = |from: &str, to: &str, options: &[&str]| {
+        truewidth()
+            .args(["convert", "--quiet"])
+            .args(options)
+            .arg(path(from))
+            .arg(path(to))
+            .assert()
+            .success();
+    };
+    convert("a.npy", "b.tiff", &["--pitch", "2nm,4nm", "--height-unit", "nm"]);
+    // The TIFF carries its scale: nothing needs to be given again.
+    convert("b.tiff", "c.npy", &[]);
+    let back: Array2<f32> = read_npy(path("c.npy")).unwrap();
+    assert!(map.iter().zip(&back).all(|(a, b)| a == b || (a.is_nan() && b.is_nan())));
+
+    let facts = truewidth().args(["inspect", "--json"]).arg(path("b.tiff")).output().unwrap();
+    let facts: Value = serde_json::from_slice(&facts.stdout).unwrap();
+    assert_eq!(facts["maps"][0]["columns"], 8);
+    assert_eq!(facts["maps"][0]["rows"], 5);
+    assert_eq!(facts["sha256"].as_str().map(str::len), Some(64));
+}
+
+#[test]
+fn a_missing_scale_is_asked_for_not_guessed() {
+    let folder = folder();
+    let scan = folder.path().join("scan.npy");
+    write_npy(&scan, &Array2::<f32>::zeros((4, 4))).unwrap();
+    let out = folder.path().join("out.tiff");
+    truewidth().arg("convert").arg(&scan).arg(&out).assert().code(1).stderr(
+        predicate::str::contains("pitch").and(predicate::str::contains("--pitch")),
+    );
+    truewidth()
+        .args(["convert", "--pitch", "2nm"])
+        .arg(&scan)
+        .arg(&out)
+        .assert()
+        .code(1)
+        .stderr(predicate::str::contains("--height-unit"));
+    assert!(!out.exists());
+}
+
+#[test]
+fn files_of_other_kinds_get_a_plain_answer() {
+    let folder = folder();
+    let cases: [(&str, &[u8]); 4] = [
+        ("empty.tiff", b""),
+        ("text.npy", b"this is not a height map\n"),
+        ("cut.npy", b"\x93NUMPY\x01\x00v\x00{'descr': '<f4', "),
+        ("cut.png", b"\x89PNG\r\n\x1a\n\x00\x00\x00\rIHDR\x00\x00"),
+    ];
+    for (name, bytes) in cases {
+        let path = folder.path().join(name);
+        std::fs::write(&path, bytes).unwrap();
+        truewidth()
+            .arg("inspect")
+            .arg(&path)
+            .assert()
+            .code(1)
+            .stdout("")
+            .stderr(predicate::str::contains(name).and(predicate::str::contains("panicked").not()));
+    }
+    truewidth().args(["inspect", "no/such/file.tiff"]).assert().code(1);
+}
+
+#[test]
+fn wrong_usage_is_2() {
+    truewidth().args(["run"]).assert().code(2);
+    truewidth().args(["inspect", "x", "--pitch", "2"]).assert().code(2);
+    truewidth().args(["polish"]).arg("x").assert().code(2);
+    truewidth().args(["run", "a/job.toml", "b/job.toml"]).assert().code(2);
+}
+
+#[test]
+fn completions_and_manual_come_from_the_definitions() {
+    truewidth()
+        .args(["completions", "bash"])
+        .assert()
+        .success()
+        .stdout(predicate::str::contains("reconstruct"));
+    truewidth()
+        .arg("manual")
+        .assert()
+        .success()
+        .stdout(predicate::str::contains(".TH").and(predicate::str::contains("certainty")));
+}
+
+/// Copies the sample `name` (scan and job) into `folder`; returns the job's path.
+fn sample_job(folder: &Path, name: &str) -> PathBuf {
+    let job = folder.join(format!("{name}.toml"));
+    std::fs::copy(samples().join(format!("{name}.toml")), &job).unwrap();
+    let scan = format!("{name}.tiff");
+    std::fs::copy(samples().join(&scan), folder.join(&scan)).unwrap();
+    job
+}
+
+#[test]
+fn a_job_gives_the_whole_record_and_twice_the_same() {
+    let folder = folder();
+    let job = sample_job(folder.path(), "isolated-step");
+    let record = |out: &str| {
+        let out = folder.path().join(out);
+        truewidth()
+            .args(["run", "--quiet", "--out"])
+            .arg(&out)
+            .arg(&job)
+            .assert()
+            .success()
+            .stdout(predicate::str::contains("report.html"));
+        out.join("isolated-step")
+    };
+    let (a, b) = (record("a"), record("b"));
+    for name in ["surface.npy", "certainty.npy", "tip.npy"] {
+        assert_eq!(std::fs::read(a.join(name)).unwrap(), std::fs::read(b.join(name)).unwrap());
+    }
+    let result = |folder: &Path| -> Value {
+        let mut value: Value =
+            serde_json::from_slice(&std::fs::read(folder.join("result.json")).unwrap()).unwrap();
+        assert!(value.as_object_mut().unwrap().remove("written").is_some());
+        value
+    };
+    let first = result(&a);
+    assert_eq!(first, result(&b));
+    assert_eq!(first["schema"], "truewidth.result/1");
+    for key in ["program", "job", "scan", "tip", "reliability", "dimensions", "warnings"] {
+        assert!(first.get(key).is_some(), "{key}");
+    }
+    let html = std::fs::read_to_string(a.join("report.html")).unwrap();
+    assert!(html.contains(first["scan"]["sha256"].as_str().unwrap()));
+
+    let surface: Array2<f32> = read_npy(a.join("surface.npy")).unwrap();
+    let certainty: Array2<u8> = read_npy(a.join("certainty.npy")).unwrap();
+    let tip: Array2<f32> = read_npy(a.join("tip.npy")).unwrap();
+    assert_eq!(surface.dim(), certainty.dim());
+    assert_eq!((tip.nrows() % 2, tip.ncols() % 2), (1, 1));
+    assert_eq!(tip[[tip.nrows() / 2, tip.ncols() / 2]], 0.0);
+}
+
+#[test]
+fn one_bad_job_does_not_stop_the_others() {
+    let folder = folder();
+    let good = sample_job(folder.path(), "isolated-step");
+    let bad = folder.path().join("bad.toml");
+    std::fs::write(&bad, "[scan]\nfile = \"missing.tiff\"\n").unwrap();
+    let odd = folder.path().join("odd.toml");
+    std::fs::write(&odd, "[scan]\nfile = \"x.tiff\"\npich = 3\n").unwrap();
+    let out = folder.path().join("out");
+    truewidth()
+        .args(["run", "--workers", "2", "--out"])
+        .arg(&out)
+        .args([&bad, &odd, &good])
+        .assert()
+        .code(1)
+        .stderr(
+            predicate::str::contains("missing.tiff")
+                .and(predicate::str::contains("pich"))
+                .and(predicate::str::contains("2 of 3 jobs failed")),
+        );
+    assert!(out.join("isolated-step/result.json").exists());
+    assert!(!out.join("bad").exists());
+}
+
+#[test]
+fn the_tip_command_prints_the_tip_object() {
+    let folder = folder();
+    let tip = folder.path().join("tip.npy");
+    let output = truewidth()
+        .args(["tip", "--json", "--quiet", "--out"])
+        .arg(&tip)
+        .arg(samples().join("spike-characterizer.tiff"))
+        .output()
+        .unwrap();
+    assert!(output.status.success(), "{}", String::from_utf8_lossy(&output.stderr));
+    let object: Value = serde_json::from_slice(&output.stdout).unwrap();
+    assert_eq!(object["from"], "blind");
+    for key in ["threshold_nm", "exercised_depth_nm", "apex_radius_nm", "half_angle_deg"] {
+        assert!(object.get(key).is_some(), "{key}");
+    }
+    assert!(object["diagnosis"].is_array());
+    let grid: Array2<f32> = read_npy(&tip).unwrap();
+    assert_eq!(grid[[grid.nrows() / 2, grid.ncols() / 2]], 0.0);
+}
+
+#[test]
+fn without_a_display_the_demo_runs_headless_and_says_so() {
+    let folder = folder();
+    truewidth()
+        .current_dir(folder.path())
+        .env("TRUEWIDTH_DATA", folder.path().join("data"))
+        .assert()
+        .success()
+        .stderr(predicate::str::contains("no display"))
+        .stdout(predicate::str::contains("Report:"));
+    assert!(folder.path().join("results").is_dir());
+}
