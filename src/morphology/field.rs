@@ -139,10 +139,11 @@ fn seen(z: f32, order: Order) -> f32 {
     }
 }
 
-struct Load<'a> {
-    from: &'a [f32],
-    to: &'a mut [f32],
-    order: Order,
+/// Copies heights as the kernels see them.
+pub(super) struct Load<'a> {
+    pub(super) from: &'a [f32],
+    pub(super) to: &'a mut [f32],
+    pub(super) order: Order,
 }
 
 impl WithSimd for Load<'_> {

@@ -14,9 +14,11 @@
 //! Everything here gives the same bits on one thread and on many, on every instruction set, and
 //! as the plain twins in `reference.rs`.
 
+mod contact;
 mod dilation;
 mod edges;
 mod field;
+mod flat;
 #[cfg(test)]
 mod reference;
 mod search;
@@ -87,7 +89,7 @@ pub fn contacts(
     tip: ArrayView2<f32>,
     progress: &Progress,
 ) -> Result<Contacts> {
-    dilation::contacts(Arch::new(), surface, tip, progress)
+    contact::contacts(Arch::new(), surface, tip, progress)
 }
 
 /// Certainty values (contract of `certainty.npy`).

@@ -111,7 +111,7 @@ fn agree_with_the_twins(map: &Array2<f32>, tip: &Array2<f32>) {
             bits(&dilated.heights)
         );
         assert_eq!(bits(&fast(map, tip, Order::Min, arch)), bits(&eroded));
-        let contacts = dilation::contacts(arch, map.view(), tip.view(), &progress).unwrap();
+        let contacts = contact::contacts(arch, map.view(), tip.view(), &progress).unwrap();
         assert_eq!(bits(&contacts.heights), bits(&dilated.heights));
         assert_eq!(contacts.offsets, dilated.offsets);
         for tolerance in [0.0, 0.6, 1e6, f32::INFINITY] {
@@ -241,6 +241,31 @@ fn shapes_at_the_limits() {
             };
             let (map, tip) = scene.build();
             agree_with_the_twins(&map, &tip);
+        }
+    }
+}
+
+#[test]
+fn flat_tips_equal_their_twin() {
+    let sizes = [(1, 1), (1, 5), (3, 3), (7, 5), (9, 171), (101, 3)];
+    for (rows, cols) in [(1, 1), (1, 40), (13, 33), (40, 7)] {
+        for (tip_rows, tip_cols) in sizes {
+            let scene = Scene {
+                seed: 11,
+                rows,
+                cols,
+                tip_rows: 1,
+                tip_cols: 1,
+                steep: 0.0,
+                grain: 0.25,
+                voids: 0.3,
+                holes: 0.0,
+            };
+            let (map, _) = scene.build();
+            for depth in [0.0, -0.0, -1.3] {
+                let tip = Array2::from_elem((tip_rows, tip_cols), depth);
+                agree_with_the_twins(&map, &tip);
+            }
         }
     }
 }
