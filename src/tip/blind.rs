@@ -119,7 +119,7 @@ pub fn estimate(
     }
     let noise = match noise_nm.filter(|n| n.is_finite() && *n >= 0.0) {
         Some(noise) => noise,
-        None => smooth::noise(scan.heights()),
+        None => crate::leveling::noise(scan).unwrap_or(0.0),
     };
     let bound = match settings.method {
         Method::Auto => matched_bound(scan, noise, settings, &progress.part(0.0, 0.6))?,

@@ -29,6 +29,7 @@ pub(super) fn finish(
         let input = polish::Input {
             scan: scan.heights(),
             noise,
+            px: (scan.pitch().x * scan.pitch().y).sqrt(),
             smoothing: bound.smoothing,
             smooth_noise: left,
         };

@@ -44,8 +44,6 @@ pub(super) struct Polished {
     pub features: Vec<Feature>,
     /// The tip with each group of features left out, for the jackknife; empty with few features.
     pub leave_out: Vec<Array2<f64>>,
-    /// Robust standard deviation of the residuals, nm.
-    pub residual: f64,
 }
 
 /// What to polish with.
@@ -54,6 +52,8 @@ pub(super) struct Input<'a> {
     pub scan: ArrayView2<'a, f32>,
     /// Noise standard deviation, nm.
     pub noise: f64,
+    /// Pixel pitch, nm.
+    pub px: f64,
     /// Smoothing that decides the contacts, pixels.
     pub smoothing: f64,
     /// Noise left after it, nm.
@@ -64,6 +64,8 @@ pub(super) struct Input<'a> {
 const ROUNDS: usize = 4;
 /// Sweeps over features and tip within a round.
 const SWEEPS: usize = 12;
+/// How far the bound may lie beside the tip where no contact has been fitted yet, pixels.
+const SLACK_PX: f64 = 0.6;
 
 /// Polishes the bound `tip`. `None` when no sharp feature is found. Errors: `Cancelled`.
 pub(super) fn polish<'a>(
@@ -87,7 +89,11 @@ pub(super) fn polish<'a>(
         for sweep in 0..SWEEPS {
             progress.check()?;
             // Far outliers go first, then ever more of what is not this feature.
-            fit.trim = if sweep < 3 { 6.0 } else { 3.5 };
+            (fit.trim, fit.slack) = if sweep < SWEEPS / 2 { (6.0, SLACK_PX) } else { (3.5, 0.15) };
+            if sweep == 3 {
+                let (shape, _) = fit.combined(bound);
+                fit.grow(&smooth, &shape, &mut features);
+            }
             features.par_iter_mut().for_each(|f| fit.place(f));
             fit.update_scale(&features);
             fit.update_tip(&features);
@@ -106,7 +112,6 @@ pub(super) fn polish<'a>(
             support,
             features,
             leave_out,
-            residual: fit.scale,
         });
     }
     Ok(result)
@@ -229,7 +234,9 @@ struct Fit<'a> {
     tip: Array2<f64>,
     weight: Array2<f32>,
     scale: f64,
+    /// Residuals beyond `trim` times the scale plus `slack` pixels along the slope are left out.
     trim: f64,
+    slack: f64,
     half: [f64; 2],
 }
 
@@ -252,6 +259,59 @@ impl Corner {
     }
 }
 
+/// Tip height and its slope along rows and columns.
+fn look(tip: &Array2<f64>, corner: &Corner) -> (f64, [f64; 2]) {
+    let (r, c) = corner.at;
+    let [fr, fc] = corner.fraction;
+    let t = |i: usize, j: usize| tip[(r + i, c + j)];
+    let top = t(0, 0) * (1.0 - fc) + t(0, 1) * fc;
+    let bottom = t(1, 0) * (1.0 - fc) + t(1, 1) * fc;
+    let left = t(0, 0) * (1.0 - fr) + t(1, 0) * fr;
+    let right = t(0, 1) * (1.0 - fr) + t(1, 1) * fr;
+    (top * (1.0 - fr) + bottom * fr, [bottom - top, right - left])
+}
+
+/// Weighted local quadratic over a square of half-width `reach` cells (Savitzky and Golay, Anal.
+/// Chem. 36, 1627 (1964), in two dimensions; from memory): takes noise, keeps curvature. Cells
+/// without weight stay.
+fn local_quadratic(tip: &Array2<f64>, weight: &Array2<f32>, reach: usize) -> Array2<f64> {
+    let (rows, columns) = tip.dim();
+    let values: Vec<f64> = (0..rows * columns)
+        .into_par_iter()
+        .map(|k| {
+            let (r, c) = (k / columns, k % columns);
+            if weight[(r, c)] < 0.5 {
+                return tip[(r, c)];
+            }
+            let mut normal = nalgebra::SMatrix::<f64, 6, 6>::zeros();
+            let mut right = nalgebra::SVector::<f64, 6>::zeros();
+            let mut count = 0;
+            for i in r.saturating_sub(reach)..(r + reach + 1).min(rows) {
+                for j in c.saturating_sub(reach)..(c + reach + 1).min(columns) {
+                    let w = f64::from(weight[(i, j)]);
+                    if w < 0.5 {
+                        continue;
+                    }
+                    let (y, x) = (i as f64 - r as f64, j as f64 - c as f64);
+                    let g = nalgebra::SVector::<f64, 6>::from([1.0, x, y, x * x, x * y, y * y]);
+                    normal += g * g.transpose() * w;
+                    right += g * (w * (tip[(i, j)] - tip[(r, c)]));
+                    count += 1;
+                }
+            }
+            // At the rim of what was seen a quadratic runs away.
+            if count < (2 * reach + 1) * (reach + 1) {
+                return tip[(r, c)];
+            }
+            match normal.cholesky() {
+                Some(factor) => tip[(r, c)] + factor.solve(&right)[0],
+                None => tip[(r, c)],
+            }
+        })
+        .collect();
+    Array2::from_shape_vec((rows, columns), values).unwrap_or_else(|_| tip.clone())
+}
+
 impl<'a> Fit<'a> {
     fn new(input: &'a Input<'a>, tip: &Array2<f32>) -> Self {
         Self {
@@ -260,6 +320,7 @@ impl<'a> Fit<'a> {
             weight: Array2::zeros(tip.dim()),
             scale: f64::INFINITY,
             trim: 6.0,
+            slack: SLACK_PX,
             half: [(tip.nrows() / 2) as f64, (tip.ncols() / 2) as f64],
         }
     }
@@ -277,16 +338,8 @@ impl<'a> Fit<'a> {
         })
     }
 
-    /// Tip height and its slope along rows and columns.
     fn look(&self, corner: &Corner) -> (f64, [f64; 2]) {
-        let (r, c) = corner.at;
-        let [fr, fc] = corner.fraction;
-        let t = |i: usize, j: usize| self.tip[(r + i, c + j)];
-        let top = t(0, 0) * (1.0 - fc) + t(0, 1) * fc;
-        let bottom = t(1, 0) * (1.0 - fc) + t(1, 1) * fc;
-        let left = t(0, 0) * (1.0 - fr) + t(1, 0) * fr;
-        let right = t(0, 1) * (1.0 - fr) + t(1, 1) * fr;
-        (top * (1.0 - fr) + bottom * fr, [bottom - top, right - left])
+        look(&self.tip, corner)
     }
 
     /// Residuals `(corner, scan - a - P, slope)` of the feature's pixels within the trim.
@@ -300,7 +353,8 @@ impl<'a> Fit<'a> {
                 let z = f64::from(self.input.scan[(r as usize, c as usize)]);
                 let e = z - f.height - p;
                 // A misplaced feature errs more where the tip is steep.
-                let allowed = limit * (1.0 + 0.3 * slope[0].hypot(slope[1]));
+                let steep = slope[0].hypot(slope[1]);
+                let allowed = limit * (1.0 + 0.3 * steep) + self.slack * steep;
                 (f.height.is_nan() || e.abs() <= allowed).then_some((corner, e, slope))
             })
             .collect()
@@ -394,6 +448,7 @@ impl<'a> Fit<'a> {
             }
             self.weight = weight;
         }
+        self.tip = self.calmed(&self.tip);
         // Only differences count: the apex cell stays at 0.
         let apex = self.tip[(self.tip.nrows() / 2, self.tip.ncols() / 2)];
         if self.weight[(self.tip.nrows() / 2, self.tip.ncols() / 2)] > 0.5 {
@@ -401,8 +456,74 @@ impl<'a> Fit<'a> {
         }
     }
 
+    /// Gives every feature the pixels that the tip `shape` on it explains. Flank against flank, the
+    /// erosion's contacts are many and say little; the features themselves say more.
+    fn grow(&self, smooth: &Array2<f32>, shape: &Array2<f64>, features: &mut [Feature]) {
+        let (rows, columns) = smooth.dim();
+        let half = self.half.map(|h| h as usize);
+        let mut best = Array2::from_elem((rows, columns), (f64::NEG_INFINITY, u32::MAX, 0.0f64));
+        for (id, f) in features.iter().enumerate() {
+            let range = |k: usize, n: usize| {
+                let at = f.place[k].round().max(0.0) as usize;
+                at.saturating_sub(half[k] - 1)..(at + half[k]).min(n)
+            };
+            for r in range(0, rows) {
+                for c in range(1, columns) {
+                    let Some(corner) = self.corner(f.place, (r as u32, c as u32)) else {
+                        continue;
+                    };
+                    let (p, slope) = look(shape, &corner);
+                    if f.height + p > best[(r, c)].0 {
+                        best[(r, c)] = (f.height + p, id as u32, slope[0].hypot(slope[1]));
+                    }
+                }
+            }
+        }
+        let fits = |r: usize, c: usize| -> u32 {
+            let (predicted, id, steep) = best[(r, c)];
+            let off = (f64::from(smooth[(r, c)]) - predicted).abs();
+            if off <= 4.0 * self.input.smooth_noise + SLACK_PX * steep { id } else { u32::MAX }
+        };
+        let owner = Array2::from_shape_fn((rows, columns), |(r, c)| fits(r, c));
+        let mut grown: Vec<Vec<(u32, u32)>> = vec![Vec::new(); features.len()];
+        for r in 1..rows.saturating_sub(1) {
+            for c in 1..columns.saturating_sub(1) {
+                let id = owner[(r, c)];
+                let around = [(r - 1, c), (r + 1, c), (r, c - 1), (r, c + 1)];
+                if id != u32::MAX && around.into_iter().all(|at| owner[at] == id) {
+                    grown[id as usize].push((r as u32, c as u32));
+                }
+            }
+        }
+        for (f, more) in features.iter_mut().zip(grown) {
+            f.pixels.extend(more);
+            f.pixels.sort_unstable();
+            f.pixels.dedup();
+        }
+    }
+
     fn reach(&self, f: &Feature) -> f64 {
         reach(f, self.half.map(|h| h as usize), |i, j| -self.tip[(i, j)])
+    }
+
+    /// Half-width of the local quadratic that the noise of the cells asks for.
+    fn calm_reach(&self) -> usize {
+        let mut seen: Vec<f32> = self.weight.iter().copied().filter(|w| *w >= LEAST_SUPPORT).collect();
+        seen.sort_by(f32::total_cmp);
+        let typical = seen.get(seen.len() / 2).map_or(1.0, |w| f64::from(*w));
+        let error = self.input.noise / typical.sqrt() / self.input.px;
+        match error {
+            e if e < 0.01 => 0,
+            e if e < 0.08 => 2,
+            _ => 3,
+        }
+    }
+
+    fn calmed(&self, tip: &Array2<f64>) -> Array2<f64> {
+        match self.calm_reach() {
+            0 => tip.clone(),
+            reach => local_quadratic(tip, &self.weight, reach),
+        }
     }
 
     /// The fit where it has support, the bound elsewhere.
@@ -435,7 +556,7 @@ impl<'a> Fit<'a> {
                         *p += s / f64::from(w);
                     }
                 }
-                tip
+                self.calmed(&tip)
             })
             .collect()
     }
