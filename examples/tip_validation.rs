@@ -346,7 +346,7 @@ fn main() -> Result<(), Box<dyn Error>> {
                     let (c, truth) = (e.tip.shape().nrows() / 2, (cell.identified)());
                     for k in 0..e.tip.shape().ncols() {
                         let x = (k as f64 - c as f64) * cell.px;
-                        println!("    {x:6.1} {:8.3} true {:8.3} seen {}", e.tip.shape()[[c, k]], -truth(x, 0.0), e.support[[c, k]]);
+                        println!("    {x:6.1} {:8.3} true {:8.3} seen {} diagonal {:8.3} true {:8.3} seen {}", e.tip.shape()[[c, k]], -truth(x, 0.0), e.support[[c, k]], e.tip.shape()[[k, k]], -truth(x, x), e.support[[k, k]]);
                     }
                 }
                 for d in &e.diagnosis {

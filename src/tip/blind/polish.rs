@@ -7,7 +7,7 @@
 //! so that neither pixel nor noise blunts or sharpens it. The scan itself is fitted, not a smoothed
 //! copy; smoothing only decides which contacts belong together.
 
-use super::smooth::gauss;
+use super::smooth::{gain, gauss};
 use crate::error::Result;
 use crate::morphology;
 use crate::progress::Progress;
@@ -63,7 +63,9 @@ pub(super) struct Input<'a> {
 /// Rounds of finding contacts and fitting.
 const ROUNDS: usize = 4;
 /// Sweeps over features and tip within a round.
-const SWEEPS: usize = 12;
+const SWEEPS: usize = 14;
+/// Smoothing that takes noise but leaves the flanks, pixels.
+const LIGHT_PX: f64 = 1.0;
 /// How far the bound may lie beside the tip where no contact has been fitted yet, pixels.
 const SLACK_PX: f64 = 0.6;
 
@@ -74,6 +76,7 @@ pub(super) fn polish<'a>(
     progress: &Progress,
 ) -> Result<Option<Polished>> {
     let smooth = gauss(input.scan, input.smoothing);
+    let light = gauss(input.scan, input.smoothing.min(LIGHT_PX));
     let mut tip = bound.clone();
     let mut result: Option<Polished> = None;
     for round in 0..ROUNDS {
@@ -85,14 +88,15 @@ pub(super) fn polish<'a>(
         if features.is_empty() {
             break;
         }
+        let core: Vec<Vec<(u32, u32)>> = features.iter().map(|f| f.pixels.clone()).collect();
         let mut fit = Fit::new(input, &tip);
         for sweep in 0..SWEEPS {
             progress.check()?;
             // Far outliers go first, then ever more of what is not this feature.
             (fit.trim, fit.slack) = if sweep < SWEEPS / 2 { (6.0, SLACK_PX) } else { (3.5, 0.15) };
-            if sweep == 3 {
-                let (shape, _) = fit.combined(bound);
-                fit.grow(&smooth, &shape, &mut features);
+            if (2..SWEEPS - 3).contains(&sweep) {
+                fit.extend(bound);
+                fit.grow(&light, &mut features, &core);
             }
             features.par_iter_mut().for_each(|f| fit.place(f));
             fit.update_scale(&features);
@@ -104,8 +108,6 @@ pub(super) fn polish<'a>(
         }
         let (shape, support) = fit.combined(bound);
         tip = shape.mapv(|p| p.min(0.0) as f32);
-        let centre = (tip.nrows() / 2, tip.ncols() / 2);
-        tip[centre] = 0.0;
         let leave_out = fit.leave_out(&features, &shape, &support);
         result = Some(Polished {
             shape,
@@ -274,7 +276,12 @@ fn look(tip: &Array2<f64>, corner: &Corner) -> (f64, [f64; 2]) {
 /// Weighted local quadratic over a square of half-width `reach` cells (Savitzky and Golay, Anal.
 /// Chem. 36, 1627 (1964), in two dimensions; from memory): takes noise, keeps curvature. Cells
 /// without weight stay.
-fn local_quadratic(tip: &Array2<f64>, weight: &Array2<f32>, reach: usize) -> Array2<f64> {
+fn local_quadratic(
+    tip: &Array2<f64>,
+    weight: &Array2<f32>,
+    reach: usize,
+    per_px: f64,
+) -> Array2<f64> {
     let (rows, columns) = tip.dim();
     let values: Vec<f64> = (0..rows * columns)
         .into_par_iter()
@@ -303,10 +310,12 @@ fn local_quadratic(tip: &Array2<f64>, weight: &Array2<f32>, reach: usize) -> Arr
             if count < (2 * reach + 1) * (reach + 1) {
                 return tip[(r, c)];
             }
-            match normal.cholesky() {
-                Some(factor) => tip[(r, c)] + factor.solve(&right)[0],
-                None => tip[(r, c)],
-            }
+            let Some(fit) = normal.cholesky().map(|factor| factor.solve(&right)) else {
+                return tip[(r, c)];
+            };
+            // On the flank height errors are small along the normal, and curvature changes fast.
+            let steep = fit[1].hypot(fit[2]) * per_px;
+            tip[(r, c)] + fit[0] * (2.0 - steep).clamp(0.0, 1.0)
         })
         .collect();
     Array2::from_shape_vec((rows, columns), values).unwrap_or_else(|_| tip.clone())
@@ -449,17 +458,53 @@ impl<'a> Fit<'a> {
             self.weight = weight;
         }
         self.tip = self.calmed(&self.tip);
-        // Only differences count: the apex cell stays at 0.
-        let apex = self.tip[(self.tip.nrows() / 2, self.tip.ncols() / 2)];
-        if self.weight[(self.tip.nrows() / 2, self.tip.ncols() / 2)] > 0.5 {
-            self.tip.mapv_inplace(|p| p - apex);
+        // Only differences count: the highest cell stays at 0.
+        let high = self
+            .tip
+            .iter()
+            .zip(&self.weight)
+            .filter(|(_, w)| **w > 0.5)
+            .fold(f64::NEG_INFINITY, |high, (p, _)| high.max(*p));
+        if high.is_finite() {
+            self.tip.mapv_inplace(|p| p - high);
         }
     }
 
-    /// Gives every feature the pixels that the tip `shape` on it explains. Flank against flank, the
+    /// Carries the fitted tip two cells beyond what was seen, along its slope, never above the
+    /// bound; farther out the bound stands.
+    fn extend(&mut self, bound: &Array2<f32>) {
+        let (rows, columns) = self.tip.dim();
+        let seen = |at: (usize, usize)| self.weight[at] >= LEAST_SUPPORT;
+        let next = Array2::from_shape_fn((rows, columns), |(r, c)| {
+            if seen((r, c)) {
+                return self.tip[(r, c)];
+            }
+            let around: Vec<(usize, usize)> = (r.saturating_sub(2)..(r + 3).min(rows))
+                .flat_map(|i| (c.saturating_sub(2)..(c + 3).min(columns)).map(move |j| (i, j)))
+                .filter(|&at| seen(at))
+                .collect();
+            let limit = f64::from(bound[(r, c)]);
+            if around.len() < 5 {
+                return limit;
+            }
+            let mut normal = nalgebra::Matrix3::<f64>::identity() * 1e-6;
+            let mut right = nalgebra::Vector3::<f64>::zeros();
+            for &(i, j) in &around {
+                let g = nalgebra::Vector3::new(1.0, i as f64 - r as f64, j as f64 - c as f64);
+                normal += g * g.transpose();
+                right += g * self.tip[(i, j)];
+            }
+            let value = normal.try_inverse().map_or(limit, |inverse| (inverse * right)[0]);
+            value.min(limit)
+        });
+        self.tip = next;
+    }
+
+    /// Gives every feature the pixels that the tip on it explains. Flank against flank, the
     /// erosion's contacts are many and say little; the features themselves say more.
-    fn grow(&self, smooth: &Array2<f32>, shape: &Array2<f64>, features: &mut [Feature]) {
-        let (rows, columns) = smooth.dim();
+    fn grow(&self, light: &Array2<f32>, features: &mut [Feature], core: &[Vec<(u32, u32)>]) {
+        let (rows, columns) = light.dim();
+        let tolerance = 4.0 * self.input.noise * gain(self.input.smoothing.min(LIGHT_PX));
         let half = self.half.map(|h| h as usize);
         let mut best = Array2::from_elem((rows, columns), (f64::NEG_INFINITY, u32::MAX, 0.0f64));
         for (id, f) in features.iter().enumerate() {
@@ -472,7 +517,7 @@ impl<'a> Fit<'a> {
                     let Some(corner) = self.corner(f.place, (r as u32, c as u32)) else {
                         continue;
                     };
-                    let (p, slope) = look(shape, &corner);
+                    let (p, slope) = self.look(&corner);
                     if f.height + p > best[(r, c)].0 {
                         best[(r, c)] = (f.height + p, id as u32, slope[0].hypot(slope[1]));
                     }
@@ -481,8 +526,8 @@ impl<'a> Fit<'a> {
         }
         let fits = |r: usize, c: usize| -> u32 {
             let (predicted, id, steep) = best[(r, c)];
-            let off = (f64::from(smooth[(r, c)]) - predicted).abs();
-            if off <= 4.0 * self.input.smooth_noise + SLACK_PX * steep { id } else { u32::MAX }
+            let off = (f64::from(light[(r, c)]) - predicted).abs();
+            if off <= tolerance + SLACK_PX * steep { id } else { u32::MAX }
         };
         let owner = Array2::from_shape_fn((rows, columns), |(r, c)| fits(r, c));
         let mut grown: Vec<Vec<(u32, u32)>> = vec![Vec::new(); features.len()];
@@ -495,8 +540,8 @@ impl<'a> Fit<'a> {
                 }
             }
         }
-        for (f, more) in features.iter_mut().zip(grown) {
-            f.pixels.extend(more);
+        for ((f, more), core) in features.iter_mut().zip(grown).zip(core) {
+            f.pixels = core.iter().copied().chain(more).collect();
             f.pixels.sort_unstable();
             f.pixels.dedup();
         }
@@ -522,7 +567,7 @@ impl<'a> Fit<'a> {
     fn calmed(&self, tip: &Array2<f64>) -> Array2<f64> {
         match self.calm_reach() {
             0 => tip.clone(),
-            reach => local_quadratic(tip, &self.weight, reach),
+            reach => local_quadratic(tip, &self.weight, reach, 1.0 / self.input.px),
         }
     }
 
