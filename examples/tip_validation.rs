@@ -342,6 +342,13 @@ fn main() -> Result<(), Box<dyn Error>> {
             }
             if verbose {
                 println!("  smoothing {:.2} thr {:.3} features {} half {} u {:.3} angle {:?}", e.smoothing_px, e.threshold_nm, e.features, e.tip.shape().nrows() / 2, e.height_u_nm, e.read_out.half_angle.as_ref().map(|a| a.value));
+                if std::env::var_os("TIP_PROFILE").is_some() {
+                    let (c, truth) = (e.tip.shape().nrows() / 2, (cell.identified)());
+                    for k in 0..e.tip.shape().ncols() {
+                        let x = (k as f64 - c as f64) * cell.px;
+                        println!("    {x:6.1} {:8.3} true {:8.3} seen {} diagonal {:8.3} true {:8.3} seen {}", e.tip.shape()[[c, k]], -truth(x, 0.0), e.support[[c, k]], e.tip.shape()[[k, k]], -truth(x, x), e.support[[k, k]]);
+                    }
+                }
                 for d in &e.diagnosis {
                     println!("  - {}", d.finding);
                 }

@@ -119,7 +119,7 @@ pub fn estimate(
     }
     let noise = match noise_nm.filter(|n| n.is_finite() && *n >= 0.0) {
         Some(noise) => noise,
-        None => smooth::noise(scan.heights()),
+        None => crate::leveling::noise(scan).unwrap_or(0.0),
     };
     let bound = match settings.method {
         Method::Auto => matched_bound(scan, noise, settings, &progress.part(0.0, 0.6))?,
@@ -194,7 +194,7 @@ fn matched_bound(
     let px = (scan.pitch().x * scan.pitch().y).sqrt();
     let mut radius = 15.0 * px;
     let mut last: Option<Bound> = None;
-    for round in 0..3 {
+    for round in 0..1 {
         let part = progress.part(round as f32 / 3.0, (round + 1) as f32 / 3.0);
         let matched = (0.244 * 4.5 * noise * radius / (0.5 * px * px)).cbrt();
         let smoothing = settings
@@ -218,6 +218,7 @@ fn matched_bound(
             half,
         };
         let found = iterate::bluntest(&input, &part)?;
+        if std::env::var_os("TIP_DEBUG").is_some() { eprintln!("w {smoothing:.2} half {half:?} settled {} candidates {} guarded {} rough R {:?}", found.settled, found.candidates, found.guarded, rough_radius(&Tip::new(found.shape.clone(), scan.pitch())?)); }
         if let Some(r) = rough_radius(&Tip::new(found.shape.clone(), scan.pitch())?)
             && r.is_finite()
         {

@@ -4,7 +4,7 @@ use super::diagnose::{LEAST_FEATURES, caution, further_apices, refusal};
 use super::polish::{self, Polished};
 use super::{Bound, Diagnosis, Estimate, Method, Settings, smooth};
 use crate::error::Result;
-use crate::heightmap::HeightMap;
+use crate::heightmap::{HeightMap, Pitch};
 use crate::morphology;
 use crate::progress::Progress;
 use crate::tip::model::Model;
@@ -29,6 +29,7 @@ pub(super) fn finish(
         let input = polish::Input {
             scan: scan.heights(),
             noise,
+            px: (scan.pitch().x * scan.pitch().y).sqrt(),
             smoothing: bound.smoothing,
             smooth_noise: left,
         };
@@ -52,8 +53,7 @@ fn from_polished(
 ) -> Result<Estimate> {
     let pitch = scan.pitch();
     let px = (pitch.x * pitch.y).sqrt();
-    let rough = Tip::new(clamped(&polished.shape), pitch)?;
-    let centring = Centring::find(&rough, px);
+    let centring = Centring::find(&polished.shape, pitch);
     let shape = centring.apply(&polished.shape, bound_fill);
     let support = centring
         .apply(&polished.support.mapv(f64::from), |_| 0.0)
@@ -72,7 +72,10 @@ fn from_polished(
     let radius_u = first
         .as_ref()
         .and_then(|r| r.apex_radius)
-        .and_then(|r| radius_scatter(&others, pitch, r.fit_depth_nm).map(|u| (r, u)));
+        .and_then(|r| {
+            let u = radius_scatter(&others, pitch, r.fit_depth_nm, height_u)?;
+            Some((r, u))
+        });
     if let Some((r, u)) = radius_u {
         height_u = height_u.max(r.fit_depth_nm * u / r.value);
     }
@@ -214,14 +217,17 @@ struct Centring {
 }
 
 impl Centring {
-    fn find(tip: &Tip, px: f64) -> Self {
-        let radius = rough_radius(tip).filter(|r| r.is_finite()).unwrap_or(px).max(px);
+    fn find(shape: &Array2<f64>, pitch: Pitch) -> Self {
+        let px = (pitch.x * pitch.y).sqrt();
+        let rough = Tip::new(clamped(shape), pitch).ok().as_ref().and_then(rough_radius);
+        let radius = rough.filter(|r| r.is_finite()).unwrap_or(px).max(px);
         let depth = (0.3 * radius).max(4.5 * px * px / radius);
         let none = Self { rows: 0.0, columns: 0.0, apex: 0.0 };
-        let Some(fit) = Quadric::fit(tip, depth) else {
+        let heights = shape.mapv(|p| p as f32);
+        let Some(fit) = Quadric::fit(heights.view(), pitch, depth, 0.1 * depth) else {
             return none;
         };
-        let (rows, columns) = (fit.apex[1] / tip.pitch().y, fit.apex[0] / tip.pitch().x);
+        let (rows, columns) = (fit.apex[1] / pitch.y, fit.apex[0] / pitch.x);
         // A fit that puts the apex elsewhere describes no apex.
         if fit.radius().is_none() || rows.abs() > 2.0 || columns.abs() > 2.0 {
             return none;
@@ -264,6 +270,7 @@ fn exercised_depth(tip: &Tip, support: &Array2<u32>, polished: &Polished) -> Opt
     let seen = support.mapv(|n| n as f32 >= polish::LEAST_SUPPORT);
     let mut reaches: Vec<f64> = polished.features.iter().map(|f| f.reach).collect();
     reaches.sort_by(|a, b| b.total_cmp(a));
+    if std::env::var_os("TIP_DEBUG").is_some() { eprintln!("reaches {reaches:.1?} seen {:?}", seen_depth(tip, &seen)); }
     let third = reaches.get(2.min(reaches.len().checked_sub(1)?))?;
     seen_depth(tip, &seen).map(|z| z.min(*third)).filter(|z| *z > 0.0)
 }
@@ -301,10 +308,15 @@ fn jackknife(shape: &Array2<f64>, others: &[Array2<f64>]) -> Array2<f64> {
 }
 
 /// Jackknife standard error of the radius, nm.
-fn radius_scatter(others: &[Array2<f64>], pitch: crate::heightmap::Pitch, depth: f64) -> Option<f64> {
+fn radius_scatter(
+    others: &[Array2<f64>],
+    pitch: Pitch,
+    depth: f64,
+    noise: f64,
+) -> Option<f64> {
     let radii: Vec<f64> = others
         .iter()
-        .filter_map(|o| Quadric::fit(&Tip::new(clamped(o), pitch).ok()?, depth)?.radius())
+        .filter_map(|o| Quadric::fit(clamped(o).view(), pitch, depth, noise)?.radius())
         .collect();
     let n = radii.len() as f64;
     if radii.len() < others.len() || n < 3.0 {
