@@ -1,5 +1,6 @@
 //! Dimensions, as scanned and corrected. One small file per kind of measurand.
 
+mod erosion;
 mod line_width;
 mod sections;
 mod statistics;

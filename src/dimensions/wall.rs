@@ -120,8 +120,8 @@ pub(super) struct Wall {
     pub outwards: Vec<f64>,
     /// Step between the plateaus, nm.
     pub height: f64,
-    /// Standard uncertainty of each position relative to its neighbours, nm.
-    pub u: f64,
+    /// Standard uncertainty of each position relative to the middle of the wall, nm.
+    pub u: Vec<f64>,
 }
 
 /// What is known of a wall at one height.
@@ -163,13 +163,22 @@ impl Wall {
             .map_or(f64::NAN, |(slope, _)| (-slope / self.height).max(0.0))
     }
 
+    /// Mean standard uncertainty of the positions in the window about `fraction`, nm.
+    fn u_about(&self, fraction: f64) -> f64 {
+        let inside = |f: f64| (f - fraction).abs() <= HALF_WINDOW + 1e-9;
+        let taken = self.fractions.iter().zip(&self.u);
+        let taken: Vec<f64> = taken.filter(|p| inside(*p.0)).map(|p| *p.1).collect();
+        let mean = statistics::mean(&taken);
+        if mean.is_finite() { mean } else { 0.0 }
+    }
+
     /// Whether the tip with `outline` touched the wall at `fraction`. `tip_u` is the standard
     /// uncertainty of the tip's heights, nm.
     fn touched(&self, outline: &Outline, fraction: f64, tip_u: f64) -> bool {
         let span = 2.0 * HALF_WINDOW * self.height;
         let tip = outline.steepest(fraction * self.height + 0.5 * span, span);
-        // Both ends of both windows are uncertain.
-        let doubt = 2.0 * 2f64.sqrt() * (self.u + tip_u * tip) / span;
+        // A straight line through n points knows its slope to sqrt(12 / n) u / span.
+        let doubt = 2.0 * (1.5 * self.u_about(fraction) + 2f64.sqrt() * tip_u * tip) / span;
         self.slope(fraction) > tip + SLOPE_MARGIN + doubt
     }
 
@@ -244,7 +253,7 @@ mod tests {
             fractions,
             outwards,
             height: 50.0,
-            u: 0.0,
+            u: vec![0.0; 49],
         }
     }
 
