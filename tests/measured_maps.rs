@@ -29,7 +29,11 @@ fn run(name: &str, options: &[&str]) -> Value {
 
 /// No tip of these can be identified: no radius, and the reason.
 fn refuses_the_tip(result: &Value) {
-    assert!(result["tip"]["apex_radius_nm"].is_null(), "{}", result["tip"]);
+    assert!(
+        result["tip"]["apex_radius_nm"].is_null(),
+        "{}",
+        result["tip"]
+    );
     assert!(!result["tip"]["diagnosis"].as_array().unwrap().is_empty());
 }
 

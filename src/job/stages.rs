@@ -396,6 +396,17 @@ fn from_estimate(estimate: Estimate) -> TipResult {
     }
 }
 
+/// Rows and columns over which an apex within the tolerance cannot tell where it touched: an apex
+/// of radius R is that flat over `sqrt(2 R tolerance)` to each side. 0 where no radius is known.
+fn contact_spread(found: &TipResult, tolerance_nm: f64) -> [usize; 2] {
+    let Some(apex) = found.read_out.apex_radius else {
+        return [0, 0];
+    };
+    let half_width = (2.0 * apex.value * tolerance_nm).sqrt();
+    let pitch = found.tip.pitch();
+    [pitch.y, pitch.x].map(|pitch| 2 * (half_width / pitch) as usize)
+}
+
 fn reconstruct(level: &Leveled, found: &TipResult, progress: &Progress) -> Result<SurfaceResult> {
     let scan = level.map.heights();
     let tip = found.tip.shape();
@@ -411,6 +422,7 @@ fn reconstruct(level: &Leveled, found: &TipResult, progress: &Progress) -> Resul
         scan,
         tip,
         tolerance_nm as f32,
+        contact_spread(found, tolerance_nm),
         &progress.part(0.2, 0.5),
     )?;
     let edge_leaning =

@@ -116,8 +116,11 @@ fn agree_with_the_twins(map: &Array2<f32>, tip: &Array2<f32>) {
         assert_eq!(contacts.offsets, dilated.offsets);
         for tolerance in [0.0, 0.6, 1e6, f32::INFINITY] {
             let (s, i, p) = (eroded.view(), map.view(), tip.view());
-            let marks = touch::certainty_map(arch, s, i, p, tolerance, &progress).unwrap();
-            assert_eq!(marks, reference::certainty_map(s, i, p, tolerance));
+            for spread in [[0, 0], [1, 2], [3, 0]] {
+                let rule = touch::Rule { tolerance, spread };
+                let marks = touch::certainty_map(arch, s, i, p, rule, &progress).unwrap();
+                assert_eq!(marks, reference::certainty_map(s, i, p, tolerance, spread));
+            }
         }
         let (s, i, p) = (eroded.view(), map.view(), tip.view());
         let leaning = edges::edge_leaning(arch, i, s, p, &progress).unwrap();
@@ -146,7 +149,7 @@ proptest! {
             let surface = erode(map.view(), tip.view(), &Progress::new()).unwrap();
             let contacts = contacts(surface.view(), tip.view(), &Progress::new()).unwrap();
             let marks =
-                certainty_map(surface.view(), map.view(), tip.view(), 0.1, &Progress::new());
+                certainty_map(surface.view(), map.view(), tip.view(), 0.1, [0, 0], &Progress::new());
             (bits(&surface), bits(&contacts.heights), contacts.offsets, marks.unwrap())
         };
         let pool = |n| rayon::ThreadPoolBuilder::new().num_threads(n).build().unwrap();
@@ -282,7 +285,7 @@ fn nothing_in_nothing_out() {
         );
         let found = contacts(empty.view(), tip.view(), &progress).unwrap();
         assert_eq!(found.offsets.dim(), dim);
-        let marks = certainty_map(empty.view(), empty.view(), tip.view(), 0.0, &progress);
+        let marks = certainty_map(empty.view(), empty.view(), tip.view(), 0.0, [0, 0], &progress);
         assert_eq!(marks.unwrap().dim(), dim);
         let leaning = edge_leaning(empty.view(), empty.view(), tip.view(), &progress);
         assert_eq!(leaning.unwrap().dim(), dim);
@@ -349,7 +352,7 @@ fn a_cancelled_run_says_so() {
     let (s, p) = (map.view(), tip.view());
     assert!(dilate(s, p, &progress).is_err_and(|e| e.is_cancelled()));
     assert!(contacts(s, p, &progress).is_err_and(|e| e.is_cancelled()));
-    assert!(certainty_map(s, s, p, 0.0, &progress).is_err_and(|e| e.is_cancelled()));
+    assert!(certainty_map(s, s, p, 0.0, [0, 0], &progress).is_err_and(|e| e.is_cancelled()));
     assert!(edge_leaning(s, s, p, &progress).is_err_and(|e| e.is_cancelled()));
 }
 
@@ -365,7 +368,7 @@ fn progress_ends_at_one() {
 fn shapes_that_do_not_belong_together_are_refused() {
     let (a, b) = (Array2::<f32>::zeros((3, 4)), Array2::<f32>::zeros((4, 3)));
     let tip = array![[0.0_f32]];
-    let error = certainty_map(a.view(), b.view(), tip.view(), 0.0, &Progress::new()).unwrap_err();
+    let error = certainty_map(a.view(), b.view(), tip.view(), 0.0, [0, 0], &Progress::new()).unwrap_err();
     assert_eq!(error.kind(), ErrorKind::Data);
     assert!(error.to_string().contains("3 x 4"));
     assert!(edge_leaning(a.view(), b.view(), tip.view(), &Progress::new()).is_err());

@@ -2,8 +2,10 @@
 
 use super::certainty::{BOUNDED, NEVER, TOUCHED, VOID};
 use super::dilation::Steps;
-use super::field::{BLOCK, Field, LEFT, TOP, WINDOW_ROWS};
-use super::search::{Tile, Vector, Visitor, Window, load, lowest, search};
+use super::field::{BLOCK, Field, LEFT, TILE, TOP, WINDOW_ROWS};
+use super::search::{
+    Tile, Vector, Visitor, Window, any_reaches, load, lowest, peaks, search,
+};
 use super::tip::{Block, Order, Tip};
 use crate::error::Result;
 use crate::progress::Progress;
@@ -16,48 +18,40 @@ use std::sync::Mutex;
 /// Rows whose marks one thread keeps to itself until it has them all.
 const BAND: usize = 64;
 
+/// When tip and surface count as touching.
+#[derive(Clone, Copy)]
+pub(super) struct Rule {
+    /// How far below the scan a sum still touches, nm.
+    pub(super) tolerance: f32,
+    /// Rows and columns over which contacts spread and still count as one.
+    pub(super) spread: [usize; 2],
+}
+
 /// The certainty map; see the public function.
 pub(super) fn certainty_map(
     arch: Arch,
     surface: ArrayView2<f32>,
     scan: ArrayView2<f32>,
     tip: ArrayView2<f32>,
-    tolerance: f32,
+    rule: Rule,
     progress: &Progress,
 ) -> Result<Array2<u8>> {
     progress.check()?;
     if surface.is_empty() {
         return Ok(Array2::zeros(surface.dim()));
     }
-    let tip = Tip::new(tip, Order::Max, surface.dim(), false);
-    let field = Field::new(arch, surface, Order::Max);
     let scan = scan.as_standard_layout();
-    let scan = scan.as_slice().unwrap_or_default();
+    let search = Search {
+        arch,
+        tip: &Tip::new(tip, Order::Max, surface.dim(), false),
+        field: &Field::new(arch, surface, Order::Max),
+        scan: scan.as_slice().unwrap_or_default(),
+        rule,
+    };
     let mut marks = Array2::from_elem(surface.dim(), NEVER);
-    let cols = field.cols;
-    let bands: Vec<Mutex<&mut [u8]>> = marks
-        .as_slice_mut()
-        .unwrap_or_default()
-        .chunks_mut(BAND * cols)
-        .map(Mutex::new)
-        .collect();
-    let step = Steps::new(progress, field.rows);
-    (0..bands.len()).into_par_iter().try_for_each(|band| {
-        let mut band = Band::new(&field, &tip, band);
-        for row in band.tile_rows.clone() {
-            arch.dispatch(TouchRow {
-                band: &mut band,
-                scan,
-                tolerance,
-                row,
-                progress,
-            });
-            step.done()?;
-        }
-        band.merge(&bands);
-        Ok(())
-    })?;
-    drop(bands);
+    search.pass(&mut marks, Pass::Sole, &progress.part(0.0, 0.5))?;
+    let touched = search.padded(&marks);
+    search.pass(&mut marks, Pass::Shared(&touched), &progress.part(0.5, 1.0))?;
     ndarray::Zip::from(&mut marks)
         .and(surface)
         .par_for_each(|mark, s| {
@@ -66,6 +60,66 @@ pub(super) fn certainty_map(
             }
         });
     Ok(marks)
+}
+
+/// What a pass over the scan marks.
+#[derive(Clone, Copy)]
+enum Pass<'a> {
+    /// The contacts of scan pixels that have only one: `TOUCHED`.
+    Sole,
+    /// The contacts of the other scan pixels, unless one of them is marked already: `BOUNDED`.
+    /// The marks lie as [`Field::data`] does.
+    Shared(&'a [u32]),
+}
+
+/// All that a pass needs.
+#[derive(Clone, Copy)]
+struct Search<'a> {
+    arch: Arch,
+    field: &'a Field,
+    tip: &'a Tip,
+    scan: &'a [f32],
+    rule: Rule,
+}
+
+impl Search<'_> {
+    fn pass(&self, marks: &mut Array2<u8>, pass: Pass, progress: &Progress) -> Result<()> {
+        let bands: Vec<Mutex<&mut [u8]>> = marks
+            .as_slice_mut()
+            .unwrap_or_default()
+            .chunks_mut(BAND * self.field.cols)
+            .map(Mutex::new)
+            .collect();
+        let step = Steps::new(progress, self.field.rows);
+        (0..bands.len()).into_par_iter().try_for_each(|band| {
+            let mut band = Band::new(self.field, self.tip, band);
+            for row in band.tile_rows.clone() {
+                self.arch.dispatch(TouchRow {
+                    band: &mut band,
+                    search: self,
+                    pass,
+                    row,
+                    progress,
+                });
+                step.done()?;
+            }
+            band.merge(&bands);
+            Ok(())
+        })
+    }
+
+    /// The marks laid out as the field's data.
+    fn padded(&self, marks: &Array2<u8>) -> Vec<u32> {
+        let field = self.field;
+        let mut padded = vec![0; field.data.len()];
+        let rows = padded.chunks_exact_mut(field.stride).skip(TOP);
+        for (to, from) in rows.zip(marks.rows()) {
+            for (to, &mark) in to[LEFT..].iter_mut().zip(from) {
+                *to = u32::from(mark);
+            }
+        }
+        padded
+    }
 }
 
 /// Some tile rows and the marks that they leave, which reach as far beyond them as the tip does.
@@ -123,8 +177,8 @@ impl<'a> Band<'a> {
 /// One row of tiles.
 struct TouchRow<'a, 'b> {
     band: &'b mut Band<'a>,
-    scan: &'b [f32],
-    tolerance: f32,
+    search: &'b Search<'b>,
+    pass: Pass<'b>,
     row: usize,
     progress: &'b Progress,
 }
@@ -146,13 +200,22 @@ impl WithSimd for TouchRow<'_, '_> {
             let floors = lowest(simd, &thresholds);
             let mut touch = Touch {
                 thresholds,
-                counts: [simd.splat_f32s(0.0); BLOCK],
                 floors,
                 floor: simd.reduce_min_f32s(floors),
                 touching: &mut touching,
             };
             search(simd, field, tip, tile, &mut touch);
-            let values = values(simd, &touch.counts);
+            let sole = soles(simd, &touching, &thresholds, self.search.rule.spread);
+            let values = match self.pass {
+                Pass::Sole => values(simd, TOUCHED, |r, lane| sole[r][lane] == Sole::Yes),
+                Pass::Shared(touched) => {
+                    let explained = explained(simd, &touching, &thresholds, touched);
+                    values(simd, BOUNDED, |r, lane| {
+                        sole[r][lane] == Sole::No && lanes(&explained[r])[lane] == 0
+                    })
+                }
+            };
+            let Some(values) = values else { continue };
             for &(window, block) in &touching {
                 let at = (window.row - self.band.first) * field.stride + window.col;
                 let marks = &mut self.band.marks[at..];
@@ -168,10 +231,10 @@ impl TouchRow<'_, '_> {
     fn thresholds<S: Simd>(&self, simd: S, col: usize) -> [S::f32s; BLOCK] {
         let mut tile = [simd.splat_f32s(f32::INFINITY); BLOCK];
         let cols = self.band.field.cols;
-        let rows = self.scan.chunks_exact(cols).skip(BLOCK * self.row);
+        let rows = self.search.scan.chunks_exact(cols).skip(BLOCK * self.row);
         for (vector, row) in tile.iter_mut().zip(rows) {
             for (lane, &height) in vector.lanes_mut().iter_mut().zip(&row[col..]) {
-                let threshold = height - self.tolerance;
+                let threshold = height - self.search.rule.tolerance;
                 if height.is_finite() && !threshold.is_nan() {
                     // No padding (-inf) ever counts.
                     *lane = threshold.max(f32::MIN);
@@ -182,10 +245,9 @@ impl TouchRow<'_, '_> {
     }
 }
 
-/// Counts the touches of each scan pixel and keeps the blocks that touch.
+/// Keeps the blocks in which some pixel of the tile touches.
 struct Touch<'a, 't, S: Simd> {
     thresholds: [S::f32s; BLOCK],
-    counts: [S::f32s; BLOCK],
     floors: S::f32s,
     floor: f32,
     touching: &'t mut Vec<(Window<'a>, &'a Block)>,
@@ -206,25 +268,7 @@ impl<'a, S: Simd> Visitor<'a, S> for Touch<'a, '_, S> {
 
     #[inline(always)]
     fn visit(&mut self, simd: S, window: Window<'a>, block: &'a Block) {
-        let one = simd.splat_f32s(1.0);
-        let rows = window.rows::<S>();
-        let mut counts = self.counts;
-        for j in 0..BLOCK {
-            for i in 0..BLOCK {
-                let cell = simd.splat_f32s(block.cells[i][j]);
-                for r in 0..BLOCK {
-                    let sum = simd.add_f32s(load::<S>(&rows[r + i][j..]), cell);
-                    let hit = simd.greater_than_or_equal_f32s(sum, self.thresholds[r]);
-                    counts[r] = simd.select_f32s(hit, simd.add_f32s(counts[r], one), counts[r]);
-                }
-            }
-        }
-        let mut more = simd.greater_than_f32s(counts[0], self.counts[0]);
-        for r in 1..BLOCK {
-            more = simd.or_m32s(more, simd.greater_than_f32s(counts[r], self.counts[r]));
-        }
-        if simd.first_true_m32s(more) < S::F32_LANES {
-            self.counts = counts;
+        if any_reaches(simd, &peaks(simd, window, block), &self.thresholds) {
             self.touching.push((window, block));
         }
     }
@@ -233,17 +277,122 @@ impl<'a, S: Simd> Visitor<'a, S> for Touch<'a, '_, S> {
     fn settle(&mut self, _: S) {}
 }
 
-/// What each scan pixel gives to the surface pixels that it touches: more when it is only one.
+/// Calls `f` with each cell of a block (its row and column in the block), each row of the tile,
+/// and where the two touch.
 #[inline(always)]
-fn values<S: Simd>(simd: S, counts: &[S::f32s; BLOCK]) -> [S::u32s; BLOCK] {
-    let one = simd.splat_f32s(1.0);
-    let touched = simd.splat_u32s(u32::from(TOUCHED));
-    let bounded = simd.splat_u32s(u32::from(BOUNDED));
-    let mut values = [bounded; BLOCK];
-    for r in 0..BLOCK {
-        values[r] = simd.select_u32s(simd.equal_f32s(counts[r], one), touched, bounded);
+fn for_each_hit<S: Simd>(
+    simd: S,
+    (window, block): (Window, &Block),
+    thresholds: &[S::f32s; BLOCK],
+    mut f: impl FnMut(usize, usize, usize, S::m32s),
+) {
+    let rows = window.rows::<S>();
+    for j in 0..BLOCK {
+        for i in 0..BLOCK {
+            let cell = simd.splat_f32s(block.cells[i][j]);
+            for r in 0..BLOCK {
+                let sum = simd.add_f32s(load::<S>(&rows[r + i][j..]), cell);
+                f(i, j, r, simd.greater_than_or_equal_f32s(sum, thresholds[r]));
+            }
+        }
     }
-    values
+}
+
+/// Whether a scan pixel has one contact only.
+#[derive(Clone, Copy, PartialEq)]
+enum Sole {
+    Yes,
+    No,
+    /// It has no contact at all.
+    None,
+}
+
+/// For each pixel of a tile, row by row, whether its contacts count as one.
+#[inline(always)]
+fn soles<S: Simd>(
+    simd: S,
+    touching: &[(Window, &Block)],
+    thresholds: &[S::f32s; BLOCK],
+    spread: [usize; 2],
+) -> [[Sole; TILE]; BLOCK] {
+    let far = simd.splat_f32s(f32::INFINITY);
+    let near = simd.splat_f32s(f32::NEG_INFINITY);
+    let (mut top, mut left) = ([far; BLOCK], [far; BLOCK]);
+    let (mut bottom, mut right) = ([near; BLOCK], [near; BLOCK]);
+    for &(window, block) in touching {
+        for_each_hit(simd, (window, block), thresholds, |i, j, r, hit| {
+            // Tip rows and columns are far below 2^24: exact as f32.
+            let row = simd.splat_f32s((BLOCK as isize * block.row + i as isize) as f32);
+            let col = simd.splat_f32s((BLOCK as isize * block.col + j as isize) as f32);
+            top[r] = simd.select_f32s(hit, simd.min_f32s(top[r], row), top[r]);
+            bottom[r] = simd.select_f32s(hit, simd.max_f32s(bottom[r], row), bottom[r]);
+            left[r] = simd.select_f32s(hit, simd.min_f32s(left[r], col), left[r]);
+            right[r] = simd.select_f32s(hit, simd.max_f32s(right[r], col), right[r]);
+        });
+    }
+    let within = |low: &S::f32s, high: &S::f32s, lane: usize, most: usize| {
+        high.lanes()[lane] - low.lanes()[lane] <= most as f32
+    };
+    let mut soles = [[Sole::None; TILE]; BLOCK];
+    for (r, soles) in soles.iter_mut().enumerate() {
+        for (lane, sole) in soles.iter_mut().enumerate().take(S::F32_LANES) {
+            if top[r].lanes()[lane] < f32::INFINITY {
+                let one = within(&top[r], &bottom[r], lane, spread[0])
+                    && within(&left[r], &right[r], lane, spread[1]);
+                *sole = if one { Sole::Yes } else { Sole::No };
+            }
+        }
+    }
+    soles
+}
+
+/// For each pixel of a tile, whether it touches (non-zero) what is marked as touched.
+#[inline(always)]
+fn explained<S: Simd>(
+    simd: S,
+    touching: &[(Window, &Block)],
+    thresholds: &[S::f32s; BLOCK],
+    touched: &[u32],
+) -> [S::u32s; BLOCK] {
+    let mut explained = [simd.splat_u32s(0); BLOCK];
+    for &(window, block) in touching {
+        for_each_hit(simd, (window, block), thresholds, |i, j, r, hit| {
+            let at = (window.row + r + i) * window.stride() + window.col + j;
+            let marks: S::u32s = pulp::bytemuck::pod_read_unaligned(pulp::bytemuck::cast_slice(
+                &touched[at..at + S::U32_LANES],
+            ));
+            let both = simd.or_u32s(explained[r], marks);
+            explained[r] = simd.select_u32s(hit, both, explained[r]);
+        });
+    }
+    explained
+}
+
+#[inline(always)]
+fn lanes<V: pulp::bytemuck::Pod>(vector: &V) -> &[u32] {
+    pulp::bytemuck::cast_slice(std::slice::from_ref(vector))
+}
+
+/// `value` for the pixels of a tile that are `wanted` (row, lane), 0 for the others; `None` if
+/// none is.
+#[inline(always)]
+fn values<S: Simd>(
+    simd: S,
+    value: u8,
+    wanted: impl Fn(usize, usize) -> bool,
+) -> Option<[S::u32s; BLOCK]> {
+    let mut values = [simd.splat_u32s(0); BLOCK];
+    let mut any = false;
+    for (r, vector) in values.iter_mut().enumerate() {
+        let vector: &mut [u32] = pulp::bytemuck::cast_slice_mut(std::slice::from_mut(vector));
+        for (lane, to) in vector.iter_mut().enumerate() {
+            if wanted(r, lane) {
+                *to = u32::from(value);
+                any = true;
+            }
+        }
+    }
+    any.then_some(values)
 }
 
 /// Leaves the marks of a block on its window: of each pixel the values given to it, as bits.
