@@ -5,15 +5,20 @@
     python benches/compare.py [--rounds N] [--write]
 
 Each round times every program once, in turn, so that a change in the machine's speed meets all of
-them; the ratios are taken round by round and their median is given. Ours is timed inside its own
-process, files excluded, as the median of some repeats. --write keeps the table in
+them; the ratios are taken round by round and their median is given. Two clocks: the wall's, and the
+processor time of all threads, which other work on the machine does not inflate so. Ours is timed
+inside its own process, files excluded, as the median of some repeats (wall) and as the processor
+time of many repeats less that of one (Unix only). --write keeps the table in
 benches/results with the date and the machine.
 """
 
 import argparse
 import datetime
+import importlib.metadata
+import os
 import pathlib
 import platform
+import resource
 import statistics
 import subprocess
 import sys
@@ -57,21 +62,31 @@ def random_tip(side):
 
 
 def timed(run):
-    start = time.perf_counter()
+    """Wall and processor seconds, and the result."""
+    wall, cpu = time.perf_counter(), time.process_time()
     out = run()
-    return time.perf_counter() - start, out
+    return time.perf_counter() - wall, time.process_time() - cpu, out
 
 
-def ours(operation, folder, repeats, threads=None):
-    environment = {"RAYON_NUM_THREADS": str(threads)} if threads else {}
-    done = subprocess.run(
-        [PROGRAM, operation, *(folder / n for n in ("map.npy", "tip.npy", "out.npy")), str(repeats)],
-        check=True,
-        capture_output=True,
-        text=True,
-        env={**__import__("os").environ, **environment},
-    )
-    return statistics.median(map(float, done.stdout.split()))
+def children():
+    usage = resource.getrusage(resource.RUSAGE_CHILDREN)
+    return usage.ru_utime + usage.ru_stime
+
+
+def ours(operation, folder, repeats):
+    """Median wall seconds and mean processor seconds."""
+    files = [folder / n for n in ("map.npy", "tip.npy", "out.npy")]
+
+    def run(count):
+        before = children()
+        done = subprocess.run(
+            [PROGRAM, operation, *files, str(count)], check=True, capture_output=True, text=True
+        )
+        return children() - before, [float(line) for line in done.stdout.split()]
+
+    once, _ = run(1)
+    many, walls = run(repeats + 1)
+    return statistics.median(walls), (many - once) / repeats
 
 
 def scipy_run(operation, surface, tip):
@@ -96,6 +111,7 @@ def diplib_run(operation, surface, tip):
 
 
 def compare(name, operation, surface, tip, rounds, threads, flat=False):
+    """Medians in milliseconds and ratios to ours, as (wall, processor) for each program."""
     rows = []
     with tempfile.TemporaryDirectory() as folder:
         folder = pathlib.Path(folder)
@@ -104,40 +120,36 @@ def compare(name, operation, surface, tip, rounds, threads, flat=False):
         general = scipy_run(operation, surface, tip)
         diplib = diplib_run(operation, surface, tip)
         for _ in range(rounds):
-            mine = ours(operation, folder, 25)
-            alone = ours(operation, folder, 25, threads=1)
-            theirs, out = timed(general)
+            mine = ours(operation, folder, 100)
+            *theirs, out = timed(general)
             if not np.array_equal(np.load(folder / "out.npy"), out + np.float32(0)):
                 sys.exit(f"{name}: results differ from SciPy's")
-            separable = (
-                timed(scipy_flat(operation, surface, tip.shape[0]))[0] if flat else float("nan")
-            )
+            separable = (np.nan, np.nan)
+            if flat:
+                separable = timed(scipy_flat(operation, surface, tip.shape[0]))[:2]
             dip.SetNumberOfThreads(1)
-            one, _ = timed(diplib)
+            one = timed(diplib)[:2]
             dip.SetNumberOfThreads(threads)
-            many, _ = timed(diplib)
-            rows.append((mine, alone, theirs, separable, one, many))
-    columns = list(zip(*rows))
-    mine = columns[0]
-    ratio = lambda other: statistics.median(o / m for o, m in zip(other, mine))
-    milliseconds = [1e3 * statistics.median(c) for c in columns]
-    return name, operation, milliseconds, [ratio(columns[i]) for i in (2, 3, 4, 5)]
+            many = timed(diplib)[:2]
+            rows.append((mine, theirs, separable, one, many))
+    rows = np.array(rows)
+    return 1e3 * np.median(rows, axis=0), np.median(rows[:, 1:] / rows[:, :1], axis=0)
 
 
 def copies(rounds):
     """4096 x 4096 with a 129 x 129 tip, in copies of the map into memory already in use."""
     surface, tip = lines(4096, 0.5), sphere_cone(129)
     target = np.empty_like(surface)
-    pairs = []
+    rows = []
     with tempfile.TemporaryDirectory() as folder:
         folder = pathlib.Path(folder)
         np.save(folder / "map.npy", surface)
         np.save(folder / "tip.npy", tip)
         for _ in range(rounds):
-            copy = statistics.median(timed(lambda: np.copyto(target, surface))[0] for _ in range(9))
-            pairs.append((copy, ours("dilate", folder, 5)))
-    copy, mine = (1e3 * statistics.median(c) for c in zip(*pairs))
-    return copy, mine, statistics.median(m / c for c, m in pairs)
+            copy = [timed(lambda: np.copyto(target, surface))[:2] for _ in range(15)]
+            rows.append((np.median(copy, axis=0), ours("dilate", folder, 5)))
+    rows = np.array(rows)
+    return 1e3 * np.median(rows, axis=0), np.median(rows[:, 1] / rows[:, 0], axis=0)
 
 
 def machine():
@@ -165,31 +177,38 @@ def main():
     ]
     today = datetime.date.today().isoformat()
     text = [
-        f"# {today}",
+        f"# Comparison, {today}",
         "",
-        f"{machine()}; {options.threads} threads; {platform.system()}; Python "
+        f"{machine()}; {os.cpu_count()} cores; {platform.system()}; Python "
         f"{platform.python_version()}, NumPy {np.__version__}, SciPy {scipy.__version__}, "
-        f"DIPlib {dip.__version__ if hasattr(dip, '__version__') else dip.libraryInformation.version}.",
-        f"`python benches/compare.py --rounds {options.rounds}`. 512 x 512 pixels of 2 nm, tip 65 x 65; "
-        "milliseconds are medians, ratios the medians over rounds in which all ran in turn. "
-        "Results are checked to equal SciPy's bit for bit.",
+        f"DIPlib {importlib.metadata.version('diplib')}. Load of the machine at the start: "
+        f"{os.getloadavg()[0]:.1f}.",
+        f"`python benches/compare.py --rounds {options.rounds}`: 512 x 512 pixels of 2 nm, tip "
+        "65 x 65. Milliseconds as wall / processor time, medians; ratios are medians over rounds "
+        "in which all ran in turn. Every result was checked to equal SciPy's bit for bit.",
         "",
-        "| scene | operation | ours | ours, 1 thread | SciPy structure | SciPy size | DIPlib, 1 thread "
-        f"| DIPlib, {options.threads} threads | x SciPy structure | x SciPy size | x DIPlib 1 | x DIPlib {options.threads} |",
-        "|" + "---|" * 12,
+        "| scene | operation | ours | SciPy, structure | SciPy, flat size | DIPlib, 1 thread "
+        f"| DIPlib, {options.threads} threads |",
+        "|" + "---|" * 7,
     ]
+    ratios = [
+        "",
+        "Times as long as ours, wall / processor:",
+        "",
+        *[line.replace("| ours ", "") for line in text[-2:-1]],
+        "|" + "---|" * 6,
+    ]
+    pair = lambda v, f: "" if np.isnan(v[0]) else f"{v[0]:{f}} / {v[1]:{f}}"
     for name, operation, surface, tip, flat in cases:
-        name, operation, ms, ratios = compare(
-            name, operation, surface, tip, options.rounds, options.threads, flat
-        )
-        cell = lambda v, f: "" if v != v else format(v, f)
-        row = [name, operation, *(cell(v, ".2f") for v in ms), *(cell(v, ".0f") for v in ratios)]
-        text.append("| " + " | ".join(row) + " |")
-        print(text[-1], flush=True)
-    copy, mine, ratio = copies(options.rounds)
+        ms, ratio = compare(name, operation, surface, tip, options.rounds, options.threads, flat)
+        text.append("| " + " | ".join([name, operation, *(pair(v, ".2f") for v in ms)]) + " |")
+        ratios.append("| " + " | ".join([name, operation, *(pair(v, ".0f") for v in ratio)]) + " |")
+    ms, ratio = copies(options.rounds)
+    text += ratios
     text += [
         "",
-        f"4096 x 4096, tip 129 x 129: {mine:.0f} ms, copying the map {copy:.1f} ms: {ratio:.1f} copies.",
+        f"4096 x 4096, tip 129 x 129, dilation: {pair(ms[1], '.0f')} ms; copying the map into "
+        f"memory in use: {pair(ms[0], '.1f')} ms; {ratio[0]:.1f} copies by the wall.",
     ]
     print("\n".join(text))
     if options.write:

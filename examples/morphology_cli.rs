@@ -32,16 +32,13 @@ fn main() -> Result<()> {
         "contacts" => {
             let found = timed(repeats, || contacts(m, p, &watch))?;
             let (rows, columns) = map.dim();
-            let offsets = Array3::from_shape_fn((rows, columns, 2), |(r, c, k)| {
-                found.offsets[(r, c)][k]
-            });
+            let offsets =
+                Array3::from_shape_fn((rows, columns, 2), |(r, c, k)| found.offsets[(r, c)][k]);
             write_npy(out, &offsets)?;
         }
         "certainty" => {
             let surface = erode(m, p, &watch)?;
-            let marks = timed(repeats, || {
-                certainty_map(surface.view(), m, p, 0.0, &watch)
-            })?;
+            let marks = timed(repeats, || certainty_map(surface.view(), m, p, 0.0, &watch))?;
             write_npy(out, &marks)?;
         }
         other => bail!("unknown operation \"{other}\""),

@@ -30,7 +30,7 @@ pub(super) fn certainty_map(
         return Ok(Array2::zeros(surface.dim()));
     }
     let tip = Tip::new(tip, Order::Max, surface.dim(), false);
-    let field = Field::new(arch, surface, Order::Max);
+    let field = Field::new(arch, surface, Order::Max, progress)?;
     let scan = scan.as_standard_layout();
     let scan = scan.as_slice().unwrap_or_default();
     let mut marks = Array2::from_elem(surface.dim(), NEVER);
