@@ -29,7 +29,7 @@ pub(super) fn contacts(
         return Ok(found);
     }
     let tip = Tip::new(tip, Order::Max, surface.dim(), true);
-    let field = Field::new(arch, surface, Order::Max);
+    let field = Field::new(arch, surface, Order::Max, progress)?;
     let chunk = BLOCK * field.cols;
     let heights = found.heights.as_slice_mut().unwrap_or_default();
     let offsets = found.offsets.as_slice_mut().unwrap_or_default();

@@ -27,7 +27,7 @@ pub(super) fn extreme(
         return flat::extreme(arch, map, tip.dim(), depth, order, progress);
     }
     let tip = Tip::new(tip, order, map.dim(), false);
-    let field = Field::new(arch, map, order);
+    let field = Field::new(arch, map, order, progress)?;
     let mut out = Array2::zeros(map.dim());
     let values = out.as_slice_mut().unwrap_or_default();
     let rows = values.par_chunks_mut(BLOCK * field.cols).enumerate();

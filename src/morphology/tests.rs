@@ -357,6 +357,75 @@ fn a_cancelled_run_says_so() {
 }
 
 #[test]
+fn a_cancellation_stops_a_run_under_way() {
+    // Random depths: nothing can be skipped, so the run outlasts the watcher by far.
+    let mut random = ChaCha8Rng::seed_from_u64(5);
+    let map = Array2::from_shape_simple_fn((1500, 1500), || random.random::<f32>());
+    let tip = Array2::from_shape_simple_fn((201, 201), || -random.random::<f32>());
+    let progress = Progress::new();
+    let result = std::thread::scope(|scope| {
+        let run = scope.spawn(|| dilate(map.view(), tip.view(), &progress));
+        while progress.fraction() == 0.0 {
+            std::thread::yield_now();
+        }
+        progress.cancel();
+        run.join().unwrap()
+    });
+    assert!(result.is_err_and(|e| e.is_cancelled()));
+    assert!(progress.fraction() < 1.0);
+}
+
+#[test]
+fn heights_of_a_millimetre_and_subnormal_ones_are_exact() {
+    // A surface lowered and raised by 1e6 nm, in steps that single precision holds exactly.
+    let map = Array2::from_shape_fn((9, 40), |(r, c)| ((r * 5 + c * 3) % 7) as f32);
+    let tip = array![
+        [-2.0_f32, -1.0, -3.0],
+        [-1.0, 0.0, -4.0],
+        [-6.0, -1.0, -2.0]
+    ];
+    for order in [Order::Max, Order::Min] {
+        let plain = fast(&map, &tip, order, Arch::new());
+        for lift in [-1e6_f32, 1e6] {
+            let lifted = fast(&(&map + lift), &tip, order, Arch::new());
+            assert_eq!(bits(&lifted), bits(&(&plain + lift)));
+        }
+        let tiny = f32::from_bits(1);
+        let small = fast(&(&map * tiny), &(&tip * tiny), order, Arch::new());
+        assert_eq!(bits(&small), bits(&(&plain * tiny)));
+    }
+}
+
+#[test]
+fn a_shifted_surface_gives_a_shifted_scan() {
+    let scene = Scene {
+        seed: 3,
+        rows: 30,
+        cols: 50,
+        tip_rows: 5,
+        tip_cols: 7,
+        steep: 0.3,
+        grain: 0.25,
+        voids: 0.0,
+        holes: 0.1,
+    };
+    let (map, tip) = scene.build();
+    for order in [Order::Max, Order::Min] {
+        let whole = fast(&map, &tip, order, Arch::new());
+        let part = fast(
+            &map.slice(ndarray::s![3.., 5..]).to_owned(),
+            &tip,
+            order,
+            Arch::new(),
+        );
+        // Away from the edges by half a tip.
+        let inner = ndarray::s![2..25, 3..42];
+        let moved = whole.slice(ndarray::s![5..28, 8..47]).to_owned();
+        assert_eq!(bits(&part.slice(inner).to_owned()), bits(&moved));
+    }
+}
+
+#[test]
 fn progress_ends_at_one() {
     let progress = Progress::new();
     let map = Array2::<f32>::zeros((41, 40));

@@ -44,7 +44,7 @@ pub(super) fn certainty_map(
     let search = Search {
         arch,
         tip: &Tip::new(tip, Order::Max, surface.dim(), false),
-        field: &Field::new(arch, surface, Order::Max),
+        field: &Field::new(arch, surface, Order::Max, progress)?,
         scan: scan.as_slice().unwrap_or_default(),
         rule,
     };
