@@ -16,6 +16,8 @@ use ndarray::Array2;
 const SEEN: f64 = 0.8;
 /// Remaining error of the contacts' places, pixels; tuned on virtual scans, checked on fresh ones.
 const PLACE_PX: f64 = 0.15;
+/// Height over the noise that makes a feature count for the apex.
+const TALL: f64 = 10.0;
 
 pub(super) fn finish(
     scan: &HeightMap,
@@ -92,8 +94,9 @@ fn from_polished(
             ..ReadOut::default()
         },
     };
+    // Features that stand out from the noise and show the fitted cap.
     let seeing = read.apex_radius.map_or(features, |r| {
-        let needed = 0.5 * r.fit_depth_nm;
+        let needed = (0.5 * r.fit_depth_nm).max(TALL * noise);
         polished.features.iter().filter(|f| f.reach >= needed).count()
     });
     let mut diagnosis = common_findings(scan, bound, &tip, exercised, noise);
@@ -272,7 +275,9 @@ fn exercised_depth(tip: &Tip, support: &Array2<u32>, polished: &Polished) -> Opt
     reaches.sort_by(|a, b| b.total_cmp(a));
     if std::env::var_os("TIP_DEBUG").is_some() { eprintln!("reaches {reaches:.1?} seen {:?}", seen_depth(tip, &seen)); }
     let third = reaches.get(2.min(reaches.len().checked_sub(1)?))?;
-    seen_depth(tip, &seen).map(|z| z.min(*third)).filter(|z| *z > 0.0)
+    seen_depth(tip, &seen)
+        .map(|z| z.min(0.95 * third))
+        .filter(|z| *z > 0.0)
 }
 
 fn seen_depth(tip: &Tip, seen: &Array2<bool>) -> Option<f64> {

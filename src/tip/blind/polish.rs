@@ -66,8 +66,10 @@ const ROUNDS: usize = 4;
 const SWEEPS: usize = 14;
 /// Smoothing that takes noise but leaves the flanks, pixels.
 const LIGHT_PX: f64 = 1.0;
-/// How far the bound may lie beside the tip where no contact has been fitted yet, pixels.
-const SLACK_PX: f64 = 0.6;
+/// How far features may lie beside their fitted places, pixels.
+const SLACK_PX: f64 = 0.15;
+/// How far the tip may lie outside its true place where it is not fitted yet, pixels.
+const BLUNT_SLACK_PX: f64 = 0.6;
 
 /// Polishes the bound `tip`. `None` when no sharp feature is found. Errors: `Cancelled`.
 pub(super) fn polish<'a>(
@@ -88,15 +90,24 @@ pub(super) fn polish<'a>(
         if features.is_empty() {
             break;
         }
+        // Where the apex itself may have touched right below: flats, and whatever is not steep.
+        let tolerance = 4.0 * input.smooth_noise + 0.05 * input.px;
+        let level = Array2::from_shape_fn(smooth.dim(), |at| {
+            f64::from(smooth[at] - eroded[at]) <= tolerance
+        });
         let core: Vec<Vec<(u32, u32)>> = features.iter().map(|f| f.pixels.clone()).collect();
         let mut fit = Fit::new(input, &tip);
         for sweep in 0..SWEEPS {
             progress.check()?;
             // Far outliers go first, then ever more of what is not this feature.
-            (fit.trim, fit.slack) = if sweep < SWEEPS / 2 { (6.0, SLACK_PX) } else { (3.5, 0.15) };
+            (fit.trim, fit.blunt_slack) = if sweep < SWEEPS - 3 {
+                (6.0, BLUNT_SLACK_PX)
+            } else {
+                (3.5, SLACK_PX)
+            };
             if (2..SWEEPS - 3).contains(&sweep) {
-                fit.extend(bound);
-                fit.grow(&light, &mut features, &core);
+                fit.extend(&light, &features, &tip);
+                fit.grow(&light, &level, &mut features, &core);
             }
             features.par_iter_mut().for_each(|f| fit.place(f));
             fit.update_scale(&features);
@@ -236,9 +247,10 @@ struct Fit<'a> {
     tip: Array2<f64>,
     weight: Array2<f32>,
     scale: f64,
-    /// Residuals beyond `trim` times the scale plus `slack` pixels along the slope are left out.
+    /// Residuals beyond `trim` times the scale are left out, below the tip those beyond another
+    /// `blunt_slack` pixels along the slope.
     trim: f64,
-    slack: f64,
+    blunt_slack: f64,
     half: [f64; 2],
 }
 
@@ -271,6 +283,21 @@ fn look(tip: &Array2<f64>, corner: &Corner) -> (f64, [f64; 2]) {
     let left = t(0, 0) * (1.0 - fr) + t(1, 0) * fr;
     let right = t(0, 1) * (1.0 - fr) + t(1, 1) * fr;
     (top * (1.0 - fr) + bottom * fr, [bottom - top, right - left])
+}
+
+/// Bilinear; `None` outside the map or beside a void.
+fn interpolate(map: &Array2<f32>, [r, c]: [f64; 2]) -> Option<f64> {
+    if !(r >= 0.0 && c >= 0.0) {
+        return None;
+    }
+    let (i, j, fr, fc) = (r as usize, c as usize, r.fract(), c.fract());
+    if i + 1 >= map.nrows() || j + 1 >= map.ncols() {
+        return None;
+    }
+    let z = |a: usize, b: usize| f64::from(map[(i + a, j + b)]);
+    let value = (z(0, 0) * (1.0 - fc) + z(0, 1) * fc) * (1.0 - fr)
+        + (z(1, 0) * (1.0 - fc) + z(1, 1) * fc) * fr;
+    value.is_finite().then_some(value)
 }
 
 /// Weighted local quadratic over a square of half-width `reach` cells (Savitzky and Golay, Anal.
@@ -315,7 +342,7 @@ fn local_quadratic(
             };
             // On the flank height errors are small along the normal, and curvature changes fast.
             let steep = fit[1].hypot(fit[2]) * per_px;
-            tip[(r, c)] + fit[0] * (2.0 - steep).clamp(0.0, 1.0)
+            tip[(r, c)] + fit[0] * (2.0 - 2.5 * steep).clamp(0.0, 1.0)
         })
         .collect();
     Array2::from_shape_vec((rows, columns), values).unwrap_or_else(|_| tip.clone())
@@ -329,7 +356,7 @@ impl<'a> Fit<'a> {
             weight: Array2::zeros(tip.dim()),
             scale: f64::INFINITY,
             trim: 6.0,
-            slack: SLACK_PX,
+            blunt_slack: BLUNT_SLACK_PX,
             half: [(tip.nrows() / 2) as f64, (tip.ncols() / 2) as f64],
         }
     }
@@ -363,8 +390,11 @@ impl<'a> Fit<'a> {
                 let e = z - f.height - p;
                 // A misplaced feature errs more where the tip is steep.
                 let steep = slope[0].hypot(slope[1]);
-                let allowed = limit * (1.0 + 0.3 * steep) + self.slack * steep;
-                (f.height.is_nan() || e.abs() <= allowed).then_some((corner, e, slope))
+                let allowed = limit * (1.0 + 0.3 * steep) + SLACK_PX * steep;
+                // Where the scan lies below, the tip is still too blunt there; where it lies above,
+                // something else touched.
+                let below = allowed + self.blunt_slack * steep;
+                (f.height.is_nan() || (-below..=allowed).contains(&e)).then_some((corner, e, slope))
             })
             .collect()
     }
@@ -470,43 +500,52 @@ impl<'a> Fit<'a> {
         }
     }
 
-    /// Carries the fitted tip two cells beyond what was seen, along its slope, never above the
-    /// bound; farther out the bound stands.
-    fn extend(&mut self, bound: &Array2<f32>) {
+    /// Bounds the tip where no contact was fitted yet. Every feature's surroundings are a bound,
+    /// `P(d) <= I(u - d) - a`, whatever touched there: the lower fifth over all features is taken,
+    /// never above the tip that the round began with.
+    fn extend(&mut self, light: &Array2<f32>, features: &[Feature], start: &Array2<f32>) {
         let (rows, columns) = self.tip.dim();
-        let seen = |at: (usize, usize)| self.weight[at] >= LEAST_SUPPORT;
-        let next = Array2::from_shape_fn((rows, columns), |(r, c)| {
-            if seen((r, c)) {
-                return self.tip[(r, c)];
-            }
-            let around: Vec<(usize, usize)> = (r.saturating_sub(2)..(r + 3).min(rows))
-                .flat_map(|i| (c.saturating_sub(2)..(c + 3).min(columns)).map(move |j| (i, j)))
-                .filter(|&at| seen(at))
-                .collect();
-            let limit = f64::from(bound[(r, c)]);
-            if around.len() < 5 {
-                return limit;
-            }
-            let mut normal = nalgebra::Matrix3::<f64>::identity() * 1e-6;
-            let mut right = nalgebra::Vector3::<f64>::zeros();
-            for &(i, j) in &around {
-                let g = nalgebra::Vector3::new(1.0, i as f64 - r as f64, j as f64 - c as f64);
-                normal += g * g.transpose();
-                right += g * self.tip[(i, j)];
-            }
-            let value = normal.try_inverse().map_or(limit, |inverse| (inverse * right)[0]);
-            value.min(limit)
-        });
-        self.tip = next;
+        let next: Vec<f64> = (0..rows * columns)
+            .into_par_iter()
+            .map(|k| {
+                let at = (k / columns, k % columns);
+                if self.weight[at] >= LEAST_SUPPORT {
+                    return self.tip[at];
+                }
+                let offset = [at.0 as f64 - self.half[0], at.1 as f64 - self.half[1]];
+                let mut limits: Vec<f64> = features
+                    .iter()
+                    .filter_map(|f| {
+                        let place = [f.place[0] - offset[0], f.place[1] - offset[1]];
+                        Some(interpolate(light, place)? - f.height)
+                    })
+                    .collect();
+                let limit = f64::from(start[at]);
+                if limits.len() < 3 {
+                    return limit;
+                }
+                let low = limits.len() / 5;
+                limits.select_nth_unstable_by(low, f64::total_cmp).1.min(limit)
+            })
+            .collect();
+        if let Ok(next) = Array2::from_shape_vec((rows, columns), next) {
+            self.tip = next;
+        }
     }
 
     /// Gives every feature the pixels that the tip on it explains. Flank against flank, the
     /// erosion's contacts are many and say little; the features themselves say more.
-    fn grow(&self, light: &Array2<f32>, features: &mut [Feature], core: &[Vec<(u32, u32)>]) {
+    fn grow(
+        &self,
+        light: &Array2<f32>,
+        level: &Array2<bool>,
+        features: &mut [Feature],
+        core: &[Vec<(u32, u32)>],
+    ) {
         let (rows, columns) = light.dim();
         let tolerance = 4.0 * self.input.noise * gain(self.input.smoothing.min(LIGHT_PX));
         let half = self.half.map(|h| h as usize);
-        let mut best = Array2::from_elem((rows, columns), (f64::NEG_INFINITY, u32::MAX, 0.0f64));
+        let mut best = Array2::from_elem((rows, columns), (f64::NEG_INFINITY, u32::MAX, [0.0; 2]));
         for (id, f) in features.iter().enumerate() {
             let range = |k: usize, n: usize| {
                 let at = f.place[k].round().max(0.0) as usize;
@@ -519,15 +558,33 @@ impl<'a> Fit<'a> {
                     };
                     let (p, slope) = self.look(&corner);
                     if f.height + p > best[(r, c)].0 {
-                        best[(r, c)] = (f.height + p, id as u32, slope[0].hypot(slope[1]));
+                        best[(r, c)] = (f.height + p, id as u32, slope);
                     }
                 }
             }
         }
         let fits = |r: usize, c: usize| -> u32 {
-            let (predicted, id, steep) = best[(r, c)];
-            let off = (f64::from(light[(r, c)]) - predicted).abs();
-            if off <= tolerance + SLACK_PX * steep { id } else { u32::MAX }
+            let (predicted, id, slope) = best[(r, c)];
+            let steep = slope[0].hypot(slope[1]);
+            if r == 0 || c == 0 || r + 1 == rows || c + 1 == columns {
+                return u32::MAX;
+            }
+            // At the feature's foot the scan turns level where the tip goes on falling.
+            let along = 0.5 * f64::from(light[(r - 1, c)] - light[(r + 1, c)]) * slope[0]
+                + 0.5 * f64::from(light[(r, c - 1)] - light[(r, c + 1)]) * slope[1];
+            if steep > self.input.noise && along < 0.6 * steep * steep {
+                return u32::MAX;
+            }
+            let far = features.get(id as usize).is_none_or(|f| {
+                (f.place[0] - r as f64).hypot(f.place[1] - c as f64) > 1.5
+            });
+            if far && level[(r, c)] {
+                return u32::MAX;
+            }
+            let off = f64::from(light[(r, c)]) - predicted;
+            let explained = off <= tolerance + SLACK_PX * steep
+                && off >= -tolerance - BLUNT_SLACK_PX * steep;
+            if explained { id } else { u32::MAX }
         };
         let owner = Array2::from_shape_fn((rows, columns), |(r, c)| fits(r, c));
         let mut grown: Vec<Vec<(u32, u32)>> = vec![Vec::new(); features.len()];
@@ -575,11 +632,20 @@ impl<'a> Fit<'a> {
     fn combined(&self, bound: &Array2<f32>) -> (Array2<f64>, Array2<f32>) {
         let mut shape = bound.mapv(f64::from);
         let mut support = self.weight.clone();
-        for ((p, &q), s) in shape.iter_mut().zip(&self.tip).zip(support.iter_mut()) {
-            if *s >= LEAST_SUPPORT {
-                *p = q;
-            } else {
-                *s = 0.0;
+        let (rows, columns) = shape.dim();
+        for r in 0..rows {
+            for c in 0..columns {
+                // The rim of what was seen leans on what was not.
+                let inner = (r.saturating_sub(1)..(r + 2).min(rows)).all(|i| {
+                    (c.saturating_sub(1)..(c + 2).min(columns))
+                        .all(|j| self.weight[(i, j)] >= LEAST_SUPPORT)
+                });
+                shape[(r, c)] = self.tip[(r, c)].min(shape[(r, c)]);
+                if inner {
+                    shape[(r, c)] = self.tip[(r, c)];
+                } else {
+                    support[(r, c)] = 0.0;
+                }
             }
         }
         (shape, support)
