@@ -80,9 +80,6 @@ fn request(kind: Kind, region: Option<Region>, at: f64) -> Request {
 fn scene(case: &Case, random: &mut Random, seed: u64) -> Result<(Box<dyn Feature>, [usize; 2], Truth)> {
     let width = random.between(50.0, 70.0);
     let rows = 48;
-    let mean_width = |lines: &Lines, at: f64| {
-        (0..rows).map(|r| lines.width_at(0, r as f64 + 0.5, at)).sum::<f64>() / rows as f64
-    };
     Ok(match case.kind {
         Scene::Line | Scene::RoughLine => {
             let mut lines = Lines::new(random.between(95.0, 105.0), 400.0, 1, width, HEIGHT)
@@ -91,7 +88,13 @@ fn scene(case: &Case, random: &mut Random, seed: u64) -> Result<(Box<dyn Feature
                 let roughness = EdgeRoughness { sigma_nm: 1.0, length_nm: 15.0, seed };
                 lines = lines.rough(roughness, -100.0, 200.0)?;
             }
-            let value = mean_width(&lines, case.at);
+            // Of a rough line the width at large is meant, not that of the piece in the scan.
+            let straight = Lines::new(0.0, 1.0, 1, width, HEIGHT).walls(case.wall_deg, 0.0);
+            let value = if case.kind == Scene::RoughLine {
+                straight.width_at(0, 0.0, case.at)
+            } else {
+                lines.width_at(0, 0.0, case.at)
+            };
             let request = request(Kind::LineWidth, None, case.at);
             (Box::new(lines), [rows, 200], Truth { request, value })
         }
@@ -283,6 +286,7 @@ fn cases() -> Vec<Case> {
     add("trench width", stout, 88.0, 0.3, Scene::Trench, 0.5);
     add("step height, ridge", slim, 85.0, 0.2, Scene::Ridge, 0.5);
     add("step height, edge", stout, 80.0, 0.2, Scene::Step, 0.5);
+    add("pitch", slim, 80.0, 0.2, Scene::Pitch, 0.5);
     cases
 }
 
