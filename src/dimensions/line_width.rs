@@ -199,6 +199,7 @@ impl Trace {
                 outwards,
                 height,
                 u,
+                noise: frame.noise,
             }
         });
         Some(Self {
@@ -383,14 +384,15 @@ fn budget_of(trace: &Trace, i: usize, series: &Series, calibration: f64, fractio
         Distribution::Normal,
         series.mean,
     );
-    // A wall that spans several pixels is interpolated better than one pixel by as many; edges
-    // that wander over the pixel grid average the rest out.
+    // One pixel's worth where the wall is a jump; interpolation over a wall of several pixels
+    // leaves the square of that less, never below a fortieth of a pixel; edges that wander over
+    // the grid average it out. Chosen on virtual scans (examples/dimension_validation.rs).
     let pixel = |k: usize| {
         let span = trace.walls[k].slope(fraction) * 0.25 * trace.height / trace.pitch;
         let span = if span.is_finite() { span.max(1.0) } else { 1.0 };
         let wander = statistics::robust_deviation(&trace.edges[i][k]).unwrap_or(0.0);
         let average = if wander > 0.3 { series.effective.sqrt() } else { 1.0 };
-        trace.pitch / 12f64.sqrt() / span / average
+        (trace.pitch / 12f64.sqrt() / (span * span)).max(trace.pitch / 40.0) / average
     };
     budget.push(
         "pixel, both edges",

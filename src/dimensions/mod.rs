@@ -2,9 +2,11 @@
 
 mod erosion;
 mod line_width;
+mod pitch;
 mod sections;
 mod statistics;
 mod step_height;
+mod texture;
 mod wall;
 
 use crate::error::Result;
@@ -187,7 +189,9 @@ pub fn measure(input: &Input, request: &Request, progress: &Progress) -> Result<
     match request.kind {
         Kind::StepHeight => step_height::measure(input, request, progress),
         Kind::LineWidth => line_width::measure(input, request, progress),
-        Kind::Pitch | Kind::Particle | Kind::Texture => todo!(),
+        Kind::Pitch => pitch::measure(input, request, progress),
+        Kind::Texture => texture::measure(input, request, progress),
+        Kind::Particle => todo!(),
     }
 }
 

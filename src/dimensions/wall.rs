@@ -122,6 +122,8 @@ pub(super) struct Wall {
     pub height: f64,
     /// Standard uncertainty of each position relative to the middle of the wall, nm.
     pub u: Vec<f64>,
+    /// White noise of the scan, nm.
+    pub noise: f64,
 }
 
 /// What is known of a wall at one height.
@@ -179,6 +181,12 @@ impl Wall {
         let tip = outline.steepest(fraction * self.height + 0.5 * span, span);
         // A straight line through n points knows its slope to sqrt(12 / n) u / span.
         let doubt = 2.0 * (1.5 * self.u_about(fraction) + 2f64.sqrt() * tip_u * tip) / span;
+        // Noise sinks the floor by about two deviations against the fillet that the tip leaves at
+        // its foot, which then looks flatter than the tip.
+        let (foot, head) = (fraction * self.height - 0.5 * span, fraction * self.height + 0.5 * span);
+        let part = 0.2 * span;
+        let bend = (outline.slope(foot, foot.max(0.0) + part) - outline.slope(head - part, head)).max(0.0);
+        let doubt = doubt + 2.0 * self.noise * bend / span;
         self.slope(fraction) > tip + SLOPE_MARGIN + doubt
     }
 
@@ -254,6 +262,7 @@ mod tests {
             outwards,
             height: 50.0,
             u: vec![0.0; 49],
+            noise: 0.0,
         }
     }
 
