@@ -87,7 +87,16 @@ fn summit_radii(scene: &Scene, px: f64) -> Vec<f64> {
     let mut radii = Vec::new();
     for i in 1..n - 1 {
         for j in 1..n - 1 {
-            let around = [(-1, -1), (-1, 0), (-1, 1), (0, -1), (0, 1), (1, -1), (1, 0), (1, 1)];
+            let around = [
+                (-1, -1),
+                (-1, 0),
+                (-1, 1),
+                (0, -1),
+                (0, 1),
+                (1, -1),
+                (1, 0),
+                (1, 1),
+            ];
             let top = around.iter().all(|&(a, b): &(i32, i32)| {
                 z[(i as i32 + a) as usize][(j as i32 + b) as usize] < z[i][j]
             });
@@ -433,7 +442,15 @@ fn main() -> Result<(), Box<dyn Error>> {
             let made = scan::scan(|x, y| scene.height(x, y), &tip, &settings, &Progress::new())?;
             if verbose && cell.name == "rough" {
                 let r = summit_radii(&scene, cell.px);
-                println!("  summits {} radii {:.2} {:.2} {:.2} {:.2} {:.2}", r.len(), r[0], r[5], r[r.len() / 10], r[r.len() / 4], r[r.len() / 2]);
+                println!(
+                    "  summits {} radii {:.2} {:.2} {:.2} {:.2} {:.2}",
+                    r.len(),
+                    r[0],
+                    r[5],
+                    r[r.len() / 10],
+                    r[r.len() / 4],
+                    r[r.len() / 2]
+                );
             }
             let start = Instant::now();
             let e = estimate(&made.scan, None, &Settings::default(), &Progress::new())?;

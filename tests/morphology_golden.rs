@@ -33,7 +33,11 @@ fn results_are_those_of_scipy_bit_for_bit() {
         ] {
             let expected = golden(&format!("{case}-{operation}"));
             assert_eq!(result.as_ref().unwrap().dim(), expected.dim());
-            assert_eq!(bits(&result.unwrap()), bits(&expected), "{case} {operation}");
+            assert_eq!(
+                bits(&result.unwrap()),
+                bits(&expected),
+                "{case} {operation}"
+            );
         }
     }
 }

@@ -3,9 +3,7 @@
 use super::certainty::{BOUNDED, NEVER, TOUCHED, VOID};
 use super::dilation::Steps;
 use super::field::{BLOCK, Field, LEFT, TILE, TOP, WINDOW_ROWS};
-use super::search::{
-    Tile, Vector, Visitor, Window, any_reaches, load, lowest, peaks, search,
-};
+use super::search::{Tile, Vector, Visitor, Window, any_reaches, load, lowest, peaks, search};
 use super::tip::{Block, Order, Tip};
 use crate::error::Result;
 use crate::progress::Progress;
