@@ -42,7 +42,9 @@ fn at(path: &Path, error: Error) -> Error {
 pub fn inspect(path: &Path, json: bool, common: &Common) -> Result<()> {
     let facts = files::inspect(path, &options(common))?;
     // The noise needs heights in nm; where a scale is missing the facts already say so.
-    let noise_nm = files::open(path, &options(common)).ok().and_then(|m| leveling::noise(&m));
+    let noise_nm = files::open(path, &options(common))
+        .ok()
+        .and_then(|m| leveling::noise(&m));
     if json {
         let mut value = serde_json::to_value(&facts)
             .map_err(|e| Error::new(ErrorKind::Data, format!("{}: {e}", path.display())))?;
@@ -61,14 +63,24 @@ fn facts_text(facts: &files::Inspection, noise_nm: Option<f64>) -> String {
         ("sha256", facts.sha256.clone()),
     ];
     for map in &facts.maps {
-        let name = if map.name.is_empty() { String::new() } else { format!(" \"{}\"", map.name) };
+        let name = if map.name.is_empty() {
+            String::new()
+        } else {
+            format!(" \"{}\"", map.name)
+        };
         lines.push((
             "map",
-            format!("{}{name}: {} x {} pixels, {}", map.index, map.columns, map.rows, map.sample_type),
+            format!(
+                "{}{name}: {} x {} pixels, {}",
+                map.index, map.columns, map.rows, map.sample_type
+            ),
         ));
     }
     let by = |source: &Option<String>| {
-        source.as_ref().map(|s| format!(" ({s})")).unwrap_or_default()
+        source
+            .as_ref()
+            .map(|s| format!(" ({s})"))
+            .unwrap_or_default()
     };
     if facts.map.is_some() {
         lines.push((
@@ -93,7 +105,12 @@ fn facts_text(facts: &files::Inspection, noise_nm: Option<f64>) -> String {
                 (None, None) => "none: every pixel is void".to_owned(),
             },
         ));
-        lines.push(("voids", facts.voids.map_or_else(|| "unknown".to_owned(), |n| n.to_string())));
+        lines.push((
+            "voids",
+            facts
+                .voids
+                .map_or_else(|| "unknown".to_owned(), |n| n.to_string()),
+        ));
         lines.push((
             "noise",
             match noise_nm {
@@ -102,10 +119,16 @@ fn facts_text(facts: &files::Inspection, noise_nm: Option<f64>) -> String {
             },
         ));
     } else {
-        lines.push(("choose", "several maps: give --map N for scale and range".to_owned()));
+        lines.push((
+            "choose",
+            "several maps: give --map N for scale and range".to_owned(),
+        ));
     }
     lines.extend(facts.notes.iter().map(|note| ("note", note.clone())));
-    lines.iter().map(|(name, text)| format!("{name:8} {text}\n")).collect()
+    lines
+        .iter()
+        .map(|(name, text)| format!("{name:8} {text}\n"))
+        .collect()
 }
 
 /// `truewidth convert`

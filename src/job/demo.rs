@@ -5,8 +5,14 @@ use crate::error::{Error, ErrorKind, Result};
 use crate::files::write_atomically;
 use std::path::{Path, PathBuf};
 
-const JOB: (&str, &[u8]) = ("stamp-14.toml", include_bytes!("../../sample-scans/stamp-14.toml"));
-const SCAN: (&str, &[u8]) = ("stamp-14.tiff", include_bytes!("../../sample-scans/stamp-14.tiff"));
+const JOB: (&str, &[u8]) = (
+    "stamp-14.toml",
+    include_bytes!("../../sample-scans/stamp-14.toml"),
+);
+const SCAN: (&str, &[u8]) = (
+    "stamp-14.tiff",
+    include_bytes!("../../sample-scans/stamp-14.tiff"),
+);
 
 /// The user's data folder: `TRUEWIDTH_DATA` where set, else the platform's own place.
 ///
@@ -18,8 +24,11 @@ pub fn data_folder() -> Result<PathBuf> {
     directories::ProjectDirs::from("", "", "truewidth")
         .map(|dirs| dirs.data_local_dir().to_owned())
         .ok_or_else(|| {
-            Error::new(ErrorKind::Io, "no home folder, so no place for the program's own files")
-                .remedy("Set TRUEWIDTH_DATA to a folder that may be written to")
+            Error::new(
+                ErrorKind::Io,
+                "no home folder, so no place for the program's own files",
+            )
+            .remedy("Set TRUEWIDTH_DATA to a folder that may be written to")
         })
 }
 

@@ -76,7 +76,14 @@ fn from_polished(
     if let Some((r, u)) = radius_u {
         height_u = height_u.max(r.fit_depth_nm * u / r.value);
     }
-    let band = band(&tip, &support, &scatter, &bound.found.shape, noise * 0.3, px)?;
+    let band = band(
+        &tip,
+        &support,
+        &scatter,
+        &bound.found.shape,
+        noise * 0.3,
+        px,
+    )?;
     let features = polished.features.len();
     let further = further_apices(&tip, &support, (5.0 * height_u).max(0.25 * px));
     if let Some(r) = settings.feature_radius_nm.filter(|r| *r > 0.0) {
@@ -91,7 +98,11 @@ fn from_polished(
     };
     let seeing = read.apex_radius.map_or(features, |r| {
         let needed = 0.5 * r.fit_depth_nm;
-        polished.features.iter().filter(|f| f.reach >= needed).count()
+        polished
+            .features
+            .iter()
+            .filter(|f| f.reach >= needed)
+            .count()
     });
     let mut diagnosis = common_findings(scan, bound, &tip, exercised, noise);
     apex_findings(&mut diagnosis, &read, seeing, px);
@@ -215,9 +226,16 @@ struct Centring {
 
 impl Centring {
     fn find(tip: &Tip, px: f64) -> Self {
-        let radius = rough_radius(tip).filter(|r| r.is_finite()).unwrap_or(px).max(px);
+        let radius = rough_radius(tip)
+            .filter(|r| r.is_finite())
+            .unwrap_or(px)
+            .max(px);
         let depth = (0.3 * radius).max(4.5 * px * px / radius);
-        let none = Self { rows: 0.0, columns: 0.0, apex: 0.0 };
+        let none = Self {
+            rows: 0.0,
+            columns: 0.0,
+            apex: 0.0,
+        };
         let Some(fit) = Quadric::fit(tip, depth) else {
             return none;
         };
@@ -226,7 +244,11 @@ impl Centring {
         if fit.radius().is_none() || rows.abs() > 2.0 || columns.abs() > 2.0 {
             return none;
         }
-        Self { rows, columns, apex: -fit.apex_depth }
+        Self {
+            rows,
+            columns,
+            apex: -fit.apex_depth,
+        }
     }
 
     /// Bilinear resampling at the shifted places, apex subtracted.
@@ -239,7 +261,11 @@ impl Centring {
                 j.clamp(0, columns as isize - 1) as usize,
             );
             let value = grid[(ci, cj)];
-            if (ci as isize, cj as isize) == (i, j) { value } else { beyond(value) }
+            if (ci as isize, cj as isize) == (i, j) {
+                value
+            } else {
+                beyond(value)
+            }
         };
         let mut out = Array2::from_shape_fn((rows, columns), |(r, c)| {
             let (y, x) = (r as f64 + self.rows, c as f64 + self.columns);
@@ -252,7 +278,11 @@ impl Centring {
         });
         // Tip heights carry their apex to 0; counts are never negative and keep theirs.
         if grid.iter().any(|p| *p < 0.0) {
-            let apex = if self.apex == 0.0 { out[centre] } else { self.apex };
+            let apex = if self.apex == 0.0 {
+                out[centre]
+            } else {
+                self.apex
+            };
             out.mapv_inplace(|p| p - apex);
         }
         out
@@ -265,7 +295,9 @@ fn exercised_depth(tip: &Tip, support: &Array2<u32>, polished: &Polished) -> Opt
     let mut reaches: Vec<f64> = polished.features.iter().map(|f| f.reach).collect();
     reaches.sort_by(|a, b| b.total_cmp(a));
     let third = reaches.get(2.min(reaches.len().checked_sub(1)?))?;
-    seen_depth(tip, &seen).map(|z| z.min(*third)).filter(|z| *z > 0.0)
+    seen_depth(tip, &seen)
+        .map(|z| z.min(*third))
+        .filter(|z| *z > 0.0)
 }
 
 fn seen_depth(tip: &Tip, seen: &Array2<bool>) -> Option<f64> {
@@ -301,7 +333,11 @@ fn jackknife(shape: &Array2<f64>, others: &[Array2<f64>]) -> Array2<f64> {
 }
 
 /// Jackknife standard error of the radius, nm.
-fn radius_scatter(others: &[Array2<f64>], pitch: crate::heightmap::Pitch, depth: f64) -> Option<f64> {
+fn radius_scatter(
+    others: &[Array2<f64>],
+    pitch: crate::heightmap::Pitch,
+    depth: f64,
+) -> Option<f64> {
     let radii: Vec<f64> = others
         .iter()
         .filter_map(|o| Quadric::fit(&Tip::new(clamped(o), pitch).ok()?, depth)?.radius())
@@ -415,7 +451,8 @@ fn common_findings(
         ));
     }
     let radius = rough_radius(tip).filter(|r| r.is_finite());
-    if bound.smoothing > 2.5 || radius.is_some_and(|r| bound.smoothing * px >= r / 3.0 && noise > 0.0)
+    if bound.smoothing > 2.5
+        || radius.is_some_and(|r| bound.smoothing * px >= r / 3.0 && noise > 0.0)
     {
         out.push(caution(
             format!(
@@ -474,7 +511,10 @@ fn apex_findings(out: &mut Vec<Diagnosis>, read: &ReadOut, features: usize, px: 
 
 fn double_tip(tip: &Tip, further: &[(usize, usize)]) -> Diagnosis {
     let shape = tip.shape();
-    let (cr, cc) = (shape.nrows() as f64 / 2.0 - 0.5, shape.ncols() as f64 / 2.0 - 0.5);
+    let (cr, cc) = (
+        shape.nrows() as f64 / 2.0 - 0.5,
+        shape.ncols() as f64 / 2.0 - 0.5,
+    );
     let list: Vec<String> = further
         .iter()
         .map(|&(r, c)| {
@@ -487,7 +527,10 @@ fn double_tip(tip: &Tip, further: &[(usize, usize)]) -> Diagnosis {
         })
         .collect();
     caution(
-        format!("Possible double tip: a further apex at {}.", list.join("; ")),
+        format!(
+            "Possible double tip: a further apex at {}.",
+            list.join("; ")
+        ),
         "Replace the probe, or correct with this tip: it holds all apices.",
     )
 }
