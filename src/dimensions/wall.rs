@@ -43,8 +43,16 @@ impl Outline {
         let mut heights = Vec::with_capacity(centre + 1);
         let mut least = 0.0f64;
         for k in 0..=centre {
-            let column = if outwards_positive { centre - k } else { centre + k };
-            let top = shape.column(column).iter().copied().fold(f32::NEG_INFINITY, f32::max);
+            let column = if outwards_positive {
+                centre - k
+            } else {
+                centre + k
+            };
+            let top = shape
+                .column(column)
+                .iter()
+                .copied()
+                .fold(f32::NEG_INFINITY, f32::max);
             if !top.is_finite() {
                 break;
             }
@@ -159,8 +167,12 @@ impl Wall {
     /// Lateral slope about `fraction` by a straight line through the window, `>= 0`.
     pub fn slope(&self, fraction: f64) -> f64 {
         let inside = |f: &f64| (f - fraction).abs() <= HALF_WINDOW + 1e-9;
-        let from = self.fractions.partition_point(|f| *f < fraction && !inside(f));
-        let to = self.fractions.partition_point(|f| *f < fraction || inside(f));
+        let from = self
+            .fractions
+            .partition_point(|f| *f < fraction && !inside(f));
+        let to = self
+            .fractions
+            .partition_point(|f| *f < fraction || inside(f));
         statistics::line(&self.fractions[from..to], &self.outwards[from..to])
             .map_or(f64::NAN, |(slope, _)| (-slope / self.height).max(0.0))
     }
@@ -285,7 +297,10 @@ mod tests {
         };
         let tip = model.sample(41.0, Pitch::square(1.0)).unwrap();
         let slope = |axis, positive| {
-            Outline::of(&tip, axis, positive).steepest(10.0, 5.0).atan().to_degrees()
+            Outline::of(&tip, axis, positive)
+                .steepest(10.0, 5.0)
+                .atan()
+                .to_degrees()
         };
         // The tip stands right of a wall that falls to the right: its left face meets it.
         assert!((slope(Axis::X, true) - 10.0).abs() < 1e-3);

@@ -224,7 +224,11 @@ fn matched_bound(
         {
             radius = r.max(px);
         }
-        last = Some(Bound { found, threshold, smoothing });
+        last = Some(Bound {
+            found,
+            threshold,
+            smoothing,
+        });
         if settings.smoothing_px.is_some() {
             break;
         }
@@ -251,7 +255,11 @@ fn textbook_bound(
         half: window::half_widths(scan, &heights, left, settings),
     };
     let found = iterate::bluntest(&input, progress)?;
-    Ok(Bound { found, threshold, smoothing })
+    Ok(Bound {
+        found,
+        threshold,
+        smoothing,
+    })
 }
 
 #[cfg(test)]

@@ -52,11 +52,7 @@ pub(super) fn hopeless(scan: &HeightMap) -> Option<Vec<Diagnosis>> {
 
 /// Apices beside the one at the centre: cells higher than all around them by more than `least`
 /// nm of prominence (drop to the saddle towards anything higher), within the supported cells.
-pub(super) fn further_apices(
-    tip: &Tip,
-    support: &Array2<u32>,
-    least: f64,
-) -> Vec<(usize, usize)> {
+pub(super) fn further_apices(tip: &Tip, support: &Array2<u32>, least: f64) -> Vec<(usize, usize)> {
     let shape = tip.shape();
     let (rows, columns) = shape.dim();
     let centre = (rows / 2, columns / 2);

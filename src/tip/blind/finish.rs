@@ -4,7 +4,7 @@ use super::diagnose::{LEAST_FEATURES, caution, further_apices, refusal};
 use super::polish::{self, Polished};
 use super::{Bound, Diagnosis, Estimate, Method, Settings, smooth};
 use crate::error::Result;
-use crate::heightmap::{HeightMap, Pitch};
+use crate::heightmap::HeightMap;
 use crate::morphology;
 use crate::progress::Progress;
 use crate::tip::model::Model;
@@ -16,8 +16,6 @@ use ndarray::Array2;
 const SEEN: f64 = 0.8;
 /// Remaining error of the contacts' places, pixels; tuned on virtual scans, checked on fresh ones.
 const PLACE_PX: f64 = 0.15;
-/// Height over the noise that makes a feature count for the apex.
-const TALL: f64 = 10.0;
 
 pub(super) fn finish(
     scan: &HeightMap,
@@ -31,7 +29,6 @@ pub(super) fn finish(
         let input = polish::Input {
             scan: scan.heights(),
             noise,
-            px: (scan.pitch().x * scan.pitch().y).sqrt(),
             smoothing: bound.smoothing,
             smooth_noise: left,
         };
@@ -55,7 +52,8 @@ fn from_polished(
 ) -> Result<Estimate> {
     let pitch = scan.pitch();
     let px = (pitch.x * pitch.y).sqrt();
-    let centring = Centring::find(&polished.shape, pitch);
+    let rough = Tip::new(clamped(&polished.shape), pitch)?;
+    let centring = Centring::find(&rough, px);
     let shape = centring.apply(&polished.shape, bound_fill);
     let support = centring
         .apply(&polished.support.mapv(f64::from), |_| 0.0)
@@ -74,14 +72,18 @@ fn from_polished(
     let radius_u = first
         .as_ref()
         .and_then(|r| r.apex_radius)
-        .and_then(|r| {
-            let u = radius_scatter(&others, pitch, r.fit_depth_nm, height_u)?;
-            Some((r, u))
-        });
+        .and_then(|r| radius_scatter(&others, pitch, r.fit_depth_nm).map(|u| (r, u)));
     if let Some((r, u)) = radius_u {
         height_u = height_u.max(r.fit_depth_nm * u / r.value);
     }
-    let band = band(&tip, &support, &scatter, &bound.found.shape, noise * 0.3, px)?;
+    let band = band(
+        &tip,
+        &support,
+        &scatter,
+        &bound.found.shape,
+        noise * 0.3,
+        px,
+    )?;
     let features = polished.features.len();
     let further = further_apices(&tip, &support, (5.0 * height_u).max(0.25 * px));
     if let Some(r) = settings.feature_radius_nm.filter(|r| *r > 0.0) {
@@ -94,10 +96,13 @@ fn from_polished(
             ..ReadOut::default()
         },
     };
-    // Features that stand out from the noise and show the fitted cap.
     let seeing = read.apex_radius.map_or(features, |r| {
-        let needed = (0.5 * r.fit_depth_nm).max(TALL * noise);
-        polished.features.iter().filter(|f| f.reach >= needed).count()
+        let needed = 0.5 * r.fit_depth_nm;
+        polished
+            .features
+            .iter()
+            .filter(|f| f.reach >= needed)
+            .count()
     });
     let mut diagnosis = common_findings(scan, bound, &tip, exercised, noise);
     apex_findings(&mut diagnosis, &read, seeing, px);
@@ -220,22 +225,30 @@ struct Centring {
 }
 
 impl Centring {
-    fn find(shape: &Array2<f64>, pitch: Pitch) -> Self {
-        let px = (pitch.x * pitch.y).sqrt();
-        let rough = Tip::new(clamped(shape), pitch).ok().as_ref().and_then(rough_radius);
-        let radius = rough.filter(|r| r.is_finite()).unwrap_or(px).max(px);
+    fn find(tip: &Tip, px: f64) -> Self {
+        let radius = rough_radius(tip)
+            .filter(|r| r.is_finite())
+            .unwrap_or(px)
+            .max(px);
         let depth = (0.3 * radius).max(4.5 * px * px / radius);
-        let none = Self { rows: 0.0, columns: 0.0, apex: 0.0 };
-        let heights = shape.mapv(|p| p as f32);
-        let Some(fit) = Quadric::fit(heights.view(), pitch, depth, 0.1 * depth) else {
+        let none = Self {
+            rows: 0.0,
+            columns: 0.0,
+            apex: 0.0,
+        };
+        let Some(fit) = Quadric::fit(tip, depth) else {
             return none;
         };
-        let (rows, columns) = (fit.apex[1] / pitch.y, fit.apex[0] / pitch.x);
+        let (rows, columns) = (fit.apex[1] / tip.pitch().y, fit.apex[0] / tip.pitch().x);
         // A fit that puts the apex elsewhere describes no apex.
         if fit.radius().is_none() || rows.abs() > 2.0 || columns.abs() > 2.0 {
             return none;
         }
-        Self { rows, columns, apex: -fit.apex_depth }
+        Self {
+            rows,
+            columns,
+            apex: -fit.apex_depth,
+        }
     }
 
     /// Bilinear resampling at the shifted places, apex subtracted.
@@ -248,7 +261,11 @@ impl Centring {
                 j.clamp(0, columns as isize - 1) as usize,
             );
             let value = grid[(ci, cj)];
-            if (ci as isize, cj as isize) == (i, j) { value } else { beyond(value) }
+            if (ci as isize, cj as isize) == (i, j) {
+                value
+            } else {
+                beyond(value)
+            }
         };
         let mut out = Array2::from_shape_fn((rows, columns), |(r, c)| {
             let (y, x) = (r as f64 + self.rows, c as f64 + self.columns);
@@ -261,7 +278,11 @@ impl Centring {
         });
         // Tip heights carry their apex to 0; counts are never negative and keep theirs.
         if grid.iter().any(|p| *p < 0.0) {
-            let apex = if self.apex == 0.0 { out[centre] } else { self.apex };
+            let apex = if self.apex == 0.0 {
+                out[centre]
+            } else {
+                self.apex
+            };
             out.mapv_inplace(|p| p - apex);
         }
         out
@@ -273,10 +294,9 @@ fn exercised_depth(tip: &Tip, support: &Array2<u32>, polished: &Polished) -> Opt
     let seen = support.mapv(|n| n as f32 >= polish::LEAST_SUPPORT);
     let mut reaches: Vec<f64> = polished.features.iter().map(|f| f.reach).collect();
     reaches.sort_by(|a, b| b.total_cmp(a));
-    if std::env::var_os("TIP_DEBUG").is_some() { eprintln!("reaches {reaches:.1?} seen {:?}", seen_depth(tip, &seen)); }
     let third = reaches.get(2.min(reaches.len().checked_sub(1)?))?;
     seen_depth(tip, &seen)
-        .map(|z| z.min(0.95 * third))
+        .map(|z| z.min(*third))
         .filter(|z| *z > 0.0)
 }
 
@@ -315,13 +335,12 @@ fn jackknife(shape: &Array2<f64>, others: &[Array2<f64>]) -> Array2<f64> {
 /// Jackknife standard error of the radius, nm.
 fn radius_scatter(
     others: &[Array2<f64>],
-    pitch: Pitch,
+    pitch: crate::heightmap::Pitch,
     depth: f64,
-    noise: f64,
 ) -> Option<f64> {
     let radii: Vec<f64> = others
         .iter()
-        .filter_map(|o| Quadric::fit(clamped(o).view(), pitch, depth, noise)?.radius())
+        .filter_map(|o| Quadric::fit(&Tip::new(clamped(o), pitch).ok()?, depth)?.radius())
         .collect();
     let n = radii.len() as f64;
     if radii.len() < others.len() || n < 3.0 {
@@ -432,7 +451,8 @@ fn common_findings(
         ));
     }
     let radius = rough_radius(tip).filter(|r| r.is_finite());
-    if bound.smoothing > 2.5 || radius.is_some_and(|r| bound.smoothing * px >= r / 3.0 && noise > 0.0)
+    if bound.smoothing > 2.5
+        || radius.is_some_and(|r| bound.smoothing * px >= r / 3.0 && noise > 0.0)
     {
         out.push(caution(
             format!(
@@ -491,7 +511,10 @@ fn apex_findings(out: &mut Vec<Diagnosis>, read: &ReadOut, features: usize, px: 
 
 fn double_tip(tip: &Tip, further: &[(usize, usize)]) -> Diagnosis {
     let shape = tip.shape();
-    let (cr, cc) = (shape.nrows() as f64 / 2.0 - 0.5, shape.ncols() as f64 / 2.0 - 0.5);
+    let (cr, cc) = (
+        shape.nrows() as f64 / 2.0 - 0.5,
+        shape.ncols() as f64 / 2.0 - 0.5,
+    );
     let list: Vec<String> = further
         .iter()
         .map(|&(r, c)| {
@@ -504,7 +527,10 @@ fn double_tip(tip: &Tip, further: &[(usize, usize)]) -> Diagnosis {
         })
         .collect();
     caution(
-        format!("Possible double tip: a further apex at {}.", list.join("; ")),
+        format!(
+            "Possible double tip: a further apex at {}.",
+            list.join("; ")
+        ),
         "Replace the probe, or correct with this tip: it holds all apices.",
     )
 }
