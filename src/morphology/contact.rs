@@ -3,7 +3,7 @@
 use super::dilation::Steps;
 use super::field::{BLOCK, Field};
 use super::search::{
-    Tile, Vector, Visitor, Window, any_reaches, load, lowest, peaks, search, wanted,
+    Tile, Vector, Visitor, Window, any_reaches, load, lowest, peaks, raise, search, wanted,
 };
 use super::tip::{Block, Order, Tip, rank_of};
 use super::{Contacts, NO_CONTACT};
@@ -150,9 +150,7 @@ impl<'a, S: Simd> Visitor<'a, S> for Record<'a, '_, S> {
     fn visit(&mut self, simd: S, window: Window<'a>, block: &'a Block) {
         let peaks = peaks(simd, window, block);
         if any_reaches(simd, &peaks, &self.values) {
-            for r in 0..BLOCK {
-                self.values[r] = simd.max_f32s(self.values[r], peaks[r]);
-            }
+            raise(simd, &mut self.values, &peaks);
             self.floors = lowest(simd, &self.values);
             self.candidates.push(Candidate {
                 window,

@@ -2,7 +2,7 @@
 
 use super::field::{BLOCK, Field};
 use super::flat;
-use super::search::{Tile, Vector, Visitor, Window, lowest, peaks, search, wanted};
+use super::search::{Tile, Vector, Visitor, Window, lowest, peaks, raise, search, wanted};
 use super::tip::{Block, Order, Tip};
 use crate::error::Result;
 use crate::progress::Progress;
@@ -151,10 +151,7 @@ impl<'a, S: Simd> Visitor<'a, S> for Raise<S> {
 
     #[inline(always)]
     fn visit(&mut self, simd: S, window: Window<'a>, block: &'a Block) {
-        let peaks = peaks(simd, window, block);
-        for r in 0..BLOCK {
-            self.values[r] = simd.max_f32s(self.values[r], peaks[r]);
-        }
+        raise(simd, &mut self.values, &peaks(simd, window, block));
         self.floors = lowest(simd, &self.values);
     }
 

@@ -153,8 +153,8 @@ pub(super) fn peaks<S: Simd>(simd: S, window: Window, block: &Block) -> [S::f32s
             map[i] = load::<S>(&rows[i][j..]);
         }
         let mut cells = [simd.splat_f32s(0.0); BLOCK];
-        for i in 0..BLOCK {
-            cells[i] = simd.splat_f32s(block.cells[i][j]);
+        for (cell, row) in cells.iter_mut().zip(&block.cells) {
+            *cell = simd.splat_f32s(row[j]);
         }
         for r in 0..BLOCK {
             // Pairs first: half the chain of dependent maxima.
@@ -170,6 +170,14 @@ pub(super) fn peaks<S: Simd>(simd: S, window: Window, block: &Block) -> [S::f32s
         }
     }
     peaks
+}
+
+/// Raises `values` to `peaks` where those are higher.
+#[inline(always)]
+pub(super) fn raise<S: Simd>(simd: S, values: &mut [S::f32s; BLOCK], peaks: &[S::f32s; BLOCK]) {
+    for (value, &peak) in values.iter_mut().zip(peaks) {
+        *value = simd.max_f32s(*value, peak);
+    }
 }
 
 /// Whether any of the tile's `values` reaches its `limit`.
