@@ -40,7 +40,11 @@ pub(super) fn finish(
         None
     };
     match polished {
-        Some(polished) => from_polished(scan, noise, settings, &bound, polished),
+        Some(polished) => {
+            let estimate = from_polished(scan, noise, settings, &bound, &polished)?;
+            if std::env::var_os("TIP_DEBUG").is_some() { for d in &estimate.diagnosis { eprintln!("D {}", d.finding); } }
+            Ok(estimate)
+        }
         None => from_bound(scan, noise, settings, &bound, progress),
     }
 }
@@ -51,22 +55,20 @@ fn from_polished(
     noise: f64,
     settings: &Settings,
     bound: &Bound,
-    polished: Polished,
+    polished: &Polished,
 ) -> Result<Estimate> {
     let pitch = scan.pitch();
     let px = (pitch.x * pitch.y).sqrt();
-    let centring = Centring::find(&polished.shape, pitch);
-    let shape = centring.apply(&polished.shape, bound_fill);
-    let support = centring
-        .apply(&polished.support.mapv(f64::from), |_| 0.0)
-        .mapv(|s| s.round().max(0.0) as u32);
+    let centring = Centring::find(polished, pitch);
+    let shape = centring.tip(&polished.shape);
+    let support = centring.counts(&polished.support);
     let mut tip = Tip::new(clamped(&shape), pitch)?;
     let others: Vec<Array2<f64>> = polished
         .leave_out
         .iter()
-        .map(|t| centring.apply(t, bound_fill))
+        .map(|t| centring.tip(t))
         .collect();
-    let exercised = exercised_depth(&tip, &support, &polished);
+    let exercised = exercised_depth(&tip, &support, polished);
     let scatter = jackknife(&shape, &others);
     let mut height_u = typical_u(&tip, &scatter, exercised);
     // What leaving out features does to the radius says more than the cells' scatter.
@@ -207,11 +209,6 @@ fn clamped(shape: &Array2<f64>) -> Array2<f32> {
     shape
 }
 
-/// Beyond the grid: the nearest cell.
-fn bound_fill(nearest: f64) -> f64 {
-    nearest
-}
-
 /// The shift that brings the fitted apex to the centre cell.
 struct Centring {
     rows: f64,
@@ -220,7 +217,8 @@ struct Centring {
 }
 
 impl Centring {
-    fn find(shape: &Array2<f64>, pitch: Pitch) -> Self {
+    fn find(polished: &Polished, pitch: Pitch) -> Self {
+        let shape = &polished.shape;
         let px = (pitch.x * pitch.y).sqrt();
         let rough = Tip::new(clamped(shape), pitch).ok().as_ref().and_then(rough_radius);
         let radius = rough.filter(|r| r.is_finite()).unwrap_or(px).max(px);
@@ -235,36 +233,39 @@ impl Centring {
         if fit.radius().is_none() || rows.abs() > 2.0 || columns.abs() > 2.0 {
             return none;
         }
-        Self { rows, columns, apex: -fit.apex_depth }
+        // The fit's height averages the noise; on an apex that is not round it misses the tip.
+        let mut found = Self { rows, columns, apex: 0.0 };
+        let centre = (shape.nrows() / 2, shape.ncols() / 2);
+        let here = found.look(shape, centre);
+        let error = polished.scale / f64::from(polished.support[centre].max(1.0)).sqrt();
+        let apart = (here + fit.apex_depth).abs();
+        found.apex = if apart <= 3.0 * error + 0.01 * px { -fit.apex_depth } else { here };
+        found
     }
 
-    /// Bilinear resampling at the shifted places, apex subtracted.
-    fn apply(&self, grid: &Array2<f64>, beyond: impl Fn(f64) -> f64) -> Array2<f64> {
+    /// Tip heights at the shifted places, apex carried to 0.
+    fn tip(&self, grid: &Array2<f64>) -> Array2<f64> {
+        Array2::from_shape_fn(grid.dim(), |at| self.look(grid, at) - self.apex)
+    }
+
+    /// Counts at the shifted places.
+    fn counts(&self, grid: &Array2<f32>) -> Array2<u32> {
+        let grid = grid.mapv(f64::from);
+        Array2::from_shape_fn(grid.dim(), |at| self.look(&grid, at).round().max(0.0) as u32)
+    }
+
+    /// Bilinear; beyond the grid its nearest cell.
+    fn look(&self, grid: &Array2<f64>, (r, c): (usize, usize)) -> f64 {
         let (rows, columns) = grid.dim();
-        let centre = (rows / 2, columns / 2);
-        let look = |i: isize, j: isize| {
-            let (ci, cj) = (
-                i.clamp(0, rows as isize - 1) as usize,
-                j.clamp(0, columns as isize - 1) as usize,
-            );
-            let value = grid[(ci, cj)];
-            if (ci as isize, cj as isize) == (i, j) { value } else { beyond(value) }
+        let (y, x) = (r as f64 + self.rows, c as f64 + self.columns);
+        let (i, j) = (y.floor() as isize, x.floor() as isize);
+        let (fy, fx) = (y - y.floor(), x - x.floor());
+        let at = |i: isize, j: isize| {
+            let i = i.clamp(0, rows as isize - 1) as usize;
+            grid[(i, j.clamp(0, columns as isize - 1) as usize)]
         };
-        let mut out = Array2::from_shape_fn((rows, columns), |(r, c)| {
-            let (y, x) = (r as f64 + self.rows, c as f64 + self.columns);
-            let (i, j) = (y.floor() as isize, x.floor() as isize);
-            let (fy, fx) = (y - y.floor(), x - x.floor());
-            look(i, j) * (1.0 - fy) * (1.0 - fx)
-                + look(i, j + 1) * (1.0 - fy) * fx
-                + look(i + 1, j) * fy * (1.0 - fx)
-                + look(i + 1, j + 1) * fy * fx
-        });
-        // Tip heights carry their apex to 0; counts are never negative and keep theirs.
-        if grid.iter().any(|p| *p < 0.0) {
-            let apex = if self.apex == 0.0 { out[centre] } else { self.apex };
-            out.mapv_inplace(|p| p - apex);
-        }
-        out
+        (at(i, j) * (1.0 - fx) + at(i, j + 1) * fx) * (1.0 - fy)
+            + (at(i + 1, j) * (1.0 - fx) + at(i + 1, j + 1) * fx) * fy
     }
 }
 
@@ -273,7 +274,6 @@ fn exercised_depth(tip: &Tip, support: &Array2<u32>, polished: &Polished) -> Opt
     let seen = support.mapv(|n| n as f32 >= polish::LEAST_SUPPORT);
     let mut reaches: Vec<f64> = polished.features.iter().map(|f| f.reach).collect();
     reaches.sort_by(|a, b| b.total_cmp(a));
-    if std::env::var_os("TIP_DEBUG").is_some() { eprintln!("reaches {reaches:.1?} seen {:?}", seen_depth(tip, &seen)); }
     let third = reaches.get(2.min(reaches.len().checked_sub(1)?))?;
     seen_depth(tip, &seen)
         .map(|z| z.min(0.95 * third))

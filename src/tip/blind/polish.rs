@@ -42,6 +42,8 @@ pub(super) struct Polished {
     pub support: Array2<f32>,
     /// The features used.
     pub features: Vec<Feature>,
+    /// Standard deviation of the residuals, nm.
+    pub scale: f64,
     /// The tip with each group of features left out, for the jackknife; empty with few features.
     pub leave_out: Vec<Array2<f64>>,
 }
@@ -125,6 +127,7 @@ pub(super) fn polish<'a>(
             support,
             features,
             leave_out,
+            scale: fit.scale,
         });
     }
     Ok(result)
@@ -308,6 +311,7 @@ fn local_quadratic(
     weight: &Array2<f32>,
     reach: usize,
     per_px: f64,
+    noise: f64,
 ) -> Array2<f64> {
     let (rows, columns) = tip.dim();
     let values: Vec<f64> = (0..rows * columns)
@@ -342,6 +346,10 @@ fn local_quadratic(
             };
             // On the flank height errors are small along the normal, and curvature changes fast.
             let steep = fit[1].hypot(fit[2]) * per_px;
+            // A change beyond the noise is shape.
+            if fit[0].abs() > 3.0 * noise / f64::from(weight[(r, c)]).sqrt() {
+                return tip[(r, c)];
+            }
             tip[(r, c)] + fit[0] * (2.0 - 2.5 * steep).clamp(0.0, 1.0)
         })
         .collect();
@@ -624,7 +632,9 @@ impl<'a> Fit<'a> {
     fn calmed(&self, tip: &Array2<f64>) -> Array2<f64> {
         match self.calm_reach() {
             0 => tip.clone(),
-            reach => local_quadratic(tip, &self.weight, reach, 1.0 / self.input.px),
+            reach => {
+                local_quadratic(tip, &self.weight, reach, 1.0 / self.input.px, self.input.noise)
+            }
         }
     }
 
