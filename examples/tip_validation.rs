@@ -10,7 +10,9 @@ use truewidth::heightmap::Pitch;
 use truewidth::progress::Progress;
 use truewidth::tip::blind::{Estimate, Settings, estimate};
 use truewidth::tip::model::Model;
-use truewidth::virtual_scan::{self as scan, Bumps, BumpShape, CorrelatedMap, Distortion, Feature, Scene};
+use truewidth::virtual_scan::{
+    self as scan, BumpShape, Bumps, CorrelatedMap, Distortion, Feature, Scene,
+};
 
 type Shape = Box<dyn Fn(f64, f64) -> f64 + Sync>;
 
@@ -37,24 +39,40 @@ fn sphere_cone(radius: f64, half_angle: f64) -> Shape {
 }
 
 fn scattered(shape: BumpShape, count: usize, gap: f64, side: f64, seed: u64) -> Scene {
-    let places = scan::scatter(&vec![shape.foot(); count], gap, [20.0; 2], [side - 20.0; 2], seed)
-        .expect("room for the features");
+    let places = scan::scatter(
+        &vec![shape.foot(); count],
+        gap,
+        [20.0; 2],
+        [side - 20.0; 2],
+        seed,
+    )
+    .expect("room for the features");
     let bumps = Bumps::all(shape, &places).expect("finite features");
     Scene::new().with(move |x: f64, y: f64| bumps.height(x, y))
 }
 
 fn spikes(seed: u64, px: f64) -> Scene {
-    let shape = BumpShape::Spike { radius: 1.5, half_angle: 8.0, height: 40.0 };
+    let shape = BumpShape::Spike {
+        radius: 1.5,
+        half_angle: 8.0,
+        height: 40.0,
+    };
     scattered(shape, 14, 14.0 * px, N as f64 * px, seed)
 }
 
 fn spheres(seed: u64, px: f64) -> Scene {
-    scattered(BumpShape::Sphere { radius: 4.0 }, 14, 22.0, N as f64 * px, seed)
+    scattered(
+        BumpShape::Sphere { radius: 4.0 },
+        14,
+        22.0,
+        N as f64 * px,
+        seed,
+    )
 }
 
 fn rough(seed: u64, px: f64) -> Scene {
     let side = N as f64 * px;
-    let map = CorrelatedMap::new(8.0 , 6.0 , [-80.0 * px; 2], [side + 80.0 * px; 2], seed)
+    let map = CorrelatedMap::new(8.0, 6.0, [-80.0 * px; 2], [side + 80.0 * px; 2], seed)
         .expect("a rough surface");
     Scene::new().on(move |x: f64, y: f64| map.at(x, y))
 }
@@ -69,7 +87,16 @@ fn summit_radii(scene: &Scene, px: f64) -> Vec<f64> {
     let mut radii = Vec::new();
     for i in 1..n - 1 {
         for j in 1..n - 1 {
-            let around = [(-1, -1), (-1, 0), (-1, 1), (0, -1), (0, 1), (1, -1), (1, 0), (1, 1)];
+            let around = [
+                (-1, -1),
+                (-1, 0),
+                (-1, 1),
+                (0, -1),
+                (0, 1),
+                (1, -1),
+                (1, 0),
+                (1, 1),
+            ];
             let top = around.iter().all(|&(a, b): &(i32, i32)| {
                 z[(i as i32 + a) as usize][(j as i32 + b) as usize] < z[i][j]
             });
@@ -92,7 +119,13 @@ fn summit_radii(scene: &Scene, px: f64) -> Vec<f64> {
 
 fn wide_lines(seed: u64, px: f64) -> Scene {
     let shift = (seed % 7) as f64 * 0.37 * px;
-    Scene::new().with(scan::Lines::new(30.0 * px + shift, 64.0 * px, 3, 30.0 * px, 40.0))
+    Scene::new().with(scan::Lines::new(
+        30.0 * px + shift,
+        64.0 * px,
+        3,
+        30.0 * px,
+        40.0,
+    ))
 }
 
 fn blocks(seed: u64, px: f64) -> Scene {
@@ -101,7 +134,11 @@ fn blocks(seed: u64, px: f64) -> Scene {
         let x = (20.0 + 60.0 * (k % 3) as f64 + 0.31 * ((seed + k) % 5) as f64) * px;
         let y = (20.0 + 60.0 * (k / 3) as f64 + 0.23 * ((seed + 2 * k) % 7) as f64) * px;
         let to = [x + 24.0 * px, y + 24.0 * px];
-        scene = scene.with(scan::Block { from: [x, y], to, height_nm: 40.0 });
+        scene = scene.with(scan::Block {
+            from: [x, y],
+            to,
+            height_nm: 40.0,
+        });
     }
     scene
 }
@@ -111,12 +148,18 @@ fn flat(_: u64, _: f64) -> Scene {
 }
 
 fn few(seed: u64, px: f64) -> Scene {
-    let shape = BumpShape::Spike { radius: 1.5, half_angle: 8.0, height: 40.0 };
+    let shape = BumpShape::Spike {
+        radius: 1.5,
+        half_angle: 8.0,
+        height: 40.0,
+    };
     scattered(shape, 3, 14.0 * px, N as f64 * px, seed)
 }
 
 fn pyramid() -> Shape {
-    let model = Model::Pyramid { half_angles: [12.0, 25.0, 18.0, 18.0] };
+    let model = Model::Pyramid {
+        half_angles: [12.0, 25.0, 18.0, 18.0],
+    };
     Box::new(move |x, y| model.height(x, y))
 }
 
@@ -127,7 +170,10 @@ fn pyramid_and_spike() -> Shape {
 
 fn worn() -> Shape {
     // A sphere-cone ground off 1.5 nm above its apex.
-    let model = Model::SphereCone { radius: 10.0, half_angle: 15.0 };
+    let model = Model::SphereCone {
+        radius: 10.0,
+        half_angle: 15.0,
+    };
     Box::new(move |x, y| (model.height(x, y) - 1.5).max(0.0))
 }
 
@@ -136,8 +182,15 @@ fn worn_and_spike() -> Shape {
 }
 
 fn double() -> Shape {
-    let model = Model::SphereCone { radius: 8.0, half_angle: 15.0 };
-    Box::new(move |x, y| model.height(x, y).min(model.height(x - 14.0, y - 6.0) + 5.0))
+    let model = Model::SphereCone {
+        radius: 8.0,
+        half_angle: 15.0,
+    };
+    Box::new(move |x, y| {
+        model
+            .height(x, y)
+            .min(model.height(x - 14.0, y - 6.0) + 5.0)
+    })
 }
 
 fn double_and_spike() -> Shape {
@@ -164,7 +217,12 @@ fn joined(tip: Shape, radius: f64, half_angle: f64) -> Shape {
 
 fn cells() -> Vec<Cell> {
     let mut out = Vec::new();
-    for (noise, limits) in [(0.0, (0.20, 0.08)), (0.1, (0.25, 0.08)), (0.3, (0.25, 0.08)), (1.0, (0.30, 0.10))] {
+    for (noise, limits) in [
+        (0.0, (0.20, 0.08)),
+        (0.1, (0.25, 0.08)),
+        (0.3, (0.25, 0.08)),
+        (1.0, (0.30, 0.10)),
+    ] {
         out.push(Cell {
             name: "spikes",
             px: 1.0,
@@ -176,7 +234,12 @@ fn cells() -> Vec<Cell> {
             limits: Some(limits),
         });
     }
-    for (noise, limits) in [(0.0, (0.20, 0.05)), (0.1, (0.25, 0.08)), (0.3, (0.30, 0.15)), (1.0, (9.0, 9.0))] {
+    for (noise, limits) in [
+        (0.0, (0.20, 0.05)),
+        (0.1, (0.25, 0.08)),
+        (0.3, (0.30, 0.15)),
+        (1.0, (9.0, 9.0)),
+    ] {
         out.push(Cell {
             name: "rough",
             px: 1.0,
@@ -220,11 +283,24 @@ fn cells() -> Vec<Cell> {
     ];
     for (name, tip, identified) in shapes {
         for noise in [0.1, 0.3] {
-            out.push(Cell { name, px: 1.0, noise, tip, identified, radius: None, surface: spikes, limits: Some((0.6, 9.0)) });
+            out.push(Cell {
+                name,
+                px: 1.0,
+                noise,
+                tip,
+                identified,
+                radius: None,
+                surface: spikes,
+                limits: Some((0.6, 9.0)),
+            });
         }
     }
-    let refused: [(&str, fn(u64, f64) -> Scene); 4] =
-        [("lines", wide_lines), ("blocks", blocks), ("flat", flat), ("few", few)];
+    let refused: [(&str, fn(u64, f64) -> Scene); 4] = [
+        ("lines", wide_lines),
+        ("blocks", blocks),
+        ("flat", flat),
+        ("few", few),
+    ];
     for (name, surface) in refused {
         for noise in [0.1, 0.3, 1.0] {
             out.push(Cell {
@@ -268,7 +344,10 @@ fn score(e: &Estimate, truth: &Shape) -> Option<Score> {
     let pitch = e.tip.pitch();
     let (cr, cc) = (shape.nrows() / 2, shape.ncols() / 2);
     let at = |i: usize, j: usize| {
-        ((j as f64 - cc as f64) * pitch.x, (i as f64 - cr as f64) * pitch.y)
+        (
+            (j as f64 - cc as f64) * pitch.x,
+            (i as f64 - cr as f64) * pitch.y,
+        )
     };
     let normal = |x: f64, y: f64| {
         let h = 0.05 * pitch.x;
@@ -278,11 +357,16 @@ fn score(e: &Estimate, truth: &Shape) -> Option<Score> {
     };
     let cells: Vec<(f64, f64, f64, usize, usize)> = shape
         .indexed_iter()
-        .map(|((i, j), &p)| { let (x, y) = at(i, j); (x, y, -f64::from(p), i, j) })
+        .map(|((i, j), &p)| {
+            let (x, y) = at(i, j);
+            (x, y, -f64::from(p), i, j)
+        })
         .filter(|c| truth(c.0, c.1) <= depth)
         .collect();
     let rms_at = |dx: f64, dy: f64| {
-        let errors = cells.iter().map(|&(x, y, t, _, _)| (t - truth(x - dx, y - dy)) * normal(x - dx, y - dy));
+        let errors = cells
+            .iter()
+            .map(|&(x, y, t, _, _)| (t - truth(x - dx, y - dy)) * normal(x - dx, y - dy));
         let (s, q) = errors.fold((0.0, 0.0), |a, e| (a.0 + e, a.1 + e * e));
         (s / cells.len() as f64, (q / cells.len() as f64).sqrt())
     };
@@ -325,13 +409,20 @@ fn score(e: &Estimate, truth: &Shape) -> Option<Score> {
 fn main() -> Result<(), Box<dyn Error>> {
     let arguments: Vec<String> = std::env::args().skip(1).collect();
     let short = arguments.first().is_some_and(|a| a == "short");
-    let number = |k: usize, default: u64| arguments.get(k).and_then(|a| a.parse().ok()).unwrap_or(default);
+    let number = |k: usize, default: u64| {
+        arguments
+            .get(k)
+            .and_then(|a| a.parse().ok())
+            .unwrap_or(default)
+    };
     let seeds = if short { 2 } else { number(0, 10) };
     let first = number(1, 1);
     let only = arguments.get(2).cloned().unwrap_or_default();
     let verbose = seeds <= 2;
     let mut failures = Vec::new();
-    println!("cell | noise | normal RMS | bias | R error median (min..max) | refused | depth | band in/above/below | R in 2u | further apices | s");
+    println!(
+        "cell | noise | normal RMS | bias | R error median (min..max) | refused | depth | band in/above/below | R in 2u | further apices | s"
+    );
     for cell in cells().iter().filter(|c| c.name.contains(&only)) {
         let (mut rms, mut bias, mut errors, mut depths) = (vec![], vec![], vec![], vec![]);
         let (mut inside, mut above, mut below) = (vec![], vec![], vec![]);
@@ -342,13 +433,24 @@ fn main() -> Result<(), Box<dyn Error>> {
             let scene = (cell.surface)(seed, cell.px);
             let tip = (cell.tip)();
             let mut settings = scan::Settings::new(N, N, Pitch::square(cell.px));
-            settings.distortion = Distortion { noise_nm: cell.noise, ..Distortion::default() };
+            settings.distortion = Distortion {
+                noise_nm: cell.noise,
+                ..Distortion::default()
+            };
             settings.seed = seed;
             settings.support_nm = 64.0 * cell.px.min(1.5);
             let made = scan::scan(|x, y| scene.height(x, y), &tip, &settings, &Progress::new())?;
             if verbose && cell.name == "rough" {
                 let r = summit_radii(&scene, cell.px);
-                println!("  summits {} radii {:.2} {:.2} {:.2} {:.2} {:.2}", r.len(), r[0], r[5], r[r.len() / 10], r[r.len() / 4], r[r.len() / 2]);
+                println!(
+                    "  summits {} radii {:.2} {:.2} {:.2} {:.2} {:.2}",
+                    r.len(),
+                    r[0],
+                    r[5],
+                    r[r.len() / 10],
+                    r[r.len() / 4],
+                    r[r.len() / 2]
+                );
             }
             let start = Instant::now();
             let e = estimate(&made.scan, None, &Settings::default(), &Progress::new())?;
@@ -359,12 +461,19 @@ fn main() -> Result<(), Box<dyn Error>> {
                     errors.push(r.value / truth - 1.0);
                     covered += usize::from((r.value - truth).abs() <= 2.0 * r.u);
                     if verbose || truth.is_nan() {
-                        println!("  {} seed {seed}: R {:.2} u {:.2} depth {:.2} principal {:.2?}", cell.name, r.value, r.u, r.fit_depth_nm, r.principal_nm);
+                        println!(
+                            "  {} seed {seed}: R {:.2} u {:.2} depth {:.2} principal {:.2?}",
+                            cell.name, r.value, r.u, r.fit_depth_nm, r.principal_nm
+                        );
                     }
                 }
                 (None, _) => {
                     refused += 1;
-                    reasons = e.diagnosis.first().map(|d| d.finding.clone()).unwrap_or_default();
+                    reasons = e
+                        .diagnosis
+                        .first()
+                        .map(|d| d.finding.clone())
+                        .unwrap_or_default();
                 }
             }
             apices += e.further_apices.len();
@@ -377,12 +486,28 @@ fn main() -> Result<(), Box<dyn Error>> {
                 depths.push(e.exercised_depth_nm.unwrap_or(0.0));
             }
             if verbose {
-                println!("  smoothing {:.2} thr {:.3} features {} half {} u {:.3} angle {:?}", e.smoothing_px, e.threshold_nm, e.features, e.tip.shape().nrows() / 2, e.height_u_nm, e.read_out.half_angle.as_ref().map(|a| a.value));
+                println!(
+                    "  smoothing {:.2} thr {:.3} features {} half {} u {:.3} angle {:?}",
+                    e.smoothing_px,
+                    e.threshold_nm,
+                    e.features,
+                    e.tip.shape().nrows() / 2,
+                    e.height_u_nm,
+                    e.read_out.half_angle.as_ref().map(|a| a.value)
+                );
                 if std::env::var_os("TIP_PROFILE").is_some() {
                     let (c, truth) = (e.tip.shape().nrows() / 2, (cell.identified)());
                     for k in 0..e.tip.shape().ncols() {
                         let x = (k as f64 - c as f64) * cell.px;
-                        println!("    {x:6.1} {:8.3} true {:8.3} seen {} diagonal {:8.3} true {:8.3} seen {}", e.tip.shape()[[c, k]], -truth(x, 0.0), e.support[[c, k]], e.tip.shape()[[k, k]], -truth(x, x), e.support[[k, k]]);
+                        println!(
+                            "    {x:6.1} {:8.3} true {:8.3} seen {} diagonal {:8.3} true {:8.3} seen {}",
+                            e.tip.shape()[[c, k]],
+                            -truth(x, 0.0),
+                            e.support[[c, k]],
+                            e.tip.shape()[[k, k]],
+                            -truth(x, x),
+                            e.support[[k, k]]
+                        );
                     }
                 }
                 for d in &e.diagnosis {
@@ -393,9 +518,19 @@ fn main() -> Result<(), Box<dyn Error>> {
         let (rms_m, e_m) = (median(&mut rms), median(&mut errors));
         println!(
             "{} | {} | {:.3} | {:+.3} | {:+.1} % ({:+.1}..{:+.1}) | {refused}/{seeds} | {:.1} | {:.3}/{:.3}/{:.3} | {covered}/{} | {apices} | {:.2}",
-            cell.name, cell.noise, rms_m, median(&mut bias), 100.0 * e_m,
-            100.0 * errors.first().copied().unwrap_or(f64::NAN), 100.0 * errors.last().copied().unwrap_or(f64::NAN),
-            median(&mut depths), mean(&inside), mean(&above), mean(&below), errors.len(), seconds / seeds as f64,
+            cell.name,
+            cell.noise,
+            rms_m,
+            median(&mut bias),
+            100.0 * e_m,
+            100.0 * errors.first().copied().unwrap_or(f64::NAN),
+            100.0 * errors.last().copied().unwrap_or(f64::NAN),
+            median(&mut depths),
+            mean(&inside),
+            mean(&above),
+            mean(&below),
+            errors.len(),
+            seconds / seeds as f64,
         );
         if refused > 0 && cell.radius.is_some() {
             println!("  refused: {reasons}");
@@ -403,13 +538,25 @@ fn main() -> Result<(), Box<dyn Error>> {
         if let Some((limit, e_limit)) = cell.limits
             && !(rms_m <= limit && (cell.radius.is_none() || e_m.abs() <= e_limit))
         {
-            failures.push(format!("{} at {} nm: {rms_m:.3} nm, {:.1} %", cell.name, cell.noise, 100.0 * e_m));
+            failures.push(format!(
+                "{} at {} nm: {rms_m:.3} nm, {:.1} %",
+                cell.name,
+                cell.noise,
+                100.0 * e_m
+            ));
         }
-        if cell.radius.is_none() && cell.name != "worn" && cell.name != "double" && refused < seeds {
-            failures.push(format!("{} at {} nm: a radius was given", cell.name, cell.noise));
+        if cell.radius.is_none() && cell.name != "worn" && cell.name != "double" && refused < seeds
+        {
+            failures.push(format!(
+                "{} at {} nm: a radius was given",
+                cell.name, cell.noise
+            ));
         }
         if cell.name == "double" && apices < seeds as usize {
-            failures.push(format!("double at {} nm: {apices} second apices", cell.noise));
+            failures.push(format!(
+                "double at {} nm: {apices} second apices",
+                cell.noise
+            ));
         }
     }
     for failure in &failures {

@@ -71,7 +71,11 @@ pub struct ReadOut {
 /// depth does not show is `None`, with its reason. Depth rule: common practice.
 pub fn read_out(tip: &Tip, depth_nm: f64, noise_nm: f64) -> ReadOut {
     let mut out = ReadOut::default();
-    let noise = if noise_nm.is_finite() { noise_nm.max(0.0) } else { 0.0 };
+    let noise = if noise_nm.is_finite() {
+        noise_nm.max(0.0)
+    } else {
+        0.0
+    };
     let depth = depth_nm.min(tip.depth_nm());
     if !(depth > 0.0) {
         let why = "The tip shows no depth below its apex: it was not exercised.".to_owned();
@@ -257,7 +261,15 @@ impl Quadric {
                 // An error of t enters the equation as (1 - kappa t) dt.
                 let weight = 1.0 / (1.0 - kappa * fitted[i]).max(0.1);
                 weight
-                    * [1.0, x, y, x * x / 2.0, x * y, y * y / 2.0, fitted[i].powi(2) / 2.0][k]
+                    * [
+                        1.0,
+                        x,
+                        y,
+                        x * x / 2.0,
+                        x * y,
+                        y * y / 2.0,
+                        fitted[i].powi(2) / 2.0,
+                    ][k]
             });
             let right = DVector::from_fn(n + 1, |i, _| match i {
                 i if i == n => 0.0,
@@ -287,9 +299,9 @@ impl Quadric {
             }
         }
         let k = Matrix2::new(solution[3], solution[4], solution[4], solution[5]);
-        let place = k.try_inverse().map(|inverse| {
-            -(inverse * nalgebra::Vector2::new(solution[1], solution[2]))
-        })?;
+        let place = k
+            .try_inverse()
+            .map(|inverse| -(inverse * nalgebra::Vector2::new(solution[1], solution[2])))?;
         // Curvature relative to its size, from the mean of both directions.
         let mean = 0.5 * (solution[3] + solution[5]);
         let var = 0.25 * (covariance[(3, 3)] + covariance[(5, 5)] + 2.0 * covariance[(3, 5)]);
@@ -307,7 +319,11 @@ impl Quadric {
     /// Principal curvatures at the apex, 1/nm, larger first.
     pub(crate) fn principal(&self) -> [f64; 2] {
         let e = self.curvature.symmetric_eigenvalues();
-        if e[0] >= e[1] { [e[0], e[1]] } else { [e[1], e[0]] }
+        if e[0] >= e[1] {
+            [e[0], e[1]]
+        } else {
+            [e[1], e[0]]
+        }
     }
 
     /// Geometric mean radius at the apex, nm; `None` where not convex.
@@ -329,7 +345,12 @@ fn cap(shape: ArrayView2<f32>, pitch: Pitch, depth: f64) -> Vec<(f64, f64, f64)>
         let x = (c as f64 - cc as f64) * pitch.x;
         let y = (r as f64 - cr as f64) * pitch.y;
         cells.push((x, y, -f64::from(shape[[r, c]])));
-        for (i, j) in [(r.wrapping_sub(1), c), (r + 1, c), (r, c.wrapping_sub(1)), (r, c + 1)] {
+        for (i, j) in [
+            (r.wrapping_sub(1), c),
+            (r + 1, c),
+            (r, c.wrapping_sub(1)),
+            (r, c + 1),
+        ] {
             if i < rows && j < columns && !seen[i * columns + j] {
                 seen[i * columns + j] = true;
                 if -f64::from(shape[[i, j]]) <= depth {
@@ -338,7 +359,11 @@ fn cap(shape: ArrayView2<f32>, pitch: Pitch, depth: f64) -> Vec<(f64, f64, f64)>
             }
         }
     }
-    cells.sort_by(|a, b| (a.1, a.0).partial_cmp(&(b.1, b.0)).unwrap_or(std::cmp::Ordering::Equal));
+    cells.sort_by(|a, b| {
+        (a.1, a.0)
+            .partial_cmp(&(b.1, b.0))
+            .unwrap_or(std::cmp::Ordering::Equal)
+    });
     cells
 }
 
@@ -368,7 +393,9 @@ fn half_angle(tip: &Tip, between: [f64; 2], noise: f64) -> Option<HalfAngle> {
             }
         }
         let enough = points.len() >= 4
-            && points.last().is_some_and(|l| l.0 - points[0].0 > 0.4 * (lower - upper));
+            && points
+                .last()
+                .is_some_and(|l| l.0 - points[0].0 > 0.4 * (lower - upper));
         if let Some((slope, u)) = enough.then(|| line(&points)) {
             per_azimuth.push((azimuth.to_degrees(), slope.atan().to_degrees()));
             let u_noise = std::f64::consts::SQRT_2 * noise * slope / (lower - upper);
@@ -418,23 +445,37 @@ mod tests {
     /// methods: the figure wanted is the curvature at the apex (closed form of the sphere).
     #[test]
     fn a_sphere_of_radius_8_reads_8() {
-        for (radius, angle, px) in [(8.0, 15.0, 1.0), (10.0, 20.0, 1.0), (20.0, 15.0, 2.0), (8.0, 10.0, 0.5)] {
+        for (radius, angle, px) in [
+            (8.0, 15.0, 1.0),
+            (10.0, 20.0, 1.0),
+            (20.0, 15.0, 2.0),
+            (8.0, 10.0, 0.5),
+        ] {
             let tip = sphere_cone(radius, angle, px);
             let out = read_out(&tip, 40.0 * px, 0.01);
-            let r = out.apex_radius.unwrap_or_else(|| panic!("{:?}", out.reasons));
+            let r = out
+                .apex_radius
+                .unwrap_or_else(|| panic!("{:?}", out.reasons));
             assert!((r.value / radius - 1.0).abs() < 0.005, "{r:?}");
             assert!(r.fit_depth_nm < radius * (1.0 - angle.to_radians().sin()));
-            let a = out.half_angle.unwrap_or_else(|| panic!("{:?}", out.reasons));
+            let a = out
+                .half_angle
+                .unwrap_or_else(|| panic!("{:?}", out.reasons));
             assert!((a.value - angle).abs() < 0.4, "{a:?}");
         }
     }
 
     #[test]
     fn a_paraboloid_reads_its_radius_and_an_apex_between_pixels_does_no_harm() {
-        let tip = Model::Paraboloid { radius: 12.0 }.sample(41.0, Pitch::square(1.0)).unwrap();
+        let tip = Model::Paraboloid { radius: 12.0 }
+            .sample(41.0, Pitch::square(1.0))
+            .unwrap();
         let r = read_out(&tip, 10.0, 0.0).apex_radius.unwrap();
         assert!((r.value - 12.0).abs() < 1e-3, "{r:?}");
-        let shifted = Model::SphereCone { radius: 8.0, half_angle: 15.0 };
+        let shifted = Model::SphereCone {
+            radius: 8.0,
+            half_angle: 15.0,
+        };
         let base = shifted.height(0.4, 0.3);
         let shape = ndarray::Array2::from_shape_fn((41, 41), |(i, j)| {
             let (x, y) = (j as f64 - 20.0 + 0.4, i as f64 - 20.0 + 0.3);
@@ -459,12 +500,18 @@ mod tests {
 
     #[test]
     fn what_is_not_there_is_refused_with_a_reason() {
-        let pyramid = Model::Pyramid { half_angles: [15.0, 25.0, 20.0, 20.0] }
-            .sample(65.0, Pitch::square(1.0))
-            .unwrap();
+        let pyramid = Model::Pyramid {
+            half_angles: [15.0, 25.0, 20.0, 20.0],
+        }
+        .sample(65.0, Pitch::square(1.0))
+        .unwrap();
         let out = read_out(&pyramid, 50.0, 0.05);
         assert!(out.apex_radius.is_none());
-        assert!(out.reasons[0].contains("sharper than the pixels"), "{:?}", out.reasons);
+        assert!(
+            out.reasons[0].contains("sharper than the pixels"),
+            "{:?}",
+            out.reasons
+        );
         // Faces towards -x (15) and +x (25) at azimuths 180 and 0.
         let angles = out.half_angle.unwrap().per_azimuth;
         let at = |a: f64| angles.iter().find(|p| (p.0 - a).abs() < 1e-6).unwrap().1;
@@ -488,7 +535,9 @@ mod tests {
         let mut noise = || {
             let mut sum = 0.0;
             for _ in 0..12 {
-                state = state.wrapping_mul(6364136223846793005).wrapping_add(1442695040888963407);
+                state = state
+                    .wrapping_mul(6364136223846793005)
+                    .wrapping_add(1442695040888963407);
                 sum += (state >> 11) as f64 / (1u64 << 53) as f64;
             }
             sum - 6.0

@@ -52,11 +52,7 @@ pub(super) fn hopeless(scan: &HeightMap) -> Option<Vec<Diagnosis>> {
 
 /// Apices beside the one at the centre: cells higher than all around them by more than `least`
 /// nm of prominence (drop to the saddle towards anything higher), within the supported cells.
-pub(super) fn further_apices(
-    tip: &Tip,
-    support: &Array2<u32>,
-    least: f64,
-) -> Vec<(usize, usize)> {
+pub(super) fn further_apices(tip: &Tip, support: &Array2<u32>, least: f64) -> Vec<(usize, usize)> {
     let shape = tip.shape();
     let (rows, columns) = shape.dim();
     let centre = (rows / 2, columns / 2);
@@ -98,11 +94,10 @@ pub(super) fn further_apices(
                     let summit = top[other];
                     let prominence = f64::from(shape[summit] - shape[(r, c)]);
                     let away = summit.0.abs_diff(centre.0).max(summit.1.abs_diff(centre.1));
-                    let ringed = (summit.0.saturating_sub(1)..(summit.0 + 2).min(rows))
-                        .all(|i| {
-                            (summit.1.saturating_sub(1)..(summit.1 + 2).min(columns))
-                                .all(|j| support[(i, j)] > 0)
-                        });
+                    let ringed = (summit.0.saturating_sub(1)..(summit.0 + 2).min(rows)).all(|i| {
+                        (summit.1.saturating_sub(1)..(summit.1 + 2).min(columns))
+                            .all(|j| support[(i, j)] > 0)
+                    });
                     if prominence > least && away >= 3 && ringed {
                         found.push(summit);
                     }

@@ -16,6 +16,8 @@ use ndarray::Array2;
 const SEEN: f64 = 0.8;
 /// Remaining error of the contacts' places, pixels; tuned on virtual scans, checked on fresh ones.
 const PLACE_PX: f64 = 0.15;
+/// Scatter of the features about one common tip that passes beside the noise, pixels.
+const AGREE_PX: f64 = 0.1;
 /// Height over the noise that makes a feature count for the apex.
 const TALL: f64 = 10.0;
 
@@ -40,12 +42,11 @@ pub(super) fn finish(
         None
     };
     match polished {
-        Some(polished) => {
-            let estimate = from_polished(scan, noise, settings, &bound, &polished)?;
-            if std::env::var_os("TIP_DEBUG").is_some() { for d in &estimate.diagnosis { eprintln!("D {}", d.finding); } }
-            Ok(estimate)
+        // Plateau corners and the like do not show one and the same tip.
+        Some(p) if p.scale <= 3.0 * noise + AGREE_PX * (scan.pitch().x * scan.pitch().y).sqrt() => {
+            from_polished(scan, noise, settings, &bound, &p)
         }
-        None => from_bound(scan, noise, settings, &bound, progress),
+        _ => from_bound(scan, noise, settings, &bound, progress),
     }
 }
 
@@ -63,27 +64,28 @@ fn from_polished(
     let shape = centring.tip(&polished.shape);
     let support = centring.counts(&polished.support);
     let mut tip = Tip::new(clamped(&shape), pitch)?;
-    let others: Vec<Array2<f64>> = polished
-        .leave_out
-        .iter()
-        .map(|t| centring.tip(t))
-        .collect();
+    let others: Vec<Array2<f64>> = polished.leave_out.iter().map(|t| centring.tip(t)).collect();
     let exercised = exercised_depth(&tip, &support, polished);
     let scatter = jackknife(&shape, &others);
-    let mut height_u = typical_u(&tip, &scatter, exercised);
+    let cell_u = typical_u(&tip, &scatter, exercised);
+    let mut height_u = cell_u;
     // What leaving out features does to the radius says more than the cells' scatter.
     let first = exercised.map(|z| read_out(&tip, z, height_u));
-    let radius_u = first
-        .as_ref()
-        .and_then(|r| r.apex_radius)
-        .and_then(|r| {
-            let u = radius_scatter(&others, pitch, r.fit_depth_nm, height_u)?;
-            Some((r, u))
-        });
+    let radius_u = first.as_ref().and_then(|r| r.apex_radius).and_then(|r| {
+        let u = radius_scatter(&others, pitch, r.fit_depth_nm, height_u)?;
+        Some((r, u))
+    });
     if let Some((r, u)) = radius_u {
         height_u = height_u.max(r.fit_depth_nm * u / r.value);
     }
-    let band = band(&tip, &support, &scatter, &bound.found.shape, noise * 0.3, px)?;
+    let band = band(
+        &tip,
+        &support,
+        &scatter,
+        &bound.found.shape,
+        noise * 0.3,
+        px,
+    )?;
     let features = polished.features.len();
     let further = further_apices(&tip, &support, (5.0 * height_u).max(0.25 * px));
     if let Some(r) = settings.feature_radius_nm.filter(|r| *r > 0.0) {
@@ -99,10 +101,27 @@ fn from_polished(
     // Features that stand out from the noise and show the fitted cap.
     let seeing = read.apex_radius.map_or(features, |r| {
         let needed = (0.5 * r.fit_depth_nm).max(TALL * noise);
-        polished.features.iter().filter(|f| f.reach >= needed).count()
+        polished
+            .features
+            .iter()
+            .filter(|f| f.reach >= needed)
+            .count()
     });
-    let mut diagnosis = common_findings(scan, bound, &tip, exercised, noise);
+    let mut diagnosis = common_findings(scan, bound, &tip, exercised, noise, &read);
     apex_findings(&mut diagnosis, &read, seeing, px);
+    if let Some(r) = read.apex_radius
+        && let Some(fit) = Quadric::fit(tip.shape(), pitch, r.fit_depth_nm, cell_u)
+        && fit.misfit > 2.5 * cell_u + 0.02 * r.fit_depth_nm
+    {
+        diagnosis.push(refusal(
+            format!(
+                "The apex is not round: it departs from a rounded cap by {:.3} nm over the upper \
+                 {:.3} nm (worn, chipped or flat).",
+                fit.misfit, r.fit_depth_nm
+            ),
+            "Use the tip's shape as it is; a radius does not describe it.",
+        ));
+    }
     if !further.is_empty() {
         diagnosis.push(double_tip(&tip, &further));
     }
@@ -174,7 +193,7 @@ fn from_bound(
             ..ReadOut::default()
         },
     };
-    let mut diagnosis = common_findings(scan, bound, &tip, exercised, noise);
+    let mut diagnosis = common_findings(scan, bound, &tip, exercised, noise, &read);
     if textbook {
         apex_findings(&mut diagnosis, &read, LEAST_FEATURES, px);
     } else {
@@ -196,7 +215,7 @@ fn from_bound(
         apex_identified: identified,
         read_out: read,
         features: 0,
-        further_apices: further_apices(&tip, &Array2::ones(tip.shape().dim()), 5.0 * height_u),
+        further_apices: Vec::new(),
         tip,
         diagnosis,
     })
@@ -220,10 +239,17 @@ impl Centring {
     fn find(polished: &Polished, pitch: Pitch) -> Self {
         let shape = &polished.shape;
         let px = (pitch.x * pitch.y).sqrt();
-        let rough = Tip::new(clamped(shape), pitch).ok().as_ref().and_then(rough_radius);
+        let rough = Tip::new(clamped(shape), pitch)
+            .ok()
+            .as_ref()
+            .and_then(rough_radius);
         let radius = rough.filter(|r| r.is_finite()).unwrap_or(px).max(px);
         let depth = (0.3 * radius).max(4.5 * px * px / radius);
-        let none = Self { rows: 0.0, columns: 0.0, apex: 0.0 };
+        let none = Self {
+            rows: 0.0,
+            columns: 0.0,
+            apex: 0.0,
+        };
         let heights = shape.mapv(|p| p as f32);
         let Some(fit) = Quadric::fit(heights.view(), pitch, depth, 0.1 * depth) else {
             return none;
@@ -234,12 +260,20 @@ impl Centring {
             return none;
         }
         // The fit's height averages the noise; on an apex that is not round it misses the tip.
-        let mut found = Self { rows, columns, apex: 0.0 };
+        let mut found = Self {
+            rows,
+            columns,
+            apex: 0.0,
+        };
         let centre = (shape.nrows() / 2, shape.ncols() / 2);
         let here = found.look(shape, centre);
         let error = polished.scale / f64::from(polished.support[centre].max(1.0)).sqrt();
         let apart = (here + fit.apex_depth).abs();
-        found.apex = if apart <= 3.0 * error + 0.01 * px { -fit.apex_depth } else { here };
+        found.apex = if apart <= 3.0 * error + 0.01 * px {
+            -fit.apex_depth
+        } else {
+            here
+        };
         found
     }
 
@@ -251,7 +285,9 @@ impl Centring {
     /// Counts at the shifted places.
     fn counts(&self, grid: &Array2<f32>) -> Array2<u32> {
         let grid = grid.mapv(f64::from);
-        Array2::from_shape_fn(grid.dim(), |at| self.look(&grid, at).round().max(0.0) as u32)
+        Array2::from_shape_fn(grid.dim(), |at| {
+            self.look(&grid, at).round().max(0.0) as u32
+        })
     }
 
     /// Bilinear; beyond the grid its nearest cell.
@@ -313,12 +349,7 @@ fn jackknife(shape: &Array2<f64>, others: &[Array2<f64>]) -> Array2<f64> {
 }
 
 /// Jackknife standard error of the radius, nm.
-fn radius_scatter(
-    others: &[Array2<f64>],
-    pitch: Pitch,
-    depth: f64,
-    noise: f64,
-) -> Option<f64> {
+fn radius_scatter(others: &[Array2<f64>], pitch: Pitch, depth: f64, noise: f64) -> Option<f64> {
     let radii: Vec<f64> = others
         .iter()
         .filter_map(|o| Quadric::fit(clamped(o).view(), pitch, depth, noise)?.radius())
@@ -406,6 +437,7 @@ fn common_findings(
     tip: &Tip,
     exercised: Option<f64>,
     noise: f64,
+    read: &ReadOut,
 ) -> Vec<Diagnosis> {
     let mut out = Vec::new();
     let px = (scan.pitch().x * scan.pitch().y).sqrt();
@@ -431,9 +463,10 @@ fn common_findings(
             "Give a wider tip support.",
         ));
     }
-    let radius = rough_radius(tip).filter(|r| r.is_finite());
-    if bound.smoothing > 2.5 || radius.is_some_and(|r| bound.smoothing * px >= r / 3.0 && noise > 0.0)
-    {
+    let coarse = read
+        .apex_radius
+        .is_some_and(|r| bound.smoothing * px >= r.value / 3.0 && noise > 0.0);
+    if bound.smoothing > 2.5 || coarse {
         out.push(caution(
             format!(
                 "The noise ({noise:.3} nm) is high for this tip and pixel: it took a smoothing of \
@@ -491,7 +524,10 @@ fn apex_findings(out: &mut Vec<Diagnosis>, read: &ReadOut, features: usize, px: 
 
 fn double_tip(tip: &Tip, further: &[(usize, usize)]) -> Diagnosis {
     let shape = tip.shape();
-    let (cr, cc) = (shape.nrows() as f64 / 2.0 - 0.5, shape.ncols() as f64 / 2.0 - 0.5);
+    let (cr, cc) = (
+        shape.nrows() as f64 / 2.0 - 0.5,
+        shape.ncols() as f64 / 2.0 - 0.5,
+    );
     let list: Vec<String> = further
         .iter()
         .map(|&(r, c)| {
@@ -504,7 +540,10 @@ fn double_tip(tip: &Tip, further: &[(usize, usize)]) -> Diagnosis {
         })
         .collect();
     caution(
-        format!("Possible double tip: a further apex at {}.", list.join("; ")),
+        format!(
+            "Possible double tip: a further apex at {}.",
+            list.join("; ")
+        ),
         "Replace the probe, or correct with this tip: it holds all apices.",
     )
 }

@@ -78,7 +78,11 @@ pub(super) fn bluntest(input: &Input, progress: &Progress) -> Result<Bluntest> {
             None
         } else {
             let eroded = morphology::erode(input.upper, tip.view(), &progress.part(done, done))?;
-            Some(morphology::contacts(eroded.view(), tip.view(), &progress.part(done, done))?)
+            Some(morphology::contacts(
+                eroded.view(),
+                tip.view(),
+                &progress.part(done, done),
+            )?)
         };
         let rim = rim_depth(&tip);
         let mut work: Vec<(f32, usize, usize)> = Vec::new();
@@ -122,9 +126,7 @@ pub(super) fn bluntest(input: &Input, progress: &Progress) -> Result<Bluntest> {
             };
             let limits: Vec<(Option<Array2<f32>>, usize)> = batch
                 .par_iter()
-                .map(|&(r, c)| {
-                    constrain(input, &padded, &tip, (r, c), start(r, c), eps)
-                })
+                .map(|&(r, c)| constrain(input, &padded, &tip, (r, c), start(r, c), eps))
                 .collect();
             for (limit, work) in limits {
                 spent += work;
@@ -229,7 +231,9 @@ impl Padded {
     fn row(&self, row: usize, column: usize, n: usize) -> &[f32] {
         let width = self.heights.ncols();
         let start = row * width + column;
-        self.heights.as_slice().map_or(&[], |s| &s[start..start + n])
+        self.heights
+            .as_slice()
+            .map_or(&[], |s| &s[start..start + n])
     }
 
     fn at(&self, row: usize, column: usize) -> f32 {
@@ -315,10 +319,18 @@ fn sliding_maximum(
             *l = if z.is_nan() { f32::NEG_INFINITY } else { z };
         }
         for i in 0..total {
-            ahead[i] = if i % width == 0 { line[i] } else { line[i].max(ahead[i - 1]) };
+            ahead[i] = if i % width == 0 {
+                line[i]
+            } else {
+                line[i].max(ahead[i - 1])
+            };
             let k = total - 1 - i;
             let at_end = k % width == width - 1;
-            behind[k] = if at_end { line[k] } else { line[k].max(behind[k + 1]) };
+            behind[k] = if at_end {
+                line[k]
+            } else {
+                line[k].max(behind[k + 1])
+            };
         }
         for (x, t) in to.iter_mut().enumerate() {
             let from = ((x + pad) as isize + first) as usize;
@@ -384,7 +396,9 @@ mod tests {
         let tip = skew(4);
         let mut state = 7u64;
         let rough = Array2::from_shape_fn((40, 44), |_| {
-            state = state.wrapping_mul(6364136223846793005).wrapping_add(1442695040888963407);
+            state = state
+                .wrapping_mul(6364136223846793005)
+                .wrapping_add(1442695040888963407);
             ((state >> 40) as f32 / (1u64 << 24) as f32).powi(8) * 12.0
         });
         let scan = dilate(rough.view(), tip.view(), &Progress::new()).unwrap();

@@ -85,7 +85,10 @@ pub(super) fn polish<'a>(
     let mut result: Option<Polished> = None;
     for round in 0..ROUNDS {
         progress.check()?;
-        let part = progress.part(round as f32 / ROUNDS as f32, (round + 1) as f32 / ROUNDS as f32);
+        let part = progress.part(
+            round as f32 / ROUNDS as f32,
+            (round + 1) as f32 / ROUNDS as f32,
+        );
         let eroded = morphology::erode(smooth.view(), tip.view(), &part.part(0.0, 0.3))?;
         let contacts = morphology::contacts(eroded.view(), tip.view(), &part.part(0.3, 0.6))?;
         let mut features = features(input, &contacts.offsets, &tip);
@@ -162,10 +165,9 @@ fn features(input: &Input, offsets: &Array2<[i16; 2]>, tip: &Array2<f32>) -> Vec
         }
     }
     let around = |(r, c): (usize, usize), reach: usize| {
-        (r.saturating_sub(reach)..(r + reach + 1).min(rows))
-            .flat_map(move |i| {
-                (c.saturating_sub(reach)..(c + reach + 1).min(columns)).map(move |j| (i, j))
-            })
+        (r.saturating_sub(reach)..(r + reach + 1).min(rows)).flat_map(move |i| {
+            (c.saturating_sub(reach)..(c + reach + 1).min(columns)).map(move |j| (i, j))
+        })
     };
     let mut seeds: Vec<(u32, usize, usize)> = count
         .indexed_iter()
@@ -180,7 +182,9 @@ fn features(input: &Input, offsets: &Array2<[i16; 2]>, tip: &Array2<f32>) -> Vec
         if owner[(r, c)] != u32::MAX {
             continue;
         }
-        let near: Vec<_> = around((r, c), 1).filter(|&u| owner[u] == u32::MAX).collect();
+        let near: Vec<_> = around((r, c), 1)
+            .filter(|&u| owner[u] == u32::MAX)
+            .collect();
         let own: u32 = near.iter().map(|&u| count[u]).sum();
         let wide: u32 = around((r, c), 3).map(|u| count[u]).sum();
         // A feature as sharp as the tip shows gathers its contacts on one spot.
@@ -213,7 +217,9 @@ fn features(input: &Input, offsets: &Array2<[i16; 2]>, tip: &Array2<f32>) -> Vec
             // Pixels whose neighbours touch elsewhere may do so too.
             let alone = |(i, j)| owner_of(i, j) == id;
             if id != u32::MAX
-                && [(r - 1, c), (r + 1, c), (r, c - 1), (r, c + 1)].into_iter().all(alone)
+                && [(r - 1, c), (r + 1, c), (r, c - 1), (r, c + 1)]
+                    .into_iter()
+                    .all(alone)
             {
                 features[id as usize].pixels.push((r as u32, c as u32));
             }
@@ -230,7 +236,10 @@ fn features(input: &Input, offsets: &Array2<[i16; 2]>, tip: &Array2<f32>) -> Vec
 fn reach(feature: &Feature, half: [usize; 2], depth: impl Fn(usize, usize) -> f64) -> f64 {
     let mut deepest = [0.0f64; SECTORS];
     for &(r, c) in &feature.pixels {
-        let (dy, dx) = (feature.place[0] - f64::from(r), feature.place[1] - f64::from(c));
+        let (dy, dx) = (
+            feature.place[0] - f64::from(r),
+            feature.place[1] - f64::from(c),
+        );
         if dy.hypot(dx) < 0.75 {
             continue;
         }
@@ -470,7 +479,11 @@ impl<'a> Fit<'a> {
     }
 
     /// Per cell the mean residual of the samples around it, summed in feature order.
-    fn means(&self, features: &[Feature], keep: impl Fn(usize) -> bool) -> (Array2<f64>, Array2<f32>) {
+    fn means(
+        &self,
+        features: &[Feature],
+        keep: impl Fn(usize) -> bool,
+    ) -> (Array2<f64>, Array2<f32>) {
         let mut sum = Array2::<f64>::zeros(self.tip.dim());
         let mut weight = Array2::<f32>::zeros(self.tip.dim());
         for (_, f) in features.iter().enumerate().filter(|(k, _)| keep(*k)) {
@@ -533,7 +546,10 @@ impl<'a> Fit<'a> {
                     return limit;
                 }
                 let low = limits.len() / 5;
-                limits.select_nth_unstable_by(low, f64::total_cmp).1.min(limit)
+                limits
+                    .select_nth_unstable_by(low, f64::total_cmp)
+                    .1
+                    .min(limit)
             })
             .collect();
         if let Ok(next) = Array2::from_shape_vec((rows, columns), next) {
@@ -583,15 +599,15 @@ impl<'a> Fit<'a> {
             if steep > self.input.noise && along < 0.6 * steep * steep {
                 return u32::MAX;
             }
-            let far = features.get(id as usize).is_none_or(|f| {
-                (f.place[0] - r as f64).hypot(f.place[1] - c as f64) > 1.5
-            });
+            let far = features
+                .get(id as usize)
+                .is_none_or(|f| (f.place[0] - r as f64).hypot(f.place[1] - c as f64) > 1.5);
             if far && level[(r, c)] {
                 return u32::MAX;
             }
             let off = f64::from(light[(r, c)]) - predicted;
-            let explained = off <= tolerance + SLACK_PX * steep
-                && off >= -tolerance - BLUNT_SLACK_PX * steep;
+            let explained =
+                off <= tolerance + SLACK_PX * steep && off >= -tolerance - BLUNT_SLACK_PX * steep;
             if explained { id } else { u32::MAX }
         };
         let owner = Array2::from_shape_fn((rows, columns), |(r, c)| fits(r, c));
@@ -618,7 +634,12 @@ impl<'a> Fit<'a> {
 
     /// Half-width of the local quadratic that the noise of the cells asks for.
     fn calm_reach(&self) -> usize {
-        let mut seen: Vec<f32> = self.weight.iter().copied().filter(|w| *w >= LEAST_SUPPORT).collect();
+        let mut seen: Vec<f32> = self
+            .weight
+            .iter()
+            .copied()
+            .filter(|w| *w >= LEAST_SUPPORT)
+            .collect();
         seen.sort_by(f32::total_cmp);
         let typical = seen.get(seen.len() / 2).map_or(1.0, |w| f64::from(*w));
         let error = self.input.noise / typical.sqrt() / self.input.px;
@@ -632,9 +653,13 @@ impl<'a> Fit<'a> {
     fn calmed(&self, tip: &Array2<f64>) -> Array2<f64> {
         match self.calm_reach() {
             0 => tip.clone(),
-            reach => {
-                local_quadratic(tip, &self.weight, reach, 1.0 / self.input.px, self.input.noise)
-            }
+            reach => local_quadratic(
+                tip,
+                &self.weight,
+                reach,
+                1.0 / self.input.px,
+                self.input.noise,
+            ),
         }
     }
 
@@ -662,7 +687,12 @@ impl<'a> Fit<'a> {
     }
 
     /// The tip without each of up to ten groups of features.
-    fn leave_out(&self, features: &[Feature], shape: &Array2<f64>, support: &Array2<f32>) -> Vec<Array2<f64>> {
+    fn leave_out(
+        &self,
+        features: &[Feature],
+        shape: &Array2<f64>,
+        support: &Array2<f32>,
+    ) -> Vec<Array2<f64>> {
         let groups = features.len().min(10);
         if groups < 3 {
             return Vec::new();

@@ -21,7 +21,13 @@ pub(super) fn gauss(map: ArrayView2<f32>, sigma: f64) -> Array2<f32> {
     Zip::from(&mut sum)
         .and(&weight)
         .and(map)
-        .for_each(|s, &w, &z| *s = if z.is_nan() { f32::NAN } else { *s / w + offset });
+        .for_each(|s, &w, &z| {
+            *s = if z.is_nan() {
+                f32::NAN
+            } else {
+                *s / w + offset
+            }
+        });
     sum
 }
 
@@ -88,27 +94,6 @@ pub(super) fn envelope(map: ArrayView2<f32>) -> Array2<f32> {
     })
 }
 
-/// White-noise standard deviation from fourth differences along rows,
-/// `1.4826 MAD / sqrt(70)`; 0 where too few pixels are valid.
-pub(super) fn noise(map: ArrayView2<f32>) -> f64 {
-    let mut differences: Vec<f32> = map
-        .axis_iter(Axis(0))
-        .flat_map(|row| {
-            (4..row.len())
-                .map(|i| row[i] - 4.0 * row[i - 1] + 6.0 * row[i - 2] - 4.0 * row[i - 3] + row[i - 4])
-                .filter(|d| !d.is_nan())
-                .map(f32::abs)
-                .collect::<Vec<_>>()
-        })
-        .collect();
-    if differences.len() < 16 {
-        return 0.0;
-    }
-    let middle = differences.len() / 2;
-    let (_, &mut median, _) = differences.select_nth_unstable_by(middle, f32::total_cmp);
-    1.4826 * f64::from(median) / 70f64.sqrt()
-}
-
 #[cfg(test)]
 mod tests {
     use super::*;
@@ -119,8 +104,16 @@ mod tests {
         map[(4, 5)] = f32::NAN;
         let smooth = gauss(map.view(), 1.3);
         assert!(smooth[(4, 5)].is_nan());
-        assert!(smooth.iter().filter(|z| !z.is_nan()).all(|z| (z - 5.0).abs() < 1e-5));
-        assert_eq!(gauss(Array2::from_elem((1, 1), 2.0).view(), 2.0)[(0, 0)], 2.0);
+        assert!(
+            smooth
+                .iter()
+                .filter(|z| !z.is_nan())
+                .all(|z| (z - 5.0).abs() < 1e-5)
+        );
+        assert_eq!(
+            gauss(Array2::from_elem((1, 1), 2.0).view(), 2.0)[(0, 0)],
+            2.0
+        );
     }
 
     #[test]

@@ -51,8 +51,8 @@ fn summit_half_width(map: &Array2<f32>, noise: f64) -> Option<f64> {
     for r in 2..rows.saturating_sub(2) {
         for c in 2..columns.saturating_sub(2) {
             let z = map[(r, c)];
-            let summit = z > tall
-                && (r - 2..r + 3).all(|i| (c - 2..c + 3).all(|j| !(map[(i, j)] > z)));
+            let summit =
+                z > tall && (r - 2..r + 3).all(|i| (c - 2..c + 3).all(|j| !(map[(i, j)] > z)));
             if summit {
                 let foot = base + 0.1 * (z - base);
                 let mut sides: Vec<f64> = DIRECTIONS
