@@ -20,6 +20,8 @@ const CAP_PART: f64 = 0.6;
 const LEAST_HALF_WIDTH_PX: f64 = 3.0;
 /// Fit depth over the heights' uncertainty, at least.
 const DEPTH_OVER_NOISE: f64 = 4.0;
+/// Departure from a rounded cap over its depth up to which it passes as round.
+const ROUND: f64 = 0.02;
 /// Neighbouring heights err together: about this many cells count as one along each axis.
 const NOISE_REACH: f64 = 3.0;
 
@@ -190,6 +192,13 @@ fn apex_radius(tip: &Tip, depth: f64, sin: f64, noise: f64) -> Result<ApexRadius
             fit.depth
         ));
     }
+    if fit.misfit > 3.0 * noise + ROUND * fit.depth {
+        return Err(format!(
+            "No radius: the apex is not round; it departs from a rounded cap by {:.3} nm over the \
+             upper {:.3} nm (worn, chipped or flat).",
+            fit.misfit, fit.depth
+        ));
+    }
     let [k1, k2] = fit.principal();
     // Heights that err together by `noise` over the cap tilt its curvature by noise / depth.
     let u = (fit.u_relative * radius).hypot(radius * noise / fit.depth);
@@ -209,6 +218,8 @@ pub(crate) struct Quadric {
     pub apex: [f64; 2],
     /// Depth of the fitted apex, nm (negative: above the centre cell).
     pub apex_depth: f64,
+    /// Root mean square of what the quadric leaves, nm.
+    pub misfit: f64,
     curvature: Matrix2<f64>,
     u_relative: f64,
 }
@@ -299,6 +310,7 @@ impl Quadric {
             depth,
             apex: [place[0] * scale, place[1] * scale],
             apex_depth: apex_q * unit,
+            misfit: residual.sqrt() * unit,
             curvature: k * (unit / (scale * scale)),
             u_relative: (var * residual).sqrt() / mean.abs().max(f64::MIN_POSITIVE),
         })

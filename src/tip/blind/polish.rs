@@ -42,6 +42,8 @@ pub(super) struct Polished {
     pub support: Array2<f32>,
     /// The features used.
     pub features: Vec<Feature>,
+    /// Standard deviation of the residuals, nm.
+    pub scale: f64,
     /// The tip with each group of features left out, for the jackknife; empty with few features.
     pub leave_out: Vec<Array2<f64>>,
 }
@@ -128,6 +130,7 @@ pub(super) fn polish<'a>(
             support,
             features,
             leave_out,
+            scale: fit.scale,
         });
     }
     Ok(result)
@@ -317,6 +320,7 @@ fn local_quadratic(
     weight: &Array2<f32>,
     reach: usize,
     per_px: f64,
+    noise: f64,
 ) -> Array2<f64> {
     let (rows, columns) = tip.dim();
     let values: Vec<f64> = (0..rows * columns)
@@ -351,6 +355,10 @@ fn local_quadratic(
             };
             // On the flank height errors are small along the normal, and curvature changes fast.
             let steep = fit[1].hypot(fit[2]) * per_px;
+            // A change beyond the noise is shape.
+            if fit[0].abs() > 3.0 * noise / f64::from(weight[(r, c)]).sqrt() {
+                return tip[(r, c)];
+            }
             tip[(r, c)] + fit[0] * (2.0 - 2.5 * steep).clamp(0.0, 1.0)
         })
         .collect();
@@ -538,7 +546,10 @@ impl<'a> Fit<'a> {
                     return limit;
                 }
                 let low = limits.len() / 5;
-                limits.select_nth_unstable_by(low, f64::total_cmp).1.min(limit)
+                limits
+                    .select_nth_unstable_by(low, f64::total_cmp)
+                    .1
+                    .min(limit)
             })
             .collect();
         if let Ok(next) = Array2::from_shape_vec((rows, columns), next) {
@@ -588,15 +599,15 @@ impl<'a> Fit<'a> {
             if steep > self.input.noise && along < 0.6 * steep * steep {
                 return u32::MAX;
             }
-            let far = features.get(id as usize).is_none_or(|f| {
-                (f.place[0] - r as f64).hypot(f.place[1] - c as f64) > 1.5
-            });
+            let far = features
+                .get(id as usize)
+                .is_none_or(|f| (f.place[0] - r as f64).hypot(f.place[1] - c as f64) > 1.5);
             if far && level[(r, c)] {
                 return u32::MAX;
             }
             let off = f64::from(light[(r, c)]) - predicted;
-            let explained = off <= tolerance + SLACK_PX * steep
-                && off >= -tolerance - BLUNT_SLACK_PX * steep;
+            let explained =
+                off <= tolerance + SLACK_PX * steep && off >= -tolerance - BLUNT_SLACK_PX * steep;
             if explained { id } else { u32::MAX }
         };
         let owner = Array2::from_shape_fn((rows, columns), |(r, c)| fits(r, c));
@@ -623,7 +634,12 @@ impl<'a> Fit<'a> {
 
     /// Half-width of the local quadratic that the noise of the cells asks for.
     fn calm_reach(&self) -> usize {
-        let mut seen: Vec<f32> = self.weight.iter().copied().filter(|w| *w >= LEAST_SUPPORT).collect();
+        let mut seen: Vec<f32> = self
+            .weight
+            .iter()
+            .copied()
+            .filter(|w| *w >= LEAST_SUPPORT)
+            .collect();
         seen.sort_by(f32::total_cmp);
         let typical = seen.get(seen.len() / 2).map_or(1.0, |w| f64::from(*w));
         let error = self.input.noise / typical.sqrt() / self.input.px;
@@ -637,7 +653,13 @@ impl<'a> Fit<'a> {
     fn calmed(&self, tip: &Array2<f64>) -> Array2<f64> {
         match self.calm_reach() {
             0 => tip.clone(),
-            reach => local_quadratic(tip, &self.weight, reach, 1.0 / self.input.px),
+            reach => local_quadratic(
+                tip,
+                &self.weight,
+                reach,
+                1.0 / self.input.px,
+                self.input.noise,
+            ),
         }
     }
 
