@@ -1,7 +1,7 @@
 //! How well the dimensions hold: virtual scans whose truth is finer than the pixel, levelled,
 //! corrected with the known tip, measured, and compared with the truth.
 //!
-//! `cargo run --release --no-default-features --example dimension_validation -- [--short] [--seed N] [--count N]`
+//! `cargo run --release --no-default-features --example dimension_validation -- [--short] [--seed N] [--count N] [--only ROW] [--verbose]`
 //!
 //! Prints a table: error as scanned, error corrected (mean and root mean square), share of results
 //! called touched, share of intervals low..high that hold the truth, median width of the interval.
@@ -331,6 +331,9 @@ fn cases() -> Vec<Case> {
     add("trench width", stout, 88.0, 0.3, Scene::Trench, 0.5);
     add("step height, ridge", slim, 85.0, 0.2, Scene::Ridge, 0.5);
     add("step height, edge", stout, 80.0, 0.2, Scene::Step, 0.5);
+    add("particle height", stout, 90.0, 0.2, Scene::ParticleHeight, 0.5);
+    add("particle diameter", stout, 90.0, 0.2, Scene::ParticleDiameter, 0.5);
+    add("particle diameter", slim, 90.0, 0.2, Scene::ParticleDiameter, 0.5);
     add("pitch", slim, 80.0, 0.2, Scene::Pitch, 0.5);
     cases
 }
@@ -345,9 +348,8 @@ fn main() -> ExitCode {
     let count = number("--count").unwrap_or(if short { 4 } else { 40 });
     let first = number("--seed").unwrap_or(1);
     let only = number("--only");
-    println!(
-        "| measurand | tip R, half-angle | wall | noise | n | scanned | corrected | rms | touched | coverage | interval |"
-    );
+    let verbose = arguments.iter().any(|a| a == "--verbose");
+    println!("| measurand | tip R, half-angle | wall | noise | n | scanned | corrected | rms | touched | coverage | interval |");
     println!("|---|---|---|---|---|---|---|---|---|---|---|");
     let mut failed = false;
     for (index, case) in cases().iter().enumerate() {
@@ -357,7 +359,12 @@ fn main() -> ExitCode {
         let mut tally = Tally::default();
         for i in 0..count {
             match one(case, 1000 * first + 7919 * index as u64 + i) {
-                Ok((lines, truth)) => tally.add(lines.first(), truth),
+                Ok((lines, truth)) => {
+                    if verbose {
+                        eprintln!("truth {truth:.3}: {lines:#?}");
+                    }
+                    tally.add(lines.first(), truth);
+                }
                 Err(error) => {
                     eprintln!("{}: {error}", case.name);
                     failed = true;

@@ -2,10 +2,14 @@
 
 mod erosion;
 mod line_width;
+mod particle;
 mod pitch;
 mod sections;
+mod segmentation;
 mod statistics;
 mod step_height;
+#[cfg(test)]
+mod tests;
 mod texture;
 mod wall;
 
@@ -191,7 +195,7 @@ pub fn measure(input: &Input, request: &Request, progress: &Progress) -> Result<
         Kind::LineWidth => line_width::measure(input, request, progress),
         Kind::Pitch => pitch::measure(input, request, progress),
         Kind::Texture => texture::measure(input, request, progress),
-        Kind::Particle => todo!(),
+        Kind::Particle => particle::measure(input, request, progress),
     }
 }
 

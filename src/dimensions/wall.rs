@@ -186,6 +186,13 @@ impl Wall {
         if mean.is_finite() { mean } else { 0.0 }
     }
 
+    /// How much too far out noise may let the shoulder at `fraction` seem: the plateau sinks by
+    /// about two deviations, the shoulder hardly.
+    fn shoulder_doubt(&self, fraction: f64) -> f64 {
+        let slope = self.slope(fraction);
+        if slope.is_finite() { 2.0 * self.noise * slope } else { 0.0 }
+    }
+
     /// Whether the tip with `outline` touched the wall at `fraction`. `tip_u` is the standard
     /// uncertainty of the tip's heights, nm.
     fn touched(&self, outline: &Outline, fraction: f64, tip_u: f64) -> bool {
@@ -198,7 +205,7 @@ impl Wall {
         let (foot, head) = (fraction * self.height - 0.5 * span, fraction * self.height + 0.5 * span);
         let part = 0.2 * span;
         let bend = (outline.slope(foot, foot.max(0.0) + part) - outline.slope(head - part, head)).max(0.0);
-        let doubt = doubt + 2.0 * self.noise * bend / span;
+        let doubt = doubt + 4.0 * self.noise * bend / span;
         self.slope(fraction) > tip + SLOPE_MARGIN + doubt
     }
 
@@ -226,7 +233,7 @@ impl Wall {
                 let inner = if end.is_finite() { end } else { shoulder };
                 return Hold {
                     touched: false,
-                    slack: (here - inner).max(0.0),
+                    slack: (here - inner + self.shoulder_doubt(top)).max(0.0),
                     slope,
                 };
             }
@@ -237,7 +244,7 @@ impl Wall {
         let flank = if flank.is_finite() { flank } else { slope };
         Hold {
             touched: false,
-            slack: (here - shoulder + rest * flank).max(0.0),
+            slack: (here - shoulder + rest * flank + self.shoulder_doubt(top)).max(0.0),
             slope,
         }
     }
