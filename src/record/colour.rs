@@ -34,7 +34,7 @@ pub fn ramp(t: f32) -> [u8; 3] {
 pub fn class(value: u8) -> [u8; 3] {
     match value {
         certainty::TOUCHED => [223, 238, 232],
-        certainty::BOUNDED => [226, 170, 80],
+        certainty::BOUNDED => [228, 188, 122],
         certainty::NEVER => [92, 44, 92],
         _ => [255, 255, 255],
     }
@@ -43,7 +43,7 @@ pub fn class(value: u8) -> [u8; 3] {
 /// Colour (sRGB) of the pattern drawn over [`class`], which tells the classes apart without colour.
 pub fn class_ink(value: u8) -> [u8; 3] {
     match value {
-        certainty::BOUNDED => [138, 84, 8],
+        certainty::BOUNDED => [168, 112, 36],
         certainty::NEVER => [224, 186, 216],
         _ => [120, 120, 120],
     }
@@ -164,12 +164,12 @@ mod tests {
                 assert!((-1e-3..=1.0 + 1e-3).contains(&c), "{i}: {c}");
             }
         }
-        let labs: Vec<_> = (0..=32).map(|i| lab8(ramp(i as f32 / 32.0))).collect();
+        let labs: Vec<_> = (0..=16).map(|i| lab8(ramp(i as f32 / 16.0))).collect();
         let steps: Vec<f64> = labs.windows(2).map(|p| distance(p[0], p[1])).collect();
         let mean = steps.iter().sum::<f64>() / steps.len() as f64;
         for (pair, step) in labs.windows(2).zip(&steps) {
             assert!(pair[1][0] > pair[0][0] + 0.01, "lightness must rise");
-            assert!((step / mean - 1.0).abs() < 0.08, "{step} against {mean}");
+            assert!((step / mean - 1.0).abs() < 0.06, "{step} against {mean}");
         }
     }
 

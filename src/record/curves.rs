@@ -103,7 +103,13 @@ mod tests {
             from: 0.0,
             to: 10.0,
         };
-        let curve = [(0.0, 1.0), (1.0, 2.0), (2.0, f64::NAN), (3.0, 4.0), (4.0, 5.0)];
+        let curve = [
+            (0.0, 1.0),
+            (1.0, 2.0),
+            (2.0, f64::NAN),
+            (3.0, 4.0),
+            (4.0, 5.0),
+        ];
         assert_eq!(path(&curve, axis, axis), "M0 1L1 2M3 4L4 5");
         assert_eq!(between(&curve, &curve, axis, axis).matches('Z').count(), 2);
         assert_eq!(path(&[], axis, axis), "");

@@ -61,11 +61,26 @@ pub fn fixed_outward(x: f64, decimals: i32, up: bool) -> String {
     fixed(whole / step, decimals)
 }
 
-/// `x` with four significant digits and its unit, for numbers without a stated uncertainty.
+/// `x` with up to six significant digits and its unit, for numbers that were given, not measured.
 pub fn plain(x: f64, unit: &str) -> String {
+    with_digits(x, unit, 6)
+}
+
+/// `x` with up to three significant digits and its unit, for what was measured without an
+/// uncertainty of its own.
+pub fn about(x: f64, unit: &str) -> String {
+    with_digits(x, unit, 3)
+}
+
+fn with_digits(x: f64, unit: &str, digits: i32) -> String {
     let (factor, unit) = reading_unit(unit, x.abs());
     let x = x * factor;
-    with_unit(&fixed(x, decimals_for_digits(x, 4).max(0)), &unit)
+    let text = fixed(x, decimals_for_digits(x, digits).max(0));
+    let text = match text.contains('.') {
+        true => text.trim_end_matches('0').trim_end_matches('.'),
+        false => &text,
+    };
+    with_unit(text, &unit)
 }
 
 /// `value` rounded to what `u` justifies, `u` itself, and the unit: ("9.80 nm", "0.60 nm").
@@ -99,6 +114,8 @@ pub fn percent(fraction: f64) -> String {
     let p = 100.0 * fraction;
     match p {
         _ if !p.is_finite() => "–".to_owned(),
+        0.0 => "0 %".to_owned(),
+        100.0 => "100 %".to_owned(),
         p if p > 0.0 && p < 0.1 => "under 0.1 %".to_owned(),
         p if p < 100.0 && p > 99.9 => "over 99.9 %".to_owned(),
         p => format!("{} %", fixed(p, 1)),
@@ -213,6 +230,36 @@ pub fn status(status: Option<Status>) -> &'static str {
     }
 }
 
+/// The distinct flags of some dimensions in order of appearance, and for each dimension the
+/// numbers (from 1) of those it carries.
+pub fn numbered_flags(dimensions: &[Dimension]) -> (Vec<String>, Vec<Vec<usize>>) {
+    let mut flags: Vec<String> = Vec::new();
+    let carried = dimensions
+        .iter()
+        .map(|dimension| {
+            let mut numbers: Vec<usize> = Vec::new();
+            for flag in dimension.flags.iter().map(|f| tame(f)) {
+                let at = flags.iter().position(|f| *f == flag).unwrap_or_else(|| {
+                    flags.push(flag);
+                    flags.len() - 1
+                });
+                if !numbers.contains(&(at + 1)) {
+                    numbers.push(at + 1);
+                }
+            }
+            numbers.sort_unstable();
+            numbers
+        })
+        .collect();
+    (flags, carried)
+}
+
+/// "1, 2, 5"; empty for none.
+pub fn numbers(list: &[usize]) -> String {
+    let words: Vec<String> = list.iter().map(usize::to_string).collect();
+    words.join(", ")
+}
+
 /// Text from outside, free of control characters: they could drive a terminal or break XML.
 pub fn tame(text: &str) -> String {
     text.chars()
@@ -235,10 +282,7 @@ mod tests {
             with_u(100.021_47, 0.000_35, "g"),
             ("100.02147 g".into(), "0.00035 g".into())
         );
-        assert_eq!(
-            with_u(9.8, 0.6, "nm"),
-            ("9.80 nm".into(), "0.60 nm".into())
-        );
+        assert_eq!(with_u(9.8, 0.6, "nm"), ("9.80 nm".into(), "0.60 nm".into()));
         assert_eq!(
             with_u(128.71, 0.0996, "nm"),
             ("128.71 nm".into(), "0.10 nm".into())
@@ -263,6 +307,11 @@ mod tests {
         assert_eq!(fixed(f64::NAN, 1), "–");
         assert_eq!(plain(f64::INFINITY, "nm"), "–");
         assert_eq!(plain(0.0, "nm"), "0 nm");
+        assert_eq!(plain(2.0, "nm"), "2 nm");
+        assert_eq!(plain(1.2345678, "nm"), "1.23457 nm");
+        assert_eq!(plain(1200.0, "nm"), "1200 nm");
+        assert_eq!(about(0.05985, "nm"), "0.0599 nm");
+        assert_eq!(about(12_345.0, "nm"), "12.3 µm");
     }
 
     #[test]
@@ -282,10 +331,10 @@ mod tests {
 
     #[test]
     fn shares_do_not_round_something_away() {
-        assert_eq!(percent(0.0), "0.0 %");
+        assert_eq!(percent(0.0), "0 %");
         assert_eq!(percent(0.000_2), "under 0.1 %");
         assert_eq!(percent(0.999_9), "over 99.9 %");
-        assert_eq!(percent(1.0), "100.0 %");
+        assert_eq!(percent(1.0), "100 %");
         assert_eq!(percent(0.8125), "81.2 %");
     }
 

@@ -240,9 +240,8 @@ fn scan_part(job: &Job, outcome: &Outcome) -> ScanPart {
             .and_then(number),
         scale_source: scan.map(|s| s.provenance().scale_source.clone()),
         voids: scan.map(HeightMap::void_count),
-        range_nm: range.and_then(|(low, high)| {
-            Some([number(f64::from(low))?, number(f64::from(high))?])
-        }),
+        range_nm: range
+            .and_then(|(low, high)| Some([number(f64::from(low))?, number(f64::from(high))?])),
         steps: history.map_or_else(Vec::new, |m| m.provenance().steps.clone()),
     }
 }

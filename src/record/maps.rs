@@ -123,15 +123,27 @@ pub fn height_maps(outcome: &Outcome, section: Option<&Section>) -> Result<Optio
     };
     let whole = (level.map.width_nm(), level.map.length_nm());
     let stacked = whole.0 > 2.2 * whole.1;
-    let size = fit(whole.0, whole.1, if stacked { (570.0, 250.0) } else { (272.0, 380.0) });
+    let size = fit(
+        whole.0,
+        whole.1,
+        if stacked {
+            (570.0, 250.0)
+        } else {
+            (250.0, 380.0)
+        },
+    );
     let step = if stacked {
         (0.0, size.1 + 72.0)
     } else {
-        (size.0 + LEFT + 6.0, 0.0)
+        (size.0 + LEFT + 10.0, 0.0)
     };
     let more = (maps.len() - 1) as f64;
     let bottom = 24.0 + more * step.1 + size.1;
-    let bar_height = if stacked { bottom - 24.0 } else { size.1.max(90.0) };
+    let bar_height = if stacked {
+        bottom - 24.0
+    } else {
+        size.1.max(90.0)
+    };
     let height = (24.0 + bar_height).max(bottom) + 38.0;
     let (low, high) = (plain(scale.low, "nm"), plain(scale.high, "nm"));
     let mut svg = open(
@@ -139,7 +151,11 @@ pub fn height_maps(outcome: &Outcome, section: Option<&Section>) -> Result<Optio
         height,
         &format!(
             "Height maps {}, one colour scale from {low} to {high}",
-            if maps.len() > 1 { "as scanned and corrected" } else { "as scanned" }
+            if maps.len() > 1 {
+                "as scanned and corrected"
+            } else {
+                "as scanned"
+            }
         ),
     );
     svg.push_str(r##"<defs><pattern id="void" width="6" height="6" patternUnits="userSpaceOnUse"><rect width="6" height="6" fill="#fff"/><path d="M0 6 L6 0" stroke="#999" stroke-width="1"/></pattern></defs>"##);
@@ -207,7 +223,11 @@ fn colour_bar(svg: &mut String, scale: Scale, (left, top): (f64, f64), height: f
         to: top,
     };
     let (factor, unit) = axis_unit(scale.low.abs().max(scale.high.abs()));
-    let values = ticks(scale.low * factor, scale.high * factor, (height / 45.0).max(2.0));
+    let values = ticks(
+        scale.low * factor,
+        scale.high * factor,
+        (height / 45.0).max(2.0),
+    );
     let labels = tick_labels(&values);
     for (value, label) in values.iter().zip(labels) {
         let y = axis.at(value / factor);
@@ -223,14 +243,20 @@ fn colour_bar(svg: &mut String, scale: Scale, (left, top): (f64, f64), height: f
         let only = minus(&plain(scale.low, "nm"));
         text(svg, "", left + 21.0, top + height / 2.0, &only);
     }
-    text(svg, "name", left - 4.0, top - 8.0, &format!("height / {unit}"));
+    text(
+        svg,
+        "name",
+        left - 6.0,
+        top - 8.0,
+        &format!("height / {unit}"),
+    );
 }
 
 /// The reliability map with its legend.
 pub fn reliability_map(surface: &SurfaceResult) -> Result<String> {
     let map = &surface.surface;
     let whole = extent(surface.certainty.dim(), map.pitch());
-    let size = fit(whole.0, whole.1, (400.0, 400.0));
+    let size = fit(whole.0, whole.1, (384.0, 400.0));
     let height = (size.1 + 62.0).max(170.0);
     let r = surface.reliability;
     let share = super::format::percent;
@@ -259,10 +285,26 @@ pub fn reliability_map(surface: &SurfaceResult) -> Result<String> {
         .count() as f64
         / surface.certainty.len().max(1) as f64;
     let legend = [
-        (certainty::TOUCHED, format!("touched, {}", share(r.touched)), "only contact of a probe position: certain"),
-        (certainty::BOUNDED, format!("bounded, {}", share(r.bounded)), "contact only together with others"),
-        (certainty::NEVER, format!("never, {}", share(r.never)), "out of the tip's reach: an upper bound"),
-        (certainty::VOID, format!("void, {}", share(voids)), "no data; share of all pixels"),
+        (
+            certainty::TOUCHED,
+            format!("touched, {}", share(r.touched)),
+            "sole contact of a probe position",
+        ),
+        (
+            certainty::BOUNDED,
+            format!("bounded, {}", share(r.bounded)),
+            "contact only together with others",
+        ),
+        (
+            certainty::NEVER,
+            format!("never, {}", share(r.never)),
+            "out of the tip's reach",
+        ),
+        (
+            certainty::VOID,
+            format!("void, {}", share(voids)),
+            "no data",
+        ),
     ];
     for (i, (class, name, meaning)) in legend.into_iter().enumerate() {
         let y = 14.0 + 36.0 * i as f64;

@@ -1,4 +1,36 @@
 //! The record of a job: result.json, report.html, the maps. Computes no result.
+//!
+//! # How to read a report
+//!
+//! **Summary.** How many results are *touched* (the tip reached the points the value rests on) and
+//! how many *bounded* (it did not; the interval holds the value), where the correction matters
+//! most, the tip, how much of the surface the tip touched, and what to mind.
+//!
+//! **Dimensions.** One row per result, as scanned beside corrected. The digits shown are those that
+//! two digits of the standard uncertainty u justify. U = k u is the expanded uncertainty. The 95 %
+//! interval is the figure to rely on: it holds the one-sided effects of the tip too, need not be
+//! centred on the corrected value, and is rounded outward. A row without a corrected value but with
+//! an interval is an honest answer: the scan bounds the dimension and no more. The numbers under
+//! the status refer to the flags below the table.
+//!
+//! **Inputs** and **What was done, in order** let a reviewer repeat the work: files with SHA-256,
+//! the scale and where it came from, every step from the file to the result. The job in full is
+//! under **Settings**; `truewidth run` on it gives the same record apart from the time.
+//!
+//! **Maps.** As scanned and corrected on one colour scale over the full range of both, so that
+//! equal colours are equal heights. Dark lines mark where the dimensions were taken, the dashed
+//! line the section drawn below. Where the two curves of the section part, the tip was in the way;
+//! the shaded area lies between the reconstructions with the sharper and the blunter tip.
+//!
+//! **Reliability.** Plain: touched, the map is the surface there. Hatched: bounded, it is an upper
+//! bound. Cross-hatched: never in contact, the surface lies somewhere below. Dotted: void.
+//!
+//! **Tip.** Trust it down to the exercised depth, no further. A radius is given with the depth it
+//! was fitted over; one that is not identified is not printed. The diagnosis says what to do.
+//!
+//! **Budgets.** Per result, largest contribution first: what to improve is at the top.
+//!
+//! **Cautions.** What the result assumes and what is missing. Read them before a value is signed.
 
 pub mod colour;
 mod curves;

@@ -1,6 +1,9 @@
 //! report.html: one file, no reference outside it, no script; well-formed as XML.
 
-use super::format::{Line, decimals_of, fixed, percent, plain, reading_unit, with_unit};
+use super::format::{
+    Line, about, decimals_of, fixed, numbered_flags, numbers, percent, plain, reading_unit, with_u,
+    with_unit,
+};
 use super::maps::{height_maps, reduction_note, reliability_map};
 use super::sections::{Section, surface_section, tip_figure};
 use super::svg::{escape, minus};
@@ -52,7 +55,7 @@ fn list(html: &mut String, tag: &str, items: impl IntoIterator<Item = String>) {
     for item in items {
         let _ = writeln!(html, "<li>{item}</li>");
     }
-    let _ = writeln!(html, "</{tag}>");
+    let _ = writeln!(html, "</{}>", tag.split(' ').next().unwrap_or(tag));
 }
 
 fn summary(html: &mut String, outcome: &Outcome) {
@@ -67,8 +70,14 @@ fn summary(html: &mut String, outcome: &Outcome) {
     if touched + bounded + none > 0 {
         let mut parts = Vec::new();
         for (n, what) in [
-            (touched, "touched: the tip reached the points the value rests on"),
-            (bounded, "bounded: the tip did not reach them, the interval holds the value"),
+            (
+                touched,
+                "touched: the tip reached the points the value rests on",
+            ),
+            (
+                bounded,
+                "bounded: the tip did not reach them, the interval holds the value",
+            ),
             (none, "without a corrected value"),
         ] {
             if n > 0 {
@@ -117,13 +126,15 @@ fn greatest_change(outcome: &Outcome) -> Option<String> {
         .filter_map(|d| Some((d, change(d)?)))
         .max_by(|a, b| a.1.0.total_cmp(&b.1.0))?;
     let line = Line::of(dimension);
+    let u = dimension.corrected.and_then(|c| c.u).unwrap_or(f64::NAN);
+    let sign = if change < 0.0 { "+" } else { "" };
     Some(format!(
         "The correction matters most for {}, {}: as scanned {}, corrected {}, a change of {}.",
         escape(&line.name),
         escape(&line.quantity),
         minus(&line.as_scanned),
         minus(&line.corrected),
-        minus(&plain(-change, dimension.unit))
+        sign.to_owned() + &minus(&with_u(-change, u, dimension.unit).0)
     ))
 }
 
@@ -148,15 +159,21 @@ fn results(html: &mut String, outcome: &Outcome) {
          <th scope=\"col\" class=\"n\">95 % interval</th><th scope=\"col\">Status</th></tr></thead>\n\
          <tbody>\n",
     );
-    for dimension in dimensions(outcome) {
+    let all = outcome.dimensions.as_deref().map_or(&[][..], Vec::as_slice);
+    let (flags, carried) = numbered_flags(all);
+    for (dimension, carried) in all.iter().zip(carried) {
         let line = Line::of(dimension);
+        let flagged = match carried.as_slice() {
+            [] => String::new(),
+            list => format!("<br /><span class=\"quiet\">flags {}</span>", numbers(list)),
+        };
         let _ = writeln!(
             html,
             "<tr><th scope=\"row\">{}<br /><span class=\"quiet\">{}</span></th>\
              <td class=\"n\">{}<br /><span class=\"quiet\">u = {}</span></td>\
              <td class=\"n\">{}<br /><span class=\"quiet\">u = {}</span></td>\
              <td class=\"n\">{}</td><td class=\"n\">{}</td><td class=\"n\">{}</td>\
-             <td class=\"status\">{}</td></tr>",
+             <td class=\"status\">{}{flagged}</td></tr>",
             escape(&line.name),
             escape(&line.quantity),
             escape(&minus(&line.as_scanned)),
@@ -175,31 +192,45 @@ fn results(html: &mut String, outcome: &Outcome) {
          below, one-sided effects of the tip included; its ends are rounded outward. A dash stands \
          for what could not be had; the flags say why.</p>\n",
     );
-    let flagged: Vec<&Dimension> = dimensions(outcome).filter(|d| !d.flags.is_empty()).collect();
-    if !flagged.is_empty() {
+    if !flags.is_empty() {
         html.push_str("<h3>Flags</h3>\n");
-        list(
-            html,
-            "ul",
-            flagged.into_iter().map(|d| {
-                let line = Line::of(d);
-                let flags: Vec<String> = d.flags.iter().map(|f| escape(f)).collect();
-                format!(
-                    "<strong>{}, {}</strong>: {}",
-                    escape(&line.name),
-                    escape(&line.quantity),
-                    flags.join(" ")
-                )
-            }),
-        );
+        list(html, "ol class=\"flags\"", flags.iter().map(|f| escape(f)));
     }
+    html.push_str("<h3>What the figures assume</h3>\n");
+    list(html, "ul", assumptions(all));
     html.push_str("</section>\n");
+}
+
+/// Each kind's assumptions and source once, with the quantities they stand for.
+fn assumptions(dimensions: &[Dimension]) -> Vec<String> {
+    let mut texts: Vec<(&str, Vec<&str>)> = Vec::new();
+    for dimension in dimensions.iter().filter(|d| !d.assumptions.is_empty()) {
+        let quantity = dimension.quantity.as_str();
+        match texts.iter_mut().find(|t| t.0 == dimension.assumptions) {
+            Some((_, quantities)) if quantities.contains(&quantity) => {}
+            Some((_, quantities)) => quantities.push(quantity),
+            None => texts.push((dimension.assumptions, vec![quantity])),
+        }
+    }
+    texts
+        .into_iter()
+        .map(|(text, quantities)| {
+            format!(
+                "<strong>{}</strong>: {}",
+                escape(&quantities.join(", ")),
+                escape(text)
+            )
+        })
+        .collect()
 }
 
 fn facts(html: &mut String, rows: &[(&str, String)]) {
     html.push_str("<table class=\"facts\">\n<tbody>\n");
     for (name, value) in rows {
-        let _ = writeln!(html, "<tr><th scope=\"row\">{name}</th><td>{value}</td></tr>");
+        let _ = writeln!(
+            html,
+            "<tr><th scope=\"row\">{name}</th><td>{value}</td></tr>"
+        );
     }
     html.push_str("</tbody>\n</table>\n");
 }
@@ -211,7 +242,10 @@ fn hash(name: &str, sha256: Option<&str>) -> String {
             escape(name),
             escape(sum)
         ),
-        None => format!("{}<br /><span class=\"quiet\">no SHA-256</span>", escape(name)),
+        None => format!(
+            "{}<br /><span class=\"quiet\">no SHA-256</span>",
+            escape(name)
+        ),
     }
 }
 
@@ -242,12 +276,18 @@ fn inputs(html: &mut String, job: &Job, outcome: &Outcome) {
         rows.push((
             "Noise",
             match level.noise_nm {
-                Some(noise) => format!("{}, standard deviation of its white part", plain(noise, "nm")),
+                Some(noise) => format!(
+                    "{}, standard deviation of its white part",
+                    about(noise, "nm")
+                ),
                 None => "could not be measured".to_owned(),
             },
         ));
         if let Some(drift) = level.drift_nm {
-            rows.push(("Drift along y", format!("{} peak to peak", plain(drift, "nm"))));
+            rows.push((
+                "Drift along y",
+                format!("{} peak to peak", about(drift, "nm")),
+            ));
         }
         if !level.row_jumps.is_empty() {
             rows.push(("Rows that jump", level.row_jumps.len().to_string()));
@@ -262,7 +302,8 @@ fn inputs(html: &mut String, job: &Job, outcome: &Outcome) {
                 percent(c.y),
                 percent(c.z)
             ),
-            None => "<strong>not stated</strong>: no calibration uncertainty is in the results".to_owned(),
+            None => "<strong>not stated</strong>: no calibration uncertainty is in the results"
+                .to_owned(),
         },
     ));
     facts(html, &rows);
@@ -284,7 +325,11 @@ fn scan_facts(scan: &HeightMap) -> Vec<(&'static str, String)> {
         ),
         (
             "Pixel pitch",
-            format!("{} along x, {} along y", plain(pitch.x, "nm"), plain(pitch.y, "nm")),
+            format!(
+                "{} along x, {} along y",
+                plain(pitch.x, "nm"),
+                plain(pitch.y, "nm")
+            ),
         ),
     ];
     let source = &scan.provenance().scale_source;
@@ -319,7 +364,10 @@ fn steps(html: &mut String, job: &Job, outcome: &Outcome) {
         told = told.max(steps.len());
     };
     if let Some(scan) = outcome.scan.as_deref() {
-        done.push(format!("scan opened: {}", escape(&job.file.scan.file.to_string_lossy())));
+        done.push(format!(
+            "scan opened: {}",
+            escape(&job.file.scan.file.to_string_lossy())
+        ));
         tell(scan, &mut done);
     }
     if let Some(level) = outcome.level.as_deref() {
@@ -337,7 +385,7 @@ fn steps(html: &mut String, job: &Job, outcome: &Outcome) {
             let _ = write!(
                 text,
                 ", threshold {}, smoothing {} pixels",
-                plain(estimate.threshold_nm, "nm"),
+                about(estimate.threshold_nm, "nm"),
                 fixed(estimate.smoothing_px, 2)
             );
         }
@@ -347,7 +395,7 @@ fn steps(html: &mut String, job: &Job, outcome: &Outcome) {
         tell(&surface.surface, &mut done);
         done.push(format!(
             "contacts searched with a tolerance of {}",
-            plain(surface.tolerance_nm, "nm")
+            about(surface.tolerance_nm, "nm")
         ));
     }
     if let Some(all) = outcome.dimensions.as_deref() {
@@ -392,7 +440,13 @@ fn figures(html: &mut String, job: &Job, outcome: &Outcome) -> Result<()> {
     if let Some(section) = section
         && let Some(drawing) = surface_section(outcome, &section)
     {
-        let caption = format!("Section {}. Heights are stretched.", escape(&section.place));
+        let mut caption = format!("Section {}. Heights are stretched.", escape(&section.place));
+        if outcome.surface.is_some() {
+            caption.push_str(
+                " Strip below: what the tip did there, plain touched, hatched bounded, \
+                 cross-hatched never, dotted void.",
+            );
+        }
         figure(html, &drawing, &caption);
     }
     html.push_str("</section>\n");
@@ -403,7 +457,7 @@ fn figures(html: &mut String, job: &Job, outcome: &Outcome) -> Result<()> {
         let caption = format!(
             "What the tip did to each point of the corrected map, with a contact tolerance of {}. \
              {} of the pixels lean on the edge of the scan or on voids.",
-            plain(surface.tolerance_nm, "nm"),
+            about(surface.tolerance_nm, "nm"),
             percent(leaning)
         );
         figure(html, &reliability_map(surface)?, &caption);
@@ -424,7 +478,10 @@ fn tip_section(html: &mut String, outcome: &Outcome) -> Result<()> {
         None => caption.push_str("No band could be had. "),
     }
     if tip.exercised_depth_nm.is_some_and(|d| d > 0.0) {
-        caption.push_str("Dotted: the exercised depth; below it nothing tested the tip. ");
+        caption.push_str(
+            "Dotted: the exercised depth; below it nothing tested the tip, and the drawing ends at \
+             1.6 times that depth. ",
+        );
     }
     caption.push_str("Hatched: outside the tip.");
     figure(html, &tip_figure(tip)?, &caption);
@@ -447,8 +504,8 @@ fn tip_facts(tip: &TipResult) -> Vec<(&'static str, String)> {
             "Principal radii",
             format!(
                 "{} and {}",
-                plain(r.principal_nm[0], "nm"),
-                plain(r.principal_nm[1], "nm")
+                about(r.principal_nm[0], "nm"),
+                about(r.principal_nm[1], "nm")
             ),
         ));
     }
@@ -471,7 +528,7 @@ fn tip_facts(tip: &TipResult) -> Vec<(&'static str, String)> {
     rows.push((
         "Exercised depth",
         match tip.exercised_depth_nm {
-            Some(depth) if depth > 0.0 => plain(depth, "nm"),
+            Some(depth) if depth > 0.0 => about(depth, "nm"),
             Some(_) => "none: no feature tested the tip".to_owned(),
             None => "does not apply: the tip was given".to_owned(),
         },
@@ -479,7 +536,7 @@ fn tip_facts(tip: &TipResult) -> Vec<(&'static str, String)> {
     rows.push((
         "Heights",
         match tip.height_u_nm {
-            u if u > 0.0 => format!("standard uncertainty {}", plain(u, "nm")),
+            u if u > 0.0 => format!("standard uncertainty {}", about(u, "nm")),
             _ => "no uncertainty stated".to_owned(),
         },
     ));
@@ -511,27 +568,34 @@ fn budgets(html: &mut String, outcome: &Outcome) {
 fn budget(html: &mut String, dimension: &Dimension) {
     let line = Line::of(dimension);
     let contribution = |c: &Component| (c.u * c.sensitivity).abs();
-    let squares: f64 = dimension.budget.iter().map(|c| contribution(c).powi(2)).sum();
+    let squares: f64 = dimension
+        .budget
+        .iter()
+        .map(|c| contribution(c).powi(2))
+        .sum();
     let largest = [
         dimension.as_scanned.map(|v| v.value),
         dimension.corrected.and_then(|c| c.value),
     ];
-    let largest = largest.iter().flatten().fold(0.0, |a: f64, b| a.max(b.abs()));
+    let largest = largest
+        .iter()
+        .flatten()
+        .fold(0.0, |a: f64, b| a.max(b.abs()));
     let (factor, unit) = reading_unit(dimension.unit, largest);
     let combined = dimension
         .corrected
         .and_then(|c| c.u)
         .or(dimension.as_scanned.and_then(|v| v.u));
-    let decimals = combined
-        .and_then(|u| decimals_of(u * factor))
-        .unwrap_or(3)
-        .saturating_add(1);
+    let show = |u: f64| {
+        let decimals = decimals_of(u * factor).unwrap_or(0);
+        escape(&with_unit(&fixed(u * factor, decimals), &unit))
+    };
     let _ = writeln!(
         html,
         "<details open=\"open\">\n<summary>{}, {}</summary>\n<table>\n<thead><tr>\
          <th scope=\"col\">Source</th><th scope=\"col\" class=\"n\">u of the input</th>\
          <th scope=\"col\">Distribution</th><th scope=\"col\" class=\"n\">Sensitivity</th>\
-         <th scope=\"col\" class=\"n\">Freedom</th>\
+         <th scope=\"col\" class=\"n\"><abbr title=\"degrees of freedom\">ν</abbr></th>\
          <th scope=\"col\" class=\"n\">Contribution</th><th scope=\"col\" class=\"n\">Share of u²</th>\
          </tr></thead>\n<tbody>",
         escape(&line.name),
@@ -544,29 +608,25 @@ fn budget(html: &mut String, dimension: &Dimension) {
             "<tr><th scope=\"row\">{}</th><td class=\"n\">{}</td><td>{}</td><td class=\"n\">{}</td>\
              <td class=\"n\">{}</td><td class=\"n\">{}</td><td class=\"n\">{}</td></tr>",
             escape(&c.source),
-            plain(c.u, ""),
+            about(c.u, ""),
             distribution(c.distribution),
-            minus(&plain(c.sensitivity, "")),
+            minus(&about(c.sensitivity, "")),
             c.degrees_of_freedom
                 .filter(|f| f.is_finite())
                 .map_or_else(|| "∞".to_owned(), |f| fixed(f, 0)),
-            escape(&with_unit(&fixed(contribution(c) * factor, decimals), &unit)),
+            show(contribution(c)),
             percent(share)
         );
     }
     if let Some(u) = combined {
         let _ = writeln!(
             html,
-            "<tr class=\"sum\"><th scope=\"row\">combined standard uncertainty</th><td></td><td></td>\
-             <td></td><td></td><td class=\"n\">{}</td><td></td></tr>",
-            escape(&with_unit(&fixed(u * factor, decimals), &unit))
+            "<tr class=\"sum\"><th scope=\"row\" colspan=\"5\">combined standard uncertainty</th>\
+             <td class=\"n\">{}</td><td></td></tr>",
+            show(u)
         );
     }
-    let _ = writeln!(
-        html,
-        "</tbody>\n</table>\n<p class=\"quiet\">{}</p>\n</details>",
-        escape(dimension.assumptions)
-    );
+    html.push_str("</tbody>\n</table>\n</details>\n");
 }
 
 fn distribution(distribution: Distribution) -> &'static str {

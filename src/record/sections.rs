@@ -147,11 +147,23 @@ pub fn surface_section(outcome: &Outcome, section: &Section) -> Option<String> {
         xy(y.from - y.to)
     );
     if let Some((low, high)) = &band {
-        let _ = write!(svg, r#"<path class="band" d="{}"/>"#, between(low, high, x, y));
+        let _ = write!(
+            svg,
+            r#"<path class="band" d="{}"/>"#,
+            between(low, high, x, y)
+        );
     }
-    let _ = write!(svg, r#"<path class="scanned" d="{}"/>"#, path(&scanned, x, y));
+    let _ = write!(
+        svg,
+        r#"<path class="scanned" d="{}"/>"#,
+        path(&scanned, x, y)
+    );
     if let Some(curve) = &corrected {
-        let _ = write!(svg, r#"<path class="corrected" d="{}"/>"#, path(curve, x, y));
+        let _ = write!(
+            svg,
+            r#"<path class="corrected" d="{}"/>"#,
+            path(curve, x, y)
+        );
     }
     svg.push_str("</g>");
     frame(&mut svg, x, y, section.name(), "height");
@@ -166,26 +178,27 @@ pub fn surface_section(outcome: &Outcome, section: &Section) -> Option<String> {
 fn legend(svg: &mut String, corrected: bool, band: bool) {
     let mut left = 56.0;
     let mut entry = |svg: &mut String, sample: &str, name: &str| {
-        let _ = write!(svg, r#"<g transform="translate({} 16)">{sample}</g>"#, xy(left));
+        let _ = write!(
+            svg,
+            r#"<g transform="translate({} 16)">{sample}</g>"#,
+            xy(left)
+        );
         text(svg, "", left + 32.0, 19.5, name);
         left += 48.0 + 6.0 * name.chars().count() as f64;
     };
     entry(svg, r#"<path class="scanned" d="M0 0 h26"/>"#, "as scanned");
     if corrected {
-        entry(svg, r#"<path class="corrected" d="M0 0 h26"/>"#, "corrected");
+        entry(
+            svg,
+            r#"<path class="corrected" d="M0 0 h26"/>"#,
+            "corrected",
+        );
     }
     if band {
         entry(
             svg,
             r#"<rect class="band" y="-5" width="26" height="10"/>"#,
             "between the band's tips",
-        );
-    }
-    if corrected {
-        entry(
-            svg,
-            "",
-            "strip below the axis: plain touched, hatched bounded, cross-hatched never",
         );
     }
 }
@@ -234,7 +247,7 @@ pub fn tip_figure(tip: &TipResult) -> Result<String> {
     );
     svg.push_str(r##"<defs><pattern id="outside" width="6" height="6" patternUnits="userSpaceOnUse"><rect width="6" height="6" fill="#fff"/><path d="M0 6 L6 0" stroke="#999" stroke-width="1"/></pattern></defs>"##);
     let [w, h] = tip.tip.support_nm();
-    let scale = (186.0 / w).min(186.0 / h);
+    let scale = (170.0 / w).min(186.0 / h);
     let (width, height) = ((w * scale).max(2.0), (h * scale).max(2.0));
     let x = Axis {
         low: -w / 2.0,
@@ -264,8 +277,8 @@ pub fn tip_figure(tip: &TipResult) -> Result<String> {
     );
     frame(&mut svg, x, y, "x", "y");
     text(&mut svg, "title", 52.0, 24.0, "map");
-    tip_profile(&mut svg, tip, 0.0, shown, 294.0);
-    tip_profile(&mut svg, tip, 90.0, shown, 514.0);
+    tip_profile(&mut svg, tip, 0.0, shown, 292.0);
+    tip_profile(&mut svg, tip, 90.0, shown, 532.0);
     svg.push_str("</svg>");
     Ok(svg)
 }
@@ -283,31 +296,49 @@ fn tip_curve(tip: &Tip, azimuth: f64) -> Vec<(f64, f64)> {
 fn tip_profile(svg: &mut String, tip: &TipResult, azimuth: f64, shown: f64, left: f64) {
     let along = if azimuth == 0.0 { "x" } else { "y" };
     let curve = tip_curve(&tip.tip, azimuth);
-    let reach = curve.last().map_or(1.0, |p| p.0).max(1e-9);
     let shown = shown.max(1e-9);
+    // As wide as the tip is at the depth shown, and a little more.
+    let inside = curve.iter().filter(|p| p.1 >= -1.05 * shown);
+    let reach = 1.15 * inside.map(|p| p.0.abs()).fold(0.0, f64::max).max(1e-9);
+    // True to scale where that makes a readable plot.
+    let (most_wide, most_high) = (170.0f64, 186.0f64);
+    let (wide, high) = (2.0 * reach, 1.1 * shown);
+    let scale = (most_wide / wide).min(most_high / high);
+    let true_size = (wide * scale, high * scale);
+    let (width, height) = if true_size.0.min(true_size.1) >= 56.0 {
+        true_size
+    } else {
+        (most_wide, most_high)
+    };
     let x = Axis {
         low: -reach,
         high: reach,
         from: left,
-        to: left + 190.0,
+        to: left + width,
     };
     let y = Axis {
         low: -1.05 * shown,
         high: 0.05 * shown,
-        from: 220.0,
+        from: 34.0 + height,
         to: 34.0,
     };
     let _ = write!(
         svg,
-        r#"<defs><clipPath id="tip{along}"><rect x="{}" y="34" width="190" height="186"/></clipPath></defs><g clip-path="url(#tip{along})">"#,
-        xy(left)
+        r#"<defs><clipPath id="tip{along}"><rect x="{}" y="34" width="{}" height="{}"/></clipPath></defs><g clip-path="url(#tip{along})">"#,
+        xy(left),
+        xy(width),
+        xy(height)
     );
     if let Some(band) = &tip.band {
         let (low, high) = (
             tip_curve(&band.sharper, azimuth),
             tip_curve(&band.blunter, azimuth),
         );
-        let _ = write!(svg, r#"<path class="band" d="{}"/>"#, between(&low, &high, x, y));
+        let _ = write!(
+            svg,
+            r#"<path class="band" d="{}"/>"#,
+            between(&low, &high, x, y)
+        );
     }
     if let Some(depth) = tip.exercised_depth_nm
         && depth > 0.0
@@ -315,24 +346,29 @@ fn tip_profile(svg: &mut String, tip: &TipResult, azimuth: f64, shown: f64, left
     {
         let _ = write!(
             svg,
-            r#"<path class="depth" d="M{} {} h190"/>"#,
+            r#"<path class="depth" d="M{} {} h{}"/>"#,
             xy(left),
-            xy(y.at(-depth))
+            xy(y.at(-depth)),
+            xy(width)
         );
     }
-    let _ = write!(svg, r#"<path class="corrected" d="{}"/></g>"#, path(&curve, x, y));
+    let _ = write!(
+        svg,
+        r#"<path class="corrected" d="{}"/></g>"#,
+        path(&curve, x, y)
+    );
     frame(svg, x, y, along, "height");
     let stretch = y.scale() / x.scale();
     let stretched = if (stretch - 1.0).abs() < 0.02 {
         String::new()
     } else {
-        format!(", heights × {}", fixed(stretch, 2))
+        format!(" (heights × {})", fixed(stretch, 1))
     };
     text(
         svg,
         "title",
         left,
         24.0,
-        &format!("profile along {along}{stretched}"),
+        &format!("along {along}{stretched}"),
     );
 }

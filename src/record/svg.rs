@@ -56,7 +56,10 @@ pub fn nice(x: f64) -> f64 {
 
 /// Labels of ticks with just the decimals their spacing needs.
 pub fn tick_labels(ticks: &[f64]) -> Vec<String> {
-    let step = ticks.windows(2).map(|t| t[1] - t[0]).fold(f64::NAN, f64::min);
+    let step = ticks
+        .windows(2)
+        .map(|t| t[1] - t[0])
+        .fold(f64::NAN, f64::min);
     let decimals = if step.is_finite() && step > 0.0 {
         (-(step * (1.0 + 1e-9)).log10().floor()).max(0.0) as i32
     } else {
@@ -124,7 +127,11 @@ pub fn frame(svg: &mut String, x: Axis, y: Axis, x_name: &str, y_name: &str) {
         xy(bottom - top)
     );
     let (factor, unit) = axis_unit(x.low.abs().max(x.high.abs()));
-    let marks = ticks(x.low * factor, x.high * factor, ((right - left) / 70.0).max(2.0));
+    let marks = ticks(
+        x.low * factor,
+        x.high * factor,
+        ((right - left) / 70.0).max(2.0),
+    );
     for (value, label) in marks.iter().zip(tick_labels(&marks)) {
         let at = xy(x.at(value / factor));
         let _ = write!(
@@ -143,7 +150,11 @@ pub fn frame(svg: &mut String, x: Axis, y: Axis, x_name: &str, y_name: &str) {
     );
     let (factor, unit) = axis_unit(y.low.abs().max(y.high.abs()));
     let (low, high) = (y.low.min(y.high), y.low.max(y.high));
-    let marks = ticks(low * factor, high * factor, ((bottom - top) / 40.0).max(2.0));
+    let marks = ticks(
+        low * factor,
+        high * factor,
+        ((bottom - top) / 40.0).max(2.0),
+    );
     for (value, label) in marks.iter().zip(tick_labels(&marks)) {
         let at = y.at(value / factor);
         let _ = write!(
@@ -200,7 +211,10 @@ mod tests {
         assert!(ticks(1.0, 1.0, 4.0).is_empty());
         assert!(ticks(0.0, f64::NAN, 4.0).is_empty());
         assert!(ticks(0.0, 1e300, 1e-9).len() <= 51);
-        assert_eq!(tick_labels(&[-0.5, 0.0, 0.5]), ["\u{2212}0.5", "0.0", "0.5"]);
+        assert_eq!(
+            tick_labels(&[-0.5, 0.0, 0.5]),
+            ["\u{2212}0.5", "0.0", "0.5"]
+        );
         assert_eq!(tick_labels(&[0.0, 200.0]), ["0", "200"]);
     }
 

@@ -1,6 +1,6 @@
 //! Results as text for a terminal.
 
-use super::format::{Line, percent, plain, tame, with_u};
+use super::format::{Line, about, numbered_flags, numbers, percent, plain, tame, with_u};
 use crate::job::{Job, Outcome, TipFrom, TipResult};
 use std::fmt::Write;
 
@@ -31,36 +31,33 @@ pub fn results(job: &Job, outcome: &Outcome) -> String {
             percent(r.never)
         );
     }
-    let lines: Vec<Line> = outcome
-        .dimensions
-        .iter()
-        .flat_map(|all| all.iter())
-        .map(Line::of)
-        .collect();
+    let dimensions = outcome.dimensions.as_deref().map_or(&[][..], Vec::as_slice);
+    let (flags, carried) = numbered_flags(dimensions);
     text.push('\n');
-    if lines.is_empty() {
+    if dimensions.is_empty() {
         text.push_str("No dimension was asked for.\n");
     } else {
-        text.push_str(&aligned(&lines));
+        let lines: Vec<Line> = dimensions.iter().map(Line::of).collect();
+        let carried: Vec<String> = carried.iter().map(|c| numbers(c)).collect();
+        text.push_str(&aligned(&lines, &carried));
     }
-    let flags = outcome.dimensions.iter().flat_map(|all| all.iter());
-    let mut notes: Vec<String> = outcome.warnings.iter().map(|w| tame(w)).collect();
-    for (dimension, line) in flags.zip(&lines) {
-        for flag in &dimension.flags {
-            notes.push(format!("{}, {}: {}", line.name, line.quantity, tame(flag)));
+    if !flags.is_empty() {
+        text.push_str("\nFlags\n");
+        for (i, flag) in flags.iter().enumerate() {
+            let _ = writeln!(text, "{:>2}  {flag}", i + 1);
         }
     }
-    if !notes.is_empty() {
-        text.push_str("\nNotes\n");
-        for note in notes {
-            let _ = writeln!(text, "- {note}");
+    if !outcome.warnings.is_empty() {
+        text.push_str("\nMind\n");
+        for warning in &outcome.warnings {
+            let _ = writeln!(text, "- {}", tame(warning));
         }
     }
     text
 }
 
-fn aligned(lines: &[Line]) -> String {
-    const HEAD: [&str; 8] = [
+fn aligned(lines: &[Line], flags: &[String]) -> String {
+    const HEAD: [&str; 9] = [
         "Dimension",
         "Quantity",
         "As scanned",
@@ -69,9 +66,10 @@ fn aligned(lines: &[Line]) -> String {
         "k",
         "95 % interval",
         "Status",
+        "Flags",
     ];
-    let rows: Vec<[&str; 8]> = std::iter::once(HEAD)
-        .chain(lines.iter().map(|l| {
+    let rows: Vec<[&str; 9]> = std::iter::once(HEAD)
+        .chain(lines.iter().zip(flags).map(|(l, flags)| {
             [
                 l.name.as_str(),
                 &l.quantity,
@@ -81,10 +79,11 @@ fn aligned(lines: &[Line]) -> String {
                 &l.k,
                 &l.interval,
                 l.status,
+                flags,
             ]
         }))
         .collect();
-    let widths: [usize; 8] = std::array::from_fn(|column| {
+    let widths: [usize; 9] = std::array::from_fn(|column| {
         rows.iter()
             .map(|row| row[column].chars().count())
             .max()
@@ -126,7 +125,7 @@ pub fn radius_words(tip: &TipResult) -> String {
             let (value, u) = with_u(r.value, r.u, "nm");
             format!(
                 "apex radius {value} (u = {u}, fitted over {} below the apex)",
-                plain(r.fit_depth_nm, "nm")
+                about(r.fit_depth_nm, "nm")
             )
         }
         None => "apex radius not identified".to_owned(),
@@ -140,8 +139,8 @@ pub fn angle_words(tip: &TipResult) -> String {
             let (value, u) = with_u(a.value, a.u, "deg");
             format!(
                 "half-angle {value} (u = {u}, between {} and {} below the apex)",
-                plain(a.between_nm[0], "nm"),
-                plain(a.between_nm[1], "nm")
+                about(a.between_nm[0], "nm"),
+                about(a.between_nm[1], "nm")
             )
         }
         None => "half-angle not identified".to_owned(),
@@ -156,7 +155,7 @@ fn tip_line(tip: &TipResult) -> String {
         angle_words(tip)
     );
     if let Some(depth) = tip.exercised_depth_nm {
-        let _ = write!(text, "; exercised to {}", plain(depth, "nm"));
+        let _ = write!(text, "; exercised to {}", about(depth, "nm"));
     }
     text
 }
@@ -169,11 +168,11 @@ pub fn tip(tip: &TipResult) -> String {
         ("flank", angle_words(tip)),
     ];
     if let Some(depth) = tip.exercised_depth_nm {
-        rows.push(("depth", format!("exercised to {}", plain(depth, "nm"))));
+        rows.push(("depth", format!("exercised to {}", about(depth, "nm"))));
     }
     rows.push((
         "heights",
-        format!("known to u = {}", plain(tip.height_u_nm, "nm")),
+        format!("known to u = {}", about(tip.height_u_nm, "nm")),
     ));
     let [width, length] = tip.tip.support_nm();
     rows.push((
@@ -181,7 +180,7 @@ pub fn tip(tip: &TipResult) -> String {
         format!("{} x {}", plain(width, "nm"), plain(length, "nm")),
     ));
     if let Some(estimate) = &tip.estimate {
-        rows.push(("threshold", plain(estimate.threshold_nm, "nm")));
+        rows.push(("threshold", about(estimate.threshold_nm, "nm")));
     }
     let mut text = String::new();
     for (name, value) in rows {
