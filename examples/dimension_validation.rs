@@ -71,13 +71,21 @@ fn request(kind: Kind, region: Option<Region>, at: f64) -> Request {
         name: String::new(),
         kind,
         region,
-        at: if kind == Kind::LineWidth { vec![at] } else { Vec::new() },
+        at: if kind == Kind::LineWidth {
+            vec![at]
+        } else {
+            Vec::new()
+        },
         across: None,
     }
 }
 
 /// The scene's surface, its size in pixels `[rows, columns]`, and the truth.
-fn scene(case: &Case, random: &mut Random, seed: u64) -> Result<(Box<dyn Feature>, [usize; 2], Truth)> {
+fn scene(
+    case: &Case,
+    random: &mut Random,
+    seed: u64,
+) -> Result<(Box<dyn Feature>, [usize; 2], Truth)> {
     let width = random.between(50.0, 70.0);
     let rows = 48;
     Ok(match case.kind {
@@ -85,7 +93,11 @@ fn scene(case: &Case, random: &mut Random, seed: u64) -> Result<(Box<dyn Feature
             let mut lines = Lines::new(random.between(95.0, 105.0), 400.0, 1, width, HEIGHT)
                 .walls(case.wall_deg, 0.0);
             if case.kind == Scene::RoughLine {
-                let roughness = EdgeRoughness { sigma_nm: 1.0, length_nm: 15.0, seed };
+                let roughness = EdgeRoughness {
+                    sigma_nm: 1.0,
+                    length_nm: 15.0,
+                    seed,
+                };
                 lines = lines.rough(roughness, -100.0, 200.0)?;
             }
             // Of a rough line the width at large is meant, not that of the piece in the scan.
@@ -111,7 +123,14 @@ fn scene(case: &Case, random: &mut Random, seed: u64) -> Result<(Box<dyn Feature
             let lines = Lines::new(random.between(115.0, 125.0), 400.0, 1, width, height)
                 .walls(case.wall_deg, 0.0);
             let request = request(Kind::StepHeight, None, 0.5);
-            (Box::new(lines), [rows, 240], Truth { request, value: height })
+            (
+                Box::new(lines),
+                [rows, 240],
+                Truth {
+                    request,
+                    value: height,
+                },
+            )
         }
         Scene::Step => {
             let height = random.between(5.0, 50.0);
@@ -121,14 +140,28 @@ fn scene(case: &Case, random: &mut Random, seed: u64) -> Result<(Box<dyn Feature
                 wall_angle_deg: case.wall_deg,
             };
             let request = request(Kind::StepHeight, None, 0.5);
-            (Box::new(step), [rows, 200], Truth { request, value: height })
+            (
+                Box::new(step),
+                [rows, 200],
+                Truth {
+                    request,
+                    value: height,
+                },
+            )
         }
         Scene::Pitch => {
             let pitch = random.between(38.0, 44.0);
             let lines = Lines::new(random.between(10.0, 30.0), pitch, 12, 20.0, 15.0)
                 .walls(case.wall_deg, 0.0);
             let request = request(Kind::Pitch, None, 0.5);
-            (Box::new(lines), [rows, 480], Truth { request, value: pitch })
+            (
+                Box::new(lines),
+                [rows, 480],
+                Truth {
+                    request,
+                    value: pitch,
+                },
+            )
         }
         Scene::ParticleHeight | Scene::ParticleDiameter => {
             let radius = random.between(case.tip.0 / 2.0, 2.0 * case.tip.0);
@@ -150,7 +183,8 @@ fn one(case: &Case, seed: u64) -> Result<(Vec<Dimension>, f64)> {
     let pitch = Pitch::square(1.0);
     let (radius, half_angle) = case.tip;
     let model = Model::SphereCone { radius, half_angle };
-    let support = 2.0 * truewidth::tip::model::sphere_cone_half_width(radius, half_angle, HEIGHT + 5.0);
+    let support =
+        2.0 * truewidth::tip::model::sphere_cone_half_width(radius, half_angle, HEIGHT + 5.0);
     let tip: Tip = model.sample(support, pitch)?;
     let settings = Settings {
         support_nm: support,
@@ -210,7 +244,10 @@ fn one(case: &Case, seed: u64) -> Result<(Vec<Dimension>, f64)> {
 }
 
 fn pick(lines: Vec<Dimension>, quantity: &str) -> Vec<Dimension> {
-    lines.into_iter().filter(|l| l.quantity.contains(quantity)).collect()
+    lines
+        .into_iter()
+        .filter(|l| l.quantity.contains(quantity))
+        .collect()
 }
 
 #[derive(Default)]
@@ -264,7 +301,14 @@ fn median(v: &[f64]) -> f64 {
 fn cases() -> Vec<Case> {
     let mut cases = Vec::new();
     let mut add = |name, tip, wall_deg, noise_nm, kind, at| {
-        cases.push(Case { name, tip, wall_deg, noise_nm, kind, at });
+        cases.push(Case {
+            name,
+            tip,
+            wall_deg,
+            noise_nm,
+            kind,
+            at,
+        });
     };
     let (slim, stout) = ((8.0, 8.0), (10.0, 15.0));
     for noise in [0.0, 0.2, 0.3] {
@@ -286,9 +330,30 @@ fn cases() -> Vec<Case> {
     add("trench width", stout, 88.0, 0.3, Scene::Trench, 0.5);
     add("step height, ridge", slim, 85.0, 0.2, Scene::Ridge, 0.5);
     add("step height, edge", stout, 80.0, 0.2, Scene::Step, 0.5);
-    add("particle height", stout, 90.0, 0.2, Scene::ParticleHeight, 0.5);
-    add("particle diameter", stout, 90.0, 0.2, Scene::ParticleDiameter, 0.5);
-    add("particle diameter", slim, 90.0, 0.2, Scene::ParticleDiameter, 0.5);
+    add(
+        "particle height",
+        stout,
+        90.0,
+        0.2,
+        Scene::ParticleHeight,
+        0.5,
+    );
+    add(
+        "particle diameter",
+        stout,
+        90.0,
+        0.2,
+        Scene::ParticleDiameter,
+        0.5,
+    );
+    add(
+        "particle diameter",
+        slim,
+        90.0,
+        0.2,
+        Scene::ParticleDiameter,
+        0.5,
+    );
     add("pitch", slim, 80.0, 0.2, Scene::Pitch, 0.5);
     cases
 }
@@ -304,7 +369,9 @@ fn main() -> ExitCode {
     let first = number("--seed").unwrap_or(1);
     let only = number("--only");
     let verbose = arguments.iter().any(|a| a == "--verbose");
-    println!("| measurand | tip R, half-angle | wall | noise | n | scanned | corrected | rms | touched | coverage | interval |");
+    println!(
+        "| measurand | tip R, half-angle | wall | noise | n | scanned | corrected | rms | touched | coverage | interval |"
+    );
     println!("|---|---|---|---|---|---|---|---|---|---|---|");
     let mut failed = false;
     for (index, case) in cases().iter().enumerate() {
@@ -330,13 +397,30 @@ fn main() -> ExitCode {
         let coverage = share(tally.covered, tally.intervals);
         println!(
             "| {} | {} nm, {} deg | {} deg | {} nm | {} | {:+.2} | {:+.3} | {:.3} | {:.0} % | {:.0} % | {:.2} |{}",
-            case.name, case.tip.0, case.tip.1, case.wall_deg, case.noise_nm, tally.intervals,
-            mean(&tally.scanned), mean(&tally.corrected), rms(&tally.corrected),
-            share(tally.touched, count as usize), coverage, median(&tally.widths),
-            if tally.lost > 0 { format!(" lost {}: {:?}", tally.lost, tally.reasons.first()) } else { String::new() },
+            case.name,
+            case.tip.0,
+            case.tip.1,
+            case.wall_deg,
+            case.noise_nm,
+            tally.intervals,
+            mean(&tally.scanned),
+            mean(&tally.corrected),
+            rms(&tally.corrected),
+            share(tally.touched, count as usize),
+            coverage,
+            median(&tally.widths),
+            if tally.lost > 0 {
+                format!(" lost {}: {:?}", tally.lost, tally.reasons.first())
+            } else {
+                String::new()
+            },
         );
         // The short form only tells a broken measurement from a working one.
         failed |= tally.lost > 0 || coverage < 70.0;
     }
-    if failed && short { ExitCode::FAILURE } else { ExitCode::SUCCESS }
+    if failed && short {
+        ExitCode::FAILURE
+    } else {
+        ExitCode::SUCCESS
+    }
 }

@@ -80,7 +80,12 @@ pub(super) fn measure(
     Ok((0..fractions.len())
         .map(|i| {
             let mut line = empty(fractions[i]);
-            line.quantity = if scan.ridge { "line width" } else { "trench width" }.to_owned();
+            line.quantity = if scan.ridge {
+                "line width"
+            } else {
+                "trench width"
+            }
+            .to_owned();
             line.flags.clone_from(&common);
             line.marks = scan.marks(&frame, i);
             fill(&mut line, input, &frame, &scan, correction.as_ref(), i);
@@ -173,7 +178,11 @@ impl Trace {
         }
         let every = count.div_ceil(CURVE_SECTIONS);
         let walls = [0, 1].map(|k| {
-            let outward = if layout.edges[first + k].rising { -1.0 } else { 1.0 };
+            let outward = if layout.edges[first + k].rising {
+                -1.0
+            } else {
+                1.0
+            };
             let grid: Vec<f64> = (1..50).map(|i| f64::from(i) * 0.02).collect();
             let mut u = Vec::with_capacity(grid.len());
             let outwards = grid
@@ -244,7 +253,10 @@ impl Trace {
         let marks = [
             frame.segment((0.0, at(a, 0.0)), (last, at(a, last))),
             frame.segment((0.0, at(b, 0.0)), (last, at(b, last))),
-            frame.segment((last / 2.0, at(a, last / 2.0)), (last / 2.0, at(b, last / 2.0))),
+            frame.segment(
+                (last / 2.0, at(a, last / 2.0)),
+                (last / 2.0, at(b, last / 2.0)),
+            ),
         ];
         marks
             .into_iter()
@@ -368,7 +380,9 @@ fn common_flags(input: &Input, frame: &Frame, layout: &Layout, scan: &Trace) -> 
     }
     let skew = scan.cosine.acos().to_degrees();
     if skew > 0.5 {
-        flags.push(format!("the line runs {skew:.1} degrees askew; widths are taken across it"));
+        flags.push(format!(
+            "the line runs {skew:.1} degrees askew; widths are taken across it"
+        ));
     }
     flags
 }
@@ -391,7 +405,11 @@ fn budget_of(trace: &Trace, i: usize, series: &Series, calibration: f64, fractio
         let span = trace.walls[k].slope(fraction) * 0.25 * trace.height / trace.pitch;
         let span = if span.is_finite() { span.max(1.0) } else { 1.0 };
         let wander = statistics::robust_deviation(&trace.edges[i][k]).unwrap_or(0.0);
-        let average = if wander > 0.3 { series.effective.sqrt() } else { 1.0 };
+        let average = if wander > 0.3 {
+            series.effective.sqrt()
+        } else {
+            1.0
+        };
         (trace.pitch / 12f64.sqrt() / (span * span)).max(trace.pitch / 40.0) / average
     };
     budget.push(
@@ -426,11 +444,13 @@ fn fill(
         Axis::Y => input.calibration.y,
     };
     let Some(scanned) = scan.width(i) else {
-        line.flags.push("not measured: no section crosses this height at both walls".to_owned());
+        line.flags
+            .push("not measured: no section crosses this height at both walls".to_owned());
         return;
     };
     if scanned.count < 3 {
-        line.flags.push(format!("too few sections: {}", scanned.count));
+        line.flags
+            .push(format!("too few sections: {}", scanned.count));
     } else if scanned.count * 2 < scan.edges[i][0].len() {
         line.flags.push(format!(
             "only {} of {} sections cross both walls at this height",
@@ -448,7 +468,8 @@ fn fill(
         None => {
             if input.corrected.is_some() {
                 line.flags.push(
-                    "no corrected value: the edges are lost in the reconstructed surface".to_owned(),
+                    "no corrected value: the edges are lost in the reconstructed surface"
+                        .to_owned(),
                 );
             }
             line.budget = budget.into_components();
@@ -470,16 +491,24 @@ fn correct(
     let surface = &correction.surface;
     let given = &correction.given;
     let Some(series) = surface.width(i) else {
-        line.flags.push("no corrected value: the reconstruction has no such width".to_owned());
+        line.flags
+            .push("no corrected value: the reconstruction has no such width".to_owned());
         return;
     };
-    let holds = [0, 1].map(|k| {
-        surface.walls[k].hold(&correction.outlines[k], fraction, given.height_u_nm)
-    });
+    let holds =
+        [0, 1].map(|k| surface.walls[k].hold(&correction.outlines[k], fraction, given.height_u_nm));
     let mut budget = budget_of(surface, i, &series, calibration, fraction);
-    let slope: f64 = holds.iter().map(|h| h.slope).filter(|s| s.is_finite()).sum();
+    let slope: f64 = holds
+        .iter()
+        .map(|h| h.slope)
+        .filter(|s| s.is_finite())
+        .sum();
     tip_band(&mut budget, correction, i, slope);
-    let inward: f64 = holds.iter().map(|h| h.slack).filter(|s| s.is_finite()).sum();
+    let inward: f64 = holds
+        .iter()
+        .map(|h| h.slack)
+        .filter(|s| s.is_finite())
+        .sum();
     let mut outward = 0.0f64;
     let mut touched = holds.iter().all(|h| h.touched);
     explain(line, &holds, surface);
@@ -500,7 +529,8 @@ fn correct(
     if !given.identified {
         touched = false;
         outward = outward.max((scanned.mean - series.mean).abs());
-        line.flags.push("the tip is not identified: bounds only".to_owned());
+        line.flags
+            .push("the tip is not identified: bounds only".to_owned());
     }
     if inward + outward > 0.0 {
         let u = (inward + outward) / 12f64.sqrt();
@@ -516,12 +546,21 @@ fn correct(
         1.0,
     );
     // The middle of what the physics leaves.
-    let value = series.mean + sign * ((outward - inward) / 2.0 - erosion);
-    let half = (inward + outward) / 2.0;
-    let mut out = half;
+    let likely: f64 = holds
+        .iter()
+        .map(|h| h.likely)
+        .filter(|s| s.is_finite())
+        .sum();
+    let shift = (outward - likely) / 2.0;
+    let value = series.mean + sign * (shift - erosion);
+    let inner = shift + inward;
+    let mut out = outward - shift;
     if given.contains_feature_radius {
         let radius = correction.outlines[0].apex_radius().unwrap_or(0.0);
-        let shift: f64 = holds.iter().map(|h| radius * wall::shift_per_radius(h.slope)).sum();
+        let shift: f64 = holds
+            .iter()
+            .map(|h| radius * wall::shift_per_radius(h.slope))
+            .sum();
         budget.push_one_sided("radius of the feature that showed the tip", shift);
         out += shift;
         line.flags.push(format!(
@@ -529,7 +568,11 @@ fn correct(
              state it to narrow the interval"
         ));
     }
-    let (below, above) = if surface.ridge { (half, out) } else { (out, half) };
+    let (below, above) = if surface.ridge {
+        (inner, out)
+    } else {
+        (out, inner)
+    };
     let (low, high) = budget.interval(value, below, above, 0.95);
     let all = budget.combined(0.95);
     let known = given.identified;
@@ -541,10 +584,15 @@ fn correct(
         low: Some(low.max(0.0)),
         high: Some(high.max(0.0)),
     });
-    line.status = Some(if touched { Status::Touched } else { Status::Bounded });
+    line.status = Some(if touched {
+        Status::Touched
+    } else {
+        Status::Bounded
+    });
     lean(line, frame, surface, given, i);
     if scan.height < 0.5 * surface.height {
-        line.flags.push("the scan shows less than half of the corrected height".to_owned());
+        line.flags
+            .push("the scan shows less than half of the corrected height".to_owned());
     }
     line.budget = budget.into_components();
 }
@@ -564,8 +612,15 @@ fn erosion_shift(
         erosion::bias(given.tip, frame.axis, positive, slope, frame.noise)
     };
     let flat = bias(true, f64::INFINITY).noise;
-    let sunk = (0..2).map(|i| surface.levels[i] - scan.levels[i]).sum::<f64>() / 2.0;
-    let scale = if flat < 0.0 { (sunk / flat).clamp(0.0, 1.5) } else { 0.0 };
+    let sunk = (0..2)
+        .map(|i| surface.levels[i] - scan.levels[i])
+        .sum::<f64>()
+        / 2.0;
+    let scale = if flat < 0.0 {
+        (sunk / flat).clamp(0.0, 1.5)
+    } else {
+        0.0
+    };
     [(!surface.ridge, holds[0]), (surface.ridge, holds[1])]
         .into_iter()
         .filter(|(_, hold)| hold.slope.is_finite())
@@ -584,7 +639,10 @@ fn tip_band(budget: &mut Budget, correction: &Correction, i: usize, slope: f64) 
     let height_u = correction.given.height_u_nm.max(0.0);
     if upper.is_some() || lower.is_some() {
         // The band is one of about 95 % (two standard uncertainties to each side).
-        let apart = [upper, lower].into_iter().flatten().map(|w| (w - here).abs());
+        let apart = [upper, lower]
+            .into_iter()
+            .flatten()
+            .map(|w| (w - here).abs());
         let u = apart.fold(0.0, f64::max) / 2.0;
         budget.push("tip band", u, Distribution::Normal, 1.0);
     } else if height_u > 0.0 {
@@ -602,7 +660,11 @@ fn explain(line: &mut Dimension, holds: &[Hold; 2], surface: &Trace) {
     line.flags.push(format!(
         "{which} at this height: it is as steep as the tip's flank or steeper; the interval runs \
          from the {} that was touched to the reconstruction, no undercut assumed",
-        if surface.ridge { "shoulder above" } else { "rim above" }
+        if surface.ridge {
+            "shoulder above"
+        } else {
+            "rim above"
+        }
     ));
 }
 
@@ -613,7 +675,10 @@ fn lean(line: &mut Dimension, frame: &Frame, surface: &Trace, given: &Corrected,
     let (mut total, mut leans, mut never) = (0usize, 0usize, 0usize);
     for edge in &surface.edges[i] {
         for (section, at) in edge.iter().enumerate().filter(|(_, at)| at.is_finite()) {
-            let pixel = [section, (at.round().max(0.0) as usize).min(leaning.ncols() - 1)];
+            let pixel = [
+                section,
+                (at.round().max(0.0) as usize).min(leaning.ncols() - 1),
+            ];
             total += 1;
             leans += usize::from(leaning[pixel]);
             never += usize::from(certainty[pixel] == NEVER);

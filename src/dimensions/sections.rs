@@ -93,10 +93,7 @@ pub(super) fn cut(map: &HeightMap, pixels: PixelRegion) -> ArrayView2<'_, f32> {
 }
 
 fn cut_array<T>(array: ArrayView2<'_, T>, p: PixelRegion) -> ArrayView2<'_, T> {
-    array.slice_move(s![
-        p.row..p.row + p.rows,
-        p.column..p.column + p.columns
-    ])
+    array.slice_move(s![p.row..p.row + p.rows, p.column..p.column + p.columns])
 }
 
 /// The noise given, or measured in the region along the fast axis; 0 where neither can be had.
@@ -177,8 +174,7 @@ pub(super) struct Layout {
 impl Layout {
     /// The two levels and the edges between them, or why there are none.
     pub fn find(sections: ArrayView2<f32>, noise: f64) -> std::result::Result<Self, String> {
-        let profile = central_profile(sections)
-            .ok_or_else(|| "the region is void".to_owned())?;
+        let profile = central_profile(sections).ok_or_else(|| "the region is void".to_owned())?;
         let every = (sections.len() / 40_000).max(1);
         let mut heights: Vec<f64> = sections
             .iter()
@@ -258,7 +254,9 @@ fn central_profile(sections: ArrayView2<f32>) -> Option<Vec<f64>> {
 
 /// Fills NaN by straight lines between neighbours, flat at the ends; false when all is NaN.
 fn bridge(values: &mut [f64]) -> bool {
-    let known: Vec<usize> = (0..values.len()).filter(|&i| values[i].is_finite()).collect();
+    let known: Vec<usize> = (0..values.len())
+        .filter(|&i| values[i].is_finite())
+        .collect();
     let (Some(&first), Some(&last)) = (known.first(), known.last()) else {
         return false;
     };
@@ -385,15 +383,17 @@ pub(super) fn crossing_from(
         middle.ceil() as isize
     };
     i -= step;
-    let inside = |i: isize| {
-        i >= 0 && i <= last && i as f64 >= window.0 - 1.0 && i as f64 <= window.1 + 1.0
-    };
+    let inside =
+        |i: isize| i >= 0 && i <= last && i as f64 >= window.0 - 1.0 && i as f64 <= window.1 + 1.0;
     if !inside(i) {
         i += step;
     }
     let (mut first, mut at_last): (Option<f64>, f64) = (None, 0.0);
     while inside(i) && inside(i + step) {
-        let (a, b) = (f64::from(row[i as usize]), f64::from(row[(i + step) as usize]));
+        let (a, b) = (
+            f64::from(row[i as usize]),
+            f64::from(row[(i + step) as usize]),
+        );
         if a.is_nan() || b.is_nan() {
             break;
         }
@@ -453,9 +453,17 @@ mod tests {
     #[test]
     fn flat_and_void_regions_say_so() {
         let flat = HeightMap::from_fn(5, 5, Pitch::square(1.0), |_, _| 1.0).unwrap();
-        assert!(Layout::find(flat.heights(), 0.1).unwrap_err().contains("flat"));
+        assert!(
+            Layout::find(flat.heights(), 0.1)
+                .unwrap_err()
+                .contains("flat")
+        );
         let void = HeightMap::from_fn(5, 5, Pitch::square(1.0), |_, _| f64::NAN).unwrap();
-        assert!(Layout::find(void.heights(), 0.1).unwrap_err().contains("void"));
+        assert!(
+            Layout::find(void.heights(), 0.1)
+                .unwrap_err()
+                .contains("void")
+        );
     }
 
     #[test]

@@ -36,7 +36,13 @@ pub(super) fn clipped(values: &[f64], limit: f64) -> Vec<f64> {
     let reach = (limit * deviation).max(1e-6 * centre.abs()).max(1e-9);
     values
         .iter()
-        .map(|&v| if (v - centre).abs() <= reach { v } else { f64::NAN })
+        .map(|&v| {
+            if (v - centre).abs() <= reach {
+                v
+            } else {
+                f64::NAN
+            }
+        })
         .collect()
 }
 
@@ -88,7 +94,11 @@ pub(super) fn level(heights: &mut Vec<f64>, noise: f64) -> Option<Level> {
         first = heights.partition_point(|&z| z < value - reach);
         last = heights.partition_point(|&z| z <= value + reach);
         if first >= last {
-            return Some(Level { value: centre, deviation: spread, count: 1 });
+            return Some(Level {
+                value: centre,
+                deviation: spread,
+                count: 1,
+            });
         }
         let next = heights[first..last].iter().sum::<f64>() / (last - first) as f64;
         let done = (next - value).abs() < 1e-3 * spread;
@@ -99,7 +109,11 @@ pub(super) fn level(heights: &mut Vec<f64>, noise: f64) -> Option<Level> {
     }
     let taken = &heights[first..last];
     let variance = taken.iter().map(|z| (z - value).powi(2)).sum::<f64>() / taken.len() as f64;
-    Some(Level { value, deviation: variance.sqrt(), count: taken.len() })
+    Some(Level {
+        value,
+        deviation: variance.sqrt(),
+        count: taken.len(),
+    })
 }
 
 /// Half-sample mode of sorted values: the shortest half, again and again.
@@ -125,7 +139,9 @@ pub(super) fn two_class_threshold(heights: &[f64]) -> Option<f64> {
     let (low, high) = heights
         .iter()
         .filter(|v| v.is_finite())
-        .fold((f64::INFINITY, f64::NEG_INFINITY), |(l, h), &v| (l.min(v), h.max(v)));
+        .fold((f64::INFINITY, f64::NEG_INFINITY), |(l, h), &v| {
+            (l.min(v), h.max(v))
+        });
     if !(high > low) {
         return None;
     }
@@ -208,7 +224,9 @@ mod tests {
 
     #[test]
     fn the_level_is_the_plateau_not_the_wall() {
-        let mut heights: Vec<f64> = (0..400).map(|i| 10.0 + 0.1 * ((i * 37 % 101) as f64 / 50.0 - 1.0)).collect();
+        let mut heights: Vec<f64> = (0..400)
+            .map(|i| 10.0 + 0.1 * ((i * 37 % 101) as f64 / 50.0 - 1.0))
+            .collect();
         heights.extend((0..300).map(|i| 10.5 + f64::from(i) * 0.1));
         let found = level(&mut heights, 0.06).unwrap();
         assert!((found.value - 10.0).abs() < 0.01, "{found:?}");

@@ -141,7 +141,11 @@ impl Zones {
                 let (before, after) = layout.reach(i);
                 [-1.0, 1.0].map(|side: f64| {
                     let reach = if side < 0.0 { before } else { after };
-                    let target = if (side > 0.0) == edge.rising { 1.0 } else { 0.0 };
+                    let target = if (side > 0.0) == edge.rising {
+                        1.0
+                    } else {
+                        0.0
+                    };
                     clearance(&flat, edge.at, side, reach, target, tolerance)
                 })
             })
@@ -154,12 +158,15 @@ impl Zones {
             return Err("no flat zone beside the edge".to_owned());
         };
         let rising = self.layout.edges[0].rising;
-        let zone = |upper, from, to| Zone { upper, edge: 0, from, to };
-        self.zones = vec![
-            zone(!rising, -before, -left),
-            zone(rising, right, after),
-        ];
-        self.flags.push("a single edge: two plane-parallel regions beside it".to_owned());
+        let zone = |upper, from, to| Zone {
+            upper,
+            edge: 0,
+            from,
+            to,
+        };
+        self.zones = vec![zone(!rising, -before, -left), zone(rising, right, after)];
+        self.flags
+            .push("a single edge: two plane-parallel regions beside it".to_owned());
         Ok(())
     }
 
@@ -180,33 +187,55 @@ impl Zones {
             self.floor_lost = true;
         } else {
             if inner < width / 6.0 {
-                self.flags.push("the walls reach into the middle third; it was narrowed".to_owned());
+                self.flags
+                    .push("the walls reach into the middle third; it was narrowed".to_owned());
             }
             let from = width / 2.0 - inner;
-            self.zones.push(Zone { upper: ridge, edge: 0, from, to: width - from });
+            self.zones.push(Zone {
+                upper: ridge,
+                edge: 0,
+                from,
+                to: width - from,
+            });
         }
         let mut outer = Vec::new();
         for (edge, side) in [(0, 0), (1, 1)] {
             let index = self.first + edge;
             let (before, after) = layout.reach(index);
-            let neighbour = if side == 0 { index > 0 } else { index + 1 < layout.edges.len() };
+            let neighbour = if side == 0 {
+                index > 0
+            } else {
+                index + 1 < layout.edges.len()
+            };
             let half = if side == 0 { before } else { after };
-            let Some(wall) = clear[edge][side] else { continue };
+            let Some(wall) = clear[edge][side] else {
+                continue;
+            };
             // To the region's border, or to the neighbour's wall.
             let space = if neighbour { 2.0 * half - wall } else { half };
             let mut from = wall.max(width / 3.0);
             if from + FEWEST as f64 > space {
                 from = wall.max(space / 3.0);
-                self.flags.push("too little room for the zones of ISO 5436-1; nearer ones used".to_owned());
+                self.flags.push(
+                    "too little room for the zones of ISO 5436-1; nearer ones used".to_owned(),
+                );
             }
             let to = space.min(width);
             if to < width - 1.0 {
-                self.flags.push("the region or the next wall cuts the outer zones short of w beyond the edge".to_owned());
+                self.flags.push(
+                    "the region or the next wall cuts the outer zones short of w beyond the edge"
+                        .to_owned(),
+                );
             }
             let to = to.max(from + FEWEST as f64).min(space);
             if to - from >= FEWEST as f64 - 1.0 {
                 let (from, to) = if side == 0 { (-to, -from) } else { (from, to) };
-                outer.push(Zone { upper: !ridge, edge, from, to });
+                outer.push(Zone {
+                    upper: !ridge,
+                    edge,
+                    from,
+                    to,
+                });
             }
         }
         self.flags.dedup();
@@ -214,7 +243,8 @@ impl Zones {
             return Err("no flat zone beside the feature".to_owned());
         }
         if outer.len() == 1 {
-            self.flags.push("a flat zone on one side of the feature only".to_owned());
+            self.flags
+                .push("a flat zone on one side of the feature only".to_owned());
         }
         self.zones.extend(outer);
         Ok(())
@@ -259,7 +289,10 @@ fn detrended(layout: &Layout) -> Vec<f64> {
     let mut up = !layout.edges[0].rising;
     for to in ends {
         let quarter = 0.25 * (to - from);
-        let (a, b) = ((from + quarter).ceil() as usize, (to - quarter).floor() as usize);
+        let (a, b) = (
+            (from + quarter).ceil() as usize,
+            (to - quarter).floor() as usize,
+        );
         for c in a..=b.min(layout.profile.len() - 1) {
             sums.add(c as f64, f64::from(u8::from(up)), layout.profile[c]);
         }
@@ -391,7 +424,11 @@ impl Fit {
                         .filter(|p| p.1 == up)
                         .map(|p| p.2 - slope * p.0 as f64)
                         .collect();
-                    if values.len() < FEWEST { f64::NAN } else { statistics::mean(&values) }
+                    if values.len() < FEWEST {
+                        f64::NAN
+                    } else {
+                        statistics::mean(&values)
+                    }
                 };
                 side(true) - side(false)
             })
@@ -471,7 +508,11 @@ fn waviness(rows: &[Vec<(usize, bool, f64)>], slope: f64, noise: f64) -> f64 {
                 sums[p.0].1 += 1.0;
             }
         }
-        let profile: Vec<f64> = sums.iter().filter(|s| s.1 > 0.0).map(|s| s.0 / s.1).collect();
+        let profile: Vec<f64> = sums
+            .iter()
+            .filter(|s| s.1 > 0.0)
+            .map(|s| s.0 / s.1)
+            .collect();
         let depth = sums.iter().map(|s| s.1).fold(0.0, f64::max);
         let Some(series) = Series::of(&profile) else {
             return 0.0;
@@ -484,10 +525,17 @@ fn waviness(rows: &[Vec<(usize, bool, f64)>], slope: f64, noise: f64) -> f64 {
 
 fn budget_of(fit: &Fit, calibration: f64, noise: f64) -> Budget {
     let mut budget = Budget::new();
-    budget.push("z calibration", calibration, Distribution::Normal, fit.heights.mean);
+    budget.push(
+        "z calibration",
+        calibration,
+        Distribution::Normal,
+        fit.heights.mean,
+    );
     let white = noise * fit.noise_gain;
     budget.push("noise", noise, Distribution::Normal, fit.noise_gain);
-    let excess = (fit.heights.standard_error().powi(2) - white * white).max(0.0).sqrt();
+    let excess = (fit.heights.standard_error().powi(2) - white * white)
+        .max(0.0)
+        .sqrt();
     budget.add(Component {
         source: "scatter of the sections beyond the noise".to_owned(),
         u: excess,
@@ -506,22 +554,28 @@ fn budget_of(fit: &Fit, calibration: f64, noise: f64) -> Budget {
 
 fn flags(line: &mut Dimension, input: &Input, frame: &Frame, fit: &Fit) {
     if fit.sections.0 < 3 {
-        line.flags.push(format!("too few sections: {}", fit.sections.0));
+        line.flags
+            .push(format!("too few sections: {}", fit.sections.0));
     } else if 2 * fit.sections.0 < fit.sections.1 {
         let (used, all) = fit.sections;
-        line.flags.push(format!("only {used} of {all} sections could be used"));
+        line.flags
+            .push(format!("only {used} of {all} sections could be used"));
     }
     if fit.voids > 0 {
-        line.flags.push(format!("{} void pixels inside the zones", fit.voids));
+        line.flags
+            .push(format!("{} void pixels inside the zones", fit.voids));
     }
     if fit.outliers > 0 {
-        line.flags.push(format!("{} outlying pixels left out", fit.outliers));
+        line.flags
+            .push(format!("{} outlying pixels left out", fit.outliers));
     }
     if frame.axis == super::Axis::Y {
-        line.flags.push("taken along the slow axis: drift enters in full".to_owned());
+        line.flags
+            .push("taken along the slow axis: drift enters in full".to_owned());
     }
     if input.calibration.z == 0.0 {
-        line.flags.push("no uncertainty of the z calibration was given".to_owned());
+        line.flags
+            .push("no uncertainty of the z calibration was given".to_owned());
     }
 }
 
@@ -536,7 +590,8 @@ fn correct(
 ) {
     let map: &HeightMap = given.surface;
     let Some(fit) = Fit::of(frame.of(map), zones, frame) else {
-        line.flags.push("no corrected value: the zones are void in the surface".to_owned());
+        line.flags
+            .push("no corrected value: the zones are void in the surface".to_owned());
         line.budget = budget_of(scanned, input.calibration.z, frame.noise).into_components();
         return;
     };
@@ -544,7 +599,12 @@ fn correct(
     let change = fit.heights.mean - scanned.heights.mean;
     // Plateaus are parallel before and after: what changes is noise taken differently.
     let u = change.abs() / 3f64.sqrt();
-    budget.push("change by the tip correction", u, Distribution::Rectangular, 1.0);
+    budget.push(
+        "change by the tip correction",
+        u,
+        Distribution::Rectangular,
+        1.0,
+    );
     lean(line, frame, zones, given);
     let all = budget.combined(0.95);
     let value = fit.heights.mean;
@@ -558,7 +618,10 @@ fn correct(
     };
     line.status = Some(Status::Touched);
     if !given.identified {
-        let (a, b) = (value.min(scanned.heights.mean), value.max(scanned.heights.mean));
+        let (a, b) = (
+            value.min(scanned.heights.mean),
+            value.max(scanned.heights.mean),
+        );
         column = CorrectedValue {
             value: None,
             u: None,
@@ -588,13 +651,10 @@ fn floor_lost(line: &mut Dimension, input: &Input, frame: &Frame, zones: &Zones)
                 .iter()
                 .map(|&(c, _)| f64::from(sections[[section, c]]))
                 .collect();
-            let mut inside: Vec<f64> = (a.max(0.0) as usize..=b.max(0.0) as usize)
+            let lowest = (a.max(0.0) as usize..=b.max(0.0) as usize)
                 .filter_map(|c| sections.get([section, c]).map(|&z| f64::from(z)))
                 .filter(|z| z.is_finite())
-                .collect();
-            inside.sort_unstable_by(f64::total_cmp);
-            // The mean of the lowest three is less of a noise extreme than the lowest.
-            let lowest = statistics::mean(&inside[..inside.len().min(3)]);
+                .fold(f64::INFINITY, f64::min);
             statistics::median(&mut rim).unwrap_or(f64::NAN) - lowest
         })
         .collect();
@@ -614,7 +674,12 @@ fn floor_lost(line: &mut Dimension, input: &Input, frame: &Frame, zones: &Zones)
         Distribution::Normal,
         series.mean,
     );
-    budget.push("noise of the lowest pixels", frame.noise, Distribution::Normal, 1.0);
+    budget.push(
+        "noise of the lowest pixel",
+        frame.noise,
+        Distribution::Normal,
+        1.0,
+    );
     budget.add(Component {
         source: "scatter of the sections".to_owned(),
         u: series.standard_error(),

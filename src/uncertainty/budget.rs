@@ -133,7 +133,10 @@ impl Budget {
 /// (at least 1), the normal distribution for `None`. JCGM 100:2008, G.3, G.4.
 pub fn coverage_factor(coverage: f64, degrees_of_freedom: Option<f64>) -> f64 {
     // Beyond 10^5 degrees of freedom t and normal agree to 5 digits.
-    let freedom = degrees_of_freedom.unwrap_or(f64::INFINITY).floor().clamp(1.0, 1e5);
+    let freedom = degrees_of_freedom
+        .unwrap_or(f64::INFINITY)
+        .floor()
+        .clamp(1.0, 1e5);
     let upper = 0.5 + 0.5 * coverage.clamp(0.0, 1.0 - 1e-9);
     StudentsT::new(0.0, 1.0, freedom).map_or(1.96, |t| t.inverse_cdf(upper))
 }

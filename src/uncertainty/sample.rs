@@ -123,7 +123,10 @@ mod tests {
         assert_eq!(Series::of(&[]), None);
         assert_eq!(Series::of(&[f64::NAN]), None);
         let one = Series::of(&[3.0]).unwrap();
-        assert_eq!((one.mean, one.standard_error(), one.degrees_of_freedom()), (3.0, 0.0, None));
+        assert_eq!(
+            (one.mean, one.standard_error(), one.degrees_of_freedom()),
+            (3.0, 0.0, None)
+        );
         let same = Series::of(&[2.0; 9]).unwrap();
         assert_eq!((same.deviation, same.effective), (0.0, 9.0));
     }
