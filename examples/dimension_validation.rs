@@ -331,9 +331,30 @@ fn cases() -> Vec<Case> {
     add("trench width", stout, 88.0, 0.3, Scene::Trench, 0.5);
     add("step height, ridge", slim, 85.0, 0.2, Scene::Ridge, 0.5);
     add("step height, edge", stout, 80.0, 0.2, Scene::Step, 0.5);
-    add("particle height", stout, 90.0, 0.2, Scene::ParticleHeight, 0.5);
-    add("particle diameter", stout, 90.0, 0.2, Scene::ParticleDiameter, 0.5);
-    add("particle diameter", slim, 90.0, 0.2, Scene::ParticleDiameter, 0.5);
+    add(
+        "particle height",
+        stout,
+        90.0,
+        0.2,
+        Scene::ParticleHeight,
+        0.5,
+    );
+    add(
+        "particle diameter",
+        stout,
+        90.0,
+        0.2,
+        Scene::ParticleDiameter,
+        0.5,
+    );
+    add(
+        "particle diameter",
+        slim,
+        90.0,
+        0.2,
+        Scene::ParticleDiameter,
+        0.5,
+    );
     add("pitch", slim, 80.0, 0.2, Scene::Pitch, 0.5);
     cases
 }
@@ -349,7 +370,9 @@ fn main() -> ExitCode {
     let first = number("--seed").unwrap_or(1);
     let only = number("--only");
     let verbose = arguments.iter().any(|a| a == "--verbose");
-    println!("| measurand | tip R, half-angle | wall | noise | n | scanned | corrected | rms | touched | coverage | interval |");
+    println!(
+        "| measurand | tip R, half-angle | wall | noise | n | scanned | corrected | rms | touched | coverage | interval |"
+    );
     println!("|---|---|---|---|---|---|---|---|---|---|---|");
     let mut failed = false;
     for (index, case) in cases().iter().enumerate() {
