@@ -4,7 +4,7 @@ use super::diagnose::{LEAST_FEATURES, caution, further_apices, refusal};
 use super::polish::{self, Polished};
 use super::{Bound, Diagnosis, Estimate, Method, Settings, smooth};
 use crate::error::Result;
-use crate::heightmap::HeightMap;
+use crate::heightmap::{HeightMap, Pitch};
 use crate::morphology;
 use crate::progress::Progress;
 use crate::tip::model::Model;
@@ -33,6 +33,7 @@ pub(super) fn finish(
         let input = polish::Input {
             scan: scan.heights(),
             noise,
+            px: (scan.pitch().x * scan.pitch().y).sqrt(),
             smoothing: bound.smoothing,
             smooth_noise: left,
         };
@@ -67,7 +68,9 @@ fn from_polished(
     let exercised = exercised_depth(&tip, &support, polished);
     let scatter = jackknife(&shape, &others);
     let cell_u = typical_u(&tip, &scatter, exercised);
-    let mut height_u = cell_u;
+    // What bilinear interpolation between the cells of a cap can err by.
+    let chord = px * px / (4.0 * rough_radius(&tip).filter(|r| *r > px).unwrap_or(px));
+    let mut height_u = cell_u.max(chord);
     // What leaving out features does to the radius says more than the cells' scatter.
     let first = exercised.map(|z| read_out(&tip, z, height_u));
     let radius_u = first.as_ref().and_then(|r| r.apex_radius).and_then(|r| {
@@ -97,6 +100,7 @@ fn from_polished(
             ..ReadOut::default()
         },
     };
+    // Features that stand out from the noise and show the fitted cap.
     let seeing = read.apex_radius.map_or(features, |r| {
         let needed = (0.5 * r.fit_depth_nm).max(TALL * noise);
         polished
@@ -252,7 +256,7 @@ impl Centring {
         let Some(fit) = Quadric::fit(heights.view(), pitch, depth, 0.1 * depth) else {
             return none;
         };
-        let (rows, columns) = (fit.apex[1] / tip.pitch().y, fit.apex[0] / tip.pitch().x);
+        let (rows, columns) = (fit.apex[1] / pitch.y, fit.apex[0] / pitch.x);
         // A fit that puts the apex elsewhere describes no apex.
         if fit.radius().is_none() || rows.abs() > 2.0 || columns.abs() > 2.0 {
             return none;
@@ -310,7 +314,7 @@ fn exercised_depth(tip: &Tip, support: &Array2<u32>, polished: &Polished) -> Opt
     reaches.sort_by(|a, b| b.total_cmp(a));
     let third = reaches.get(2.min(reaches.len().checked_sub(1)?))?;
     seen_depth(tip, &seen)
-        .map(|z| z.min(*third))
+        .map(|z| z.min(0.95 * third))
         .filter(|z| *z > 0.0)
 }
 
@@ -350,7 +354,7 @@ fn jackknife(shape: &Array2<f64>, others: &[Array2<f64>]) -> Array2<f64> {
 fn radius_scatter(others: &[Array2<f64>], pitch: Pitch, depth: f64, noise: f64) -> Option<f64> {
     let radii: Vec<f64> = others
         .iter()
-        .filter_map(|o| Quadric::fit(&Tip::new(clamped(o), pitch).ok()?, depth)?.radius())
+        .filter_map(|o| Quadric::fit(clamped(o).view(), pitch, depth, noise)?.radius())
         .collect();
     let n = radii.len() as f64;
     if radii.len() < others.len() || n < 3.0 {
