@@ -68,7 +68,9 @@ fn from_polished(
     let exercised = exercised_depth(&tip, &support, polished);
     let scatter = jackknife(&shape, &others);
     let cell_u = typical_u(&tip, &scatter, exercised);
-    let mut height_u = cell_u;
+    // What bilinear interpolation between the cells of a cap can err by.
+    let chord = px * px / (4.0 * rough_radius(&tip).filter(|r| *r > px).unwrap_or(px));
+    let mut height_u = cell_u.max(chord);
     // What leaving out features does to the radius says more than the cells' scatter.
     let first = exercised.map(|z| read_out(&tip, z, height_u));
     let radius_u = first.as_ref().and_then(|r| r.apex_radius).and_then(|r| {
