@@ -7,7 +7,7 @@
 use super::erosion;
 use super::sections::{self, region_pixels};
 use super::segmentation::{self, Segment};
-use super::statistics;
+use super::statistics::{self, Level};
 use super::wall::{self, Outline, Wall};
 use super::{
     Axis, Corrected, CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer,
@@ -77,7 +77,7 @@ pub(super) fn measure(
         pitch: input.scan.pitch(),
         pixels,
         noise,
-        base: base.value,
+        base,
         corrected: input.corrected,
         calibration: [
             input.calibration.x,
@@ -334,7 +334,7 @@ struct Field<'a> {
     pitch: Pitch,
     pixels: PixelRegion,
     noise: f64,
-    base: f64,
+    base: Level,
     corrected: Option<Corrected<'a>>,
     calibration: [f64; 3],
 }
@@ -344,7 +344,8 @@ impl Field<'_> {
         let window = Window::around(segment, self.scan.dim());
         let size = (segment.pixels.len() as f64 / PI).sqrt();
         let summit = summit(self.scan, segment, size)?;
-        let base = window.base(self.scan, self.noise).unwrap_or(self.base);
+        let level = window.base(self.scan, self.noise).unwrap_or(self.base);
+        let base = level.value;
         let height = summit.height - base;
         if !(height > 0.0) {
             return None;
@@ -380,7 +381,14 @@ impl Field<'_> {
             room: [0.0; 2],
             radius_shift: 0.0,
             touched: true,
-            parts: vec![("noise of the fitted summit", self.noise * summit.gain)],
+            parts: vec![
+                ("noise of the fitted summit", self.noise * summit.gain),
+                // A hundredth of the pixels taken as independent: drift and waviness.
+                (
+                    "level of the surroundings",
+                    level.deviation / (level.count as f64 / 100.0).max(1.0).sqrt(),
+                ),
+            ],
             calibration: self.calibration[2],
             flags: Vec::new(),
         };
@@ -391,7 +399,7 @@ impl Field<'_> {
         }
         if let (Some(surface), Some(given)) = (self.surface, self.corrected) {
             let below = summit_height(surface, segment, size);
-            let floor = window.base(surface, self.noise);
+            let floor = window.base(surface, self.noise).map(|l| l.value);
             if let (Some(below), Some(floor)) = (below, floor) {
                 let course = self.course(&window, surface, segment, floor, below - floor);
                 self.correct(&mut figure, &course, &given);
@@ -563,7 +571,7 @@ impl Window {
     }
 
     /// Densest level on the window's rim, nm; `None` when it has too few pixels.
-    fn base(&self, map: ArrayView2<f32>, noise: f64) -> Option<f64> {
+    fn base(&self, map: ArrayView2<f32>, noise: f64) -> Option<Level> {
         let part = self.of(map);
         let (rows, columns) = part.dim();
         let rim = |r: usize, c: usize| r < 3 || c < 3 || r + 3 >= rows || c + 3 >= columns;
@@ -573,7 +581,7 @@ impl Window {
             .map(|(_, &z)| f64::from(z))
             .collect();
         let level = statistics::level(&mut heights, noise)?;
-        (level.count >= 20).then_some(level.value)
+        (level.count >= 20).then_some(level)
     }
 }
 
