@@ -213,6 +213,7 @@ fn one(case: &Case, seed: u64) -> Result<(Vec<Dimension>, f64)> {
         scan.heights(),
         tip.shape(),
         (3.0 * noise) as f32,
+        [0, 0],
         &progress,
     )?;
     let leaning =

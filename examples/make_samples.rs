@@ -2,15 +2,14 @@
 //! program makes.
 //!
 //! ```text
-//! cargo run --release --no-default-features --example make_samples -- sample-scans
+//! cargo run --release --no-default-features --example make_samples
 //! cargo run --release --no-default-features --example make_samples -- --check sample-scans
 //! ```
 
 use anyhow::{Context, Result, bail};
-use ndarray_npy::WriteNpyExt;
 use serde::Serialize;
 use std::path::Path;
-use truewidth::heightmap::{HeightMap, Pitch};
+use truewidth::heightmap::Pitch;
 use truewidth::progress::Progress;
 use truewidth::tip::model::Model;
 use truewidth::virtual_scan::{
@@ -171,9 +170,9 @@ fn stamp_14() -> Result<Sample> {
         seed: 14,
         ..Settings::new(512, 512, Pitch::square(2.0))
     };
-    let lines = Lines::new(110.3, 200.0, 4, 100.0, 60.0);
-    // Free of the lines' image: 37 nm from the last wall, the tip's half-width at 60 nm being 26.
-    let at = scatter(&[7.0; 16], 48.0, [797.0, 0.0], [1024.0, 1024.0], 1400)?;
+    let lines = Lines::new(110.3, 200.0, 3, 100.0, 60.0);
+    // The spikes' images reach 33 nm around and stay clear of line 3 and of the floor beside it.
+    let at = scatter(&[7.0; 36], 48.0, [638.0, 0.0], [1024.0, 1024.0], 1400)?;
     let spikes: Vec<Bump> = at
         .iter()
         .enumerate()
@@ -212,7 +211,7 @@ fn stamp_14() -> Result<Sample> {
 /// The tip of stamp 22 and of the spikes it was checked on.
 const SLENDER: Model = Model::SphereCone {
     radius: 8.0,
-    half_angle: 8.0,
+    half_angle: 10.0,
 };
 
 /// Stamp 22: a grating with sloped walls, rounded corners and rough edges.
@@ -235,7 +234,7 @@ fn stamp_22() -> Result<Sample> {
         seed: 2200,
     };
     let lines = Lines::new(63.7, 128.0, 4, 60.0, 40.0)
-        .walls(80.0, 3.0)
+        .walls(75.0, 3.0)
         .rough(roughness, -40.0, 552.0)?;
     let mut dimensions = line_widths(&lines, &settings);
     dimensions.push(one("height of line 2", "step-height", "step height", 40.0));
@@ -243,7 +242,7 @@ fn stamp_22() -> Result<Sample> {
     let roughness = edge_roughness(&lines, &settings);
     dimensions.push(one(
         "edge roughness (3 s)",
-        "line-width",
+        "edge-roughness",
         "line edge roughness",
         roughness,
     ));
@@ -421,14 +420,7 @@ fn true_tip(tip: Model, support_nm: f64) -> Result<TrueTip> {
     }
 }
 
-/// The heights as `.npy` bytes.
-fn npy(map: &HeightMap) -> Result<Vec<u8>> {
-    let mut bytes = Vec::new();
-    map.heights().write_npy(&mut bytes)?;
-    Ok(bytes)
-}
-
-/// Scans `sample` and writes its three files under `dir`.
+/// Scans `sample` and writes its files under `dir`.
 fn make(sample: Sample, dir: &Path) -> Result<()> {
     let Sample {
         name,
@@ -443,6 +435,8 @@ fn make(sample: Sample, dir: &Path) -> Result<()> {
         &settings,
         &Progress::new(),
     )?;
+    let truth_dir = dir.join("truth");
+    std::fs::create_dir_all(&truth_dir)?;
     truewidth::files::write(&dir.join(name).with_extension("tiff"), &made.scan)?;
     let distortion = settings.distortion;
     let truth = Truth {
@@ -464,30 +458,30 @@ fn make(sample: Sample, dir: &Path) -> Result<()> {
         dimensions: sample.dimensions,
         features: sample.features,
     };
-    let truth_dir = dir.join("truth");
-    std::fs::create_dir_all(&truth_dir)?;
     std::fs::write(
         truth_dir.join(format!("{name}.toml")),
         toml::to_string(&truth)?,
     )?;
-    std::fs::write(truth_dir.join(format!("{name}.npy")), npy(&made.truth)?)?;
+    truewidth::files::write(&truth_dir.join(format!("{name}.npy")), &made.truth)?;
     Ok(())
 }
 
-fn names(sample: &str) -> [String; 3] {
+fn names(sample: &str) -> [String; 4] {
     [
         format!("{sample}.tiff"),
         format!("truth/{sample}.toml"),
         format!("truth/{sample}.npy"),
+        format!("truth/{sample}.npy.toml"),
     ]
 }
 
 fn main() -> Result<()> {
     let arguments: Vec<String> = std::env::args().skip(1).collect();
     let (check, dir) = match arguments.iter().map(String::as_str).collect::<Vec<_>>()[..] {
+        [] => (false, "sample-scans"),
         ["--check", dir] => (true, dir),
         [dir] if !dir.starts_with('-') => (false, dir),
-        _ => bail!("usage: make_samples [--check] DIR"),
+        _ => bail!("usage: make_samples [[--check] DIR]"),
     };
     let dir = Path::new(dir);
     let fresh = tempfile::tempdir()?;

@@ -17,5 +17,7 @@ pub mod tip;
 pub mod uncertainty;
 pub mod units;
 pub mod virtual_scan;
+#[cfg(feature = "window")]
+pub mod window;
 
 pub use error::{Error, ErrorKind, Result};

@@ -6,6 +6,7 @@ use crate::error::{Error, ErrorKind, Result};
 use crate::files::{self, OpenOptions};
 use crate::heightmap::HeightMap;
 use crate::job::{self, Job, Stages, Threshold, TipFrom};
+use crate::leveling;
 use crate::morphology;
 use crate::record;
 use crate::tip::Tip;
@@ -38,8 +39,96 @@ fn at(path: &Path, error: Error) -> Error {
 }
 
 /// `truewidth inspect`
-pub fn inspect(_file: &Path, _json: bool, _common: &Common) -> Result<()> {
-    todo!()
+pub fn inspect(path: &Path, json: bool, common: &Common) -> Result<()> {
+    let facts = files::inspect(path, &options(common))?;
+    // The noise needs heights in nm; where a scale is missing the facts already say so.
+    let noise_nm = files::open(path, &options(common))
+        .ok()
+        .and_then(|m| leveling::noise(&m));
+    if json {
+        let mut value = serde_json::to_value(&facts)
+            .map_err(|e| Error::new(ErrorKind::Data, format!("{}: {e}", path.display())))?;
+        value["noise_nm"] = noise_nm.into();
+        println!("{value:#}");
+    } else {
+        print!("{}", facts_text(&facts, noise_nm));
+    }
+    Ok(())
+}
+
+fn facts_text(facts: &files::Inspection, noise_nm: Option<f64>) -> String {
+    let mut lines = vec![
+        ("file", facts.file.display().to_string()),
+        ("format", format!("{}, {} bytes", facts.format, facts.bytes)),
+        ("sha256", facts.sha256.clone()),
+    ];
+    for map in &facts.maps {
+        let name = if map.name.is_empty() {
+            String::new()
+        } else {
+            format!(" \"{}\"", map.name)
+        };
+        lines.push((
+            "map",
+            format!(
+                "{}{name}: {} x {} pixels, {}",
+                map.index, map.columns, map.rows, map.sample_type
+            ),
+        ));
+    }
+    let by = |source: &Option<String>| {
+        source
+            .as_ref()
+            .map(|s| format!(" ({s})"))
+            .unwrap_or_default()
+    };
+    if facts.map.is_some() {
+        lines.push((
+            "pitch",
+            match facts.pitch_nm {
+                Some([x, y]) => format!("{x} nm, {y} nm{}", by(&facts.pitch_source)),
+                None => "not stated; give --pitch".to_owned(),
+            },
+        ));
+        lines.push((
+            "heights",
+            match &facts.height_unit {
+                Some(unit) => format!("in {unit}{}", by(&facts.height_source)),
+                None => "unit not stated; give --height-unit".to_owned(),
+            },
+        ));
+        lines.push((
+            "range",
+            match (facts.range_nm, facts.range_raw) {
+                (Some([low, high]), _) => format!("{low} nm to {high} nm"),
+                (None, Some([low, high])) => format!("{low} to {high}, unit not stated"),
+                (None, None) => "none: every pixel is void".to_owned(),
+            },
+        ));
+        lines.push((
+            "voids",
+            facts
+                .voids
+                .map_or_else(|| "unknown".to_owned(), |n| n.to_string()),
+        ));
+        lines.push((
+            "noise",
+            match noise_nm {
+                Some(noise) => format!("{noise:.3} nm, standard deviation of its white part"),
+                None => "not to be had without a scale or with so few pixels".to_owned(),
+            },
+        ));
+    } else {
+        lines.push((
+            "choose",
+            "several maps: give --map N for scale and range".to_owned(),
+        ));
+    }
+    lines.extend(facts.notes.iter().map(|note| ("note", note.clone())));
+    lines
+        .iter()
+        .map(|(name, text)| format!("{name:8} {text}\n"))
+        .collect()
 }
 
 /// `truewidth convert`
@@ -121,6 +210,7 @@ pub fn reconstruct(
                 map.heights(),
                 tip.shape(),
                 tolerance,
+                [0, 0],
                 &progress.part(0.5, 1.0),
             )?;
             files::write_npy_u8(path, marks.view())?;

@@ -11,6 +11,7 @@ use crate::error::{ErrorKind, Result};
 use clap::CommandFactory;
 use show::Show;
 use std::io::Write;
+use std::path::Path;
 use std::process::ExitCode;
 
 /// All done.
@@ -104,6 +105,27 @@ fn print_bytes(bytes: &[u8]) {
     let _ = std::io::stdout().lock().write_all(bytes);
 }
 
-fn open_window(_cli: &Cli, _show: &Show) -> Result<u8> {
-    todo!("with the window room")
+/// Opens the window on the file or on the demo job; where there is none, runs the job headless.
+fn open_window(cli: &Cli, show: &Show) -> Result<u8> {
+    let mut job = match &cli.file {
+        Some(path) => run::open_job(path, &cli.common)?,
+        None => crate::job::demo()?,
+    };
+    let Some(why) = window_or_why(&mut job) else {
+        return Ok(DONE);
+    };
+    show.note(&format!("{why}; running the job headless"));
+    let stem = job.path.clone().unwrap_or_else(|| job.scan_path());
+    let folder = Path::new("results").join(stem.file_stem().unwrap_or_default());
+    let outcome = show.during("job", |progress| {
+        crate::job::Stages::default().run(&job, progress, &mut |_| {})
+    })?;
+    println!("{}", run::write_record(&job, &outcome, &folder)?);
+    Ok(DONE)
+}
+
+/// Runs the window until it is closed; where it cannot be opened, says why.
+#[cfg(not(feature = "window"))]
+fn window_or_why(_job: &mut crate::job::Job) -> Option<String> {
+    Some("no display: this build has no window".to_owned())
 }

@@ -62,6 +62,7 @@ impl Made {
             scan.heights(),
             tip.shape(),
             (3.0 * noise) as f32,
+            [0, 0],
             &progress,
         )
         .unwrap();

@@ -289,7 +289,7 @@ fn find_tip(job: &Job, level: &Leveled, progress: &Progress) -> Result<TipOrReas
             ..blind::Settings::default()
         };
         return match blind::estimate(scan, level.noise_nm, &settings, progress) {
-            Ok(estimate) => Ok(Ok(from_estimate(estimate))),
+            Ok(estimate) => Ok(Ok(from_estimate(estimate, spec))),
             Err(e) if e.kind() == ErrorKind::Data => Ok(Err(e.to_string())),
             Err(e) => Err(e),
         };
@@ -342,76 +342,67 @@ fn tip_from_file(job: &Job, scan: &HeightMap) -> Result<(Tip, Option<String>)> {
     Ok((tip, sha256))
 }
 
-/// Opens a tip file for use with `scan`. A file without a scale is taken at the scan's pitch and
-/// in nm, as the contract of `tip.npy` says; one with another pitch is refused.
+/// Opens a tip file for use with `scan`: a tip without a pitch of its own has the scan's, one with
+/// another pitch is refused (kind `Data`). Other errors as [`files::read_tip_grid`], [`Tip::new`].
 pub fn open_tip(path: &std::path::Path, scan: &HeightMap) -> Result<Tip> {
-    let bare = files::OpenOptions::default();
-    let map = match files::open(path, &bare) {
-        Err(e)
-            if matches!(
-                e.kind(),
-                ErrorKind::MissingPitch | ErrorKind::MissingHeightUnit
-            ) && path
-                .extension()
-                .is_some_and(|e| e.eq_ignore_ascii_case("npy")) =>
-        {
-            files::open(
-                path,
-                &files::OpenOptions {
-                    pitch: Some(scan.pitch()),
-                    height_unit: Some("nm".to_owned()),
-                    map: None,
-                },
-            )?
-        }
-        other => other?,
-    };
-    if !map.pitch().agrees_with(scan.pitch()) {
-        let (a, b) = (map.pitch(), scan.pitch());
+    let grid = files::read_tip_grid(path, &files::OpenOptions::default())?;
+    if let Some(pitch) = grid.pitch
+        && !pitch.agrees_with(scan.pitch())
+    {
+        let wanted = scan.pitch();
         return Err(Error::new(
             ErrorKind::Data,
             format!(
                 "{}: the tip's pixel pitch is {} nm x {} nm, the scan's {} nm x {} nm",
                 path.display(),
-                a.x,
-                a.y,
-                b.x,
-                b.y
+                pitch.x,
+                pitch.y,
+                wanted.x,
+                wanted.y
             ),
         )
         .remedy("Give a tip on the scan's own grid"));
     }
-    Tip::from_map(&map).map_err(|e| e.context(path.display()))
+    Tip::new(grid.heights, scan.pitch()).map_err(|e| e.context(path.display()))
 }
 
-fn from_estimate(estimate: Estimate) -> TipResult {
-    let depth = estimate.exercised_depth_nm.unwrap_or(0.0);
-    let mut read_out = if depth > 0.0 {
-        read_out(&estimate.tip, depth, estimate.height_u_nm)
-    } else {
-        ReadOut::default()
-    };
-    if !estimate.apex_identified {
-        read_out.apex_radius = None;
-    }
+fn from_estimate(estimate: Estimate, spec: &TipSpec) -> TipResult {
     let mut diagnosis: Vec<String> = estimate
         .diagnosis
         .iter()
         .map(|d| format!("{}. {}", d.finding.trim_end_matches('.'), d.advice))
         .collect();
-    diagnosis.extend(read_out.reasons.iter().cloned());
+    diagnosis.extend(estimate.read_out.reasons.iter().cloned());
+    if spec.feature_radius.is_none() && estimate.read_out.apex_radius.is_some() {
+        diagnosis.push(
+            "The radius is that of the tip and of the scan's sharpest feature together. \
+             Where the feature's own radius is known, state it as [tip] feature-radius."
+                .to_owned(),
+        );
+    }
     TipResult {
         from: TipFrom::Blind,
         tip: estimate.tip.clone(),
         band: estimate.band.clone(),
         identified: estimate.apex_identified,
-        exercised_depth_nm: Some(depth),
+        exercised_depth_nm: Some(estimate.exercised_depth_nm.unwrap_or(0.0)),
         height_u_nm: estimate.height_u_nm,
         sha256: None,
         diagnosis,
-        read_out,
+        read_out: estimate.read_out.clone(),
         estimate: Some(estimate),
     }
+}
+
+/// Rows and columns over which an apex within the tolerance cannot tell where it touched: an apex
+/// of radius R is that flat over `sqrt(2 R tolerance)` to each side. 0 where no radius is known.
+fn contact_spread(found: &TipResult, tolerance_nm: f64) -> [usize; 2] {
+    let Some(apex) = found.read_out.apex_radius else {
+        return [0, 0];
+    };
+    let half_width = (2.0 * apex.value * tolerance_nm).sqrt();
+    let pitch = found.tip.pitch();
+    [pitch.y, pitch.x].map(|pitch| 2 * (half_width / pitch) as usize)
 }
 
 fn reconstruct(level: &Leveled, found: &TipResult, progress: &Progress) -> Result<SurfaceResult> {
@@ -429,6 +420,7 @@ fn reconstruct(level: &Leveled, found: &TipResult, progress: &Progress) -> Resul
         scan,
         tip,
         tolerance_nm as f32,
+        contact_spread(found, tolerance_nm),
         &progress.part(0.2, 0.5),
     )?;
     let edge_leaning =
@@ -484,7 +476,9 @@ fn measure(
             identified: tip.identified,
             height_u_nm: tip.height_u_nm,
             exercised_depth_nm: tip.exercised_depth_nm,
-            contains_feature_radius: tip.from == TipFrom::Blind,
+            // A radius that the user states was taken off by the estimate.
+            contains_feature_radius: tip.from == TipFrom::Blind
+                && spec.tip.feature_radius.is_none(),
         }),
         _ => None,
     };

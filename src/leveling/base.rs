@@ -7,6 +7,7 @@
 
 use super::model::{Model, Plane, from_middle};
 use ndarray::Array2;
+use ndarray::parallel::prelude::*;
 use statrs::function::erf::erf;
 
 /// Pixels that the search looks at; the plane is refined on all of them afterwards.
@@ -14,6 +15,9 @@ const SAMPLES: usize = 1 << 14;
 
 /// A flat that holds fewer of the pixels than this is no base.
 const SMALLEST_SHARE: f64 = 0.03;
+
+/// Share of the pixel pairs that must agree on a slope for it to be taken without a search.
+const AGREED: f64 = 0.4;
 
 /// Of two levels whose areas differ by no more than this share, the lower is the base.
 const NEARLY_EQUAL: f64 = 0.2;
@@ -118,24 +122,36 @@ pub(super) fn find(
         per_column,
         per_row,
     };
+    let (across, down) = (
+        local_slope(along_x, columns, noise),
+        local_slope(along_y, rows, scale),
+    );
+    let local = tilt(across.slope, down.slope);
+    // Where near and far pixels agree on the slope there is nothing to search: a step of a few
+    // times the noise piles up best when it is tilted away, and must not be.
+    if across.agreement.min(down.agreement) >= AGREED
+        && let Some(found) = refine(&points, local, scale)
+    {
+        return Some(found);
+    }
     let starts = [
-        tilt(
-            local_slope(along_x, columns, noise),
-            local_slope(along_y, rows, scale),
-        ),
+        local,
         tilt(median(&mut along_x(1)), median(&mut along_y(1))),
         least_squares(points.iter()),
         Plane::default(),
     ];
+    let fewer: Vec<[f64; 3]> = points.iter().step_by(4).copied().collect();
+    let tried: Vec<Option<(usize, Found)>> = starts
+        .into_par_iter()
+        .flat_map_iter(|start| [start, most_piled_up(&fewer, start, scale)])
+        .map(|start| {
+            let found = refine(&points, start, scale)?;
+            let (_, piled) = densest(&sorted_residuals(&points, found.plane), 4.0 * scale);
+            Some((piled, found))
+        })
+        .collect();
     let mut best: Option<(usize, Found)> = None;
-    let candidates = starts
-        .into_iter()
-        .flat_map(|start| [start, most_piled_up(&points, start, scale)]);
-    for start in candidates {
-        let Some(found) = refine(&points, start, scale) else {
-            continue;
-        };
-        let (_, piled) = densest(&sorted_residuals(&points, found.plane), 4.0 * scale);
+    for (piled, found) in tried.into_iter().flatten() {
         if best.is_none_or(|(most, _)| piled > most) {
             best = Some((piled, found));
         }
@@ -220,7 +236,7 @@ fn refine(points: &[[f64; 3]], mut plane: Plane, scale: f64) -> Option<Found> {
         let inliers = || {
             points
                 .iter()
-                .filter(|p| (p[2] - plane.at(p[0], p[1]) - pile.centre).abs() <= 3.0 * pile.scale)
+                .filter(|p| (p[2] - plane.at(p[0], p[1]) - pile.centre).abs() <= 2.0 * pile.scale)
         };
         if !spreads(points, inliers()) {
             return None;
@@ -280,17 +296,29 @@ fn differences(samples: &Samples, f: impl Fn(usize, usize) -> Option<f64>) -> Ve
         .collect()
 }
 
+/// A slope and the share of the pixel pairs that agree with it, the median over the lags: at half
+/// the period of a grating none does, at the period all do.
+struct LocalSlope {
+    slope: f64,
+    agreement: f64,
+}
+
 /// The commonest slope per pixel: the mode of the differences at lag 1, sharpened by the median
 /// of those that agree with it at lags 2, 4, 8, ... up to a quarter of the map.
-fn local_slope(at_lag: impl Fn(usize) -> Vec<f64>, count: usize, noise: f64) -> f64 {
+fn local_slope(at_lag: impl Fn(usize) -> Vec<f64>, count: usize, noise: f64) -> LocalSlope {
     let width = 4.0 * std::f64::consts::SQRT_2 * noise;
     let mut steps = at_lag(1);
     if steps.is_empty() {
-        return 0.0;
+        // One row or one column has no slope across.
+        return LocalSlope {
+            slope: 0.0,
+            agreement: 1.0,
+        };
     }
     steps.sort_unstable_by(f64::total_cmp);
     let (first, n) = densest(&steps, width);
     let mut slope = steps[first..first + n].iter().sum::<f64>() / n as f64;
+    let mut agreement = vec![n as f64 / steps.len() as f64];
     let mut lag = 2;
     while lag <= count / 4 {
         let all = at_lag(lag);
@@ -299,12 +327,16 @@ fn local_slope(at_lag: impl Fn(usize) -> Vec<f64>, count: usize, noise: f64) -> 
             .map(|d| d - slope * lag as f64)
             .filter(|d| d.abs() <= 0.75 * width)
             .collect();
+        agreement.push(agreeing.len() as f64 / all.len().max(1) as f64);
         if agreeing.len() >= 8 && 5 * agreeing.len() >= all.len() {
             slope += median(&mut agreeing) / lag as f64;
         }
         lag *= 2;
     }
-    slope
+    LocalSlope {
+        slope,
+        agreement: median(&mut agreement),
+    }
 }
 
 pub(super) fn median(values: &mut [f64]) -> f64 {
@@ -358,7 +390,7 @@ fn lowest_large(sorted: &[f64], width: f64) -> f64 {
 /// The dominant pile of the sorted heights, searched from `scale` upwards in width.
 ///
 /// A pile must fall off on both sides. Then it is a flat when it is no wider than the noise and
-/// holds a fifth of the pixels; or stands out twofold from what a Gaussian spread over the whole
+/// holds a fifth of the pixels (or a twentieth, if these are many); or stands out twofold from what a Gaussian spread over the whole
 /// range of heights would show; or has valleys on both sides and a seventh of all beyond them.
 /// `None` otherwise: one broad hill of heights is a rough surface.
 pub(super) fn dominant_pile(sorted: &[f64], scale: f64) -> Option<Pile> {
@@ -380,7 +412,8 @@ pub(super) fn dominant_pile(sorted: &[f64], scale: f64) -> Option<Pile> {
         let count = n as f64;
         let held = within(centre - 2.0 * s, centre + 2.0 * s);
         let expected = count * erf(2.0 * s / (2f64.sqrt() * hull));
-        let narrow = s <= 2.0 * scale && held >= 0.2 * count;
+        let narrow =
+            s <= 2.0 * scale && (held >= 0.2 * count || (held >= 0.05 * count && at(0.0) >= 25.0));
         let stands_out = held >= 2.0 * expected && held - expected >= 6.0 * expected.sqrt();
         let valley = |side: f64| (4..=8).any(|k| at(side * 0.5 * f64::from(k)) <= 0.15 * at(0.0));
         let apart = within(centre - 3.0 * s, centre + 3.0 * s) <= 0.86 * count

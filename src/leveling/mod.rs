@@ -11,6 +11,7 @@ mod base;
 pub(crate) mod least_squares;
 mod model;
 mod noise;
+mod robust;
 mod rows;
 mod surface;
 #[cfg(test)]
@@ -23,11 +24,8 @@ pub use noise::noise;
 use crate::error::{Error, ErrorKind, Result};
 use crate::heightmap::{HeightMap, Region};
 use crate::progress::Progress;
-use crate::units::format_length;
-use base::Samples;
-use model::{Model, Plane, RowMoments, moments};
+use model::{Model, moments};
 use ndarray::{Array2, s};
-use rows::Offsets;
 use surface::Surface;
 
 /// How to level.
@@ -100,15 +98,15 @@ pub fn level(map: &HeightMap, settings: &Settings, progress: &Progress) -> Resul
     progress.check()?;
     let leveled = match settings.method {
         Method::None => {
-            let seen = scan.robust(false, progress)?;
+            let seen = robust::level(&scan, false, progress)?;
             Leveled {
                 map: map.clone(),
                 slope: [0.0; 2],
                 ..seen
             }
         }
-        Method::Auto => scan.robust(false, progress)?,
-        Method::Rows => scan.robust(true, progress)?,
+        Method::Auto => robust::level(&scan, false, progress)?,
+        Method::Rows => robust::level(&scan, true, progress)?,
         Method::Plane => scan.polynomial(1, progress)?,
         Method::Polynomial { order } => scan.polynomial(order, progress)?,
     };
@@ -125,13 +123,6 @@ struct Scan<'a> {
     noise: Option<f64>,
     /// The noise, or where there is none the finest difference worth telling apart, nm, positive.
     finest: f64,
-}
-
-/// What the robust levelling settled on.
-struct Settled {
-    model: Model,
-    base: Array2<bool>,
-    core: Array2<bool>,
 }
 
 impl<'a> Scan<'a> {
@@ -177,104 +168,6 @@ impl<'a> Scan<'a> {
         [per_column / pitch.x, per_row / pitch.y]
     }
 
-    /// `Auto`, and with `always` `Rows`.
-    fn robust(&self, always: bool, progress: &Progress) -> Result<Leveled> {
-        let (rows_n, columns) = self.z.dim();
-        let mut warnings = Vec::new();
-        let shifts = rows::shifts(&self.z, self.finest);
-        let mut model = Model {
-            plane: Plane::default(),
-            offsets: vec![0.0; rows_n],
-        };
-        for jump in &shifts.single {
-            model.offsets[jump.row] += jump.jump_nm;
-        }
-        for jump in &shifts.lasting {
-            if always {
-                for offset in &mut model.offsets[jump.row..] {
-                    *offset += jump.jump_nm;
-                }
-            }
-            warnings.push(lasting_jump(jump, always));
-        }
-        let samples = Samples::choose(&self.z, self.allowed.as_ref());
-        let found = base::find(&self.z, &model, &samples, self.finest, shifts.scatter);
-        progress.check()?;
-        progress.report(0.4);
-        let Some(found) = found else {
-            return self.no_flat(&shifts, always, warnings);
-        };
-        model.plane = found.plane;
-        let mut settled = self.settle(model, 3.0 * found.scale, None, progress)?;
-        progress.report(0.7);
-        let slope = self.slope(settled.model.plane.per_column, settled.model.plane.per_row);
-
-        let mut offsets = rows::offsets(
-            &moments(
-                &self.z,
-                &settled.model,
-                &by_row(&settled.core, &settled.base),
-            ),
-            columns,
-        );
-        let drift_nm = offsets.drift();
-        for (seen, known) in offsets.of_row.iter_mut().zip(&settled.model.offsets) {
-            *seen = seen.map(|o| o + known);
-        }
-        let row_jumps = offsets.jumps(self.finest);
-        for (seen, known) in offsets.of_row.iter_mut().zip(&settled.model.offsets) {
-            *seen = seen.map(|o| o - known);
-        }
-        if offsets.of_row.iter().any(Option::is_some) {
-            offsets.bridge(&shifts, settled.model.plane.per_row);
-        }
-        let known = offsets.of_row.iter().flatten().count();
-        let align = known > 0 && (always || offsets.stand_out(self.finest));
-        let mut how = String::new();
-        if align {
-            let (fill, missing) = offsets.filled();
-            for (o, f) in settled.model.offsets.iter_mut().zip(fill) {
-                *o += f;
-            }
-            settled = self.settle_rows(settled, &samples, &offsets, progress)?;
-            how = format!(", {known} rows aligned on its pixels");
-            if !missing.is_empty() {
-                warnings.push(format!(
-                    "rows without enough base-plane pixels were aligned by their neighbours: rows {}",
-                    rows::list(&missing)
-                ));
-            }
-        } else {
-            let singles: Vec<usize> = shifts.single.iter().map(|j| j.row).collect();
-            if !singles.is_empty() {
-                how = format!(", shifted rows put back: {}", rows::list(&singles));
-            }
-            if always {
-                warnings.push(format!(
-                    "rows were not aligned: {columns} columns or too few base-plane pixels in every row"
-                ));
-            }
-        }
-        let share = model::count(&settled.base) as f64 / self.usable() as f64;
-        let step = format!(
-            "levelled: robust plane on the dominant flat ({:.0} % of the pixels), slope {:.3e} along x and {:.3e} along y{how}",
-            100.0 * share,
-            slope[0],
-            slope[1]
-        );
-        Ok(Leveled {
-            map: self
-                .map
-                .with_heights(settled.model.residuals(&self.z), step),
-            base: settled.base,
-            noise_nm: self.noise,
-            slope,
-            row_jumps,
-            drift_nm,
-            warnings,
-        })
-    }
-
     /// Pixels that may be levelled on.
     fn usable(&self) -> usize {
         match &self.allowed {
@@ -288,112 +181,6 @@ impl<'a> Scan<'a> {
         }
     }
 
-    /// Refits the model to the base pixels until they no longer change: the plane, or with
-    /// `of_row` the slope along x and an offset for each row that has one.
-    fn settle(
-        &self,
-        mut model: Model,
-        half_band: f64,
-        of_row: Option<&Offsets>,
-        progress: &Progress,
-    ) -> Result<Settled> {
-        let allowed = self.allowed.as_ref();
-        let (rows_n, columns) = self.z.dim();
-        let mut base = model.near(&self.z, half_band, allowed);
-        let reach = model::core_reach(&self.z, &base, allowed);
-        let mut core = model::core(&self.z, &base, allowed, reach);
-        for _ in 0..30 {
-            progress.check()?;
-            let change = match of_row {
-                None => {
-                    let sums = moments(&self.z, &model, &core);
-                    let correction = model::plane_correction(&sums);
-                    model.plane = model.plane.plus(correction);
-                    correction.at_centre.abs()
-                        + correction.per_column.abs() * columns as f64
-                        + correction.per_row.abs() * rows_n as f64
-                }
-                Some(of_row) => {
-                    let sums = moments(&self.z, &model, &by_row(&core, &base));
-                    rows_correction(&mut model, &sums, of_row)
-                }
-            };
-            base = model.near(&self.z, half_band, allowed);
-            if change < 1e-6 * half_band {
-                break;
-            }
-            core = model::core(&self.z, &base, allowed, reach);
-        }
-        Ok(Settled { model, base, core })
-    }
-
-    /// Once the rows are aligned the base is narrower: find its width again and settle.
-    fn settle_rows(
-        &self,
-        settled: Settled,
-        samples: &Samples,
-        offsets: &Offsets,
-        progress: &Progress,
-    ) -> Result<Settled> {
-        let mut heights: Vec<f64> = samples
-            .at
-            .iter()
-            .map(|&(r, c)| settled.model.residual(&self.z, r, c))
-            .collect();
-        heights.sort_unstable_by(f64::total_cmp);
-        let Some(pile) = base::dominant_pile(&heights, self.finest) else {
-            return Ok(settled);
-        };
-        let mut model = settled.model;
-        model.plane.at_centre += pile.centre;
-        self.settle(model, 3.0 * pile.scale, Some(offsets), progress)
-    }
-
-    /// A rough surface: a least-squares plane through everything.
-    fn no_flat(
-        &self,
-        shifts: &rows::Shifts,
-        always: bool,
-        mut warnings: Vec<String>,
-    ) -> Result<Leveled> {
-        let rows_n = self.z.nrows();
-        let mut model = Model {
-            plane: Plane::default(),
-            offsets: vec![0.0; rows_n],
-        };
-        for jump in &shifts.single {
-            model.offsets[jump.row] += jump.jump_nm;
-        }
-        let base = model.near(&self.z, f64::INFINITY, self.allowed.as_ref());
-        // The second pass takes off what rounding left of the first.
-        for _ in 0..2 {
-            let sums = moments(&self.z, &model, &base);
-            model.plane = model.plane.plus(model::plane_correction(&sums));
-        }
-        warnings.push(
-            "no flat stands out: a least-squares plane through all heights was removed; \
-             choose a region that is flat where a step or a height matters"
-                .to_owned(),
-        );
-        if always {
-            warnings.push("rows were not aligned: there is no base plane to align them on".into());
-        }
-        let slope = self.slope(model.plane.per_column, model.plane.per_row);
-        let step = format!(
-            "levelled: least-squares plane through all heights (no flat stands out), slope {:.3e} along x and {:.3e} along y",
-            slope[0], slope[1]
-        );
-        Ok(Leveled {
-            map: self.map.with_heights(model.residuals(&self.z), step),
-            base,
-            noise_nm: self.noise,
-            slope,
-            row_jumps: shifts.all(),
-            drift_nm: None,
-            warnings,
-        })
-    }
-
     fn polynomial(&self, order: u8, progress: &Progress) -> Result<Leveled> {
         if !(1..=5).contains(&order) {
             return Err(Error::new(
@@ -402,10 +189,7 @@ impl<'a> Scan<'a> {
             )
             .remedy("Give an order from 1 to 5"));
         }
-        let flat = Model {
-            plane: Plane::default(),
-            offsets: vec![0.0; self.z.nrows()],
-        };
+        let flat = Model::flat(self.z.nrows());
         let base = flat.near(&self.z, f64::INFINITY, self.allowed.as_ref());
         let surface = Surface::fit(&self.z, &base, usize::from(order), progress)?;
         let (rows_n, columns) = self.z.dim();
@@ -415,7 +199,9 @@ impl<'a> Scan<'a> {
         // Without a chosen flat, offsets of whole rows speak of features as much as of the scanner.
         let (row_jumps, drift_nm) = match &self.allowed {
             Some(_) => {
-                let offsets = rows::offsets(&moments(&left, &flat, &base), columns);
+                let sums = moments(&left, &flat, &base, f64::INFINITY);
+                let together = model::neighbour_correlation(&left, &flat, &base);
+                let offsets = rows::offsets(&sums, columns, together);
                 (offsets.jumps(self.finest), offsets.drift())
             }
             None => (rows::shifts(&left, self.finest).all(), None),
@@ -441,61 +227,6 @@ impl<'a> Scan<'a> {
             drift_nm,
             warnings: Vec::new(),
         })
-    }
-}
-
-/// The core pixels, in rows with too few of them all base pixels.
-fn by_row(core: &Array2<bool>, base: &Array2<bool>) -> Array2<bool> {
-    let fewest = rows::fewest_pixels(core.ncols());
-    let mut chosen = core.clone();
-    for (mut chosen, base) in chosen.rows_mut().into_iter().zip(base.rows()) {
-        if chosen.iter().filter(|m| **m).count() < fewest {
-            chosen.assign(&base);
-        }
-    }
-    chosen
-}
-
-/// Least squares with an offset for each row and one slope along x, in closed form; returns the
-/// largest change, nm.
-fn rows_correction(model: &mut Model, sums: &[RowMoments], of_row: &Offsets) -> f64 {
-    let own = |r: usize| of_row.of_row[r].is_some() && sums[r].n > 0.0;
-    let (mut uz, mut uu, mut reach) = (0.0, 0.0, 0.0f64);
-    for m in sums.iter().filter(|m| m.n > 0.0) {
-        uz += m.uz - m.u * m.z / m.n;
-        uu += m.uu - m.u * m.u / m.n;
-        reach = reach.max((m.uu / m.n).sqrt());
-    }
-    let slope = if uu > 0.0 { uz / uu } else { 0.0 };
-    model.plane.per_column += slope;
-    let correction = Offsets {
-        of_row: (0..sums.len())
-            .map(|r| own(r).then(|| (sums[r].z - slope * sums[r].u) / sums[r].n))
-            .collect(),
-        error: of_row.error,
-    };
-    let (fill, _) = correction.filled();
-    let mut change = slope.abs() * reach;
-    for (o, f) in model.offsets.iter_mut().zip(fill) {
-        *o += f;
-        change = change.max(f.abs());
-    }
-    change
-}
-
-fn lasting_jump(jump: &RowJump, removed: bool) -> String {
-    let what = format!(
-        "from row {} on everything is shifted by {}",
-        jump.row,
-        format_length(jump.jump_nm)
-    );
-    if removed {
-        format!("{what}: taken as a jump of the scanner and removed")
-    } else {
-        format!(
-            "{what}: a jump of the scanner, or a step of the surface along the fast axis; \
-             left as it is (row alignment removes it)"
-        )
     }
 }
 

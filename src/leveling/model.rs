@@ -74,6 +74,14 @@ pub(super) struct Model {
 }
 
 impl Model {
+    /// The model that takes nothing off a map of `rows` rows.
+    pub(super) fn flat(rows: usize) -> Self {
+        Self {
+            plane: Plane::default(),
+            offsets: vec![0.0; rows],
+        }
+    }
+
     /// The model's height in row `r` of a `rows` x `columns` map at column 0, and per column.
     fn row(&self, r: usize, (rows, columns): (usize, usize)) -> (f64, f64) {
         let start = self.plane.at(from_middle(0, columns), from_middle(r, rows));
@@ -126,7 +134,16 @@ impl Model {
     }
 }
 
-/// Sums over the marked pixels of one row: `u` counts columns from the middle, `z` is the height
+/// Weight of a pixel that lies the share `t` of the half band off the model: 1 in its inner half,
+/// falling to 0 at five sixths, so that no pixel comes or goes at once and a refit settles
+/// instead of hopping, and so that a level five noise widths away does not reach in.
+pub(super) fn weight(t: f64) -> f64 {
+    let outer = (3.0 * t.abs() - 1.5).clamp(0.0, 1.0);
+    let kept = 1.0 - outer * outer;
+    kept * kept
+}
+
+/// Weighted sums over the marked pixels of one row: `u` counts columns from the middle, `z` is the height
 /// above the model.
 #[derive(Debug, Clone, Copy, Default)]
 pub(super) struct RowMoments {
@@ -136,43 +153,76 @@ pub(super) struct RowMoments {
     pub z: f64,
     pub uz: f64,
     pub zz: f64,
-    /// Sum of products of horizontally neighbouring marked pixels, and their number.
-    pub zz_next: f64,
-    pub pairs: f64,
 }
 
 /// The sums of every row, in order: rows are summed apart, so any number of threads gives the
-/// same bits.
-pub(super) fn moments(z: &Array2<f64>, model: &Model, mask: &Array2<bool>) -> Vec<RowMoments> {
+/// same bits. An infinite `half_band` weighs all alike.
+pub(super) fn moments(
+    z: &Array2<f64>,
+    model: &Model,
+    mask: &Array2<bool>,
+    half_band: f64,
+) -> Vec<RowMoments> {
     let columns = z.ncols();
+    let narrow = 1.0 / half_band;
     (0..z.nrows())
         .into_par_iter()
         .map(|r| {
             let (start, slope) = model.row(r, z.dim());
             let mut m = RowMoments::default();
-            let mut before = None;
             for (c, (z, marked)) in z.row(r).iter().zip(mask.row(r)).enumerate() {
-                if !*marked || z.is_nan() {
-                    before = None;
-                    continue;
-                }
+                // A marked pixel is never void.
+                let h = if *marked {
+                    z - start - slope * c as f64
+                } else {
+                    0.0
+                };
+                let w = if *marked { weight(h * narrow) } else { 0.0 };
                 let u = from_middle(c, columns);
-                let h = z - start - slope * c as f64;
-                m.n += 1.0;
-                m.u += u;
-                m.uu += u * u;
-                m.z += h;
-                m.uz += u * h;
-                m.zz += h * h;
-                if let Some(before) = before {
-                    m.zz_next += before * h;
-                    m.pairs += 1.0;
-                }
-                before = Some(h);
+                m.n += w;
+                m.u += w * u;
+                m.uu += w * u * u;
+                m.z += w * h;
+                m.uz += w * u * h;
+                m.zz += w * h * h;
             }
             m
         })
         .collect()
+}
+
+/// Correlation of marked pixels that are neighbours along a row, about the mean of their row, 0
+/// to 0.95; 0 where there are none.
+pub(super) fn neighbour_correlation(z: &Array2<f64>, model: &Model, mask: &Array2<bool>) -> f64 {
+    let rows: Vec<[f64; 4]> = (0..z.nrows())
+        .into_par_iter()
+        .map(|r| {
+            let marked = || (0..z.ncols()).filter(|&c| mask[[r, c]]);
+            let n = marked().count().max(1) as f64;
+            let mean = marked().map(|c| model.residual(z, r, c)).sum::<f64>() / n;
+            let mut sums = [0.0; 4];
+            let mut before: Option<(usize, f64)> = None;
+            for c in marked() {
+                let h = model.residual(z, r, c) - mean;
+                sums[0] += h * h;
+                sums[1] += 1.0;
+                if let Some((_, b)) = before.filter(|b| b.0 + 1 == c) {
+                    sums[2] += b * h;
+                    sums[3] += 1.0;
+                }
+                before = Some((c, h));
+            }
+            sums
+        })
+        .collect();
+    let [squares, n, products, pairs] = rows
+        .iter()
+        .fold([0.0; 4], |s, r| std::array::from_fn(|k| s[k] + r[k]));
+    if squares > 0.0 && pairs > 0.0 {
+        (products / pairs / (squares / n)).clamp(0.0, 0.95)
+    } else {
+        0.0
+    }
 }
 
 /// The least-squares plane through the marked pixels, as a correction to the model.

@@ -2,7 +2,7 @@
 
 use super::RowJump;
 use super::base::median;
-use super::model::RowMoments;
+use super::model::{RowMoments, from_middle};
 use ndarray::Array2;
 use ndarray::parallel::prelude::*;
 
@@ -45,9 +45,6 @@ pub(super) struct Shifts {
     /// Rows from which on everything is shifted, relief and all: a scanner jump, or a step of the
     /// surface along the fast axis that all features follow.
     pub lasting: Vec<RowJump>,
-    /// For each row by how much it is shifted against the row before, where nearly all columns
-    /// are and no further than rows usually are.
-    usual: Vec<Option<f64>>,
 }
 
 /// Compares each row with the row before it.
@@ -60,22 +57,18 @@ pub(super) fn shifts(z: &Array2<f64>, noise: f64) -> Shifts {
     let mut all: Vec<f64> = steps.iter().flatten().map(|s| s.shift).collect();
     let usual = median(&mut all);
     let mut off: Vec<f64> = all.iter().map(|s| (s - usual).abs()).collect();
-    let scatter = 1.4826 * median(&mut off);
+    off.sort_unstable_by(f64::total_cmp);
+    let scatter = 1.4826 * off.get(off.len() / 2).copied().unwrap_or(0.0);
     let mut spreads: Vec<f64> = steps.iter().flatten().map(|s| s.spread).collect();
     let spread = median(&mut spreads).max(std::f64::consts::SQRT_2 * noise);
-    let threshold = (8.0 * scatter).max(4.0 * spread);
+    // The ninth decile keeps the tail of rows that are noisier than most from passing for jumps.
+    let decile = off.get(off.len() * 9 / 10).copied().unwrap_or(0.0);
+    let threshold = (8.0 * scatter).max(4.0 * spread).max(4.0 * decile);
     let excess = |r: usize| steps.get(r).copied().flatten().map(|s| s.shift - usual);
     let mut found = Shifts {
         scatter: scatter / std::f64::consts::SQRT_2,
         single: Vec::new(),
         lasting: Vec::new(),
-        usual: steps
-            .iter()
-            .map(|s| {
-                s.filter(|s| s.moved >= 0.8 && (s.shift - usual).abs() <= 8.0 * scatter)
-                    .map(|s| s.shift)
-            })
-            .collect(),
     };
     let mut r = 1;
     while r < rows {
@@ -131,25 +124,25 @@ fn step(z: &Array2<f64>, r: usize) -> Option<Step> {
     let shift = median(&mut differences);
     let mut off: Vec<f64> = differences.iter().map(|d| (d - shift).abs()).collect();
     let spread = 1.4826 * median(&mut off);
-    let near = |to: f64| {
-        let reach = (0.3 * shift.abs()).max(spread);
-        differences
-            .iter()
-            .filter(|d| (*d - to).abs() <= reach)
-            .count() as f64
-            / n as f64
+    let near = |to: f64, reach: f64| {
+        let close = differences.iter().filter(|d| (*d - to).abs() <= reach);
+        close.count() as f64 / n as f64
     };
-    let mean = |f: &dyn Fn((f64, f64, f64)) -> f64| pairs().map(f).sum::<f64>() / n as f64;
-    let (x, h) = (mean(&|p| p.0), mean(&|p| p.1));
-    let xx = mean(&|p| (p.0 - x).powi(2));
-    let xh = mean(&|p| (p.0 - x) * (p.1 - h));
-    let hh = mean(&|p| (p.1 - h).powi(2));
+    let apart = 0.3 * shift.abs();
+    let count = n as f64;
+    let (x, h) = pairs().fold((0.0, 0.0), |s, p| (s.0 + p.0 / count, s.1 + p.1 / count));
+    let (mut xx, mut xh, mut hh) = (0.0, 0.0, 0.0);
+    for (px, ph, _) in pairs() {
+        xx += (px - x).powi(2) / count;
+        xh += (px - x) * (ph - h) / count;
+        hh += (ph - h).powi(2) / count;
+    }
     let straight = if xx > 0.0 { xh * xh / xx } else { 0.0 };
     Some(Step {
         shift,
         spread,
-        moved: near(shift),
-        stayed: near(0.0),
+        moved: near(shift, apart.max(3.0 * spread)),
+        stayed: near(0.0, apart),
         relief: (hh - straight).max(0.0).sqrt(),
     })
 }
@@ -163,32 +156,25 @@ pub(super) struct Offsets {
     pub error: f64,
 }
 
-/// The offsets from the sums of the base pixels above the model.
-pub(super) fn offsets(moments: &[RowMoments], columns: usize) -> Offsets {
+/// The offsets from the sums of the base pixels above the model; `together` is the correlation
+/// of neighbours along a row, which leaves fewer independent values (AR(1) model).
+pub(super) fn offsets(moments: &[RowMoments], columns: usize, together: f64) -> Offsets {
     let fewest = fewest_pixels(columns) as f64;
     let usable = |m: &&RowMoments| columns >= NARROWEST && m.n >= fewest;
     let of_row = moments
         .iter()
         .map(|m| Some(m).filter(usable).map(|m| m.z / m.n))
         .collect();
-    let (mut squares, mut degrees, mut products, mut pairs) = (0.0, 0.0, 0.0, 0.0);
+    let (mut squares, mut degrees) = (0.0, 0.0);
     let mut pixels: Vec<f64> = Vec::new();
     for m in moments.iter().filter(usable) {
         let mean = m.z / m.n;
         squares += m.zz - m.n * mean * mean;
         degrees += m.n - 1.0;
-        products += m.zz_next - m.pairs * mean * mean;
-        pairs += m.pairs;
         pixels.push(m.n);
     }
     let variance = if degrees > 0.0 {
         squares / degrees
-    } else {
-        0.0
-    };
-    // Neighbours along a row that move together leave fewer independent values (AR(1) model).
-    let together = if pairs > 0.0 && variance > 0.0 {
-        (products / pairs / variance).clamp(0.0, 0.95)
     } else {
         0.0
     };
@@ -198,15 +184,34 @@ pub(super) fn offsets(moments: &[RowMoments], columns: usize) -> Offsets {
 }
 
 impl Offsets {
-    /// Gives rows whose base pixels could not be told an offset from their shift against the row
-    /// before; `per_row` is the slope of the plane.
-    pub(super) fn bridge(&mut self, shifts: &Shifts, per_row: f64) {
-        for r in 1..self.of_row.len() {
-            if let (None, Some(before), Some(shift)) =
-                (self.of_row[r], self.of_row[r - 1], shifts.usual[r])
-            {
-                self.of_row[r] = Some(before + shift - per_row);
-            }
+    /// The offsets of the same rows, as they were settled in the end.
+    pub(super) fn replace(&mut self, settled: &[f64]) {
+        for (o, s) in self.of_row.iter_mut().zip(settled) {
+            *o = o.map(|_| *s);
+        }
+    }
+
+    /// The straight line through the offsets, `(at the middle row, per row)`, by least squares.
+    pub(super) fn line(&self) -> (f64, f64) {
+        let rows = self.of_row.len();
+        let known = || {
+            self.of_row
+                .iter()
+                .enumerate()
+                .filter_map(|(r, o)| o.map(|o| (from_middle(r, rows), o)))
+        };
+        let n = known().count().max(1) as f64;
+        let (v, o) = known().fold((0.0, 0.0), |s, k| (s.0 + k.0 / n, s.1 + k.1 / n));
+        let vv: f64 = known().map(|k| (k.0 - v).powi(2)).sum();
+        let vo: f64 = known().map(|k| (k.0 - v) * (k.1 - o)).sum();
+        let per_row = if vv > 0.0 { vo / vv } else { 0.0 };
+        (o - per_row * v, per_row)
+    }
+
+    /// Adds offsets that were taken off before.
+    pub(super) fn add(&mut self, before: &[f64]) {
+        for (o, b) in self.of_row.iter_mut().zip(before) {
+            *o = o.map(|o| o + b);
         }
     }
 

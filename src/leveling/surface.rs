@@ -58,6 +58,7 @@ impl Surface {
             .flat_map(|total| (0..=total).map(move |j| (total - j, j)))
             .filter(|&(i, j)| i < columns && j < rows)
             .collect();
+        let along = (order + 1).min(columns);
         let stripes: Vec<Accumulator> = (0..rows.div_ceil(STRIPE))
             .into_par_iter()
             .map(|stripe| {
@@ -67,13 +68,19 @@ impl Surface {
                     if progress.is_cancelled() {
                         break;
                     }
-                    let py = powers(y.at(r as f64));
+                    // Along a row y is one number: the row's pixels are reduced in the powers of
+                    // x alone, and only what is left enters the larger problem.
+                    let mut row = Accumulator::new(along);
                     for c in (0..columns).filter(|&c| marked[[r, c]]) {
-                        let px = powers(x.at(c as f64));
+                        row.add(&powers(x.at(c as f64))[..along], z[[r, c]], 1.0);
+                    }
+                    let reduced = row.reduced();
+                    let py = powers(y.at(r as f64));
+                    for k in 0..=along {
                         for (d, &(i, j)) in design.iter_mut().zip(&terms) {
-                            *d = px[i] * py[j];
+                            *d = reduced[(k, i)] * py[j];
                         }
-                        problem.add(&design, z[[r, c]], 1.0);
+                        problem.add(&design, reduced[(k, along)], 1.0);
                     }
                 }
                 problem

@@ -126,11 +126,75 @@ fn a_tilted_step_keeps_its_height_and_the_base_is_at_zero() {
                 "{name}: {:?}",
                 leveled.warnings
             );
-            assert!((leveled.noise_nm.unwrap() / NOISE - 1.0).abs() < 0.1 || height > 10.0);
+            // Differences across edges push the noise figure up; they must not rule it.
+            assert!(
+                (0.9..2.5).contains(&(leveled.noise_nm.unwrap() / NOISE)),
+                "{name}: {:?}",
+                leveled.noise_nm
+            );
             bias += (high - low - height) / seeds as f64;
         }
         eprintln!("{name}: mean step error {bias:.5} nm");
         assert!(bias.abs() < allowance(NOISE, (N * N) as f64 / 8.0) / 2.0);
+    }
+}
+
+/// Processor time of all threads so far where the system tells it (Linux, ticks of 10 ms), s.
+fn processor_seconds() -> f64 {
+    let stat = std::fs::read_to_string("/proc/self/stat").unwrap_or_default();
+    let field = |k: usize| stat.split(' ').nth(k).and_then(|t| t.parse::<f64>().ok());
+    0.01 * (field(13).unwrap_or(0.0) + field(14).unwrap_or(0.0))
+}
+
+/// The figures that the documentation tells; run with `--ignored --nocapture`.
+#[test]
+#[ignore = "prints figures"]
+fn figures() {
+    for noise in [0.3, 0.5, 0.6] {
+        for (name, height, truth) in surfaces() {
+            let errors: Vec<f64> = (0..100)
+                .map(|seed| {
+                    let mut gauss = Gauss::new(5000 + seed);
+                    let (a, b) = (gauss.next(0.1), gauss.next(0.1));
+                    let scan = map(N, N, |x, y| {
+                        truth(x, y) + a * x + b * y + 500.0 + gauss.next(noise)
+                    });
+                    let leveled = level_by(&scan, Method::Auto);
+                    mean_where(&leveled.map, |x, y| truth(x, y) != 0.0)
+                        - mean_where(&leveled.map, |x, y| truth(x, y) == 0.0)
+                        - height
+                })
+                .collect();
+            let mean = errors.iter().sum::<f64>() / 100.0;
+            let sd = (errors.iter().map(|e| (e - mean).powi(2)).sum::<f64>() / 99.0).sqrt();
+            println!("noise {noise}, {name} {height} nm: bias {mean:.5}, sd {sd:.5} nm");
+        }
+    }
+    for n in [1024, 4096] {
+        let mut gauss = Gauss::new(1);
+        let truth = grating(64.0, 30.0);
+        let scan = map(n, n, |x, y| truth(x, y) + 0.1 * x + gauss.next(0.3));
+        let offsets: Vec<f64> = (0..n).map(|_| gauss.next(0.5)).collect();
+        let rows = map(n, n, |x, y| {
+            truth(x, y) + 0.1 * x + offsets[y as usize] + gauss.next(0.3)
+        });
+        for (what, scan, method) in [
+            ("auto", &scan, Method::Auto),
+            ("auto, row noise", &rows, Method::Auto),
+            ("plane", &scan, Method::Plane),
+            ("order 5", &scan, Method::Polynomial { order: 5 }),
+        ] {
+            let (start, busy) = (std::time::Instant::now(), processor_seconds());
+            let leveled = level_by(scan, method);
+            println!(
+                "{n}: {what} {:?}, processor {:.2} s, {:?}",
+                start.elapsed(),
+                processor_seconds() - busy,
+                leveled.map.provenance().steps
+            );
+        }
+        let start = std::time::Instant::now();
+        println!("{n}: noise {:?} {:?}", noise(&scan), start.elapsed());
     }
 }
 
@@ -180,7 +244,14 @@ fn dense_spikes_do_not_tilt_the_base() {
             mean_where(&leveled.map, |x, y| truth(x, y) == 0.0 && y < 64.0),
             mean_where(&leveled.map, |x, y| truth(x, y) == 0.0 && y >= 64.0),
         ];
-        eprintln!("spikes {seed}: {shares:?} {:?}", leveled.warnings);
+        let free = (0..N * N)
+            .filter(|i| truth((i % N) as f64 + 0.5, (i / N) as f64 + 0.5) == 0.0)
+            .count();
+        eprintln!(
+            "spikes {seed}: free {} {shares:?} {:?}",
+            free as f64 / (N * N) as f64,
+            leveled.warnings
+        );
         // Feet within the noise band lift the plane a little; a third of the noise is allowed.
         assert!(shares.iter().all(|s| s.abs() < NOISE / 3.0), "{shares:?}");
     }
@@ -534,7 +605,7 @@ fn one_thread_and_many_give_the_same_bits() {
 }
 
 proptest! {
-    #![proptest_config(ProptestConfig::with_cases(24))]
+    #![proptest_config(ProptestConfig { cases: 24, failure_persistence: None, ..Default::default() })]
 
     /// Laws: levelling a levelled map changes nothing, and neither does adding a plane before.
     #[test]
