@@ -318,7 +318,14 @@ fn cases() -> Vec<Case> {
     add("line width", slim, 60.0, 0.3, Scene::Line, 0.5);
     add("line width", slim, 75.0, 0.3, Scene::Line, 0.5);
     add("line width", stout, 70.0, 0.3, Scene::Line, 0.5);
-    add("line width", slim, 80.0, 0.3, Scene::RoughLine, 0.5);
+    add(
+        "line width, rough line",
+        slim,
+        80.0,
+        0.3,
+        Scene::RoughLine,
+        0.5,
+    );
     add("line width, 90 %", slim, 80.0, 0.3, Scene::Line, 0.9);
     add("line width, 10 %", slim, 80.0, 0.3, Scene::Line, 0.1);
     add("trench width", slim, 80.0, 0.3, Scene::Trench, 0.5);
@@ -327,7 +334,14 @@ fn cases() -> Vec<Case> {
     add("line width", slim, 90.0, 0.3, Scene::Line, 0.5);
     add("line width", stout, 80.0, 0.3, Scene::Line, 0.5);
     add("line width", stout, 88.0, 0.3, Scene::Line, 0.5);
-    add("line width", stout, 88.0, 0.3, Scene::RoughLine, 0.5);
+    add(
+        "line width, rough line",
+        stout,
+        88.0,
+        0.3,
+        Scene::RoughLine,
+        0.5,
+    );
     add("trench width", stout, 88.0, 0.3, Scene::Trench, 0.5);
     add("step height, ridge", slim, 85.0, 0.2, Scene::Ridge, 0.5);
     add("step height, edge", stout, 80.0, 0.2, Scene::Step, 0.5);
