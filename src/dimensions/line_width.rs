@@ -147,7 +147,7 @@ impl Trace {
         let plateaus = Plateaus::of(sections, &rough, reach, frame.noise)?;
         let (low, high) = plateaus.low_high(ridge);
         let height = high.value - low.value;
-        if !(height > 0.0) {
+        if height.is_nan() || height <= 0.0 {
             return None;
         }
         let middle = middle_of(low.value + 0.5 * height);

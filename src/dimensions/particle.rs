@@ -347,7 +347,7 @@ impl Field<'_> {
         let level = window.base(self.scan, self.noise).unwrap_or(self.base);
         let base = level.value;
         let height = summit.height - base;
-        if !(height > 0.0) {
+        if height.is_nan() || height <= 0.0 {
             return None;
         }
         let cell = (self.pitch.x * self.pitch.y).sqrt();

@@ -207,7 +207,7 @@ struct Refined {
 /// taken in up to 16 groups, so that their scatter is seen. `None` with fewer than three periods.
 fn refine(sections: ArrayView2<f32>, rough: f64, progress: &Progress) -> Result<Option<Refined>> {
     let (count, columns) = sections.dim();
-    if !(rough > 2.0) || (columns as f64) < 3.0 * rough {
+    if rough.is_nan() || rough <= 2.0 || (columns as f64) < 3.0 * rough {
         return Ok(None);
     }
     let groups = count.min(16);

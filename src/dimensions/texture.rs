@@ -210,7 +210,7 @@ fn budget_of(name: &str, texture: &Texture, noise: f64, calibration: f64) -> Opt
         "Sq" => texture.sq,
         _ => return None,
     };
-    if !(texture.sq > 0.0) {
+    if texture.sq.is_nan() || texture.sq <= 0.0 {
         return None;
     }
     let mut budget = Budget::new();
