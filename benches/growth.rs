@@ -10,65 +10,112 @@ use std::time::Instant;
 use truewidth::morphology::{certainty_map, contacts, dilate, erode, open};
 use truewidth::progress::Progress;
 
-/// The median of some runs, in milliseconds; long ones are run less often.
-fn median_ms(mut run: impl FnMut()) -> f64 {
+/// What a run takes, milliseconds.
+struct Cost {
+    /// The median by the clock on the wall.
+    wall: f64,
+    /// Processor time of all threads, the mean; the wall's where the system does not tell.
+    cpu: f64,
+}
+
+/// Processor seconds of this process so far, in hundredths, as Linux tells.
+fn cpu_seconds() -> Option<f64> {
+    let stat = std::fs::read_to_string("/proc/self/stat").ok()?;
+    let mut fields = stat.rsplit_once(')')?.1.split_whitespace().skip(11);
+    let mut ticks = || fields.next()?.parse::<f64>().ok();
+    Some((ticks()? + ticks()?) / 100.0)
+}
+
+/// Runs often enough for hundredths of a second to tell; long ones less often.
+fn cost(mut run: impl FnMut()) -> Cost {
+    run();
     let mut times: Vec<f64> = Vec::new();
-    while times.len() < 3 || (times.len() < 15 && times.iter().sum::<f64>() < 1000.0) {
+    let before = cpu_seconds();
+    while times.len() < 3 || times.iter().sum::<f64>() < 1500.0 {
         let start = Instant::now();
         run();
         times.push(start.elapsed().as_secs_f64() * 1e3);
     }
+    let after = cpu_seconds();
+    let runs = times.len() as f64;
     times.sort_by(f64::total_cmp);
-    times[times.len() / 2]
+    let wall = times[times.len() / 2];
+    let cpu = match (before, after) {
+        (Some(before), Some(after)) => (after - before) * 1e3 / runs,
+        _ => wall,
+    };
+    Cost { wall, cpu }
+}
+
+fn head() {
+    println!(
+        "\n| scene | map | tip | dilation ms | its processor ms | ns/pixel | erosion, processor ms | dilation in copies |"
+    );
+    println!("|---|---|---|---|---|---|---|---|");
 }
 
 fn row(what: &str, map: &Array2<f32>, tip: &Array2<f32>) {
     let watch = Progress::new();
-    let copy = median_ms(|| {
-        black_box(map.to_owned());
+    let mut target = map.to_owned();
+    let copy = cost(|| {
+        target.assign(black_box(map));
+        black_box(&target);
     });
-    let dilation = median_ms(|| {
+    let dilation = cost(|| {
         black_box(dilate(map.view(), tip.view(), &watch).unwrap());
     });
     let scan = dilate(map.view(), tip.view(), &watch).unwrap();
-    let erosion = median_ms(|| {
+    let erosion = cost(|| {
         black_box(erode(scan.view(), tip.view(), &watch).unwrap());
     });
-    let pixels = map.len() as f64;
     println!(
-        "{what:<28} {:>5} {:>4}  copy {copy:9.3}  dilate {dilation:9.3} ({:6.1} copies, {:6.2} ns/px)  erode {erosion:9.3}",
+        "| {what} | {} | {} | {:.2} | {:.2} | {:.2} | {:.2} | {:.1} |",
         map.nrows(),
         tip.nrows(),
-        dilation / copy,
-        dilation * 1e6 / pixels,
+        dilation.wall,
+        dilation.cpu,
+        dilation.cpu * 1e6 / map.len() as f64,
+        erosion.cpu,
+        dilation.wall / copy.wall,
     );
 }
 
-fn relatives(map: &Array2<f32>, tip: &Array2<f32>) {
+fn relatives(what: &str, map: &Array2<f32>, tip: &Array2<f32>) {
     let watch = Progress::new();
     let scan = dilate(map.view(), tip.view(), &watch).unwrap();
     let surface = erode(scan.view(), tip.view(), &watch).unwrap();
     let (i, s, p) = (scan.view(), surface.view(), tip.view());
-    let erosion = median_ms(|| {
+    let erosion = cost(|| {
         black_box(erode(i, p, &watch).unwrap());
     });
-    let opening = median_ms(|| {
+    let opening = cost(|| {
         black_box(open(i, p, &watch).unwrap());
     });
-    let found = median_ms(|| {
+    let found = cost(|| {
         black_box(contacts(s, p, &watch).unwrap());
     });
-    let marks = median_ms(|| {
-        black_box(certainty_map(s, i, p, 0.5, &watch).unwrap());
+    let marks = [0.0, 0.5].map(|tolerance| {
+        cost(|| {
+            black_box(certainty_map(s, i, p, tolerance, [0, 0], &watch).unwrap());
+        })
     });
     println!(
-        "{:>5} {:>4}  erode {erosion:8.3} ms; in erosions: open {:5.2}  contacts {:5.2}  certainty {:5.2}",
+        "| {what} | {} | {} | {:.2} | {:.2} | {:.2} | {:.2} | {:.2} |",
         map.nrows(),
         tip.nrows(),
-        opening / erosion,
-        found / erosion,
-        marks / erosion
+        erosion.cpu,
+        opening.cpu / erosion.cpu,
+        found.cpu / erosion.cpu,
+        marks[0].cpu / erosion.cpu,
+        marks[1].cpu / erosion.cpu,
     );
+}
+
+fn relatives_head() {
+    println!(
+        "\n| scene | map | tip | erosion, processor ms | opening in erosions | contacts | certainty, exact | certainty, 0.5 nm |"
+    );
+    println!("|---|---|---|---|---|---|---|---|");
 }
 
 fn main() {
@@ -77,7 +124,12 @@ fn main() {
     }
     let only = std::env::args().nth(1).unwrap_or_default();
     let part = |name: &str| only == "--bench" || only == name;
+    println!(
+        "{} threads",
+        std::thread::available_parallelism().map_or(1, usize::from)
+    );
     if part("map") {
+        head();
         for size in [256, 512, 1024, 2048, 4096, 8192] {
             row(
                 "lines, noise 0.5",
@@ -87,6 +139,7 @@ fn main() {
         }
     }
     if part("tip") {
+        head();
         for side in [17, 33, 65, 129, 257] {
             row(
                 "lines, noise 0.5",
@@ -96,12 +149,14 @@ fn main() {
         }
     }
     if part("noise") {
+        head();
         for noise in [0.0, 0.1, 0.5, 1.0, 2.0] {
             let what = format!("lines, noise {noise}");
             row(&what, &scenes::lines(1024, noise), &scenes::sphere_cone(65));
         }
     }
     if part("kind") {
+        head();
         row(
             "lines, sphere-cone",
             &scenes::lines(512, 0.5),
@@ -129,8 +184,26 @@ fn main() {
         );
     }
     if part("relatives") {
-        relatives(&scenes::lines(512, 0.5), &scenes::sphere_cone(65));
-        relatives(&scenes::lines(2048, 0.5), &scenes::sphere_cone(129));
-        relatives(&scenes::rough(1024, 0.5), &scenes::sphere_cone(65));
+        relatives_head();
+        relatives(
+            "lines, sphere-cone",
+            &scenes::lines(512, 0.5),
+            &scenes::sphere_cone(65),
+        );
+        relatives(
+            "lines, sphere-cone",
+            &scenes::lines(2048, 0.5),
+            &scenes::sphere_cone(129),
+        );
+        relatives(
+            "rough, sphere-cone",
+            &scenes::rough(1024, 0.5),
+            &scenes::sphere_cone(65),
+        );
+        relatives(
+            "lines, paraboloid",
+            &scenes::lines(1024, 0.5),
+            &scenes::paraboloid(65),
+        );
     }
 }

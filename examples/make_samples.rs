@@ -170,9 +170,9 @@ fn stamp_14() -> Result<Sample> {
         seed: 14,
         ..Settings::new(512, 512, Pitch::square(2.0))
     };
-    let lines = Lines::new(110.3, 200.0, 4, 100.0, 60.0);
-    // The spikes' images, half as wide as 33 nm, stay clear of line 4 and of the floor beside it.
-    let at = scatter(&[7.0; 16], 48.0, [836.0, 0.0], [1024.0, 1024.0], 1400)?;
+    let lines = Lines::new(110.3, 200.0, 3, 100.0, 60.0);
+    // The spikes' images reach 33 nm around and stay clear of line 3 and of the floor beside it.
+    let at = scatter(&[7.0; 36], 48.0, [638.0, 0.0], [1024.0, 1024.0], 1400)?;
     let spikes: Vec<Bump> = at
         .iter()
         .enumerate()
@@ -211,7 +211,7 @@ fn stamp_14() -> Result<Sample> {
 /// The tip of stamp 22 and of the spikes it was checked on.
 const SLENDER: Model = Model::SphereCone {
     radius: 8.0,
-    half_angle: 8.0,
+    half_angle: 10.0,
 };
 
 /// Stamp 22: a grating with sloped walls, rounded corners and rough edges.
@@ -234,7 +234,7 @@ fn stamp_22() -> Result<Sample> {
         seed: 2200,
     };
     let lines = Lines::new(63.7, 128.0, 4, 60.0, 40.0)
-        .walls(80.0, 3.0)
+        .walls(75.0, 3.0)
         .rough(roughness, -40.0, 552.0)?;
     let mut dimensions = line_widths(&lines, &settings);
     dimensions.push(one("height of line 2", "step-height", "step height", 40.0));

@@ -77,6 +77,46 @@ fn rough(seed: u64, px: f64) -> Scene {
     Scene::new().on(move |x: f64, y: f64| map.at(x, y))
 }
 
+/// Radius of curvature of the rough surface's summits within the scan, nm, sharpest first.
+#[allow(dead_code)]
+fn summit_radii(scene: &Scene, px: f64) -> Vec<f64> {
+    let n = 2 * N;
+    let h = px / 2.0;
+    let at = |i: usize, j: usize| scene.height(j as f64 * h, i as f64 * h);
+    let z: Vec<Vec<f64>> = (0..n).map(|i| (0..n).map(|j| at(i, j)).collect()).collect();
+    let mut radii = Vec::new();
+    for i in 1..n - 1 {
+        for j in 1..n - 1 {
+            let around = [
+                (-1, -1),
+                (-1, 0),
+                (-1, 1),
+                (0, -1),
+                (0, 1),
+                (1, -1),
+                (1, 0),
+                (1, 1),
+            ];
+            let top = around.iter().all(|&(a, b): &(i32, i32)| {
+                z[(i as i32 + a) as usize][(j as i32 + b) as usize] < z[i][j]
+            });
+            if top {
+                let (x, y, e) = (j as f64 * h, i as f64 * h, 0.2);
+                let f = |a: f64, b: f64| scene.height(x + a, y + b);
+                let kxx = -(f(e, 0.0) + f(-e, 0.0) - 2.0 * f(0.0, 0.0)) / (e * e);
+                let kyy = -(f(0.0, e) + f(0.0, -e) - 2.0 * f(0.0, 0.0)) / (e * e);
+                let kxy = -(f(e, e) - f(-e, e) - f(e, -e) + f(-e, -e)) / (4.0 * e * e);
+                let det = kxx * kyy - kxy * kxy;
+                if det > 0.0 && z[i][j] > 8.0 {
+                    radii.push(1.0 / det.sqrt());
+                }
+            }
+        }
+    }
+    radii.sort_by(f64::total_cmp);
+    radii
+}
+
 fn wide_lines(seed: u64, px: f64) -> Scene {
     let shift = (seed % 7) as f64 * 0.37 * px;
     Scene::new().with(scan::Lines::new(
@@ -205,8 +245,9 @@ fn cells() -> Vec<Cell> {
             px: 1.0,
             noise,
             tip: || sphere_cone(8.0, 15.0),
-            identified: || sphere_cone(8.0, 15.0),
-            radius: (noise < 1.0).then_some(8.0),
+            // The sharper quarter of its summits has a radius of 0.68 nm or less (median over seeds).
+            identified: || sphere_cone(8.68, 15.0),
+            radius: (noise < 1.0).then_some(8.68),
             surface: rough,
             limits: (noise < 1.0).then_some(limits),
         });
@@ -267,7 +308,7 @@ fn cells() -> Vec<Cell> {
                 px: 1.0,
                 noise,
                 tip: || sphere_cone(8.0, 15.0),
-                identified: || sphere_cone(8.0, 15.0),
+                identified: || sphere_cone(9.5, 15.0),
                 radius: None,
                 surface,
                 limits: None,
@@ -279,7 +320,7 @@ fn cells() -> Vec<Cell> {
         px: 4.0,
         noise: 0.1,
         tip: || sphere_cone(8.0, 15.0),
-        identified: || sphere_cone(8.0, 15.0),
+        identified: || sphere_cone(9.5, 15.0),
         radius: None,
         surface: spikes,
         limits: None,
@@ -399,6 +440,18 @@ fn main() -> Result<(), Box<dyn Error>> {
             settings.seed = seed;
             settings.support_nm = 64.0 * cell.px.min(1.5);
             let made = scan::scan(|x, y| scene.height(x, y), &tip, &settings, &Progress::new())?;
+            if verbose && cell.name == "rough" {
+                let r = summit_radii(&scene, cell.px);
+                println!(
+                    "  summits {} radii {:.2} {:.2} {:.2} {:.2} {:.2}",
+                    r.len(),
+                    r[0],
+                    r[5],
+                    r[r.len() / 10],
+                    r[r.len() / 4],
+                    r[r.len() / 2]
+                );
+            }
             let start = Instant::now();
             let e = estimate(&made.scan, None, &Settings::default(), &Progress::new())?;
             seconds += start.elapsed().as_secs_f64();
@@ -442,6 +495,21 @@ fn main() -> Result<(), Box<dyn Error>> {
                     e.height_u_nm,
                     e.read_out.half_angle.as_ref().map(|a| a.value)
                 );
+                if std::env::var_os("TIP_PROFILE").is_some() {
+                    let (c, truth) = (e.tip.shape().nrows() / 2, (cell.identified)());
+                    for k in 0..e.tip.shape().ncols() {
+                        let x = (k as f64 - c as f64) * cell.px;
+                        println!(
+                            "    {x:6.1} {:8.3} true {:8.3} seen {} diagonal {:8.3} true {:8.3} seen {}",
+                            e.tip.shape()[[c, k]],
+                            -truth(x, 0.0),
+                            e.support[[c, k]],
+                            e.tip.shape()[[k, k]],
+                            -truth(x, x),
+                            e.support[[k, k]]
+                        );
+                    }
+                }
                 for d in &e.diagnosis {
                     println!("  - {}", d.finding);
                 }

@@ -86,9 +86,9 @@ fn a_single_spike_shows_the_tip_mirrored() {
     let certainty: Array2<u8> = read_npy(path("certainty.npy")).unwrap();
     assert_eq!(back[[3, 4]], 10.0);
     assert_eq!(certainty[[3, 4]], 2);
-    // Next to the spike the tip never reached down: an upper bound, never a contact.
+    // Next to the spike the tip did not reach down: an upper bound, no contact for certain.
     assert!(back[[3, 5]] > -100.0);
-    assert_eq!(certainty[[3, 5]], 0);
+    assert_ne!(certainty[[3, 5]], 2);
 }
 
 #[test]
@@ -221,7 +221,7 @@ fn sample_job(folder: &Path, name: &str) -> PathBuf {
 #[test]
 fn a_job_gives_the_whole_record_and_twice_the_same() {
     let folder = folder();
-    let job = sample_job(folder.path(), "isolated-step");
+    let job = sample_job(folder.path(), "shim");
     let record = |out: &str| {
         let out = folder.path().join(out);
         truewidth()
@@ -231,7 +231,7 @@ fn a_job_gives_the_whole_record_and_twice_the_same() {
             .assert()
             .success()
             .stdout(predicate::str::contains("report.html"));
-        out.join("isolated-step")
+        out.join("shim")
     };
     let (a, b) = (record("a"), record("b"));
     for name in ["surface.npy", "certainty.npy", "tip.npy"] {
@@ -274,7 +274,7 @@ fn a_job_gives_the_whole_record_and_twice_the_same() {
 #[test]
 fn one_bad_job_does_not_stop_the_others() {
     let folder = folder();
-    let good = sample_job(folder.path(), "isolated-step");
+    let good = sample_job(folder.path(), "shim");
     let bad = folder.path().join("bad.toml");
     std::fs::write(&bad, "[scan]\nfile = \"missing.tiff\"\n").unwrap();
     let odd = folder.path().join("odd.toml");
@@ -291,7 +291,7 @@ fn one_bad_job_does_not_stop_the_others() {
                 .and(predicate::str::contains("pich"))
                 .and(predicate::str::contains("2 of 3 jobs failed")),
         );
-    assert!(out.join("isolated-step/result.json").exists());
+    assert!(out.join("shim/result.json").exists());
     assert!(!out.join("bad").exists());
 }
 
@@ -302,7 +302,7 @@ fn the_tip_command_prints_the_tip_object() {
     let output = truewidth()
         .args(["tip", "--json", "--quiet", "--out"])
         .arg(&tip)
-        .arg(samples().join("spike-characterizer.tiff"))
+        .arg(samples().join("tip-check.tiff"))
         .output()
         .unwrap();
     assert!(

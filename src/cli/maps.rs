@@ -210,6 +210,7 @@ pub fn reconstruct(
                 map.heights(),
                 tip.shape(),
                 tolerance,
+                [0, 0],
                 &progress.part(0.5, 1.0),
             )?;
             files::write_npy_u8(path, marks.view())?;

@@ -1,10 +1,20 @@
 //! Dimensions, as scanned and corrected. One small file per kind of measurand.
 
+mod erosion;
+mod find;
 mod line_width;
+mod particle;
+mod pitch;
 mod sections;
+mod segmentation;
 mod statistics;
 mod step_height;
+#[cfg(test)]
+mod tests;
+mod texture;
 mod wall;
+
+pub use find::{Find, find};
 
 use crate::error::Result;
 use crate::heightmap::{HeightMap, Region};
@@ -186,7 +196,9 @@ pub fn measure(input: &Input, request: &Request, progress: &Progress) -> Result<
     match request.kind {
         Kind::StepHeight => step_height::measure(input, request, progress),
         Kind::LineWidth => line_width::measure(input, request, progress),
-        Kind::Pitch | Kind::Particle | Kind::Texture => todo!(),
+        Kind::Pitch => pitch::measure(input, request, progress),
+        Kind::Texture => texture::measure(input, request, progress),
+        Kind::Particle => particle::measure(input, request, progress),
     }
 }
 

@@ -132,8 +132,8 @@ impl Zones {
     /// pixels; `None` where it is not before the middle of the next wall.
     fn clearances(&self, noise: f64, count: usize) -> Vec<[Option<f64>; 2]> {
         let layout = &self.layout;
-        let noise = 5.0 * noise / (count.min(15) as f64).sqrt();
-        let tolerance = (noise / layout.height()).max(0.01);
+        let noise = 3.5 * noise / (count.min(15) as f64).sqrt();
+        let tolerance = (noise / layout.height()).max(0.002);
         let flat = detrended(layout);
         (self.first..self.first + self.count)
             .map(|i| {
@@ -310,7 +310,8 @@ fn detrended(layout: &Layout) -> Vec<f64> {
 }
 
 /// First distance from `edge` on one `side` where three pixels in a row lie within `tolerance` of
-/// the plateau `target`; one pixel is added.
+/// the plateau `target`; half of it and a pixel are added, because a rounded shoulder or foot
+/// comes within the tolerance before it ends.
 fn clearance(
     flat: &[f64],
     edge: f64,
@@ -326,7 +327,7 @@ fn clearance(
     (0..=(reach.max(0.0) as usize))
         .map(|d| d as f64)
         .find(|&d| (0..3).all(|k| near(edge + side * (d + f64::from(k)))))
-        .map(|d| d + 1.0)
+        .map(|d| (1.5 * d + 1.0).min(0.5 * (d + reach).max(d + 1.0)))
 }
 
 /// Normal equations of `z = a X + h d` about the means, accumulated group by group.
@@ -650,13 +651,10 @@ fn floor_lost(line: &mut Dimension, input: &Input, frame: &Frame, zones: &Zones)
                 .iter()
                 .map(|&(c, _)| f64::from(sections[[section, c]]))
                 .collect();
-            let mut inside: Vec<f64> = (a.max(0.0) as usize..=b.max(0.0) as usize)
+            let lowest = (a.max(0.0) as usize..=b.max(0.0) as usize)
                 .filter_map(|c| sections.get([section, c]).map(|&z| f64::from(z)))
                 .filter(|z| z.is_finite())
-                .collect();
-            inside.sort_unstable_by(f64::total_cmp);
-            // The mean of the lowest three is less of a noise extreme than the lowest.
-            let lowest = statistics::mean(&inside[..inside.len().min(3)]);
+                .fold(f64::INFINITY, f64::min);
             statistics::median(&mut rim).unwrap_or(f64::NAN) - lowest
         })
         .collect();
@@ -677,7 +675,7 @@ fn floor_lost(line: &mut Dimension, input: &Input, frame: &Frame, zones: &Zones)
         series.mean,
     );
     budget.push(
-        "noise of the lowest pixels",
+        "noise of the lowest pixel",
         frame.noise,
         Distribution::Normal,
         1.0,

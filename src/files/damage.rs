@@ -8,6 +8,12 @@ use std::io::Cursor;
 
 /// A small valid file of every format.
 fn files() -> Vec<(&'static str, Vec<u8>)> {
+    static FILES: std::sync::LazyLock<Vec<(&'static str, Vec<u8>)>> =
+        std::sync::LazyLock::new(make_files);
+    FILES.clone()
+}
+
+fn make_files() -> Vec<(&'static str, Vec<u8>)> {
     let values = ndarray::Array2::from_shape_fn((3, 4), |(r, c)| (r * 4 + c) as f32);
     let map = HeightMap::new(values.clone(), Pitch::square(2.0)).unwrap();
     let folder = tempfile::tempdir().unwrap();
@@ -107,7 +113,7 @@ fn every_single_byte_set_to_extremes() {
 }
 
 proptest! {
-    #![proptest_config(ProptestConfig::with_cases(300))]
+    #![proptest_config(ProptestConfig::with_cases(1000))]
 
     #[test]
     fn changed_bytes_never_panic(

@@ -113,7 +113,7 @@ impl<'a> Array<'a> {
         check_claim(needed, self.data.len(), false)?;
         let samples = Samples::from_bytes(self.kind, self.endian, &self.data[..needed])?;
         Ok(if self.fortran {
-            samples.from_fortran_order(rows, columns)
+            samples.turned_from_fortran(rows, columns)
         } else {
             samples
         })

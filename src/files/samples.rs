@@ -172,7 +172,7 @@ impl Samples {
 
     /// The numbers in C order of an array of `rows` x `columns` stored column by column.
     #[must_use]
-    pub fn from_fortran_order(self, rows: usize, columns: usize) -> Self {
+    pub fn turned_from_fortran(self, rows: usize, columns: usize) -> Self {
         fn turn<T: Copy>(values: &[T], rows: usize, columns: usize) -> Vec<T> {
             let mut turned = Vec::with_capacity(values.len());
             for row in 0..rows {
@@ -267,7 +267,20 @@ impl Samples {
                 .collect()
         }
         let offset = scale.offset_nm - base;
-        each!(self, v => of(v, void, |z| z * scale.nm_per_count + offset))
+        let identity = scale.nm_per_count == 1.0 && offset == 0.0;
+        let samples = match self {
+            // Single-precision nanometres are taken in place and to the bit.
+            Self::F32(mut values) if identity => {
+                if let Some(void) = void {
+                    for value in values.iter_mut().filter(|v| v.is_void(void)) {
+                        *value = f32::NAN;
+                    }
+                }
+                return values;
+            }
+            other => other,
+        };
+        each!(samples, v => of(v, void, |z| z * scale.nm_per_count + offset))
     }
 }
 
@@ -316,7 +329,7 @@ mod tests {
 
     #[test]
     fn fortran_order_is_turned() {
-        let samples = Samples::U8(vec![1, 4, 2, 5, 3, 6]).from_fortran_order(2, 3);
+        let samples = Samples::U8(vec![1, 4, 2, 5, 3, 6]).turned_from_fortran(2, 3);
         assert_eq!(samples, Samples::U8(vec![1, 2, 3, 4, 5, 6]));
     }
 

@@ -303,7 +303,7 @@ fn the_hash_of_a_known_text() {
 }
 
 proptest! {
-    #![proptest_config(ProptestConfig::with_cases(40))]
+    #![proptest_config(ProptestConfig::with_cases(20))]
 
     #[test]
     fn any_map_reads_back_from_what_was_written(

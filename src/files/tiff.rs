@@ -171,7 +171,7 @@ fn no_map(notes: &[String]) -> Error {
 }
 
 fn failed(error: TiffError) -> Error {
-    let error = match error {
+    match error {
         TiffError::UnsupportedError(why) => Error::new(
             ErrorKind::Unsupported,
             format!("the TIFF uses what is not read here: {why}"),
@@ -179,8 +179,7 @@ fn failed(error: TiffError) -> Error {
         .remedy("Save it without compression, as 32-bit float grey"),
         TiffError::LimitsExceeded => malformed("the TIFF claims more than the limits allow"),
         other => malformed(format!("the TIFF is damaged: {other}")),
-    };
-    error
+    }
 }
 
 #[cfg(test)]

@@ -110,10 +110,11 @@ fn png(map: &HeightMap) -> Result<(Vec<u8>, HeightScale)> {
     let (columns, rows) = sides(map)?;
     let (low, high) = map.range().unwrap_or((0.0, 0.0));
     let (low, high) = (f64::from(low), f64::from(high));
-    let step = if high > low {
-        (high - low) / 65534.0
-    } else {
-        1.0
+    // A flat map has no range: a step of its own size brings the height back exactly.
+    let step = match high - low {
+        range if range > 0.0 => range / 65534.0,
+        _ if low != 0.0 => low.abs(),
+        _ => 1.0,
     };
     let heights = map.heights();
     let data: Vec<u8> = heights

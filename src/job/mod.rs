@@ -1,11 +1,13 @@
 //! The job: its file, its ordered stages, what must be recomputed when a setting changes. The only
 //! door that the window and the command line use.
 
+mod demo;
 mod ghost;
 mod spec;
 mod stages;
 mod worker;
 
+pub use demo::{data_folder, demo};
 pub use ghost::{GhostTip, ghost_tip};
 pub use spec::{
     Job, JobFile, LevelMethod, LevelSpec, ScanSpec, Threshold, TipFrom, TipShape, TipSpec,

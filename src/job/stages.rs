@@ -181,7 +181,17 @@ impl Stages {
 
         let tip = self.tip_of(job, &level, &progress.part(0.1, 0.7))?;
         match &*tip {
-            Ok(found) => outcome.tip = Some(Arc::new(found.clone())),
+            Ok(found) => {
+                if !found.identified {
+                    outcome.warnings.push(
+                        "The tip is not identified: surface and certainty are those of the \
+                         bluntest tip that the scan allows, and corrected dimensions are bounds \
+                         without a value."
+                            .to_owned(),
+                    );
+                }
+                outcome.tip = Some(Arc::new(found.clone()));
+            }
             Err(reason) => outcome.warnings.push(format!("No tip: {reason}")),
         }
         watch(&outcome);
@@ -289,7 +299,7 @@ fn find_tip(job: &Job, level: &Leveled, progress: &Progress) -> Result<TipOrReas
             ..blind::Settings::default()
         };
         return match blind::estimate(scan, level.noise_nm, &settings, progress) {
-            Ok(estimate) => Ok(Ok(from_estimate(estimate))),
+            Ok(estimate) => Ok(Ok(from_estimate(estimate, spec))),
             Err(e) if e.kind() == ErrorKind::Data => Ok(Err(e.to_string())),
             Err(e) => Err(e),
         };
@@ -366,34 +376,43 @@ pub fn open_tip(path: &std::path::Path, scan: &HeightMap) -> Result<Tip> {
     Tip::new(grid.heights, scan.pitch()).map_err(|e| e.context(path.display()))
 }
 
-fn from_estimate(estimate: Estimate) -> TipResult {
-    let depth = estimate.exercised_depth_nm.unwrap_or(0.0);
-    let mut read_out = if depth > 0.0 {
-        read_out(&estimate.tip, depth, estimate.height_u_nm)
-    } else {
-        ReadOut::default()
-    };
-    if !estimate.apex_identified {
-        read_out.apex_radius = None;
-    }
+fn from_estimate(estimate: Estimate, spec: &TipSpec) -> TipResult {
     let mut diagnosis: Vec<String> = estimate
         .diagnosis
         .iter()
         .map(|d| format!("{}. {}", d.finding.trim_end_matches('.'), d.advice))
         .collect();
-    diagnosis.extend(read_out.reasons.iter().cloned());
+    diagnosis.extend(estimate.read_out.reasons.iter().cloned());
+    if spec.feature_radius.is_none() && estimate.read_out.apex_radius.is_some() {
+        diagnosis.push(
+            "The radius is that of the tip and of the scan's sharpest feature together. \
+             Where the feature's own radius is known, state it as [tip] feature-radius."
+                .to_owned(),
+        );
+    }
     TipResult {
         from: TipFrom::Blind,
         tip: estimate.tip.clone(),
         band: estimate.band.clone(),
         identified: estimate.apex_identified,
-        exercised_depth_nm: Some(depth),
+        exercised_depth_nm: Some(estimate.exercised_depth_nm.unwrap_or(0.0)),
         height_u_nm: estimate.height_u_nm,
         sha256: None,
         diagnosis,
-        read_out,
+        read_out: estimate.read_out.clone(),
         estimate: Some(estimate),
     }
+}
+
+/// Rows and columns over which an apex within the tolerance cannot tell where it touched: an apex
+/// of radius R is that flat over `sqrt(2 R tolerance)` to each side. 0 where no radius is known.
+fn contact_spread(found: &TipResult, tolerance_nm: f64) -> [usize; 2] {
+    let Some(apex) = found.read_out.apex_radius else {
+        return [0, 0];
+    };
+    let half_width = (2.0 * apex.value * tolerance_nm).sqrt();
+    let pitch = found.tip.pitch();
+    [pitch.y, pitch.x].map(|pitch| 2 * (half_width / pitch) as usize)
 }
 
 fn reconstruct(level: &Leveled, found: &TipResult, progress: &Progress) -> Result<SurfaceResult> {
@@ -411,6 +430,7 @@ fn reconstruct(level: &Leveled, found: &TipResult, progress: &Progress) -> Resul
         scan,
         tip,
         tolerance_nm as f32,
+        contact_spread(found, tolerance_nm),
         &progress.part(0.2, 0.5),
     )?;
     let edge_leaning =
@@ -466,7 +486,9 @@ fn measure(
             identified: tip.identified,
             height_u_nm: tip.height_u_nm,
             exercised_depth_nm: tip.exercised_depth_nm,
-            contains_feature_radius: tip.from == TipFrom::Blind,
+            // A radius that the user states was taken off by the estimate.
+            contains_feature_radius: tip.from == TipFrom::Blind
+                && spec.tip.feature_radius.is_none(),
         }),
         _ => None,
     };

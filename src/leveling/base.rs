@@ -7,6 +7,7 @@
 
 use super::model::{Model, Plane, from_middle};
 use ndarray::Array2;
+use ndarray::parallel::prelude::*;
 use statrs::function::erf::erf;
 
 /// Pixels that the search looks at; the plane is refined on all of them afterwards.
@@ -139,15 +140,18 @@ pub(super) fn find(
         least_squares(points.iter()),
         Plane::default(),
     ];
+    let fewer: Vec<[f64; 3]> = points.iter().step_by(4).copied().collect();
+    let tried: Vec<Option<(usize, Found)>> = starts
+        .into_par_iter()
+        .flat_map_iter(|start| [start, most_piled_up(&fewer, start, scale)])
+        .map(|start| {
+            let found = refine(&points, start, scale)?;
+            let (_, piled) = densest(&sorted_residuals(&points, found.plane), 4.0 * scale);
+            Some((piled, found))
+        })
+        .collect();
     let mut best: Option<(usize, Found)> = None;
-    let candidates = starts
-        .into_iter()
-        .flat_map(|start| [start, most_piled_up(&points, start, scale)]);
-    for start in candidates {
-        let Some(found) = refine(&points, start, scale) else {
-            continue;
-        };
-        let (_, piled) = densest(&sorted_residuals(&points, found.plane), 4.0 * scale);
+    for (piled, found) in tried.into_iter().flatten() {
         if best.is_none_or(|(most, _)| piled > most) {
             best = Some((piled, found));
         }
@@ -292,7 +296,8 @@ fn differences(samples: &Samples, f: impl Fn(usize, usize) -> Option<f64>) -> Ve
         .collect()
 }
 
-/// A slope and the share of the pixel pairs that agree with it, at the lag where fewest do.
+/// A slope and the share of the pixel pairs that agree with it, the median over the lags: at half
+/// the period of a grating none does, at the period all do.
 struct LocalSlope {
     slope: f64,
     agreement: f64,
@@ -313,7 +318,7 @@ fn local_slope(at_lag: impl Fn(usize) -> Vec<f64>, count: usize, noise: f64) -> 
     steps.sort_unstable_by(f64::total_cmp);
     let (first, n) = densest(&steps, width);
     let mut slope = steps[first..first + n].iter().sum::<f64>() / n as f64;
-    let mut agreement = n as f64 / steps.len() as f64;
+    let mut agreement = vec![n as f64 / steps.len() as f64];
     let mut lag = 2;
     while lag <= count / 4 {
         let all = at_lag(lag);
@@ -322,13 +327,16 @@ fn local_slope(at_lag: impl Fn(usize) -> Vec<f64>, count: usize, noise: f64) -> 
             .map(|d| d - slope * lag as f64)
             .filter(|d| d.abs() <= 0.75 * width)
             .collect();
-        agreement = agreement.min(agreeing.len() as f64 / all.len().max(1) as f64);
+        agreement.push(agreeing.len() as f64 / all.len().max(1) as f64);
         if agreeing.len() >= 8 && 5 * agreeing.len() >= all.len() {
             slope += median(&mut agreeing) / lag as f64;
         }
         lag *= 2;
     }
-    LocalSlope { slope, agreement }
+    LocalSlope {
+        slope,
+        agreement: median(&mut agreement),
+    }
 }
 
 pub(super) fn median(values: &mut [f64]) -> f64 {

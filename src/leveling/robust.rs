@@ -117,10 +117,7 @@ fn settle(
     let reach = model::core_reach(&scan.z, &base, allowed);
     let mut core = model::core(&scan.z, &base, allowed, reach);
     for _ in 0..12 {
-        let trusted = match of_row {
-            None => None,
-            Some(_) => Some(by_row(&core, &base)),
-        };
+        let trusted = of_row.map(|_| by_row(&core, &base));
         let mut moved = 0.0;
         for _ in 0..8 {
             progress.check()?;

@@ -57,10 +57,13 @@ pub(super) fn shifts(z: &Array2<f64>, noise: f64) -> Shifts {
     let mut all: Vec<f64> = steps.iter().flatten().map(|s| s.shift).collect();
     let usual = median(&mut all);
     let mut off: Vec<f64> = all.iter().map(|s| (s - usual).abs()).collect();
-    let scatter = 1.4826 * median(&mut off);
+    off.sort_unstable_by(f64::total_cmp);
+    let scatter = 1.4826 * off.get(off.len() / 2).copied().unwrap_or(0.0);
     let mut spreads: Vec<f64> = steps.iter().flatten().map(|s| s.spread).collect();
     let spread = median(&mut spreads).max(std::f64::consts::SQRT_2 * noise);
-    let threshold = (8.0 * scatter).max(4.0 * spread);
+    // The ninth decile keeps the tail of rows that are noisier than most from passing for jumps.
+    let decile = off.get(off.len() * 9 / 10).copied().unwrap_or(0.0);
+    let threshold = (8.0 * scatter).max(4.0 * spread).max(4.0 * decile);
     let excess = |r: usize| steps.get(r).copied().flatten().map(|s| s.shift - usual);
     let mut found = Shifts {
         scatter: scatter / std::f64::consts::SQRT_2,

@@ -605,7 +605,7 @@ fn one_thread_and_many_give_the_same_bits() {
 }
 
 proptest! {
-    #![proptest_config(ProptestConfig::with_cases(24))]
+    #![proptest_config(ProptestConfig { cases: 24, failure_persistence: None, ..Default::default() })]
 
     /// Laws: levelling a levelled map changes nothing, and neither does adding a plane before.
     #[test]

@@ -1,9 +1,9 @@
 //! Dilation and erosion of a whole map, tile row by tile row, on all threads.
 
 use super::field::{BLOCK, Field};
-use super::search::{FirstHit, Raise, Tile, search};
-use super::tip::{Order, Tip, rank_of};
-use super::{Contacts, NO_CONTACT};
+use super::flat;
+use super::search::{Tile, Vector, Visitor, Window, lowest, peaks, raise, search, wanted};
+use super::tip::{Block, Order, Tip};
 use crate::error::Result;
 use crate::progress::Progress;
 use ndarray::{Array2, ArrayView2};
@@ -20,12 +20,15 @@ pub(super) fn extreme(
     progress: &Progress,
 ) -> Result<Array2<f32>> {
     progress.check()?;
-    let mut out = Array2::zeros(map.dim());
     if map.is_empty() {
-        return Ok(out);
+        return Ok(Array2::zeros(map.dim()));
+    }
+    if let Some(depth) = flat::flat_depth(tip) {
+        return flat::extreme(arch, map, tip.dim(), depth, order, progress);
     }
     let tip = Tip::new(tip, order, map.dim(), false);
-    let field = Field::new(arch, map, order);
+    let field = Field::new(arch, map, order, progress)?;
+    let mut out = Array2::zeros(map.dim());
     let values = out.as_slice_mut().unwrap_or_default();
     let rows = values.par_chunks_mut(BLOCK * field.cols).enumerate();
     let step = Steps::new(progress, field.rows);
@@ -36,52 +39,11 @@ pub(super) fn extreme(
             row,
             order,
             values,
-            offsets: &mut [],
             progress,
         });
         step.done()
     })?;
     Ok(out)
-}
-
-/// Dilation with the offset that won.
-pub(super) fn contacts(
-    arch: Arch,
-    surface: ArrayView2<f32>,
-    tip: ArrayView2<f32>,
-    progress: &Progress,
-) -> Result<Contacts> {
-    progress.check()?;
-    let mut found = Contacts {
-        heights: Array2::zeros(surface.dim()),
-        offsets: Array2::from_elem(surface.dim(), NO_CONTACT),
-    };
-    if surface.is_empty() {
-        return Ok(found);
-    }
-    let tip = Tip::new(tip, Order::Max, surface.dim(), true);
-    let field = Field::new(arch, surface, Order::Max);
-    let chunk = BLOCK * field.cols;
-    let values = found.heights.as_slice_mut().unwrap_or_default();
-    let offsets = found.offsets.as_slice_mut().unwrap_or_default();
-    let step = Steps::new(progress, field.rows);
-    values
-        .par_chunks_mut(chunk)
-        .zip(offsets.par_chunks_mut(chunk))
-        .enumerate()
-        .try_for_each(|(row, (values, offsets))| {
-            arch.dispatch(TileRow {
-                field: &field,
-                tip: &tip,
-                row,
-                order: Order::Max,
-                values,
-                offsets,
-                progress,
-            });
-            step.done()
-        })?;
-    Ok(found)
 }
 
 /// Counts finished tile rows, reports them, and passes a cancellation on.
@@ -115,8 +77,6 @@ struct TileRow<'a> {
     order: Order,
     /// Up to `BLOCK` rows of results.
     values: &'a mut [f32],
-    /// The same of winning offsets; empty when not wanted.
-    offsets: &'a mut [[i16; 2]],
     progress: &'a Progress,
 }
 
@@ -126,56 +86,26 @@ impl WithSimd for TileRow<'_> {
     #[inline(always)]
     fn with_simd<S: Simd>(mut self, simd: S) {
         let cols = self.field.cols;
+        let rows = self.values.len() / cols;
         for col in (0..cols).step_by(S::F32_LANES) {
             if self.progress.is_cancelled() {
                 return;
             }
             let tile = Tile { row: self.row, col };
-            let start = wanted(
-                simd,
-                (self.values.len() / cols, cols - col),
-                f32::NEG_INFINITY,
-            );
+            let start = wanted(simd, (rows, cols - col), f32::NEG_INFINITY);
             let mut raise = Raise::new(simd, start);
             search(simd, self.field, self.tip, tile, &mut raise);
-            self.write_values(col, &raise.values);
-            if !self.offsets.is_empty() {
-                let mut hits = FirstHit::new(simd, raise.reached(simd));
-                search(simd, self.field, self.tip, tile, &mut hits);
-                self.write_offsets(col, &hits.keys);
-            }
+            self.write(col, &raise.values);
         }
     }
-}
-
-/// A tile of `value`, with `+inf` beyond the `rows` and `cols` that are left of the map: what
-/// is not wanted must not hold the others up.
-#[inline(always)]
-pub(super) fn wanted<S: Simd>(
-    simd: S,
-    (rows, cols): (usize, usize),
-    value: f32,
-) -> [S::f32s; BLOCK] {
-    let mut tile = [simd.splat_f32s(value); BLOCK];
-    if rows < BLOCK || cols < S::F32_LANES {
-        for (r, vector) in tile.iter_mut().enumerate() {
-            for (c, lane) in vector.lanes_mut().iter_mut().enumerate() {
-                if r >= rows || c >= cols {
-                    *lane = f32::INFINITY;
-                }
-            }
-        }
-    }
-    tile
 }
 
 impl TileRow<'_> {
     #[inline(always)]
-    fn write_values<S: Vector>(&mut self, col: usize, tile: &[S]) {
-        let sign = self.order;
+    fn write<V: Vector>(&mut self, col: usize, tile: &[V]) {
         for (row, vector) in self.values.chunks_exact_mut(self.field.cols).zip(tile) {
             for (to, &value) in row[col..].iter_mut().zip(vector.lanes()) {
-                *to = match sign {
+                *to = match self.order {
                     _ if value == f32::NEG_INFINITY => f32::NAN,
                     Order::Max => value,
                     // Not `-value`: zero stays a plain zero.
@@ -184,30 +114,49 @@ impl TileRow<'_> {
             }
         }
     }
+}
 
+/// The running maxima of a tile.
+struct Raise<S: Simd> {
+    values: [S::f32s; BLOCK],
+    floors: S::f32s,
+    floor: f32,
+}
+
+impl<S: Simd> Raise<S> {
+    /// Starts from `values`: `-inf`, or `+inf` where no output is wanted.
     #[inline(always)]
-    fn write_offsets<S: Vector>(&mut self, col: usize, tile: &[S]) {
-        for (row, vector) in self.offsets.chunks_exact_mut(self.field.cols).zip(tile) {
-            for (to, &key) in row[col..].iter_mut().zip(vector.lanes()) {
-                if key < f32::INFINITY {
-                    *to = self.tip.ranked[rank_of(key)];
-                }
-            }
+    fn new(simd: S, values: [S::f32s; BLOCK]) -> Self {
+        let floors = lowest(simd, &values);
+        Self {
+            values,
+            floors,
+            floor: simd.reduce_min_f32s(floors),
         }
     }
 }
 
-/// A vector of any instruction set as numbers.
-pub(super) trait Vector: pulp::bytemuck::Pod {
+impl<'a, S: Simd> Visitor<'a, S> for Raise<S> {
+    const EQUAL_MATTERS: bool = false;
+
     #[inline(always)]
-    fn lanes(&self) -> &[f32] {
-        pulp::bytemuck::cast_slice(std::slice::from_ref(self))
+    fn floor(&self) -> f32 {
+        self.floor
     }
 
     #[inline(always)]
-    fn lanes_mut(&mut self) -> &mut [f32] {
-        pulp::bytemuck::cast_slice_mut(std::slice::from_mut(self))
+    fn floors(&self) -> S::f32s {
+        self.floors
+    }
+
+    #[inline(always)]
+    fn visit(&mut self, simd: S, window: Window<'a>, block: &'a Block) {
+        raise(simd, &mut self.values, &peaks(simd, window, block));
+        self.floors = lowest(simd, &self.values);
+    }
+
+    #[inline(always)]
+    fn settle(&mut self, simd: S) {
+        self.floor = simd.reduce_min_f32s(self.floors);
     }
 }
-
-impl<T: pulp::bytemuck::Pod> Vector for T {}

@@ -6,6 +6,7 @@ use crate::error::Result;
 use crate::progress::Progress;
 use ndarray::{Array2, ArrayView2, Axis};
 use pulp::Arch;
+use rayon::prelude::*;
 
 /// The marks; see the public function. The deepest unseen tip cell decides: rounded subtraction
 /// is monotonic, so the highest `p` over the unseen pixels gives the lowest constraint.
@@ -17,29 +18,56 @@ pub(super) fn edge_leaning(
     progress: &Progress,
 ) -> Result<Array2<bool>> {
     progress.check()?;
-    let seen = |z: &&f32| z.is_finite();
+    if surface.is_empty() {
+        return Ok(Array2::from_elem(surface.dim(), false));
+    }
     let lowest = scan
-        .iter()
-        .filter(seen)
-        .copied()
-        .fold(f32::INFINITY, f32::min);
-    let voids = scan.iter().any(|z| !z.is_finite());
+        .axis_iter(Axis(0))
+        .into_par_iter()
+        .map(|row| {
+            let seen = row.iter().copied().filter(|z| z.is_finite());
+            progress.check()?;
+            Ok((
+                seen.fold(f32::INFINITY, f32::min),
+                row.iter().any(|z| !z.is_finite()),
+            ))
+        })
+        .try_reduce(
+            || (f32::INFINITY, false),
+            |a, b| Ok((a.0.min(b.0), a.1 || b.1)),
+        );
+    let (lowest, voids) = lowest?;
     let over_voids = if voids {
         // The erosion of zeros is minus the highest cell that meets one.
-        let unseen = scan.mapv(|z| if z.is_finite() { f32::NAN } else { 0.0 });
-        Some(extreme(arch, unseen.view(), tip, Order::Min, progress)?)
+        let mut unseen = Array2::zeros(scan.dim());
+        ndarray::Zip::from(&mut unseen)
+            .and(scan)
+            .par_for_each(|to: &mut f32, z| *to = if z.is_finite() { f32::NAN } else { 0.0 });
+        let part = progress.part(0.0, 0.9);
+        Some(extreme(arch, unseen.view(), tip, Order::Min, &part)?)
     } else {
         None
     };
     let across_rows = Overhang::new(tip, Axis(0), scan.nrows());
     let across_cols = Overhang::new(tip, Axis(1), scan.ncols());
-    Ok(Array2::from_shape_fn(surface.dim(), |(r, c)| {
-        let mut p = across_rows.at(r).max(across_cols.at(c));
-        if let Some(over_voids) = &over_voids {
-            p = p.max(-over_voids[(r, c)]);
-        }
-        p > f32::NEG_INFINITY && lowest - p < surface[(r, c)]
-    }))
+    let mut leaning = Array2::from_elem(surface.dim(), false);
+    leaning
+        .axis_iter_mut(Axis(0))
+        .into_par_iter()
+        .enumerate()
+        .try_for_each(|(r, mut row)| {
+            let over_row = across_rows.at(r);
+            for (c, to) in row.iter_mut().enumerate() {
+                let mut p = over_row.max(across_cols.at(c));
+                if let Some(over_voids) = &over_voids {
+                    p = p.max(-over_voids[(r, c)]);
+                }
+                *to = p > f32::NEG_INFINITY && lowest - p < surface[(r, c)];
+            }
+            progress.check()
+        })?;
+    progress.report(1.0);
+    Ok(leaning)
 }
 
 /// The highest tip cell that hangs over the edge of the map, by position along one axis.

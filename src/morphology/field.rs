@@ -1,6 +1,8 @@
 //! The height map as the kernels see it: padded, voids at -inf, with tables of local maxima.
 
 use super::tip::Order;
+use crate::error::Result;
+use crate::progress::Progress;
 use ndarray::{ArrayView2, Axis};
 use pulp::{Arch, Simd, WithSimd};
 use rayon::prelude::*;
@@ -49,7 +51,13 @@ pub(super) fn larger(a: f32, b: f32) -> f32 {
 }
 
 impl Field {
-    pub(super) fn new(arch: Arch, map: ArrayView2<f32>, order: Order) -> Self {
+    /// Errors only when cancelled. The map must not be empty.
+    pub(super) fn new(
+        arch: Arch,
+        map: ArrayView2<f32>,
+        order: Order,
+        progress: &Progress,
+    ) -> Result<Self> {
         let (rows, cols) = map.dim();
         let fine_rows = (TOP + rows - 1) / BLOCK + 1;
         let fine_cols = (LEFT + cols - 1) / BLOCK + 1;
@@ -60,7 +68,8 @@ impl Field {
             stride += TILE;
         }
         let mut data = vec![0.0_f32; padded_rows * stride];
-        data.par_chunks_mut(stride).enumerate().for_each(|(r, to)| {
+        let rows_of_data = data.par_chunks_mut(stride).enumerate();
+        rows_of_data.try_for_each(|(r, to)| {
             to.fill(f32::NEG_INFINITY);
             if (TOP..TOP + rows).contains(&r) {
                 let from = map.index_axis(Axis(0), r - TOP);
@@ -73,7 +82,8 @@ impl Field {
                         .for_each(|(to, &z)| *to = seen(z, order)),
                 }
             }
-        });
+            progress.check()
+        })?;
         let mut field = Self {
             rows,
             cols,
@@ -87,25 +97,26 @@ impl Field {
             coarse: Vec::new(),
             highest: f32::NEG_INFINITY,
         };
-        field.bound(arch);
-        field
+        field.bound(arch, progress)?;
+        Ok(field)
     }
 
     /// Fills the tables of local maxima.
-    fn bound(&mut self, arch: Arch) {
+    fn bound(&mut self, arch: Arch, progress: &Progress) -> Result<()> {
         let (stride, data) = (self.stride, &self.data);
         self.columns
             .par_chunks_mut(stride)
             .zip(self.fine.par_chunks_mut(self.fine_cols))
             .enumerate()
-            .for_each(|(i, (columns, fine))| {
+            .try_for_each(|(i, (columns, fine))| {
                 let rows = &data[i * BLOCK * stride..][..WINDOW_ROWS * stride];
                 arch.dispatch(Bound {
                     rows,
                     columns,
                     fine,
                 });
-            });
+                progress.check()
+            })?;
         self.highest = self.fine.iter().copied().fold(f32::NEG_INFINITY, larger);
         let (fine, fine_rows, fine_cols) = (&self.fine, self.fine_rows, self.fine_cols);
         let coarse_cols = self.coarse_cols;
@@ -122,6 +133,7 @@ impl Field {
                     }
                 }
             });
+        Ok(())
     }
 }
 
@@ -139,10 +151,11 @@ fn seen(z: f32, order: Order) -> f32 {
     }
 }
 
-struct Load<'a> {
-    from: &'a [f32],
-    to: &'a mut [f32],
-    order: Order,
+/// Copies heights as the kernels see them.
+pub(super) struct Load<'a> {
+    pub(super) from: &'a [f32],
+    pub(super) to: &'a mut [f32],
+    pub(super) order: Order,
 }
 
 impl WithSimd for Load<'_> {

@@ -14,9 +14,11 @@
 //! Everything here gives the same bits on one thread and on many, on every instruction set, and
 //! as the plain twins in `reference.rs`.
 
+mod contact;
 mod dilation;
 mod edges;
 mod field;
+mod flat;
 #[cfg(test)]
 mod reference;
 mod search;
@@ -87,14 +89,14 @@ pub fn contacts(
     tip: ArrayView2<f32>,
     progress: &Progress,
 ) -> Result<Contacts> {
-    dilation::contacts(Arch::new(), surface, tip, progress)
+    contact::contacts(Arch::new(), surface, tip, progress)
 }
 
 /// Certainty values (contract of `certainty.npy`).
 pub mod certainty {
-    /// Never a contact.
+    /// Nothing in the scan says that the tip was there.
     pub const NEVER: u8 = 0;
-    /// A contact only together with others.
+    /// A contact only together with others: one of them was touched, which is open.
     pub const BOUNDED: u8 = 1;
     /// The only contact of some probe position.
     pub const TOUCHED: u8 = 2;
@@ -104,20 +106,31 @@ pub mod certainty {
 
 /// Which surface pixels the tip touched. `surface` is the erosion of `scan` by `tip`.
 ///
-/// A scan pixel `x` touches the surface pixels `x + u` with `R(x + u) + p(u) >= I(x) - tolerance`
-/// (nm). A surface pixel that is the only one touched at some `x` is `TOUCHED`; one touched only
-/// together with others `BOUNDED`; else `NEVER`. Void surface pixels are `VOID`.
+/// A scan pixel `x` can touch the surface pixels `x + u` with
+/// `R(x + u) + p(u) >= I(x) - tolerance` (nm). Where these lie within `spread` rows and columns of
+/// each other they count as one contact, and are `TOUCHED`: something there was touched for
+/// certain. Else the contact is shared: if one of the pixels is `TOUCHED` already it explains the
+/// position, otherwise all are `BOUNDED`. What no position needs is `NEVER`, void surface pixels
+/// are `VOID`.
+///
+/// On a scan without noise take a tolerance of the size of the rounding and a spread of 0: then
+/// `TOUCHED` is the published certainty. Noise blurs where an apex of radius R touched by about
+/// `sqrt(2 R tolerance)` to each side; the spread should allow for that, or a noisy flat counts as
+/// bounded throughout.
 /// Errors: kind `Data` when the shapes differ, or when cancelled.
-/// Source: J. S. Villarrubia, J. Res. NIST 102, 425 (1997), doi 10.6028/jres.102.030.
+/// Source: J. S. Villarrubia, J. Res. NIST 102, 425 (1997), doi 10.6028/jres.102.030 (the sole
+/// contact; tolerance, spread and the explained positions are this program's).
 pub fn certainty_map(
     surface: ArrayView2<f32>,
     scan: ArrayView2<f32>,
     tip: ArrayView2<f32>,
     tolerance: f32,
+    spread: [usize; 2],
     progress: &Progress,
 ) -> Result<Array2<u8>> {
     same_shape(surface, scan)?;
-    touch::certainty_map(Arch::new(), surface, scan, tip, tolerance, progress)
+    let rule = touch::Rule { tolerance, spread };
+    touch::certainty_map(Arch::new(), surface, scan, tip, rule, progress)
 }
 
 /// Surface pixels that lean on the edge of the scan or on a void: a pixel nobody saw, as low as

@@ -65,24 +65,39 @@ pub(super) fn certainty_map(
     scan: ArrayView2<f32>,
     tip: ArrayView2<f32>,
     tolerance: f32,
+    spread: [usize; 2],
 ) -> Array2<u8> {
     let cells = cells(tip);
     let mut map = surface.mapv(|s| if s.is_finite() { NEVER } else { VOID });
-    for ((r, c), &height) in scan.indexed_iter() {
-        if !height.is_finite() {
-            continue;
-        }
-        let touched: Vec<_> = cells
-            .iter()
-            .map(|&(dr, dc, p)| (r as isize + dr, c as isize + dc, p))
-            .filter(|&(sr, sc, p)| {
-                get(surface, sr, sc).is_some_and(|s| s + p >= height - tolerance)
-            })
-            .collect();
-        let value = if touched.len() == 1 { TOUCHED } else { BOUNDED };
-        for (sr, sc, _) in touched {
-            let cell = &mut map[(sr as usize, sc as usize)];
-            *cell = (*cell).max(value);
+    let contacts: Vec<Vec<(usize, usize)>> = scan
+        .indexed_iter()
+        .filter(|(_, height)| height.is_finite())
+        .map(|((r, c), height)| {
+            cells
+                .iter()
+                .map(|&(dr, dc, p)| (r as isize + dr, c as isize + dc, p))
+                .filter(|&(sr, sc, p)| {
+                    get(surface, sr, sc)
+                        .is_some_and(|s| s.is_finite() && s + p >= height - tolerance)
+                })
+                .map(|(sr, sc, _)| (sr as usize, sc as usize))
+                .collect()
+        })
+        .collect();
+    let range = |values: &mut dyn Iterator<Item = usize>| {
+        let (low, high) = values.fold((usize::MAX, 0), |(l, h), v| (l.min(v), h.max(v)));
+        high.saturating_sub(low)
+    };
+    let sole = |touched: &[(usize, usize)]| {
+        range(&mut touched.iter().map(|t| t.0)) <= spread[0]
+            && range(&mut touched.iter().map(|t| t.1)) <= spread[1]
+    };
+    for touched in contacts.iter().filter(|touched| sole(touched)) {
+        touched.iter().for_each(|&at| map[at] = TOUCHED);
+    }
+    for touched in contacts.iter().filter(|touched| !sole(touched)) {
+        if touched.iter().all(|&at| map[at] != TOUCHED) {
+            touched.iter().for_each(|&at| map[at] = BOUNDED);
         }
     }
     map

@@ -25,6 +25,12 @@ pub(super) struct Window<'a> {
 }
 
 impl<'a> Window<'a> {
+    /// From one row to the next in the padded map.
+    #[inline(always)]
+    pub(super) fn stride(self) -> usize {
+        self.field.stride
+    }
+
     /// Its rows, each just as long as a vector and the block's columns need.
     #[inline(always)]
     pub(super) fn rows<S: Simd>(self) -> [&'a [f32]; WINDOW_ROWS] {
@@ -136,142 +142,90 @@ pub(super) fn lowest<S: Simd>(simd: S, rows: &[S::f32s; BLOCK]) -> S::f32s {
     )
 }
 
-/// The running maxima of a tile.
-pub(super) struct Raise<S: Simd> {
-    pub(super) values: [S::f32s; BLOCK],
-    floors: S::f32s,
-    floor: f32,
-}
-
-impl<S: Simd> Raise<S> {
-    /// Starts from `values`: `-inf`, or `+inf` where no output is wanted.
-    #[inline(always)]
-    pub(super) fn new(simd: S, values: [S::f32s; BLOCK]) -> Self {
-        let floors = lowest(simd, &values);
-        Self {
-            values,
-            floors,
-            floor: simd.reduce_min_f32s(floors),
+/// The highest sum that a block gives each pixel of a tile.
+#[inline(always)]
+pub(super) fn peaks<S: Simd>(simd: S, window: Window, block: &Block) -> [S::f32s; BLOCK] {
+    let mut peaks = [simd.splat_f32s(f32::NEG_INFINITY); BLOCK];
+    let rows = window.rows::<S>();
+    for j in 0..BLOCK {
+        let mut map = [simd.splat_f32s(0.0); WINDOW_ROWS];
+        for i in 0..WINDOW_ROWS {
+            map[i] = load::<S>(&rows[i][j..]);
+        }
+        let mut cells = [simd.splat_f32s(0.0); BLOCK];
+        for (cell, row) in cells.iter_mut().zip(&block.cells) {
+            *cell = simd.splat_f32s(row[j]);
+        }
+        for r in 0..BLOCK {
+            // Pairs first: half the chain of dependent maxima.
+            let pair = simd.max_f32s(
+                simd.add_f32s(map[r], cells[0]),
+                simd.add_f32s(map[r + 1], cells[1]),
+            );
+            let other = simd.max_f32s(
+                simd.add_f32s(map[r + 2], cells[2]),
+                simd.add_f32s(map[r + 3], cells[3]),
+            );
+            peaks[r] = simd.max_f32s(peaks[r], simd.max_f32s(pair, other));
         }
     }
+    peaks
+}
 
-    /// The maxima, `+inf` where nothing constrained: no offset reaches that.
-    #[inline(always)]
-    pub(super) fn reached(&self, simd: S) -> [S::f32s; BLOCK] {
-        let nothing = simd.splat_f32s(f32::NEG_INFINITY);
-        let never = simd.splat_f32s(f32::INFINITY);
-        let mut reached = self.values;
-        for v in &mut reached {
-            *v = simd.select_f32s(simd.equal_f32s(*v, nothing), never, *v);
-        }
-        reached
+/// Raises `values` to `peaks` where those are higher.
+#[inline(always)]
+pub(super) fn raise<S: Simd>(simd: S, values: &mut [S::f32s; BLOCK], peaks: &[S::f32s; BLOCK]) {
+    for (value, &peak) in values.iter_mut().zip(peaks) {
+        *value = simd.max_f32s(*value, peak);
     }
 }
 
-impl<'a, S: Simd> Visitor<'a, S> for Raise<S> {
-    const EQUAL_MATTERS: bool = false;
-
-    #[inline(always)]
-    fn floor(&self) -> f32 {
-        self.floor
+/// Whether any of the tile's `values` reaches its `limit`.
+#[inline(always)]
+pub(super) fn any_reaches<S: Simd>(
+    simd: S,
+    values: &[S::f32s; BLOCK],
+    limits: &[S::f32s; BLOCK],
+) -> bool {
+    let mut any = simd.greater_than_or_equal_f32s(values[0], limits[0]);
+    for r in 1..BLOCK {
+        any = simd.or_m32s(any, simd.greater_than_or_equal_f32s(values[r], limits[r]));
     }
-
-    #[inline(always)]
-    fn floors(&self) -> S::f32s {
-        self.floors
-    }
-
-    #[inline(always)]
-    fn visit(&mut self, simd: S, window: Window<'a>, block: &'a Block) {
-        let mut values = self.values;
-        let rows = window.rows::<S>();
-        for j in 0..BLOCK {
-            let mut map = [simd.splat_f32s(0.0); WINDOW_ROWS];
-            for i in 0..WINDOW_ROWS {
-                map[i] = load::<S>(&rows[i][j..]);
-            }
-            let mut cells = [simd.splat_f32s(0.0); BLOCK];
-            for i in 0..BLOCK {
-                cells[i] = simd.splat_f32s(block.cells[i][j]);
-            }
-            for r in 0..BLOCK {
-                // Pairs first: half the chain of dependent maxima.
-                let pair = simd.max_f32s(
-                    simd.add_f32s(map[r], cells[0]),
-                    simd.add_f32s(map[r + 1], cells[1]),
-                );
-                let other = simd.max_f32s(
-                    simd.add_f32s(map[r + 2], cells[2]),
-                    simd.add_f32s(map[r + 3], cells[3]),
-                );
-                values[r] = simd.max_f32s(values[r], simd.max_f32s(pair, other));
-            }
-        }
-        self.values = values;
-        self.floors = lowest(simd, &values);
-    }
-
-    #[inline(always)]
-    fn settle(&mut self, simd: S) {
-        self.floor = simd.reduce_min_f32s(self.floors);
-    }
+    simd.first_true_m32s(any) < S::F32_LANES
 }
 
-/// Finds, for known results, the first of the offsets that reach them.
-pub(super) struct FirstHit<S: Simd> {
-    targets: [S::f32s; BLOCK],
-    /// The best rank so far, as a key.
-    pub(super) keys: [S::f32s; BLOCK],
-    floors: S::f32s,
-    floor: f32,
-}
-
-impl<S: Simd> FirstHit<S> {
-    /// Looks for `targets`; `+inf` where none is wanted.
-    #[inline(always)]
-    pub(super) fn new(simd: S, targets: [S::f32s; BLOCK]) -> Self {
-        let floors = lowest(simd, &targets);
-        Self {
-            targets,
-            keys: [simd.splat_f32s(f32::INFINITY); BLOCK],
-            floors,
-            floor: simd.reduce_min_f32s(floors),
-        }
-    }
-}
-
-impl<'a, S: Simd> Visitor<'a, S> for FirstHit<S> {
-    const EQUAL_MATTERS: bool = true;
-
-    #[inline(always)]
-    fn floor(&self) -> f32 {
-        self.floor
-    }
-
-    #[inline(always)]
-    fn floors(&self) -> S::f32s {
-        self.floors
-    }
-
-    #[inline(always)]
-    fn visit(&mut self, simd: S, window: Window<'a>, block: &'a Block) {
-        let mut keys = self.keys;
-        let rows = window.rows::<S>();
-        let never = simd.splat_f32s(f32::INFINITY);
-        for j in 0..BLOCK {
-            for i in 0..BLOCK {
-                let cell = simd.splat_f32s(block.cells[i][j]);
-                let rank = simd.splat_f32s(block.ranks[i][j]);
-                for r in 0..BLOCK {
-                    let sum = simd.add_f32s(load::<S>(&rows[r + i][j..]), cell);
-                    let hit = simd.greater_than_or_equal_f32s(sum, self.targets[r]);
-                    keys[r] = simd.min_f32s(keys[r], simd.select_f32s(hit, rank, never));
+/// A tile of `value`, with `+inf` beyond the `rows` and `cols` that are left of the map: what
+/// is not wanted must not hold the others up.
+#[inline(always)]
+pub(super) fn wanted<S: Simd>(
+    simd: S,
+    (rows, cols): (usize, usize),
+    value: f32,
+) -> [S::f32s; BLOCK] {
+    let mut tile = [simd.splat_f32s(value); BLOCK];
+    if rows < BLOCK || cols < S::F32_LANES {
+        for (r, vector) in tile.iter_mut().enumerate() {
+            for (c, lane) in vector.lanes_mut().iter_mut().enumerate() {
+                if r >= rows || c >= cols {
+                    *lane = f32::INFINITY;
                 }
             }
         }
-        self.keys = keys;
+    }
+    tile
+}
+
+/// A vector of any instruction set as numbers.
+pub(super) trait Vector: pulp::bytemuck::Pod {
+    #[inline(always)]
+    fn lanes(&self) -> &[f32] {
+        pulp::bytemuck::cast_slice(std::slice::from_ref(self))
     }
 
     #[inline(always)]
-    fn settle(&mut self, _: S) {}
+    fn lanes_mut(&mut self) -> &mut [f32] {
+        pulp::bytemuck::cast_slice_mut(std::slice::from_mut(self))
+    }
 }
+
+impl<T: pulp::bytemuck::Pod> Vector for T {}

@@ -111,13 +111,16 @@ fn agree_with_the_twins(map: &Array2<f32>, tip: &Array2<f32>) {
             bits(&dilated.heights)
         );
         assert_eq!(bits(&fast(map, tip, Order::Min, arch)), bits(&eroded));
-        let contacts = dilation::contacts(arch, map.view(), tip.view(), &progress).unwrap();
+        let contacts = contact::contacts(arch, map.view(), tip.view(), &progress).unwrap();
         assert_eq!(bits(&contacts.heights), bits(&dilated.heights));
         assert_eq!(contacts.offsets, dilated.offsets);
         for tolerance in [0.0, 0.6, 1e6, f32::INFINITY] {
             let (s, i, p) = (eroded.view(), map.view(), tip.view());
-            let marks = touch::certainty_map(arch, s, i, p, tolerance, &progress).unwrap();
-            assert_eq!(marks, reference::certainty_map(s, i, p, tolerance));
+            for spread in [[0, 0], [1, 2], [3, 0]] {
+                let rule = touch::Rule { tolerance, spread };
+                let marks = touch::certainty_map(arch, s, i, p, rule, &progress).unwrap();
+                assert_eq!(marks, reference::certainty_map(s, i, p, tolerance, spread));
+            }
         }
         let (s, i, p) = (eroded.view(), map.view(), tip.view());
         let leaning = edges::edge_leaning(arch, i, s, p, &progress).unwrap();
@@ -127,7 +130,9 @@ fn agree_with_the_twins(map: &Array2<f32>, tip: &Array2<f32>) {
 
 /// `a <= b` wherever both are known.
 fn below(a: &Array2<f32>, b: &Array2<f32>) -> bool {
-    a.iter().zip(b).all(|(a, b)| !(a > b))
+    a.iter()
+        .zip(b)
+        .all(|(a, b)| a <= b || a.is_nan() || b.is_nan())
 }
 
 proptest! {
@@ -146,7 +151,7 @@ proptest! {
             let surface = erode(map.view(), tip.view(), &Progress::new()).unwrap();
             let contacts = contacts(surface.view(), tip.view(), &Progress::new()).unwrap();
             let marks =
-                certainty_map(surface.view(), map.view(), tip.view(), 0.1, &Progress::new());
+                certainty_map(surface.view(), map.view(), tip.view(), 0.1, [0, 0], &Progress::new());
             (bits(&surface), bits(&contacts.heights), contacts.offsets, marks.unwrap())
         };
         let pool = |n| rayon::ThreadPoolBuilder::new().num_threads(n).build().unwrap();
@@ -246,6 +251,31 @@ fn shapes_at_the_limits() {
 }
 
 #[test]
+fn flat_tips_equal_their_twin() {
+    let sizes = [(1, 1), (1, 5), (3, 3), (7, 5), (9, 171), (101, 3)];
+    for (rows, cols) in [(1, 1), (1, 40), (13, 33), (40, 7)] {
+        for (tip_rows, tip_cols) in sizes {
+            let scene = Scene {
+                seed: 11,
+                rows,
+                cols,
+                tip_rows: 1,
+                tip_cols: 1,
+                steep: 0.0,
+                grain: 0.25,
+                voids: 0.3,
+                holes: 0.0,
+            };
+            let (map, _) = scene.build();
+            for depth in [0.0, -0.0, -1.3] {
+                let tip = Array2::from_elem((tip_rows, tip_cols), depth);
+                agree_with_the_twins(&map, &tip);
+            }
+        }
+    }
+}
+
+#[test]
 fn nothing_in_nothing_out() {
     let progress = Progress::new();
     let tip = array![[0.0_f32]];
@@ -257,7 +287,14 @@ fn nothing_in_nothing_out() {
         );
         let found = contacts(empty.view(), tip.view(), &progress).unwrap();
         assert_eq!(found.offsets.dim(), dim);
-        let marks = certainty_map(empty.view(), empty.view(), tip.view(), 0.0, &progress);
+        let marks = certainty_map(
+            empty.view(),
+            empty.view(),
+            tip.view(),
+            0.0,
+            [0, 0],
+            &progress,
+        );
         assert_eq!(marks.unwrap().dim(), dim);
         let leaning = edge_leaning(empty.view(), empty.view(), tip.view(), &progress);
         assert_eq!(leaning.unwrap().dim(), dim);
@@ -324,8 +361,77 @@ fn a_cancelled_run_says_so() {
     let (s, p) = (map.view(), tip.view());
     assert!(dilate(s, p, &progress).is_err_and(|e| e.is_cancelled()));
     assert!(contacts(s, p, &progress).is_err_and(|e| e.is_cancelled()));
-    assert!(certainty_map(s, s, p, 0.0, &progress).is_err_and(|e| e.is_cancelled()));
+    assert!(certainty_map(s, s, p, 0.0, [0, 0], &progress).is_err_and(|e| e.is_cancelled()));
     assert!(edge_leaning(s, s, p, &progress).is_err_and(|e| e.is_cancelled()));
+}
+
+#[test]
+fn a_cancellation_stops_a_run_under_way() {
+    // Random depths: nothing can be skipped, so the run outlasts the watcher by far.
+    let mut random = ChaCha8Rng::seed_from_u64(5);
+    let map = Array2::from_shape_simple_fn((1500, 1500), || random.random::<f32>());
+    let tip = Array2::from_shape_simple_fn((201, 201), || -random.random::<f32>());
+    let progress = Progress::new();
+    let result = std::thread::scope(|scope| {
+        let run = scope.spawn(|| dilate(map.view(), tip.view(), &progress));
+        while progress.fraction() == 0.0 {
+            std::thread::yield_now();
+        }
+        progress.cancel();
+        run.join().unwrap()
+    });
+    assert!(result.is_err_and(|e| e.is_cancelled()));
+    assert!(progress.fraction() < 1.0);
+}
+
+#[test]
+fn heights_of_a_millimetre_and_subnormal_ones_are_exact() {
+    // A surface lowered and raised by 1e6 nm, in steps that single precision holds exactly.
+    let map = Array2::from_shape_fn((9, 40), |(r, c)| ((r * 5 + c * 3) % 7) as f32);
+    let tip = array![
+        [-2.0_f32, -1.0, -3.0],
+        [-1.0, 0.0, -4.0],
+        [-6.0, -1.0, -2.0]
+    ];
+    for order in [Order::Max, Order::Min] {
+        let plain = fast(&map, &tip, order, Arch::new());
+        for lift in [-1e6_f32, 1e6] {
+            let lifted = fast(&(&map + lift), &tip, order, Arch::new());
+            assert_eq!(bits(&lifted), bits(&(&plain + lift)));
+        }
+        let tiny = f32::from_bits(1);
+        let small = fast(&(&map * tiny), &(&tip * tiny), order, Arch::new());
+        assert_eq!(bits(&small), bits(&(&plain * tiny)));
+    }
+}
+
+#[test]
+fn a_shifted_surface_gives_a_shifted_scan() {
+    let scene = Scene {
+        seed: 3,
+        rows: 30,
+        cols: 50,
+        tip_rows: 5,
+        tip_cols: 7,
+        steep: 0.3,
+        grain: 0.25,
+        voids: 0.0,
+        holes: 0.1,
+    };
+    let (map, tip) = scene.build();
+    for order in [Order::Max, Order::Min] {
+        let whole = fast(&map, &tip, order, Arch::new());
+        let part = fast(
+            &map.slice(ndarray::s![3.., 5..]).to_owned(),
+            &tip,
+            order,
+            Arch::new(),
+        );
+        // Away from the edges by half a tip.
+        let inner = ndarray::s![2..25, 3..42];
+        let moved = whole.slice(ndarray::s![5..28, 8..47]).to_owned();
+        assert_eq!(bits(&part.slice(inner).to_owned()), bits(&moved));
+    }
 }
 
 #[test]
@@ -340,7 +446,15 @@ fn progress_ends_at_one() {
 fn shapes_that_do_not_belong_together_are_refused() {
     let (a, b) = (Array2::<f32>::zeros((3, 4)), Array2::<f32>::zeros((4, 3)));
     let tip = array![[0.0_f32]];
-    let error = certainty_map(a.view(), b.view(), tip.view(), 0.0, &Progress::new()).unwrap_err();
+    let error = certainty_map(
+        a.view(),
+        b.view(),
+        tip.view(),
+        0.0,
+        [0, 0],
+        &Progress::new(),
+    )
+    .unwrap_err();
     assert_eq!(error.kind(), ErrorKind::Data);
     assert!(error.to_string().contains("3 x 4"));
     assert!(edge_leaning(a.view(), b.view(), tip.view(), &Progress::new()).is_err());

@@ -12,7 +12,7 @@ mod polish;
 mod smooth;
 mod window;
 
-use super::read_out::{ReadOut, rough_radius};
+use super::read_out::ReadOut;
 use super::{Band, Tip};
 use crate::error::{Error, ErrorKind, Result};
 use crate::heightmap::HeightMap;
@@ -119,7 +119,7 @@ pub fn estimate(
     }
     let noise = match noise_nm.filter(|n| n.is_finite() && *n >= 0.0) {
         Some(noise) => noise,
-        None => smooth::noise(scan.heights()),
+        None => crate::leveling::noise(scan).unwrap_or(0.0),
     };
     let bound = match settings.method {
         Method::Auto => matched_bound(scan, noise, settings, &progress.part(0.0, 0.6))?,
@@ -180,6 +180,8 @@ struct Bound {
     smoothing: f64,
 }
 
+/// Radius that the smoothing is matched to; the least-squares fit does the rest for other radii.
+const TYPICAL_RADIUS_PX: f64 = 15.0;
 /// Smoothing by less than this does not pay, by more hides the tip; pixels.
 const SMOOTHING_PX: [f64; 2] = [0.7, 4.0];
 
@@ -192,47 +194,21 @@ fn matched_bound(
     progress: &Progress,
 ) -> Result<Bound> {
     let px = (scan.pitch().x * scan.pitch().y).sqrt();
-    let mut radius = 15.0 * px;
-    let mut last: Option<Bound> = None;
-    for round in 0..3 {
-        let part = progress.part(round as f32 / 3.0, (round + 1) as f32 / 3.0);
-        let matched = (0.244 * 4.5 * noise * radius / (0.5 * px * px)).cbrt();
-        let smoothing = settings
-            .smoothing_px
-            .unwrap_or(matched.clamp(SMOOTHING_PX[0], SMOOTHING_PX[1]));
-        if let Some(bound) = &last
-            && (smoothing / bound.smoothing - 1.0).abs() < 0.07
-        {
-            break;
-        }
-        let heights = smooth::gauss(scan.heights(), smoothing);
-        let upper = smooth::envelope(heights.view());
-        let threshold = settings
-            .threshold_nm
-            .unwrap_or(2.0 * noise * smooth::gain(smoothing));
-        let half = window::half_widths(scan, &heights, noise * smooth::gain(smoothing), settings);
-        let input = iterate::Input {
-            heights: heights.view(),
-            upper: upper.view(),
-            threshold: threshold as f32,
-            half,
-        };
-        let found = iterate::bluntest(&input, &part)?;
-        if let Some(r) = rough_radius(&Tip::new(found.shape.clone(), scan.pitch())?)
-            && r.is_finite()
-        {
-            radius = r.max(px);
-        }
-        last = Some(Bound {
-            found,
-            threshold,
-            smoothing,
-        });
-        if settings.smoothing_px.is_some() {
-            break;
-        }
-    }
-    last.ok_or_else(|| Error::new(ErrorKind::Data, "no round of the tip estimate ran"))
+    let matched = (0.244 * 4.5 * noise * TYPICAL_RADIUS_PX / (0.5 * px)).cbrt();
+    let smoothing = settings
+        .smoothing_px
+        .unwrap_or(matched.clamp(SMOOTHING_PX[0], SMOOTHING_PX[1]));
+    let heights = smooth::gauss(scan.heights(), smoothing);
+    let left = noise * smooth::gain(smoothing);
+    iterate_on(
+        scan,
+        heights,
+        left,
+        smoothing,
+        settings.threshold_nm.unwrap_or(2.0 * left),
+        settings,
+        progress,
+    )
 }
 
 /// The published iteration with the half-pixel envelope; threshold four times the noise.
@@ -244,14 +220,33 @@ fn textbook_bound(
 ) -> Result<Bound> {
     let smoothing = settings.smoothing_px.unwrap_or(0.0);
     let heights = smooth::gauss(scan.heights(), smoothing);
-    let upper = smooth::envelope(heights.view());
     let left = noise * smooth::gain(smoothing);
-    let threshold = settings.threshold_nm.unwrap_or(4.0 * left);
+    iterate_on(
+        scan,
+        heights,
+        left,
+        smoothing,
+        settings.threshold_nm.unwrap_or(4.0 * left),
+        settings,
+        progress,
+    )
+}
+
+fn iterate_on(
+    scan: &HeightMap,
+    heights: Array2<f32>,
+    noise: f64,
+    smoothing: f64,
+    threshold: f64,
+    settings: &Settings,
+    progress: &Progress,
+) -> Result<Bound> {
+    let upper = smooth::envelope(heights.view());
     let input = iterate::Input {
         heights: heights.view(),
         upper: upper.view(),
         threshold: threshold as f32,
-        half: window::half_widths(scan, &heights, left, settings),
+        half: window::half_widths(scan, &heights, noise, settings),
     };
     let found = iterate::bluntest(&input, progress)?;
     Ok(Bound {

@@ -7,7 +7,9 @@
 //! (`kappa = 1 / R` for a sphere, 0 for a paraboloid).
 
 use super::Tip;
+use crate::heightmap::Pitch;
 use nalgebra::{DMatrix, DVector, Matrix2};
+use ndarray::ArrayView2;
 use std::f64::consts::PI;
 
 /// Azimuths at which the flank is read.
@@ -18,6 +20,10 @@ const CAP_PART: f64 = 0.6;
 const LEAST_HALF_WIDTH_PX: f64 = 3.0;
 /// Fit depth over the heights' uncertainty, at least.
 const DEPTH_OVER_NOISE: f64 = 4.0;
+/// Departure from a rounded cap over its depth up to which it passes as round.
+const ROUND: f64 = 0.02;
+/// Neighbouring heights err together: about this many cells count as one along each axis.
+const NOISE_REACH: f64 = 3.0;
 
 /// Radius of curvature at the apex.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -137,7 +143,8 @@ fn apex_radius(tip: &Tip, depth: f64, sin: f64, noise: f64) -> Result<ApexRadius
     for _ in 0..12 {
         let least = (LEAST_HALF_WIDTH_PX * px).powi(2) / (2.0 * radius);
         let allowed = (CAP_PART * radius * (1.0 - sin)).min(depth);
-        let Some(fit) = Quadric::fit(tip, allowed.max(least).min(depth)) else {
+        let cap_depth = allowed.max(least).min(depth);
+        let Some(fit) = Quadric::fit(tip.shape(), pitch, cap_depth, noise) else {
             break;
         };
         let [k1, k2] = fit.principal();
@@ -185,6 +192,13 @@ fn apex_radius(tip: &Tip, depth: f64, sin: f64, noise: f64) -> Result<ApexRadius
             fit.depth
         ));
     }
+    if fit.misfit > 3.0 * noise + ROUND * fit.depth {
+        return Err(format!(
+            "No radius: the apex is not round; it departs from a rounded cap by {:.3} nm over the \
+             upper {:.3} nm (worn, chipped or flat).",
+            fit.misfit, fit.depth
+        ));
+    }
     let [k1, k2] = fit.principal();
     // Heights that err together by `noise` over the cap tilt its curvature by noise / depth.
     let u = (fit.u_relative * radius).hypot(radius * noise / fit.depth);
@@ -204,6 +218,8 @@ pub(crate) struct Quadric {
     pub apex: [f64; 2],
     /// Depth of the fitted apex, nm (negative: above the centre cell).
     pub apex_depth: f64,
+    /// Root mean square of what the quadric leaves, nm.
+    pub misfit: f64,
     curvature: Matrix2<f64>,
     u_relative: f64,
 }
@@ -211,8 +227,16 @@ pub(crate) struct Quadric {
 impl Quadric {
     /// Least squares over the cells connected to the apex and at most `depth` below it;
     /// `None` with fewer than 12 such cells or a degenerate system.
-    pub(crate) fn fit(tip: &Tip, depth: f64) -> Option<Self> {
-        let cells = cap(tip, depth);
+    ///
+    /// Heights uncertain by `noise` cannot tell how the cap departs from a sphere; then it is taken
+    /// as one: `kappa R = 1` enters as a further observation with standard deviation 0.5.
+    pub(crate) fn fit(
+        shape: ArrayView2<f32>,
+        pitch: Pitch,
+        depth: f64,
+        noise: f64,
+    ) -> Option<Self> {
+        let cells = cap(shape, pitch, depth);
         if cells.len() < 12 {
             return None;
         }
@@ -224,8 +248,15 @@ impl Quadric {
         let mut solution = DVector::zeros(7);
         let mut covariance = DMatrix::zeros(7, 7);
         let mut residual = 0.0;
-        for _ in 0..4 {
-            let design = DMatrix::from_fn(cells.len(), 7, |i, k| {
+        // The sphere as an observation: kappa = unit / R where k = scale^2 / (R unit).
+        let to_kappa = (unit / scale).powi(2);
+        let n = cells.len();
+        let mut prior = 0.0;
+        for _ in 0..5 {
+            let design = DMatrix::from_fn(n + 1, 7, |i, k| {
+                if i == n {
+                    return prior * [0.0, 0.0, 0.0, -0.5 * to_kappa, 0.0, -0.5 * to_kappa, 1.0][k];
+                }
                 let (x, y) = (cells[i].0 / scale, cells[i].1 / scale);
                 // An error of t enters the equation as (1 - kappa t) dt.
                 let weight = 1.0 / (1.0 - kappa * fitted[i]).max(0.1);
@@ -240,16 +271,18 @@ impl Quadric {
                         fitted[i].powi(2) / 2.0,
                     ][k]
             });
-            let right = DVector::from_iterator(
-                cells.len(),
-                (0..cells.len()).map(|i| t[i] / (1.0 - kappa * fitted[i]).max(0.1)),
-            );
+            let right = DVector::from_fn(n + 1, |i, _| match i {
+                i if i == n => 0.0,
+                i => t[i] / (1.0 - kappa * fitted[i]).max(0.1),
+            });
             let svd = design.clone().svd(true, true);
             solution = svd.solve(&right, 1e-9).ok()?;
             let misfit = &design * &solution - &right;
             residual = misfit.norm_squared() / (cells.len() as f64 - 7.0);
             covariance = (design.transpose() * &design).pseudo_inverse(1e-12).ok()?;
             kappa = solution[6];
+            let sphere = 0.5 * to_kappa * (solution[3] + solution[5]);
+            prior = NOISE_REACH * noise / unit / (0.5 * sphere.abs().max(1e-6));
             for i in 0..cells.len() {
                 let (x, y) = (cells[i].0 / scale, cells[i].1 / scale);
                 let q = solution[0]
@@ -277,6 +310,7 @@ impl Quadric {
             depth,
             apex: [place[0] * scale, place[1] * scale],
             apex_depth: apex_q * unit,
+            misfit: residual.sqrt() * unit,
             curvature: k * (unit / (scale * scale)),
             u_relative: (var * residual).sqrt() / mean.abs().max(f64::MIN_POSITIVE),
         })
@@ -300,9 +334,7 @@ impl Quadric {
 }
 
 /// Cells `(x, y, depth)` in nm that hang together with the apex and are at most `depth` deep.
-fn cap(tip: &Tip, depth: f64) -> Vec<(f64, f64, f64)> {
-    let shape = tip.shape();
-    let pitch = tip.pitch();
+fn cap(shape: ArrayView2<f32>, pitch: Pitch, depth: f64) -> Vec<(f64, f64, f64)> {
     let (rows, columns) = shape.dim();
     let (cr, cc) = (rows / 2, columns / 2);
     let mut seen = vec![false; rows * columns];
@@ -403,7 +435,6 @@ fn line(points: &[(f64, f64)]) -> (f64, f64) {
 mod tests {
     use super::super::model::Model;
     use super::*;
-    use crate::heightmap::Pitch;
 
     fn sphere_cone(radius: f64, half_angle: f64, px: f64) -> Tip {
         Model::SphereCone { radius, half_angle }

@@ -5,7 +5,7 @@
 pub struct Series {
     /// Arithmetic mean.
     pub mean: f64,
-    /// Sample standard deviation (n - 1); 0 for one value.
+    /// Standard deviation, freed of the correlation's bias; 0 for one value.
     pub deviation: f64,
     /// Number of values.
     pub count: usize,
@@ -18,7 +18,8 @@ impl Series {
     ///
     /// `n_eff = n / (1 + 2 sum (1 - k/n) rho_k)`, the sum stopped at the first pair of lags whose
     /// autocorrelations add up to nothing (initial positive sequence; Geyer, Statist. Sci. 7, 473
-    /// (1992), from memory).
+    /// (1992), from memory); both it and the deviation are then freed, to first order, of what
+    /// removing the series' own mean took off (common practice).
     pub fn of(values: &[f64]) -> Option<Self> {
         let values: Vec<f64> = values.iter().copied().filter(|v| v.is_finite()).collect();
         let count = values.len();
@@ -28,7 +29,7 @@ impl Series {
         let n = count as f64;
         let mean = values.iter().sum::<f64>() / n;
         let variance = values.iter().map(|v| (v - mean).powi(2)).sum::<f64>() / n;
-        let deviation = if count > 1 {
+        let mut deviation = if count > 1 {
             (variance * n / (n - 1.0)).sqrt()
         } else {
             0.0
@@ -42,25 +43,35 @@ impl Series {
                 / n
                 / variance
         };
-        let mut sum = 0.0;
+        let mut effective = n;
         if variance > 0.0 {
             // Beyond a third of the series the autocorrelation is mere noise.
             let longest = count / 3;
+            let mut rhos = Vec::new();
             let mut lag = 1;
             while lag < longest {
-                let pair = rho(lag) + rho(lag + 1);
-                if pair <= 0.0 {
+                let pair = [rho(lag), rho(lag + 1)];
+                if pair[0] + pair[1] <= 0.0 {
                     break;
                 }
-                sum += pair;
+                rhos.extend(pair);
                 lag += 2;
+            }
+            let size = |sum: f64| (n / (1.0 + 2.0 * sum)).clamp(1.0, n);
+            effective = size(rhos.iter().sum());
+            if effective < n {
+                // Taking the mean off the series takes about 1 / n_eff off its variance and off
+                // every autocorrelation: put both back.
+                let lost = 1.0 / effective.max(1.5);
+                effective = size(rhos.iter().map(|r| r + (1.0 - r) * lost).sum());
+                deviation /= (1.0 - lost).sqrt();
             }
         }
         Some(Self {
             mean,
             deviation,
             count,
-            effective: (n / (1.0 + 2.0 * sum)).clamp(1.0, n),
+            effective,
         })
     }
 

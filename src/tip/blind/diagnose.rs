@@ -94,7 +94,11 @@ pub(super) fn further_apices(tip: &Tip, support: &Array2<u32>, least: f64) -> Ve
                     let summit = top[other];
                     let prominence = f64::from(shape[summit] - shape[(r, c)]);
                     let away = summit.0.abs_diff(centre.0).max(summit.1.abs_diff(centre.1));
-                    if prominence > least && away >= 3 {
+                    let ringed = (summit.0.saturating_sub(1)..(summit.0 + 2).min(rows)).all(|i| {
+                        (summit.1.saturating_sub(1)..(summit.1 + 2).min(columns))
+                            .all(|j| support[(i, j)] > 0)
+                    });
+                    if prominence > least && away >= 3 && ringed {
                         found.push(summit);
                     }
                     parent[other] = first;

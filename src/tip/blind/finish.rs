@@ -4,7 +4,7 @@ use super::diagnose::{LEAST_FEATURES, caution, further_apices, refusal};
 use super::polish::{self, Polished};
 use super::{Bound, Diagnosis, Estimate, Method, Settings, smooth};
 use crate::error::Result;
-use crate::heightmap::HeightMap;
+use crate::heightmap::{HeightMap, Pitch};
 use crate::morphology;
 use crate::progress::Progress;
 use crate::tip::model::Model;
@@ -16,6 +16,10 @@ use ndarray::Array2;
 const SEEN: f64 = 0.8;
 /// Remaining error of the contacts' places, pixels; tuned on virtual scans, checked on fresh ones.
 const PLACE_PX: f64 = 0.15;
+/// Scatter of the features about one common tip that passes beside the noise, pixels.
+const AGREE_PX: f64 = 0.1;
+/// Height over the noise that makes a feature count for the apex.
+const TALL: f64 = 10.0;
 
 pub(super) fn finish(
     scan: &HeightMap,
@@ -29,6 +33,7 @@ pub(super) fn finish(
         let input = polish::Input {
             scan: scan.heights(),
             noise,
+            px: (scan.pitch().x * scan.pitch().y).sqrt(),
             smoothing: bound.smoothing,
             smooth_noise: left,
         };
@@ -37,8 +42,11 @@ pub(super) fn finish(
         None
     };
     match polished {
-        Some(polished) => from_polished(scan, noise, settings, &bound, polished),
-        None => from_bound(scan, noise, settings, &bound, progress),
+        // Plateau corners and the like do not show one and the same tip.
+        Some(p) if p.scale <= 3.0 * noise + AGREE_PX * (scan.pitch().x * scan.pitch().y).sqrt() => {
+            from_polished(scan, noise, settings, &bound, &p)
+        }
+        _ => from_bound(scan, noise, settings, &bound, progress),
     }
 }
 
@@ -48,31 +56,27 @@ fn from_polished(
     noise: f64,
     settings: &Settings,
     bound: &Bound,
-    polished: Polished,
+    polished: &Polished,
 ) -> Result<Estimate> {
     let pitch = scan.pitch();
     let px = (pitch.x * pitch.y).sqrt();
-    let rough = Tip::new(clamped(&polished.shape), pitch)?;
-    let centring = Centring::find(&rough, px);
-    let shape = centring.apply(&polished.shape, bound_fill);
-    let support = centring
-        .apply(&polished.support.mapv(f64::from), |_| 0.0)
-        .mapv(|s| s.round().max(0.0) as u32);
+    let centring = Centring::find(polished, pitch);
+    let shape = centring.tip(&polished.shape);
+    let support = centring.counts(&polished.support);
     let mut tip = Tip::new(clamped(&shape), pitch)?;
-    let others: Vec<Array2<f64>> = polished
-        .leave_out
-        .iter()
-        .map(|t| centring.apply(t, bound_fill))
-        .collect();
-    let exercised = exercised_depth(&tip, &support, &polished);
+    let others: Vec<Array2<f64>> = polished.leave_out.iter().map(|t| centring.tip(t)).collect();
+    let exercised = exercised_depth(&tip, &support, polished);
     let scatter = jackknife(&shape, &others);
-    let mut height_u = typical_u(&tip, &scatter, exercised);
+    let cell_u = typical_u(&tip, &scatter, exercised);
+    // What bilinear interpolation between the cells of a cap can err by.
+    let chord = px * px / (4.0 * rough_radius(&tip).filter(|r| *r > px).unwrap_or(px));
+    let mut height_u = cell_u.max(chord);
     // What leaving out features does to the radius says more than the cells' scatter.
     let first = exercised.map(|z| read_out(&tip, z, height_u));
-    let radius_u = first
-        .as_ref()
-        .and_then(|r| r.apex_radius)
-        .and_then(|r| radius_scatter(&others, pitch, r.fit_depth_nm).map(|u| (r, u)));
+    let radius_u = first.as_ref().and_then(|r| r.apex_radius).and_then(|r| {
+        let u = radius_scatter(&others, pitch, r.fit_depth_nm, height_u)?;
+        Some((r, u))
+    });
     if let Some((r, u)) = radius_u {
         height_u = height_u.max(r.fit_depth_nm * u / r.value);
     }
@@ -96,16 +100,30 @@ fn from_polished(
             ..ReadOut::default()
         },
     };
+    // Features that stand out from the noise and show the fitted cap.
     let seeing = read.apex_radius.map_or(features, |r| {
-        let needed = 0.5 * r.fit_depth_nm;
+        let needed = (0.5 * r.fit_depth_nm).max(TALL * noise);
         polished
             .features
             .iter()
             .filter(|f| f.reach >= needed)
             .count()
     });
-    let mut diagnosis = common_findings(scan, bound, &tip, exercised, noise);
+    let mut diagnosis = common_findings(scan, bound, &tip, exercised, noise, &read);
     apex_findings(&mut diagnosis, &read, seeing, px);
+    if let Some(r) = read.apex_radius
+        && let Some(fit) = Quadric::fit(tip.shape(), pitch, r.fit_depth_nm, cell_u)
+        && fit.misfit > 2.5 * cell_u + 0.02 * r.fit_depth_nm
+    {
+        diagnosis.push(refusal(
+            format!(
+                "The apex is not round: it departs from a rounded cap by {:.3} nm over the upper \
+                 {:.3} nm (worn, chipped or flat).",
+                fit.misfit, r.fit_depth_nm
+            ),
+            "Use the tip's shape as it is; a radius does not describe it.",
+        ));
+    }
     if !further.is_empty() {
         diagnosis.push(double_tip(&tip, &further));
     }
@@ -177,7 +195,7 @@ fn from_bound(
             ..ReadOut::default()
         },
     };
-    let mut diagnosis = common_findings(scan, bound, &tip, exercised, noise);
+    let mut diagnosis = common_findings(scan, bound, &tip, exercised, noise, &read);
     if textbook {
         apex_findings(&mut diagnosis, &read, LEAST_FEATURES, px);
     } else {
@@ -199,7 +217,7 @@ fn from_bound(
         apex_identified: identified,
         read_out: read,
         features: 0,
-        further_apices: further_apices(&tip, &Array2::ones(tip.shape().dim()), 5.0 * height_u),
+        further_apices: Vec::new(),
         tip,
         diagnosis,
     })
@@ -212,11 +230,6 @@ fn clamped(shape: &Array2<f64>) -> Array2<f32> {
     shape
 }
 
-/// Beyond the grid: the nearest cell.
-fn bound_fill(nearest: f64) -> f64 {
-    nearest
-}
-
 /// The shift that brings the fitted apex to the centre cell.
 struct Centring {
     rows: f64,
@@ -225,67 +238,72 @@ struct Centring {
 }
 
 impl Centring {
-    fn find(tip: &Tip, px: f64) -> Self {
-        let radius = rough_radius(tip)
-            .filter(|r| r.is_finite())
-            .unwrap_or(px)
-            .max(px);
+    fn find(polished: &Polished, pitch: Pitch) -> Self {
+        let shape = &polished.shape;
+        let px = (pitch.x * pitch.y).sqrt();
+        let rough = Tip::new(clamped(shape), pitch)
+            .ok()
+            .as_ref()
+            .and_then(rough_radius);
+        let radius = rough.filter(|r| r.is_finite()).unwrap_or(px).max(px);
         let depth = (0.3 * radius).max(4.5 * px * px / radius);
         let none = Self {
             rows: 0.0,
             columns: 0.0,
             apex: 0.0,
         };
-        let Some(fit) = Quadric::fit(tip, depth) else {
+        let heights = shape.mapv(|p| p as f32);
+        let Some(fit) = Quadric::fit(heights.view(), pitch, depth, 0.1 * depth) else {
             return none;
         };
-        let (rows, columns) = (fit.apex[1] / tip.pitch().y, fit.apex[0] / tip.pitch().x);
+        let (rows, columns) = (fit.apex[1] / pitch.y, fit.apex[0] / pitch.x);
         // A fit that puts the apex elsewhere describes no apex.
         if fit.radius().is_none() || rows.abs() > 2.0 || columns.abs() > 2.0 {
             return none;
         }
-        Self {
+        // The fit's height averages the noise; on an apex that is not round it misses the tip.
+        let mut found = Self {
             rows,
             columns,
-            apex: -fit.apex_depth,
-        }
+            apex: 0.0,
+        };
+        let centre = (shape.nrows() / 2, shape.ncols() / 2);
+        let here = found.look(shape, centre);
+        let error = polished.scale / f64::from(polished.support[centre].max(1.0)).sqrt();
+        let apart = (here + fit.apex_depth).abs();
+        found.apex = if apart <= 3.0 * error + 0.01 * px {
+            -fit.apex_depth
+        } else {
+            here
+        };
+        found
     }
 
-    /// Bilinear resampling at the shifted places, apex subtracted.
-    fn apply(&self, grid: &Array2<f64>, beyond: impl Fn(f64) -> f64) -> Array2<f64> {
+    /// Tip heights at the shifted places, apex carried to 0.
+    fn tip(&self, grid: &Array2<f64>) -> Array2<f64> {
+        Array2::from_shape_fn(grid.dim(), |at| self.look(grid, at) - self.apex)
+    }
+
+    /// Counts at the shifted places.
+    fn counts(&self, grid: &Array2<f32>) -> Array2<u32> {
+        let grid = grid.mapv(f64::from);
+        Array2::from_shape_fn(grid.dim(), |at| {
+            self.look(&grid, at).round().max(0.0) as u32
+        })
+    }
+
+    /// Bilinear; beyond the grid its nearest cell.
+    fn look(&self, grid: &Array2<f64>, (r, c): (usize, usize)) -> f64 {
         let (rows, columns) = grid.dim();
-        let centre = (rows / 2, columns / 2);
-        let look = |i: isize, j: isize| {
-            let (ci, cj) = (
-                i.clamp(0, rows as isize - 1) as usize,
-                j.clamp(0, columns as isize - 1) as usize,
-            );
-            let value = grid[(ci, cj)];
-            if (ci as isize, cj as isize) == (i, j) {
-                value
-            } else {
-                beyond(value)
-            }
+        let (y, x) = (r as f64 + self.rows, c as f64 + self.columns);
+        let (i, j) = (y.floor() as isize, x.floor() as isize);
+        let (fy, fx) = (y - y.floor(), x - x.floor());
+        let at = |i: isize, j: isize| {
+            let i = i.clamp(0, rows as isize - 1) as usize;
+            grid[(i, j.clamp(0, columns as isize - 1) as usize)]
         };
-        let mut out = Array2::from_shape_fn((rows, columns), |(r, c)| {
-            let (y, x) = (r as f64 + self.rows, c as f64 + self.columns);
-            let (i, j) = (y.floor() as isize, x.floor() as isize);
-            let (fy, fx) = (y - y.floor(), x - x.floor());
-            look(i, j) * (1.0 - fy) * (1.0 - fx)
-                + look(i, j + 1) * (1.0 - fy) * fx
-                + look(i + 1, j) * fy * (1.0 - fx)
-                + look(i + 1, j + 1) * fy * fx
-        });
-        // Tip heights carry their apex to 0; counts are never negative and keep theirs.
-        if grid.iter().any(|p| *p < 0.0) {
-            let apex = if self.apex == 0.0 {
-                out[centre]
-            } else {
-                self.apex
-            };
-            out.mapv_inplace(|p| p - apex);
-        }
-        out
+        (at(i, j) * (1.0 - fx) + at(i, j + 1) * fx) * (1.0 - fy)
+            + (at(i + 1, j) * (1.0 - fx) + at(i + 1, j + 1) * fx) * fy
     }
 }
 
@@ -296,7 +314,7 @@ fn exercised_depth(tip: &Tip, support: &Array2<u32>, polished: &Polished) -> Opt
     reaches.sort_by(|a, b| b.total_cmp(a));
     let third = reaches.get(2.min(reaches.len().checked_sub(1)?))?;
     seen_depth(tip, &seen)
-        .map(|z| z.min(*third))
+        .map(|z| z.min(0.95 * third))
         .filter(|z| *z > 0.0)
 }
 
@@ -333,14 +351,10 @@ fn jackknife(shape: &Array2<f64>, others: &[Array2<f64>]) -> Array2<f64> {
 }
 
 /// Jackknife standard error of the radius, nm.
-fn radius_scatter(
-    others: &[Array2<f64>],
-    pitch: crate::heightmap::Pitch,
-    depth: f64,
-) -> Option<f64> {
+fn radius_scatter(others: &[Array2<f64>], pitch: Pitch, depth: f64, noise: f64) -> Option<f64> {
     let radii: Vec<f64> = others
         .iter()
-        .filter_map(|o| Quadric::fit(&Tip::new(clamped(o), pitch).ok()?, depth)?.radius())
+        .filter_map(|o| Quadric::fit(clamped(o).view(), pitch, depth, noise)?.radius())
         .collect();
     let n = radii.len() as f64;
     if radii.len() < others.len() || n < 3.0 {
@@ -425,6 +439,7 @@ fn common_findings(
     tip: &Tip,
     exercised: Option<f64>,
     noise: f64,
+    read: &ReadOut,
 ) -> Vec<Diagnosis> {
     let mut out = Vec::new();
     let px = (scan.pitch().x * scan.pitch().y).sqrt();
@@ -450,10 +465,10 @@ fn common_findings(
             "Give a wider tip support.",
         ));
     }
-    let radius = rough_radius(tip).filter(|r| r.is_finite());
-    if bound.smoothing > 2.5
-        || radius.is_some_and(|r| bound.smoothing * px >= r / 3.0 && noise > 0.0)
-    {
+    let coarse = read
+        .apex_radius
+        .is_some_and(|r| bound.smoothing * px >= r.value / 3.0 && noise > 0.0);
+    if bound.smoothing > 2.5 || coarse {
         out.push(caution(
             format!(
                 "The noise ({noise:.3} nm) is high for this tip and pixel: it took a smoothing of \

@@ -41,6 +41,8 @@ const BATCH: usize = 64;
 /// Pixels handled in one pass; most lose their residual through the first of them.
 const PASS: usize = 1024;
 const PASSES: usize = 14;
+/// Tip cells compared in all; plateaus could ask for far more and tell no more.
+const MOST_WORK: usize = 3_000_000_000;
 
 /// Iterates from the flat tip to the fixed point.
 ///
@@ -67,6 +69,7 @@ pub(super) fn bluntest(input: &Input, progress: &Progress) -> Result<Bluntest> {
         guarded: 0,
         settled: false,
     };
+    let mut spent = 0;
     for pass in 0..PASSES {
         progress.check()?;
         let done = pass as f32 / PASSES as f32;
@@ -114,15 +117,20 @@ pub(super) fn bluntest(input: &Input, progress: &Progress) -> Result<Bluntest> {
         let mut lowered = 0.0f32;
         for batch in work.chunks(BATCH) {
             progress.check()?;
+            if spent > MOST_WORK {
+                break;
+            }
             let start = |r: usize, c: usize| match &explained {
                 Some(o) if o.offsets[(r, c)][0] != i16::MIN => o.offsets[(r, c)],
                 _ => [0, 0],
             };
-            let limits: Vec<Array2<f32>> = batch
+            let limits: Vec<(Option<Array2<f32>>, usize)> = batch
                 .par_iter()
-                .filter_map(|&(r, c)| constrain(input, &padded, &tip, (r, c), start(r, c), eps))
+                .map(|&(r, c)| constrain(input, &padded, &tip, (r, c), start(r, c), eps))
                 .collect();
-            for limit in limits {
+            for (limit, work) in limits {
+                spent += work;
+                let Some(limit) = limit else { continue };
                 tip.zip_mut_with(&limit, |p, &l| {
                     if l < *p {
                         lowered = lowered.max(*p - l);
@@ -131,6 +139,9 @@ pub(super) fn bluntest(input: &Input, progress: &Progress) -> Result<Bluntest> {
                 });
             }
             tip[(hr, hc)] = 0.0;
+        }
+        if spent > MOST_WORK {
+            break;
         }
         if pass > 0 && lowered <= eps {
             found.settled = true;
@@ -141,8 +152,8 @@ pub(super) fn bluntest(input: &Input, progress: &Progress) -> Result<Bluntest> {
     Ok(found)
 }
 
-/// The weakest constraint that pixel `x` puts on the tip, plus the threshold; `None` where it does
-/// not lower any cell.
+/// The weakest constraint that pixel `x` puts on the tip, plus the threshold, `None` where it does
+/// not lower any cell; and the number of tip cells compared.
 fn constrain(
     input: &Input,
     upper: &Padded,
@@ -150,7 +161,7 @@ fn constrain(
     x: (usize, usize),
     start: [i16; 2],
     eps: f32,
-) -> Option<Array2<f32>> {
+) -> (Option<Array2<f32>>, usize) {
     let [hr, hc] = input.half;
     let (nr, nc) = tip.dim();
     let z = input.heights[x];
@@ -159,7 +170,8 @@ fn constrain(
     flipped.reverse();
     let mut limit = vec![f32::NEG_INFINITY; nr * nc];
     let mut live: Vec<usize> = (0..nr).collect();
-    let mut raise = |i: usize, j: usize, live: &mut Vec<usize>| {
+    let mut raise = |i: usize, j: usize, live: &mut Vec<usize>| -> usize {
+        let compared = live.len() * nc;
         let shift = tip[(i, j)] - z;
         live.retain(|&row| {
             let from = upper.row(x.0 + i + row - hr, x.1 + j - hc, nc);
@@ -172,21 +184,22 @@ fn constrain(
             }
             lowers
         });
+        compared
     };
     let (si, sj) = (
         (start[0] as isize + hr as isize) as usize,
         (start[1] as isize + hc as isize) as usize,
     );
-    raise(si, sj, &mut live);
+    let mut work = raise(si, sj, &mut live);
     for i in 0..nr {
         for j in 0..nc {
             if live.is_empty() {
-                return None;
+                return (None, work);
             }
             // Feasible: the tip, standing at x, can have touched x + d.
             let u = upper.at(x.0 + i, x.1 + j);
             if (i, j) != (si, sj) && z - tip[(i, j)] <= u + input.threshold {
-                raise(i, j, &mut live);
+                work += raise(i, j, &mut live);
             }
         }
     }
@@ -196,7 +209,7 @@ fn constrain(
             result[(nr - 1 - row, nc - 1 - j)] = limit[row * nc + j] + input.threshold;
         }
     }
-    Some(result)
+    (Some(result), work)
 }
 
 /// The envelope with a margin in which nothing constrains (`+inf`, as for voids).

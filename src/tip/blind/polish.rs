@@ -7,7 +7,7 @@
 //! so that neither pixel nor noise blunts or sharpens it. The scan itself is fitted, not a smoothed
 //! copy; smoothing only decides which contacts belong together.
 
-use super::smooth::gauss;
+use super::smooth::{gain, gauss};
 use crate::error::Result;
 use crate::morphology;
 use crate::progress::Progress;
@@ -42,10 +42,10 @@ pub(super) struct Polished {
     pub support: Array2<f32>,
     /// The features used.
     pub features: Vec<Feature>,
+    /// Standard deviation of the residuals, nm.
+    pub scale: f64,
     /// The tip with each group of features left out, for the jackknife; empty with few features.
     pub leave_out: Vec<Array2<f64>>,
-    /// Robust standard deviation of the residuals, nm.
-    pub residual: f64,
 }
 
 /// What to polish with.
@@ -54,6 +54,8 @@ pub(super) struct Input<'a> {
     pub scan: ArrayView2<'a, f32>,
     /// Noise standard deviation, nm.
     pub noise: f64,
+    /// Pixel pitch, nm.
+    pub px: f64,
     /// Smoothing that decides the contacts, pixels.
     pub smoothing: f64,
     /// Noise left after it, nm.
@@ -63,7 +65,13 @@ pub(super) struct Input<'a> {
 /// Rounds of finding contacts and fitting.
 const ROUNDS: usize = 4;
 /// Sweeps over features and tip within a round.
-const SWEEPS: usize = 12;
+const SWEEPS: usize = 14;
+/// Smoothing that takes noise but leaves the flanks, pixels.
+const LIGHT_PX: f64 = 1.0;
+/// How far features may lie beside their fitted places, pixels.
+const SLACK_PX: f64 = 0.15;
+/// How far the tip may lie outside its true place where it is not fitted yet, pixels.
+const BLUNT_SLACK_PX: f64 = 0.6;
 
 /// Polishes the bound `tip`. `None` when no sharp feature is found. Errors: `Cancelled`.
 pub(super) fn polish<'a>(
@@ -72,6 +80,7 @@ pub(super) fn polish<'a>(
     progress: &Progress,
 ) -> Result<Option<Polished>> {
     let smooth = gauss(input.scan, input.smoothing);
+    let light = gauss(input.scan, input.smoothing.min(LIGHT_PX));
     let mut tip = bound.clone();
     let mut result: Option<Polished> = None;
     for round in 0..ROUNDS {
@@ -86,11 +95,25 @@ pub(super) fn polish<'a>(
         if features.is_empty() {
             break;
         }
+        // Where the apex itself may have touched right below: flats, and whatever is not steep.
+        let tolerance = 4.0 * input.smooth_noise + 0.05 * input.px;
+        let level = Array2::from_shape_fn(smooth.dim(), |at| {
+            f64::from(smooth[at] - eroded[at]) <= tolerance
+        });
+        let core: Vec<Vec<(u32, u32)>> = features.iter().map(|f| f.pixels.clone()).collect();
         let mut fit = Fit::new(input, &tip);
         for sweep in 0..SWEEPS {
             progress.check()?;
             // Far outliers go first, then ever more of what is not this feature.
-            fit.trim = if sweep < 3 { 6.0 } else { 3.5 };
+            (fit.trim, fit.blunt_slack) = if sweep < SWEEPS - 3 {
+                (6.0, BLUNT_SLACK_PX)
+            } else {
+                (3.5, SLACK_PX)
+            };
+            if (2..SWEEPS - 3).contains(&sweep) {
+                fit.extend(&light, &features, &tip);
+                fit.grow(&light, &level, &mut features, &core);
+            }
             features.par_iter_mut().for_each(|f| fit.place(f));
             fit.update_scale(&features);
             fit.update_tip(&features);
@@ -101,15 +124,13 @@ pub(super) fn polish<'a>(
         }
         let (shape, support) = fit.combined(bound);
         tip = shape.mapv(|p| p.min(0.0) as f32);
-        let centre = (tip.nrows() / 2, tip.ncols() / 2);
-        tip[centre] = 0.0;
         let leave_out = fit.leave_out(&features, &shape, &support);
         result = Some(Polished {
             shape,
             support,
             features,
             leave_out,
-            residual: fit.scale,
+            scale: fit.scale,
         });
     }
     Ok(result)
@@ -238,7 +259,10 @@ struct Fit<'a> {
     tip: Array2<f64>,
     weight: Array2<f32>,
     scale: f64,
+    /// Residuals beyond `trim` times the scale are left out, below the tip those beyond another
+    /// `blunt_slack` pixels along the slope.
     trim: f64,
+    blunt_slack: f64,
     half: [f64; 2],
 }
 
@@ -261,6 +285,86 @@ impl Corner {
     }
 }
 
+/// Tip height and its slope along rows and columns.
+fn look(tip: &Array2<f64>, corner: &Corner) -> (f64, [f64; 2]) {
+    let (r, c) = corner.at;
+    let [fr, fc] = corner.fraction;
+    let t = |i: usize, j: usize| tip[(r + i, c + j)];
+    let top = t(0, 0) * (1.0 - fc) + t(0, 1) * fc;
+    let bottom = t(1, 0) * (1.0 - fc) + t(1, 1) * fc;
+    let left = t(0, 0) * (1.0 - fr) + t(1, 0) * fr;
+    let right = t(0, 1) * (1.0 - fr) + t(1, 1) * fr;
+    (top * (1.0 - fr) + bottom * fr, [bottom - top, right - left])
+}
+
+/// Bilinear; `None` outside the map or beside a void.
+fn interpolate(map: &Array2<f32>, [r, c]: [f64; 2]) -> Option<f64> {
+    if !(r >= 0.0 && c >= 0.0) {
+        return None;
+    }
+    let (i, j, fr, fc) = (r as usize, c as usize, r.fract(), c.fract());
+    if i + 1 >= map.nrows() || j + 1 >= map.ncols() {
+        return None;
+    }
+    let z = |a: usize, b: usize| f64::from(map[(i + a, j + b)]);
+    let value = (z(0, 0) * (1.0 - fc) + z(0, 1) * fc) * (1.0 - fr)
+        + (z(1, 0) * (1.0 - fc) + z(1, 1) * fc) * fr;
+    value.is_finite().then_some(value)
+}
+
+/// Weighted local quadratic over a square of half-width `reach` cells (Savitzky and Golay, Anal.
+/// Chem. 36, 1627 (1964), in two dimensions; from memory): takes noise, keeps curvature. Cells
+/// without weight stay.
+fn local_quadratic(
+    tip: &Array2<f64>,
+    weight: &Array2<f32>,
+    reach: usize,
+    per_px: f64,
+    noise: f64,
+) -> Array2<f64> {
+    let (rows, columns) = tip.dim();
+    let values: Vec<f64> = (0..rows * columns)
+        .into_par_iter()
+        .map(|k| {
+            let (r, c) = (k / columns, k % columns);
+            if weight[(r, c)] < 0.5 {
+                return tip[(r, c)];
+            }
+            let mut normal = nalgebra::SMatrix::<f64, 6, 6>::zeros();
+            let mut right = nalgebra::SVector::<f64, 6>::zeros();
+            let mut count = 0;
+            for i in r.saturating_sub(reach)..(r + reach + 1).min(rows) {
+                for j in c.saturating_sub(reach)..(c + reach + 1).min(columns) {
+                    let w = f64::from(weight[(i, j)]);
+                    if w < 0.5 {
+                        continue;
+                    }
+                    let (y, x) = (i as f64 - r as f64, j as f64 - c as f64);
+                    let g = nalgebra::SVector::<f64, 6>::from([1.0, x, y, x * x, x * y, y * y]);
+                    normal += g * g.transpose() * w;
+                    right += g * (w * (tip[(i, j)] - tip[(r, c)]));
+                    count += 1;
+                }
+            }
+            // At the rim of what was seen a quadratic runs away.
+            if count < (2 * reach + 1) * (reach + 1) {
+                return tip[(r, c)];
+            }
+            let Some(fit) = normal.cholesky().map(|factor| factor.solve(&right)) else {
+                return tip[(r, c)];
+            };
+            // On the flank height errors are small along the normal, and curvature changes fast.
+            let steep = fit[1].hypot(fit[2]) * per_px;
+            // A change beyond the noise is shape.
+            if fit[0].abs() > 3.0 * noise / f64::from(weight[(r, c)]).sqrt() {
+                return tip[(r, c)];
+            }
+            tip[(r, c)] + fit[0] * (2.0 - 2.5 * steep).clamp(0.0, 1.0)
+        })
+        .collect();
+    Array2::from_shape_vec((rows, columns), values).unwrap_or_else(|_| tip.clone())
+}
+
 impl<'a> Fit<'a> {
     fn new(input: &'a Input<'a>, tip: &Array2<f32>) -> Self {
         Self {
@@ -269,6 +373,7 @@ impl<'a> Fit<'a> {
             weight: Array2::zeros(tip.dim()),
             scale: f64::INFINITY,
             trim: 6.0,
+            blunt_slack: BLUNT_SLACK_PX,
             half: [(tip.nrows() / 2) as f64, (tip.ncols() / 2) as f64],
         }
     }
@@ -286,16 +391,8 @@ impl<'a> Fit<'a> {
         })
     }
 
-    /// Tip height and its slope along rows and columns.
     fn look(&self, corner: &Corner) -> (f64, [f64; 2]) {
-        let (r, c) = corner.at;
-        let [fr, fc] = corner.fraction;
-        let t = |i: usize, j: usize| self.tip[(r + i, c + j)];
-        let top = t(0, 0) * (1.0 - fc) + t(0, 1) * fc;
-        let bottom = t(1, 0) * (1.0 - fc) + t(1, 1) * fc;
-        let left = t(0, 0) * (1.0 - fr) + t(1, 0) * fr;
-        let right = t(0, 1) * (1.0 - fr) + t(1, 1) * fr;
-        (top * (1.0 - fr) + bottom * fr, [bottom - top, right - left])
+        look(&self.tip, corner)
     }
 
     /// Residuals `(corner, scan - a - P, slope)` of the feature's pixels within the trim.
@@ -309,8 +406,12 @@ impl<'a> Fit<'a> {
                 let z = f64::from(self.input.scan[(r as usize, c as usize)]);
                 let e = z - f.height - p;
                 // A misplaced feature errs more where the tip is steep.
-                let allowed = limit * (1.0 + 0.3 * slope[0].hypot(slope[1]));
-                (f.height.is_nan() || e.abs() <= allowed).then_some((corner, e, slope))
+                let steep = slope[0].hypot(slope[1]);
+                let allowed = limit * (1.0 + 0.3 * steep) + SLACK_PX * steep;
+                // Where the scan lies below, the tip is still too blunt there; where it lies above,
+                // something else touched.
+                let below = allowed + self.blunt_slack * steep;
+                (f.height.is_nan() || (-below..=allowed).contains(&e)).then_some((corner, e, slope))
             })
             .collect()
     }
@@ -407,10 +508,123 @@ impl<'a> Fit<'a> {
             }
             self.weight = weight;
         }
-        // Only differences count: the apex cell stays at 0.
-        let apex = self.tip[(self.tip.nrows() / 2, self.tip.ncols() / 2)];
-        if self.weight[(self.tip.nrows() / 2, self.tip.ncols() / 2)] > 0.5 {
-            self.tip.mapv_inplace(|p| p - apex);
+        self.tip = self.calmed(&self.tip);
+        // Only differences count: the highest cell stays at 0.
+        let high = self
+            .tip
+            .iter()
+            .zip(&self.weight)
+            .filter(|(_, w)| **w > 0.5)
+            .fold(f64::NEG_INFINITY, |high, (p, _)| high.max(*p));
+        if high.is_finite() {
+            self.tip.mapv_inplace(|p| p - high);
+        }
+    }
+
+    /// Bounds the tip where no contact was fitted yet. Every feature's surroundings are a bound,
+    /// `P(d) <= I(u - d) - a`, whatever touched there: the lower fifth over all features is taken,
+    /// never above the tip that the round began with.
+    fn extend(&mut self, light: &Array2<f32>, features: &[Feature], start: &Array2<f32>) {
+        let (rows, columns) = self.tip.dim();
+        let next: Vec<f64> = (0..rows * columns)
+            .into_par_iter()
+            .map(|k| {
+                let at = (k / columns, k % columns);
+                if self.weight[at] >= LEAST_SUPPORT {
+                    return self.tip[at];
+                }
+                let offset = [at.0 as f64 - self.half[0], at.1 as f64 - self.half[1]];
+                let mut limits: Vec<f64> = features
+                    .iter()
+                    .filter_map(|f| {
+                        let place = [f.place[0] - offset[0], f.place[1] - offset[1]];
+                        Some(interpolate(light, place)? - f.height)
+                    })
+                    .collect();
+                let limit = f64::from(start[at]);
+                if limits.len() < 3 {
+                    return limit;
+                }
+                let low = limits.len() / 5;
+                limits
+                    .select_nth_unstable_by(low, f64::total_cmp)
+                    .1
+                    .min(limit)
+            })
+            .collect();
+        if let Ok(next) = Array2::from_shape_vec((rows, columns), next) {
+            self.tip = next;
+        }
+    }
+
+    /// Gives every feature the pixels that the tip on it explains. Flank against flank, the
+    /// erosion's contacts are many and say little; the features themselves say more.
+    fn grow(
+        &self,
+        light: &Array2<f32>,
+        level: &Array2<bool>,
+        features: &mut [Feature],
+        core: &[Vec<(u32, u32)>],
+    ) {
+        let (rows, columns) = light.dim();
+        let tolerance = 4.0 * self.input.noise * gain(self.input.smoothing.min(LIGHT_PX));
+        let half = self.half.map(|h| h as usize);
+        let mut best = Array2::from_elem((rows, columns), (f64::NEG_INFINITY, u32::MAX, [0.0; 2]));
+        for (id, f) in features.iter().enumerate() {
+            let range = |k: usize, n: usize| {
+                let at = f.place[k].round().max(0.0) as usize;
+                at.saturating_sub(half[k] - 1)..(at + half[k]).min(n)
+            };
+            for r in range(0, rows) {
+                for c in range(1, columns) {
+                    let Some(corner) = self.corner(f.place, (r as u32, c as u32)) else {
+                        continue;
+                    };
+                    let (p, slope) = self.look(&corner);
+                    if f.height + p > best[(r, c)].0 {
+                        best[(r, c)] = (f.height + p, id as u32, slope);
+                    }
+                }
+            }
+        }
+        let fits = |r: usize, c: usize| -> u32 {
+            let (predicted, id, slope) = best[(r, c)];
+            let steep = slope[0].hypot(slope[1]);
+            if r == 0 || c == 0 || r + 1 == rows || c + 1 == columns {
+                return u32::MAX;
+            }
+            // At the feature's foot the scan turns level where the tip goes on falling.
+            let along = 0.5 * f64::from(light[(r - 1, c)] - light[(r + 1, c)]) * slope[0]
+                + 0.5 * f64::from(light[(r, c - 1)] - light[(r, c + 1)]) * slope[1];
+            if steep > self.input.noise && along < 0.6 * steep * steep {
+                return u32::MAX;
+            }
+            let far = features
+                .get(id as usize)
+                .is_none_or(|f| (f.place[0] - r as f64).hypot(f.place[1] - c as f64) > 1.5);
+            if far && level[(r, c)] {
+                return u32::MAX;
+            }
+            let off = f64::from(light[(r, c)]) - predicted;
+            let explained =
+                off <= tolerance + SLACK_PX * steep && off >= -tolerance - BLUNT_SLACK_PX * steep;
+            if explained { id } else { u32::MAX }
+        };
+        let owner = Array2::from_shape_fn((rows, columns), |(r, c)| fits(r, c));
+        let mut grown: Vec<Vec<(u32, u32)>> = vec![Vec::new(); features.len()];
+        for r in 1..rows.saturating_sub(1) {
+            for c in 1..columns.saturating_sub(1) {
+                let id = owner[(r, c)];
+                let around = [(r - 1, c), (r + 1, c), (r, c - 1), (r, c + 1)];
+                if id != u32::MAX && around.into_iter().all(|at| owner[at] == id) {
+                    grown[id as usize].push((r as u32, c as u32));
+                }
+            }
+        }
+        for ((f, more), core) in features.iter_mut().zip(grown).zip(core) {
+            f.pixels = core.iter().copied().chain(more).collect();
+            f.pixels.sort_unstable();
+            f.pixels.dedup();
         }
     }
 
@@ -418,15 +632,55 @@ impl<'a> Fit<'a> {
         reach(f, self.half.map(|h| h as usize), |i, j| -self.tip[(i, j)])
     }
 
+    /// Half-width of the local quadratic that the noise of the cells asks for.
+    fn calm_reach(&self) -> usize {
+        let mut seen: Vec<f32> = self
+            .weight
+            .iter()
+            .copied()
+            .filter(|w| *w >= LEAST_SUPPORT)
+            .collect();
+        seen.sort_by(f32::total_cmp);
+        let typical = seen.get(seen.len() / 2).map_or(1.0, |w| f64::from(*w));
+        let error = self.input.noise / typical.sqrt() / self.input.px;
+        match error {
+            e if e < 0.01 => 0,
+            e if e < 0.08 => 2,
+            _ => 3,
+        }
+    }
+
+    fn calmed(&self, tip: &Array2<f64>) -> Array2<f64> {
+        match self.calm_reach() {
+            0 => tip.clone(),
+            reach => local_quadratic(
+                tip,
+                &self.weight,
+                reach,
+                1.0 / self.input.px,
+                self.input.noise,
+            ),
+        }
+    }
+
     /// The fit where it has support, the bound elsewhere.
     fn combined(&self, bound: &Array2<f32>) -> (Array2<f64>, Array2<f32>) {
         let mut shape = bound.mapv(f64::from);
         let mut support = self.weight.clone();
-        for ((p, &q), s) in shape.iter_mut().zip(&self.tip).zip(support.iter_mut()) {
-            if *s >= LEAST_SUPPORT {
-                *p = q;
-            } else {
-                *s = 0.0;
+        let (rows, columns) = shape.dim();
+        for r in 0..rows {
+            for c in 0..columns {
+                // The rim of what was seen leans on what was not.
+                let inner = (r.saturating_sub(1)..(r + 2).min(rows)).all(|i| {
+                    (c.saturating_sub(1)..(c + 2).min(columns))
+                        .all(|j| self.weight[(i, j)] >= LEAST_SUPPORT)
+                });
+                shape[(r, c)] = self.tip[(r, c)].min(shape[(r, c)]);
+                if inner {
+                    shape[(r, c)] = self.tip[(r, c)];
+                } else {
+                    support[(r, c)] = 0.0;
+                }
             }
         }
         (shape, support)
@@ -453,7 +707,7 @@ impl<'a> Fit<'a> {
                         *p += s / f64::from(w);
                     }
                 }
-                tip
+                self.calmed(&tip)
             })
             .collect()
     }

@@ -94,29 +94,6 @@ pub(super) fn envelope(map: ArrayView2<f32>) -> Array2<f32> {
     })
 }
 
-/// White-noise standard deviation from fourth differences along rows,
-/// `1.4826 MAD / sqrt(70)`; 0 where too few pixels are valid.
-pub(super) fn noise(map: ArrayView2<f32>) -> f64 {
-    let mut differences: Vec<f32> = map
-        .axis_iter(Axis(0))
-        .flat_map(|row| {
-            (4..row.len())
-                .map(|i| {
-                    row[i] - 4.0 * row[i - 1] + 6.0 * row[i - 2] - 4.0 * row[i - 3] + row[i - 4]
-                })
-                .filter(|d| !d.is_nan())
-                .map(f32::abs)
-                .collect::<Vec<_>>()
-        })
-        .collect();
-    if differences.len() < 16 {
-        return 0.0;
-    }
-    let middle = differences.len() / 2;
-    let (_, &mut median, _) = differences.select_nth_unstable_by(middle, f32::total_cmp);
-    1.4826 * f64::from(median) / 70f64.sqrt()
-}
-
 #[cfg(test)]
 mod tests {
     use super::*;

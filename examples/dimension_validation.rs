@@ -1,0 +1,498 @@
+//! How well the dimensions hold: virtual scans whose truth is finer than the pixel, levelled,
+//! corrected with the known tip, measured, and compared with the truth.
+//!
+//! `cargo run --release --no-default-features --example dimension_validation -- [--short] [--seed N] [--count N] [--only ROW] [--verbose] [--speed]`
+//!
+//! Prints a table: error as scanned, error corrected (mean and root mean square), share of results
+//! called touched, share of intervals low..high that hold the truth, median width of the interval.
+//! `--speed` times 64 lines instead. With `--short` it takes few scans and ends with status 1 when a figure is far off.
+
+use std::process::ExitCode;
+use truewidth::dimensions::{
+    Calibration, Corrected, Dimension, Find, Input, Kind, Request, Status, find, measure,
+};
+use truewidth::heightmap::{HeightMap, Pitch, Region};
+use truewidth::progress::Progress;
+use truewidth::tip::Tip;
+use truewidth::tip::model::Model;
+use truewidth::virtual_scan::{
+    self, Bump, BumpShape, Bumps, Distortion, EdgeRoughness, Feature, Lines, Settings, Step,
+};
+use truewidth::{Result, leveling, morphology};
+
+/// What one virtual scan is measured for, and the truth.
+struct Truth {
+    request: Request,
+    value: f64,
+}
+
+/// One row of the table.
+struct Case {
+    name: &'static str,
+    tip: (f64, f64),
+    wall_deg: f64,
+    noise_nm: f64,
+    kind: Scene,
+    at: f64,
+}
+
+#[derive(Clone, Copy, PartialEq)]
+enum Scene {
+    Line,
+    RoughLine,
+    Trench,
+    Ridge,
+    Step,
+    Pitch,
+    ParticleHeight,
+    ParticleDiameter,
+}
+
+/// A small generator of numbers in 0..1 (splitmix64), so that the example needs nothing else.
+struct Random(u64);
+
+impl Random {
+    fn next(&mut self) -> f64 {
+        self.0 = self.0.wrapping_add(0x9E37_79B9_7F4A_7C15);
+        let mut z = self.0;
+        z = (z ^ (z >> 30)).wrapping_mul(0xBF58_476D_1CE4_E5B9);
+        z = (z ^ (z >> 27)).wrapping_mul(0x94D0_49BB_1331_11EB);
+        ((z ^ (z >> 31)) >> 11) as f64 / (1u64 << 53) as f64
+    }
+    fn between(&mut self, low: f64, high: f64) -> f64 {
+        low + (high - low) * self.next()
+    }
+}
+
+const HEIGHT: f64 = 50.0;
+
+fn request(kind: Kind, region: Option<Region>, at: f64) -> Request {
+    Request {
+        name: String::new(),
+        kind,
+        region,
+        at: if kind == Kind::LineWidth {
+            vec![at]
+        } else {
+            Vec::new()
+        },
+        across: None,
+    }
+}
+
+/// The scene's surface, its size in pixels `[rows, columns]`, and the truth.
+fn scene(
+    case: &Case,
+    random: &mut Random,
+    seed: u64,
+) -> Result<(Box<dyn Feature>, [usize; 2], Truth)> {
+    let width = random.between(50.0, 70.0);
+    let rows = 48;
+    Ok(match case.kind {
+        Scene::Line | Scene::RoughLine => {
+            let mut lines = Lines::new(random.between(95.0, 105.0), 400.0, 1, width, HEIGHT)
+                .walls(case.wall_deg, 0.0);
+            if case.kind == Scene::RoughLine {
+                let roughness = EdgeRoughness {
+                    sigma_nm: 1.0,
+                    length_nm: 15.0,
+                    seed,
+                };
+                lines = lines.rough(roughness, -100.0, 200.0)?;
+            }
+            // Of a rough line the width at large is meant, not that of the piece in the scan.
+            let straight = Lines::new(0.0, 1.0, 1, width, HEIGHT).walls(case.wall_deg, 0.0);
+            let value = if case.kind == Scene::RoughLine {
+                straight.width_at(0, 0.0, case.at)
+            } else {
+                lines.width_at(0, 0.0, case.at)
+            };
+            let request = request(Kind::LineWidth, None, case.at);
+            (Box::new(lines), [rows, 200], Truth { request, value })
+        }
+        Scene::Trench => {
+            let pitch = random.between(150.0, 170.0);
+            let lines = Lines::new(random.between(28.0, 38.0), pitch, 2, 100.0, HEIGHT)
+                .walls(case.wall_deg, 0.0);
+            let value = pitch - lines.width_at(0, 0.0, case.at);
+            let request = request(Kind::LineWidth, None, case.at);
+            (Box::new(lines), [rows, 220], Truth { request, value })
+        }
+        Scene::Ridge => {
+            let height = random.between(20.0, 50.0);
+            let lines = Lines::new(random.between(115.0, 125.0), 400.0, 1, width, height)
+                .walls(case.wall_deg, 0.0);
+            let request = request(Kind::StepHeight, None, 0.5);
+            (
+                Box::new(lines),
+                [rows, 240],
+                Truth {
+                    request,
+                    value: height,
+                },
+            )
+        }
+        Scene::Step => {
+            let height = random.between(5.0, 50.0);
+            let step = Step {
+                at_nm: random.between(90.0, 110.0),
+                height_nm: height,
+                wall_angle_deg: case.wall_deg,
+            };
+            let request = request(Kind::StepHeight, None, 0.5);
+            (
+                Box::new(step),
+                [rows, 200],
+                Truth {
+                    request,
+                    value: height,
+                },
+            )
+        }
+        Scene::Pitch => {
+            let pitch = random.between(38.0, 44.0);
+            let lines = Lines::new(random.between(10.0, 30.0), pitch, 12, 20.0, 15.0)
+                .walls(case.wall_deg, 0.0);
+            let request = request(Kind::Pitch, None, 0.5);
+            (
+                Box::new(lines),
+                [rows, 480],
+                Truth {
+                    request,
+                    value: pitch,
+                },
+            )
+        }
+        Scene::ParticleHeight | Scene::ParticleDiameter => {
+            let radius = random.between(case.tip.0 / 2.0, 2.0 * case.tip.0);
+            let at = [random.between(58.0, 70.0), random.between(58.0, 70.0)];
+            let shape = BumpShape::Sphere { radius };
+            let bumps = Bumps::new(vec![Bump { at, shape }])?;
+            let request = request(Kind::Particle, None, 0.5);
+            let value = 2.0 * radius;
+            (Box::new(bumps), [128, 128], Truth { request, value })
+        }
+    })
+}
+
+/// Scans, levels, corrects and measures; the result line and the truth.
+fn one(case: &Case, seed: u64) -> Result<(Vec<Dimension>, f64)> {
+    let progress = Progress::new();
+    let mut random = Random(seed);
+    let (surface, [rows, columns], truth) = scene(case, &mut random, seed)?;
+    let pitch = Pitch::square(1.0);
+    let (radius, half_angle) = case.tip;
+    let model = Model::SphereCone { radius, half_angle };
+    let support =
+        2.0 * truewidth::tip::model::sphere_cone_half_width(radius, half_angle, HEIGHT + 5.0);
+    let tip: Tip = model.sample(support, pitch)?;
+    let settings = Settings {
+        support_nm: support,
+        distortion: Distortion {
+            noise_nm: case.noise_nm,
+            tilt: [random.between(-0.01, 0.01), random.between(-0.01, 0.01)],
+            drift_nm: 0.5,
+            ..Distortion::default()
+        },
+        seed: seed ^ 0x5eed,
+        ..Settings::new(rows, columns, pitch)
+    };
+    let made = virtual_scan::scan(
+        |x, y| surface.height(x, y),
+        |dx, dy| model.height(dx, dy),
+        &settings,
+        &progress,
+    )?;
+    let leveled = leveling::level(&made.scan, &leveling::Settings::default(), &progress)?;
+    let noise = leveled.noise_nm.unwrap_or(0.0);
+    let scan = &leveled.map;
+    let heights = morphology::erode(scan.heights(), tip.shape(), &progress)?;
+    let surface: HeightMap = scan.with_heights(heights, "corrected");
+    let certainty = morphology::certainty_map(
+        surface.heights(),
+        scan.heights(),
+        tip.shape(),
+        (3.0 * noise) as f32,
+        [0, 0],
+        &progress,
+    )?;
+    let leaning =
+        morphology::edge_leaning(scan.heights(), surface.heights(), tip.shape(), &progress)?;
+    let input = Input {
+        scan,
+        noise_nm: leveled.noise_nm,
+        calibration: Calibration::default(),
+        corrected: Some(Corrected {
+            tip: &tip,
+            surface: &surface,
+            surface_upper: None,
+            surface_lower: None,
+            certainty: certainty.view(),
+            edge_leaning: leaning.view(),
+            identified: true,
+            height_u_nm: 0.0,
+            exercised_depth_nm: None,
+            contains_feature_radius: false,
+        }),
+    };
+    let lines = measure(&input, &truth.request, &progress)?;
+    let lines = match case.kind {
+        Scene::ParticleHeight => pick(lines, "height"),
+        Scene::ParticleDiameter => pick(lines, "diameter"),
+        _ => lines,
+    };
+    Ok((lines, truth.value))
+}
+
+fn pick(lines: Vec<Dimension>, quantity: &str) -> Vec<Dimension> {
+    lines
+        .into_iter()
+        .filter(|l| l.quantity.contains(quantity))
+        .collect()
+}
+
+#[derive(Default)]
+struct Tally {
+    scanned: Vec<f64>,
+    corrected: Vec<f64>,
+    widths: Vec<f64>,
+    covered: usize,
+    touched: usize,
+    intervals: usize,
+    lost: usize,
+    reasons: Vec<String>,
+}
+
+impl Tally {
+    fn add(&mut self, line: Option<&Dimension>, truth: f64) {
+        let Some(line) = line else {
+            self.lost += 1;
+            return;
+        };
+        if let Some(v) = line.as_scanned {
+            self.scanned.push(v.value - truth);
+        }
+        let Some(c) = line.corrected else {
+            self.lost += 1;
+            self.reasons.extend(line.flags.iter().cloned());
+            return;
+        };
+        self.corrected.extend(c.value.map(|v| v - truth));
+        self.touched += usize::from(line.status == Some(Status::Touched));
+        if let (Some(low), Some(high)) = (c.low, c.high) {
+            self.intervals += 1;
+            self.widths.push(high - low);
+            self.covered += usize::from((low..=high).contains(&truth));
+        }
+    }
+}
+
+fn mean(v: &[f64]) -> f64 {
+    v.iter().sum::<f64>() / v.len() as f64
+}
+fn rms(v: &[f64]) -> f64 {
+    (v.iter().map(|x| x * x).sum::<f64>() / v.len() as f64).sqrt()
+}
+fn median(v: &[f64]) -> f64 {
+    let mut v = v.to_vec();
+    v.sort_by(f64::total_cmp);
+    v.get(v.len() / 2).copied().unwrap_or(f64::NAN)
+}
+
+fn cases() -> Vec<Case> {
+    let mut cases = Vec::new();
+    let mut add = |name, tip, wall_deg, noise_nm, kind, at| {
+        cases.push(Case {
+            name,
+            tip,
+            wall_deg,
+            noise_nm,
+            kind,
+            at,
+        });
+    };
+    let (slim, stout) = ((8.0, 8.0), (10.0, 15.0));
+    for noise in [0.0, 0.2, 0.3] {
+        add("line width", slim, 80.0, noise, Scene::Line, 0.5);
+    }
+    add("line width", slim, 60.0, 0.3, Scene::Line, 0.5);
+    add("line width", slim, 75.0, 0.3, Scene::Line, 0.5);
+    add("line width", stout, 70.0, 0.3, Scene::Line, 0.5);
+    add(
+        "line width, rough line",
+        slim,
+        80.0,
+        0.3,
+        Scene::RoughLine,
+        0.5,
+    );
+    add("line width, 90 %", slim, 80.0, 0.3, Scene::Line, 0.9);
+    add("line width, 10 %", slim, 80.0, 0.3, Scene::Line, 0.1);
+    add("trench width", slim, 80.0, 0.3, Scene::Trench, 0.5);
+    add("line width", slim, 84.0, 0.3, Scene::Line, 0.5);
+    add("line width", slim, 88.0, 0.3, Scene::Line, 0.5);
+    add("line width", slim, 90.0, 0.3, Scene::Line, 0.5);
+    add("line width", stout, 80.0, 0.3, Scene::Line, 0.5);
+    add("line width", stout, 88.0, 0.3, Scene::Line, 0.5);
+    add(
+        "line width, rough line",
+        stout,
+        88.0,
+        0.3,
+        Scene::RoughLine,
+        0.5,
+    );
+    add("trench width", stout, 88.0, 0.3, Scene::Trench, 0.5);
+    add("step height, ridge", slim, 85.0, 0.2, Scene::Ridge, 0.5);
+    add("step height, edge", stout, 80.0, 0.2, Scene::Step, 0.5);
+    add(
+        "particle height",
+        stout,
+        90.0,
+        0.2,
+        Scene::ParticleHeight,
+        0.5,
+    );
+    add(
+        "particle diameter",
+        stout,
+        90.0,
+        0.2,
+        Scene::ParticleDiameter,
+        0.5,
+    );
+    add(
+        "particle diameter",
+        slim,
+        90.0,
+        0.2,
+        Scene::ParticleDiameter,
+        0.5,
+    );
+    add("pitch", slim, 80.0, 0.2, Scene::Pitch, 0.5);
+    cases
+}
+
+/// Seconds for the widths of 64 lines at three heights on 1024 x 1024 pixels, as scanned and
+/// corrected. A surface that equals the scan takes as long as any other.
+fn speed() -> Result<()> {
+    let progress = Progress::new();
+    let mut random = Random(5);
+    let scan = HeightMap::from_fn(1024, 1024, Pitch::square(1.0), |x, _| {
+        let off = (x.rem_euclid(16.0) - 8.0).abs();
+        (10.0 * (6.0 - off)).clamp(0.0, 20.0) + 0.5 * (random.next() - 0.5)
+    })?;
+    let tip = Model::SphereCone {
+        radius: 3.0,
+        half_angle: 4.0,
+    }
+    .sample(11.0, scan.pitch())?;
+    let certainty = scan.heights().mapv(|_| morphology::certainty::TOUCHED);
+    let leaning = scan.heights().mapv(|_| false);
+    let input = Input {
+        scan: &scan,
+        noise_nm: Some(0.15),
+        calibration: Calibration::default(),
+        corrected: Some(Corrected {
+            tip: &tip,
+            surface: &scan,
+            surface_upper: None,
+            surface_lower: None,
+            certainty: certainty.view(),
+            edge_leaning: leaning.view(),
+            identified: true,
+            height_u_nm: 0.0,
+            exercised_depth_nm: None,
+            contains_feature_radius: false,
+        }),
+    };
+    let start = std::time::Instant::now();
+    let mut requests = find(&scan, Some(0.15), Find::Lines, &progress)?;
+    let mut lines = 0;
+    for request in &mut requests {
+        request.at = vec![0.1, 0.5, 0.9];
+        lines += measure(&input, request, &progress)?.len();
+    }
+    println!(
+        "{} lines found, {lines} widths in {:.2} s",
+        requests.len(),
+        start.elapsed().as_secs_f64()
+    );
+    Ok(())
+}
+
+fn main() -> ExitCode {
+    let arguments: Vec<String> = std::env::args().skip(1).collect();
+    let number = |name: &str| {
+        let at = arguments.iter().position(|a| a == name)?;
+        arguments.get(at + 1)?.parse::<u64>().ok()
+    };
+    let short = arguments.iter().any(|a| a == "--short");
+    let count = number("--count").unwrap_or(if short { 4 } else { 40 });
+    let first = number("--seed").unwrap_or(1);
+    let only = number("--only");
+    let verbose = arguments.iter().any(|a| a == "--verbose");
+    println!(
+        "| measurand | tip R, half-angle | wall | noise | n | scanned | corrected | rms | touched | coverage | interval |"
+    );
+    println!("|---|---|---|---|---|---|---|---|---|---|---|");
+    let mut failed = false;
+    if arguments.iter().any(|a| a == "--speed") {
+        return match speed() {
+            Ok(()) => ExitCode::SUCCESS,
+            Err(error) => {
+                eprintln!("{error}");
+                ExitCode::FAILURE
+            }
+        };
+    }
+    for (index, case) in cases().iter().enumerate() {
+        if only.is_some_and(|o| o != index as u64) {
+            continue;
+        }
+        let mut tally = Tally::default();
+        for i in 0..count {
+            match one(case, 1000 * first + 7919 * index as u64 + i) {
+                Ok((lines, truth)) => {
+                    if verbose {
+                        eprintln!("truth {truth:.3}: {lines:#?}");
+                    }
+                    tally.add(lines.first(), truth);
+                }
+                Err(error) => {
+                    eprintln!("{}: {error}", case.name);
+                    failed = true;
+                }
+            }
+        }
+        let share = |n: usize, of: usize| 100.0 * n as f64 / of.max(1) as f64;
+        let coverage = share(tally.covered, tally.intervals);
+        println!(
+            "| {} | {} nm, {} deg | {} deg | {} nm | {} | {:+.2} | {:+.3} | {:.3} | {:.0} % | {:.0} % | {:.2} |{}",
+            case.name,
+            case.tip.0,
+            case.tip.1,
+            case.wall_deg,
+            case.noise_nm,
+            tally.intervals,
+            mean(&tally.scanned),
+            mean(&tally.corrected),
+            rms(&tally.corrected),
+            share(tally.touched, count as usize),
+            coverage,
+            median(&tally.widths),
+            if tally.lost > 0 {
+                format!(" lost {}: {:?}", tally.lost, tally.reasons.first())
+            } else {
+                String::new()
+            },
+        );
+        // The short form only tells a broken measurement from a working one.
+        failed |= tally.lost > 0 || coverage < 70.0;
+    }
+    if failed && short {
+        ExitCode::FAILURE
+    } else {
+        ExitCode::SUCCESS
+    }
+}

@@ -1,0 +1,433 @@
+//! result.json, schema `truewidth.result/1`.
+//!
+//! Numbers: heights are f32, so everything read off them carries noise digits. Each number is
+//! written to seven significant digits, a measured value to a thousandth of its standard
+//! uncertainty where that is finer; pixel pitches to twelve digits. What could not be had is
+//! `null`; NaN and infinities never appear.
+
+use super::format::tame;
+use crate::dimensions::{Dimension, Kind, Status};
+use crate::heightmap::HeightMap;
+use crate::job::{Job, Outcome, Reliability, SurfaceResult, TipFrom, TipResult};
+use crate::leveling::Leveled;
+use crate::uncertainty::Distribution;
+use serde::Serialize;
+use std::path::Path;
+
+/// Schema of result.json.
+pub const SCHEMA: &str = "truewidth.result/1";
+
+/// The whole of result.json.
+#[derive(Debug, Serialize)]
+pub struct ResultFile {
+    schema: &'static str,
+    program: &'static str,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    written: Option<String>,
+    job: JobPart,
+    scan: ScanPart,
+    level: Option<LevelPart>,
+    tip: TipPart,
+    surface: Option<SurfacePart>,
+    reliability: Option<Reliability>,
+    dimensions: Vec<DimensionPart>,
+    warnings: Vec<String>,
+}
+
+#[derive(Debug, Serialize)]
+struct JobPart {
+    title: String,
+    file: Option<String>,
+    sha256: Option<String>,
+}
+
+#[derive(Debug, Serialize)]
+struct ScanPart {
+    file: String,
+    sha256: Option<String>,
+    columns: Option<usize>,
+    rows: Option<usize>,
+    pitch_nm: Option<[f64; 2]>,
+    noise_nm: Option<f64>,
+    scale_source: Option<String>,
+    voids: Option<usize>,
+    range_nm: Option<[f64; 2]>,
+    steps: Vec<String>,
+}
+
+#[derive(Debug, Serialize)]
+struct LevelPart {
+    method: serde_json::Value,
+    slope: [Option<f64>; 2],
+    drift_nm: Option<f64>,
+    row_jumps: Vec<JumpPart>,
+}
+
+#[derive(Debug, Serialize)]
+struct JumpPart {
+    row: usize,
+    jump_nm: Option<f64>,
+}
+
+/// The `tip` object. Where there is no tip all is `null` and `diagnosis` says why.
+#[derive(Debug, Serialize)]
+pub struct TipPart {
+    from: TipFrom,
+    file: Option<String>,
+    sha256: Option<String>,
+    identified: bool,
+    threshold_nm: Option<f64>,
+    smoothing_px: Option<f64>,
+    exercised_depth_nm: Option<f64>,
+    depth_nm: Option<f64>,
+    height_u_nm: Option<f64>,
+    support_nm: Option<[f64; 2]>,
+    apex_radius_nm: Option<RadiusPart>,
+    half_angle_deg: Option<AnglePart>,
+    band: bool,
+    diagnosis: Vec<String>,
+}
+
+#[derive(Debug, Serialize)]
+struct RadiusPart {
+    value: f64,
+    u: Option<f64>,
+    fit_depth_nm: Option<f64>,
+    principal_nm: [Option<f64>; 2],
+}
+
+#[derive(Debug, Serialize)]
+struct AnglePart {
+    value: f64,
+    u: Option<f64>,
+    between_nm: [Option<f64>; 2],
+    per_azimuth_deg: Vec<[Option<f64>; 2]>,
+}
+
+#[derive(Debug, Serialize)]
+struct SurfacePart {
+    contact_tolerance_nm: Option<f64>,
+    edge_leaning: f64,
+    bracketed_by_band: bool,
+}
+
+#[derive(Debug, Serialize)]
+struct DimensionPart {
+    name: String,
+    kind: Kind,
+    quantity: String,
+    at: Option<f64>,
+    unit: &'static str,
+    as_scanned: Option<ScannedPart>,
+    corrected: Option<CorrectedPart>,
+    status: Option<Status>,
+    flags: Vec<String>,
+    budget: Vec<ComponentPart>,
+    assumptions: String,
+}
+
+#[derive(Debug, Serialize)]
+struct ScannedPart {
+    value: f64,
+    u: Option<f64>,
+}
+
+#[derive(Debug, Serialize)]
+struct CorrectedPart {
+    value: Option<f64>,
+    u: Option<f64>,
+    #[serde(rename = "U")]
+    expanded: Option<f64>,
+    k: Option<f64>,
+    low: Option<f64>,
+    high: Option<f64>,
+}
+
+#[derive(Debug, Serialize)]
+struct ComponentPart {
+    source: String,
+    u: Option<f64>,
+    distribution: Distribution,
+    sensitivity: Option<f64>,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    degrees_of_freedom: Option<f64>,
+}
+
+/// `x` to `digits` significant digits; `None` for what is no number.
+fn significant(x: f64, digits: i32) -> Option<f64> {
+    if !x.is_finite() {
+        return None;
+    }
+    if x == 0.0 {
+        return Some(0.0);
+    }
+    // Printing and reading back rounds in decimal, which powers of ten in binary do not.
+    format!("{x:.*e}", (digits - 1).max(0) as usize)
+        .parse()
+        .ok()
+}
+
+/// To seven significant digits.
+fn number(x: f64) -> Option<f64> {
+    significant(x, 7)
+}
+
+/// A measured value: to seven digits, or a thousandth of `u` where that is finer.
+fn measured(x: f64, u: Option<f64>) -> Option<f64> {
+    let digits = match u {
+        Some(u) if u > 0.0 && u.is_finite() && x != 0.0 => {
+            (4.0 + (x.abs() / u).log10().floor()).clamp(7.0, 16.0) as i32
+        }
+        _ => 7,
+    };
+    significant(x, digits)
+}
+
+fn path_text(path: &Path) -> String {
+    path.to_string_lossy().into_owned()
+}
+
+impl ResultFile {
+    /// The result of `outcome`, with the time stamp `written` where there is to be one.
+    pub fn of(job: &Job, outcome: &Outcome, written: Option<&str>) -> Self {
+        Self {
+            schema: SCHEMA,
+            program: env!("CARGO_PKG_VERSION"),
+            written: written.map(str::to_owned),
+            job: JobPart {
+                title: job.file.title.clone(),
+                file: job
+                    .path
+                    .as_deref()
+                    .and_then(Path::file_name)
+                    .map(|n| n.to_string_lossy().into_owned()),
+                sha256: job.sha256.clone(),
+            },
+            scan: scan_part(job, outcome),
+            level: outcome.level.as_deref().map(|level| level_part(job, level)),
+            tip: TipPart::of(job, outcome),
+            surface: outcome.surface.as_deref().map(surface_part),
+            reliability: outcome.surface.as_deref().and_then(reliability),
+            dimensions: outcome
+                .dimensions
+                .iter()
+                .flat_map(|all| all.iter())
+                .map(dimension_part)
+                .collect(),
+            warnings: outcome.warnings.clone(),
+        }
+    }
+}
+
+fn scan_part(job: &Job, outcome: &Outcome) -> ScanPart {
+    let scan = outcome.scan.as_deref();
+    let history = outcome.level.as_deref().map(|level| &level.map).or(scan);
+    let range = scan.and_then(HeightMap::range);
+    ScanPart {
+        file: path_text(&job.file.scan.file),
+        sha256: scan.and_then(|s| s.provenance().sha256.clone()),
+        columns: scan.map(HeightMap::columns),
+        rows: scan.map(HeightMap::rows),
+        pitch_nm: scan.map(|s| {
+            let pitch = s.pitch();
+            // A pitch is checked to be finite where a map is made.
+            [pitch.x, pitch.y].map(|p| significant(p, 12).unwrap_or(p))
+        }),
+        noise_nm: outcome
+            .level
+            .as_deref()
+            .and_then(|l| l.noise_nm)
+            .and_then(number),
+        scale_source: scan.map(|s| s.provenance().scale_source.clone()),
+        voids: scan.map(HeightMap::void_count),
+        range_nm: range
+            .and_then(|(low, high)| Some([number(f64::from(low))?, number(f64::from(high))?])),
+        steps: history.map_or_else(Vec::new, |m| m.provenance().steps.clone()),
+    }
+}
+
+fn level_part(job: &Job, level: &Leveled) -> LevelPart {
+    LevelPart {
+        // A unit variant of a plain enum always serializes.
+        method: serde_json::to_value(job.file.level.method).unwrap_or_default(),
+        slope: level.slope.map(number),
+        drift_nm: level.drift_nm.and_then(number),
+        row_jumps: level
+            .row_jumps
+            .iter()
+            .map(|jump| JumpPart {
+                row: jump.row,
+                jump_nm: number(jump.jump_nm),
+            })
+            .collect(),
+    }
+}
+
+impl TipPart {
+    fn of(job: &Job, outcome: &Outcome) -> Self {
+        let spec = &job.file.tip;
+        let mut part = match outcome.tip.as_deref() {
+            Some(tip) => Self::of_tip(tip),
+            None => Self::missing(spec.from, &outcome.warnings),
+        };
+        part.file = spec
+            .file
+            .as_deref()
+            .filter(|_| spec.from == TipFrom::File)
+            .map(path_text);
+        part
+    }
+
+    /// The object for `tip` alone, as `truewidth tip --json` prints it.
+    pub fn of_tip(tip: &TipResult) -> Self {
+        let estimate = tip.estimate.as_ref();
+        let mut diagnosis = tip.diagnosis.clone();
+        if estimate.is_none() {
+            diagnosis.push(
+                "The tip was given, not estimated: it has no threshold and no exercised depth."
+                    .to_owned(),
+            );
+        }
+        Self {
+            from: tip.from,
+            file: None,
+            sha256: tip.sha256.clone(),
+            identified: tip.identified,
+            threshold_nm: estimate.and_then(|e| number(e.threshold_nm)),
+            smoothing_px: estimate.and_then(|e| number(e.smoothing_px)),
+            exercised_depth_nm: tip.exercised_depth_nm.and_then(number),
+            depth_nm: number(tip.tip.depth_nm()),
+            height_u_nm: number(tip.height_u_nm),
+            support_nm: Some(
+                tip.tip
+                    .support_nm()
+                    .map(|s| significant(s, 12).unwrap_or(s)),
+            ),
+            apex_radius_nm: tip.read_out.apex_radius.and_then(|r| {
+                Some(RadiusPart {
+                    value: number(r.value)?,
+                    u: number(r.u),
+                    fit_depth_nm: number(r.fit_depth_nm),
+                    principal_nm: r.principal_nm.map(number),
+                })
+            }),
+            half_angle_deg: tip.read_out.half_angle.as_ref().and_then(|a| {
+                Some(AnglePart {
+                    value: number(a.value)?,
+                    u: number(a.u),
+                    between_nm: a.between_nm.map(number),
+                    per_azimuth_deg: a
+                        .per_azimuth
+                        .iter()
+                        .map(|&(azimuth, angle)| [number(azimuth), number(angle)])
+                        .collect(),
+                })
+            }),
+            band: tip.band.is_some(),
+            diagnosis,
+        }
+    }
+
+    fn missing(from: TipFrom, warnings: &[String]) -> Self {
+        let mut diagnosis: Vec<String> = warnings
+            .iter()
+            .filter(|w| w.starts_with("No tip"))
+            .cloned()
+            .collect();
+        if diagnosis.is_empty() {
+            diagnosis.push("No tip: this stage has given no result.".to_owned());
+        }
+        Self {
+            from,
+            file: None,
+            sha256: None,
+            identified: false,
+            threshold_nm: None,
+            smoothing_px: None,
+            exercised_depth_nm: None,
+            depth_nm: None,
+            height_u_nm: None,
+            support_nm: None,
+            apex_radius_nm: None,
+            half_angle_deg: None,
+            band: false,
+            diagnosis,
+        }
+    }
+}
+
+fn surface_part(surface: &SurfaceResult) -> SurfacePart {
+    let leaning = surface.edge_leaning.iter().filter(|&&e| e).count() as f64;
+    let all = surface.edge_leaning.len().max(1) as f64;
+    SurfacePart {
+        contact_tolerance_nm: number(surface.tolerance_nm),
+        edge_leaning: number(leaning / all).unwrap_or(0.0),
+        bracketed_by_band: surface.upper.is_some() && surface.lower.is_some(),
+    }
+}
+
+fn reliability(surface: &SurfaceResult) -> Option<Reliability> {
+    let r = surface.reliability;
+    Some(Reliability {
+        touched: number(r.touched)?,
+        bounded: number(r.bounded)?,
+        never: number(r.never)?,
+    })
+}
+
+fn dimension_part(dimension: &Dimension) -> DimensionPart {
+    DimensionPart {
+        name: tame(&dimension.name),
+        kind: dimension.kind,
+        quantity: dimension.quantity.clone(),
+        at: dimension.at.and_then(number),
+        unit: dimension.unit,
+        as_scanned: dimension.as_scanned.and_then(|v| {
+            Some(ScannedPart {
+                value: measured(v.value, v.u)?,
+                u: v.u.and_then(number),
+            })
+        }),
+        corrected: dimension.corrected.map(|c| CorrectedPart {
+            value: c.value.and_then(|x| measured(x, c.u)),
+            u: c.u.and_then(number),
+            expanded: c.expanded.and_then(number),
+            k: c.k.and_then(number),
+            low: c.low.and_then(|x| measured(x, c.u)),
+            high: c.high.and_then(|x| measured(x, c.u)),
+        }),
+        status: dimension.status,
+        flags: dimension.flags.clone(),
+        budget: dimension
+            .budget
+            .iter()
+            .map(|c| ComponentPart {
+                source: c.source.clone(),
+                u: number(c.u),
+                distribution: c.distribution,
+                sensitivity: number(c.sensitivity),
+                degrees_of_freedom: c.degrees_of_freedom.and_then(number),
+            })
+            .collect(),
+        assumptions: dimension.assumptions.to_owned(),
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn noise_digits_of_f32_go_and_fine_values_stay() {
+        assert_eq!(number(f64::from(128.7f32)), Some(128.7));
+        assert_eq!(number(f64::from(0.1f32)), Some(0.1));
+        assert_eq!(number(-0.0).map(f64::to_bits), Some(0));
+        assert_eq!(number(f64::NAN), None);
+        assert_eq!(number(f64::NEG_INFINITY), None);
+        // A pitch known to 0.1 pm keeps its digits.
+        let fine = 1_000_123.456_789;
+        let kept = measured(fine, Some(1e-4)).unwrap();
+        assert!((kept - fine).abs() < 1e-6, "{kept}");
+        assert_eq!(measured(fine, None), Some(1_000_123.0));
+    }
+}
