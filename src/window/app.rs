@@ -122,10 +122,7 @@ impl App {
             shown: Outcome::default(),
             state: 0,
             stage: Stage::Surface,
-            desk: Desk {
-                reliability: settings.reliability,
-                ..Desk::default()
-            },
+            desk: Desk::default(),
             cuts: Cuts::default(),
             tip_view: TipView::default(),
             chosen: Chosen::default(),
@@ -144,6 +141,7 @@ impl App {
             title: String::new(),
             closing: false,
         };
+        app.desk.reliability = app.settings.reliability;
         app.apply_theme(app.settings.theme);
         app
     }
@@ -330,6 +328,8 @@ impl App {
                     Err(error) => self.message = Some(Message::of(&error)),
                 }
             }
+            Done::Found(Err(error)) => self.message = Some(Message::of(&error)),
+            Done::Found(Ok(found)) => self.found(found),
             Done::NoDialog => {
                 self.browse = false;
                 self.message = Some(Message {
@@ -341,6 +341,31 @@ impl App {
             Done::Browsed(_, None) => {}
             Done::Browsed(purpose, Some(path)) => self.browsed(purpose, path),
         }
+    }
+
+    /// Adds what was found and is not there yet, under names that are free.
+    fn found(&mut self, found: Vec<Request>) {
+        let Some(opened) = &self.opened else {
+            return;
+        };
+        let mut job = opened.history.now().clone();
+        let before = job.dimensions.len();
+        for mut request in found {
+            let same = |r: &Request| r.kind == request.kind && r.region == request.region;
+            if job.dimensions.iter().any(same) {
+                continue;
+            }
+            if job.dimensions.iter().any(|r| r.name == request.name) {
+                request.name = new_name(&job.dimensions, request.kind);
+            }
+            job.dimensions.push(request);
+        }
+        let added = job.dimensions.len() - before;
+        self.edit(job, false);
+        self.message = Some(Message::news(match added {
+            0 => "Nothing new was found".to_owned(),
+            n => format!("{n} found and added; look at them before you use them"),
+        }));
     }
 
     fn browsed(&mut self, purpose: BrowseFor, path: PathBuf) {
@@ -531,6 +556,11 @@ impl App {
             }
             Command::Browse(purpose) => self.chores.browse(purpose, self.here()),
             Command::Edit { job, gesture } => self.edit(*job, gesture),
+            Command::Find(what) => {
+                if let Some(level) = &self.shown.level {
+                    self.chores.find(std::sync::Arc::clone(level), what);
+                }
+            }
             Command::EndGesture => {
                 if let Some(opened) = &mut self.opened {
                     opened.history.end_gesture();

@@ -1,11 +1,15 @@
 //! Slow errands off the paint thread: saving, writing the record, the system's file dialog.
 
 use super::command::BrowseFor;
+use crate::dimensions::{Find, Request, find};
 use crate::error::{Error, Result};
 use crate::job::{Job, JobFile, Outcome};
+use crate::leveling::Leveled;
+use crate::progress::Progress;
 use crate::record::{self, Written};
 use eframe::egui::Context;
 use std::path::{Path, PathBuf};
+use std::sync::Arc;
 use std::sync::mpsc::{Receiver, Sender, channel};
 use std::time::{Duration, Instant};
 
@@ -15,6 +19,8 @@ pub enum Done {
     Saved(Box<JobFile>, Result<Box<Job>>),
     /// The record was written: of which state, and where.
     Recorded(u64, Result<Written>),
+    /// Things to measure were looked for.
+    Found(Result<Vec<Request>>),
     /// A file was chosen, or none.
     Browsed(BrowseFor, Option<PathBuf>),
     /// There is no file dialog on this system after all.
@@ -75,6 +81,14 @@ impl Chores {
                 state,
                 record::write(&folder, &job, &outcome),
             ))
+        });
+    }
+
+    /// Looks for things to measure.
+    pub fn find(&self, level: Arc<Leveled>, what: Find) {
+        self.start(move || {
+            let found = find(&level.map, level.noise_nm, what, &Progress::new());
+            Some(Done::Found(found))
         });
     }
 

@@ -3,6 +3,7 @@
 use super::settings::ThemeChoice;
 use super::state::{ColourSpan, Line, Stage, Tool};
 use super::view::View;
+use crate::dimensions::Find;
 use crate::heightmap::Region;
 use crate::job::JobFile;
 use std::path::PathBuf;
@@ -27,6 +28,8 @@ pub enum Command {
         /// Whether it belongs to a drag that goes on.
         gesture: bool,
     },
+    /// Look for things to measure and add them to the job.
+    Find(Find),
     /// The drag is over.
     EndGesture,
     /// One step back.

@@ -2,14 +2,13 @@
 
 use super::colours::Palette;
 use super::command::Command;
-use super::dimensions_panel::place_button;
 use super::images::MapRef;
 use super::map_marks::RegionMark;
 use super::map_view::{Desk, Maps, Side, maps_ui, pixel_at};
 use super::section::{
     GhostOutline, Section, SectionData, ghost_outline, ghost_top, section_data, section_ui, span_in,
 };
-use super::state::{ColourSpan, Line, PLACEABLE, Stage, Tool, request_of};
+use super::state::{ColourSpan, Line, Stage, Tool, request_of};
 use super::table::{Results, results_ui};
 use crate::job::{GhostTip, JobFile, Outcome, ghost_tip};
 use eframe::egui::{CentralPanel, ComboBox, Frame, Margin, Panel, Sense, Ui};
@@ -321,11 +320,6 @@ fn tools_ui(ui: &mut Ui, stage: Stage, desk: &Desk, out: &mut Vec<Command>) {
                 .clicked()
             {
                 out.push(Command::Take(tool));
-            }
-        }
-        if stage == Stage::Dimensions {
-            for kind in PLACEABLE {
-                place_button(ui, kind, desk.tool, out);
             }
         }
         ui.separator();

@@ -4,10 +4,17 @@ use super::command::Command;
 use super::fields::{caution, choice_row, heading, length_row, parsed_row, remark, text_row};
 use super::panels::{Panel, request_title};
 use super::state::{PLACEABLE, Tool, kind_name};
-use crate::dimensions::{Axis, Kind, Request};
+use crate::dimensions::{Axis, Find, Kind, Request};
 use crate::heightmap::Region;
 use crate::units::Length;
 use eframe::egui::{Key, Ui};
+
+const FINDABLE: [(Find, &str); 4] = [
+    (Find::Lines, "Every line"),
+    (Find::Trenches, "Every trench"),
+    (Find::Steps, "Every step"),
+    (Find::Particles, "Every particle"),
+];
 
 /// Buttons that place, the list, the chosen one.
 pub fn dimensions_ui(
@@ -23,7 +30,20 @@ pub fn dimensions_ui(
             place_button(ui, kind, tool, out);
         }
     });
-    remark(ui, place_help(tool));
+    match tool {
+        Tool::Place(kind) => remark(ui, how_to_place(kind)),
+        _ => remark(ui, "Take one, then drag a region on either map."),
+    }
+    ui.menu_button("Find on the scan", |ui| {
+        for (what, name) in FINDABLE {
+            if ui.button(name).clicked() {
+                out.push(Command::Find(what));
+                ui.close();
+            }
+        }
+    })
+    .response
+    .on_hover_text("Adds a dimension for each one found; look at them before you use them");
     heading(ui, "Dimensions of this job");
     let requests = &panel.job.dimensions;
     if requests.is_empty() {
@@ -51,32 +71,30 @@ pub fn dimensions_ui(
 }
 
 /// A button that takes the tool placing `kind`.
-pub fn place_button(ui: &mut Ui, kind: Kind, tool: Tool, out: &mut Vec<Command>) {
-    let (key, help) = match kind {
-        Kind::StepHeight => (
-            "H",
-            "Drag over the feature and as much of the ground on either side (ISO 5436-1: three times its width)",
-        ),
-        _ => (
-            "W",
-            "Drag over one ridge or trench and some of what lies on either side",
-        ),
+fn place_button(ui: &mut Ui, kind: Kind, tool: Tool, out: &mut Vec<Command>) {
+    let key = match kind {
+        Kind::StepHeight => " (H)",
+        Kind::LineWidth => " (W)",
+        _ => "",
     };
     let taken = tool == Tool::Place(kind);
     let response = ui.selectable_label(taken, kind_name(kind));
-    if response.on_hover_text(format!("{help} ({key})")).clicked() {
+    let help = format!("{}{key}", how_to_place(kind));
+    if response.on_hover_text(help).clicked() {
         let next = if taken { Tool::Look } else { Tool::Place(kind) };
         out.push(Command::Take(next));
     }
 }
 
-fn place_help(tool: Tool) -> &'static str {
-    match tool {
-        Tool::Place(Kind::StepHeight) => {
-            "Drag over the feature and as much of the ground on either side."
+fn how_to_place(kind: Kind) -> &'static str {
+    match kind {
+        Kind::StepHeight => {
+            "Drag over the feature and as much of the ground on either side: three times its width in all."
         }
-        Tool::Place(_) => "Drag over one ridge or trench and some of what lies on either side.",
-        _ => "Take one, then drag a region on either map.",
+        Kind::LineWidth => "Drag over one ridge or trench and some of what lies on either side.",
+        Kind::Pitch => "Drag over as many periods of the grating as there are.",
+        Kind::Particle => "Drag over the particles and the flat around them.",
+        Kind::Texture => "Drag over the area whose texture counts.",
     }
 }
 

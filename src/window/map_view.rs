@@ -16,7 +16,7 @@ use crate::leveling::RowJump;
 use eframe::egui::accesskit::Role;
 use eframe::egui::{
     Color32, CursorIcon, EventFilter, Key, PointerButton, Pos2, Rect, Response, Sense, Stroke,
-    StrokeKind, TextureHandle, TextureOptions, Ui, Vec2, WidgetInfo, pos2, vec2,
+    StrokeKind, TextureHandle, TextureOptions, Ui, Vec2, WidgetInfo, pos2,
 };
 use std::sync::Arc;
 
@@ -636,16 +636,4 @@ impl Pane<'_> {
         }
         out.push(Command::Select(grip::region_at(p, &self.placed())));
     }
-}
-
-/// Height that a pane of `map` of the given width wants, so that little of it stays empty.
-pub fn wanted_height(map: &HeightMap, width: f32) -> f32 {
-    let pane = two_panes(
-        Rect::from_min_size(Pos2::ZERO, vec2(width, 100.0)),
-        10.0,
-        SCALE,
-    )
-    .0
-    .width();
-    HEAD + pane * (map.length_nm() / map.width_nm()) as f32
 }

@@ -6,9 +6,6 @@ use crate::job::{Job, JobFile};
 use serde::{Deserialize, Serialize};
 use std::path::{Path, PathBuf};
 
-/// Variable that names another folder for settings and recovery files.
-pub const FOLDER_VARIABLE: &str = "TRUEWIDTH_DATA";
-
 /// How many files the recent list holds.
 const RECENT: usize = 10;
 
@@ -75,19 +72,14 @@ pub struct Store {
 }
 
 impl Store {
-    /// The user's data folder, or the one named by [`FOLDER_VARIABLE`]; `None` where there is
-    /// neither.
+    /// The user's data folder, see [`crate::job::data_folder`]; `None` where there is none.
     pub fn find() -> Option<Self> {
-        let folder = match std::env::var_os(FOLDER_VARIABLE) {
-            Some(folder) => PathBuf::from(folder),
-            None => directories::ProjectDirs::from("", "", "truewidth")?
-                .data_dir()
-                .to_owned(),
-        };
+        let folder = crate::job::data_folder().ok()?;
         Some(Self { folder })
     }
 
     /// A given folder.
+    #[cfg(test)]
     pub fn at(folder: impl Into<PathBuf>) -> Self {
         Self {
             folder: folder.into(),

@@ -161,7 +161,13 @@ pub enum Tool {
 }
 
 /// Kinds that can be placed by dragging.
-pub const PLACEABLE: [Kind; 2] = [Kind::StepHeight, Kind::LineWidth];
+pub const PLACEABLE: [Kind; 5] = [
+    Kind::StepHeight,
+    Kind::LineWidth,
+    Kind::Pitch,
+    Kind::Particle,
+    Kind::Texture,
+];
 
 /// What people call a kind.
 pub fn kind_name(kind: Kind) -> &'static str {
