@@ -51,8 +51,11 @@ pub fn region_rect(region: Region, to: impl Fn((f64, f64)) -> Pos2) -> Rect {
 
 /// Regions with their names; the chosen one last, filled and with grips.
 pub fn regions(painter: &Painter, marks: &[RegionMark], to: impl Fn((f64, f64)) -> Pos2 + Copy) {
-    let order = |chosen: bool| marks.iter().filter(move |m| m.chosen == chosen);
-    for mark in order(false).chain(order(true)) {
+    // Small ones over large ones, the chosen one over all.
+    let mut order: Vec<&RegionMark> = marks.iter().collect();
+    let area = |m: &RegionMark| m.region.width * m.region.height;
+    order.sort_by(|a, b| (a.chosen.cmp(&b.chosen)).then(area(b).total_cmp(&area(a))));
+    for mark in order {
         // Drawn just inside, so that edges on the map's border are seen whole.
         let rect = region_rect(mark.region, to).shrink(1.0);
         let colour = colour_of(mark.kind);

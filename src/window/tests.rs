@@ -106,7 +106,7 @@ fn results_are_read_as_scanned_and_corrected() {
         "128.70 ± 0.90 nm",
         "100.4 ± 2.2 nm",
         "97.9 … 103.1 nm",
-        "◐ bounded",
+        "bounded",
     ] {
         window.get_by_label(text);
     }
