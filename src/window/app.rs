@@ -552,6 +552,8 @@ impl App {
             Command::Go(stage) => {
                 self.stage = stage;
                 self.desk.tool = Tool::Look;
+                self.desk.pointer = None;
+                self.desk.plot_pointer = None;
             }
             Command::AskOpen => self.ask_path(Purpose::Open),
             Command::AskSave => self.ask_path(Purpose::Save),

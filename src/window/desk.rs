@@ -117,7 +117,7 @@ pub fn desk_ui(ui: &mut Ui, on: &OnDesk, desk: &mut Desk, cuts: &mut Cuts, out: 
     tools_ui(ui, on.stage, desk, out);
     let bare = Frame::new().inner_margin(Margin::symmetric(0, 6));
     if on.stage == Stage::Dimensions {
-        let tall = (ui.available_height() * 0.27).clamp(120.0, 360.0);
+        let tall = (ui.available_height() * 0.25).clamp(120.0, 360.0);
         Panel::bottom("results")
             .resizable(true)
             .default_size(tall)
@@ -134,9 +134,9 @@ pub fn desk_ui(ui: &mut Ui, on: &OnDesk, desk: &mut Desk, cuts: &mut Cuts, out: 
             });
     }
     let share = if on.stage == Stage::Dimensions {
-        0.30
+        0.28
     } else {
-        0.31
+        0.30
     };
     let tall = (ui.available_height() * share).clamp(120.0, 360.0);
     Panel::bottom(if on.stage == Stage::Dimensions {

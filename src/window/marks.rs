@@ -118,7 +118,7 @@ pub fn samples_ui(ui: &Ui, rect: Rect, samples: &[(Sample, Color32, &str)]) {
         let at = Align2::LEFT_CENTER.anchor_size(pos2(x, y), galley.size());
         painter.galley(at.min, galley, p.text);
         x -= 6.0;
-        let (a, b) = (pos2(x - 22.0, y), pos2(x, y));
+        let (a, b) = (pos2(x - 20.0, y), pos2(x, y));
         match sample {
             Sample::Line(width) => {
                 painter.line_segment([a, b], Stroke::new(*width, *colour));
@@ -149,23 +149,39 @@ pub fn samples_ui(ui: &Ui, rect: Rect, samples: &[(Sample, Color32, &str)]) {
                 painter.add(Shape::convex_polygon(diamond, *colour, Stroke::NONE));
             }
         }
-        x -= 22.0 + 18.0;
-        if x < rect.left() + 120.0 {
+        x -= 20.0 + 13.0;
+        if x < rect.left() + 90.0 {
             break;
         }
     }
 }
 
 /// A plot's axis along x whose numbers stand as near as they can be read.
-pub fn x_axis(label: &'static str) -> egui_plot::AxisHints<'static> {
-    egui_plot::AxisHints::new_x()
-        .label(label)
-        .label_spacing(eframe::egui::Rangef::new(34.0, 70.0))
+pub fn x_axis() -> egui_plot::AxisHints<'static> {
+    egui_plot::AxisHints::new_x().label_spacing(eframe::egui::Rangef::new(34.0, 70.0))
 }
 
 /// A plot's axis along y whose numbers stand as near as they can be read.
-pub fn y_axis(label: &'static str) -> egui_plot::AxisHints<'static> {
-    egui_plot::AxisHints::new_y()
-        .label(label)
-        .label_spacing(eframe::egui::Rangef::new(15.0, 28.0))
+pub fn y_axis() -> egui_plot::AxisHints<'static> {
+    egui_plot::AxisHints::new_y().label_spacing(eframe::egui::Rangef::new(15.0, 28.0))
+}
+
+/// A title above a plot, with what its axes are in smaller print behind it.
+pub fn title_ui(ui: &Ui, rect: Rect, title: &str, axes: &str) {
+    let p = Palette::of(ui);
+    let painter = ui.painter();
+    let written = painter.text(
+        rect.left_center(),
+        Align2::LEFT_CENTER,
+        title,
+        FontId::proportional(14.0),
+        p.text,
+    );
+    painter.text(
+        written.right_center() + vec2(9.0, 0.5),
+        Align2::LEFT_CENTER,
+        axes,
+        FontId::proportional(12.0),
+        p.faint,
+    );
 }

@@ -3,14 +3,14 @@
 use super::colours::Palette;
 use super::format;
 use super::map_view::pixel_at;
-use super::marks::{Sample, samples_ui, x_axis, y_axis};
+use super::marks::{Sample, samples_ui, title_ui, x_axis, y_axis};
 use super::state::Line;
 use crate::heightmap::{HeightMap, Profile, Region};
 use crate::job::{GhostTip, Outcome};
 use crate::morphology::certainty;
 use crate::tip::Tip;
 use eframe::egui::accesskit::Role;
-use eframe::egui::{Align2, FontId, Rect, Stroke, Ui, UiBuilder, WidgetInfo, vec2};
+use eframe::egui::{Rect, Stroke, Ui, UiBuilder, WidgetInfo, vec2};
 use egui_plot::{Line as Curve, LineStyle, MarkerShape, Plot, PlotPoints, Points, Polygon, VLine};
 
 /// Height of the line of text above the plot.
@@ -216,12 +216,11 @@ fn summary(section: &Section) -> String {
 
 fn head_ui(ui: &Ui, rect: Rect, section: &Section) {
     let p = Palette::of(ui);
-    ui.painter().text(
-        rect.left_center(),
-        Align2::LEFT_CENTER,
+    title_ui(
+        ui,
+        rect,
         "Section",
-        FontId::proportional(14.0),
-        p.text,
+        "height over distance along the line, nm",
     );
     let mut samples = vec![(Sample::Dashed, p.scanned, "as scanned")];
     if section.corrected {
@@ -246,8 +245,8 @@ pub fn section_ui(ui: &mut Ui, rect: Rect, section: &Section) -> Option<f64> {
         .allow_scroll(false)
         .allow_boxed_zoom(false)
         .set_margin_fraction(vec2(0.01, 0.08))
-        .custom_x_axes(vec![x_axis("along the section line, nm")])
-        .custom_y_axes(vec![y_axis("height, nm")])
+        .custom_x_axes(vec![x_axis()])
+        .custom_y_axes(vec![y_axis()])
         .grid_color(p.line)
         .label_formatter(|_| None)
         .coordinates_formatter(

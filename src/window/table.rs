@@ -102,7 +102,10 @@ fn table(ui: &mut Ui, lines: &[Dimension], results: &Results, out: &mut Vec<Comm
         .column(Column::initial(130.0).at_least(90.0))
         .column(Column::remainder().at_least(110.0).clip(true))
         .header(24.0, |mut row| {
-            row.col(|ui| head(ui, "Name", ""));
+            row.col(|ui| {
+                ui.add_space(9.0);
+                head(ui, "Name", "");
+            });
             row.col(|ui| head(ui, "Quantity", ""));
             for (text, help) in [
                 (

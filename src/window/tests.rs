@@ -226,6 +226,7 @@ fn the_wheel_zooms_and_f_fits() {
         delta: vec2(0.0, 3.0),
         phase: eframe::egui::TouchPhase::Move,
         modifiers: Modifiers::NONE,
+        source: eframe::egui::MouseWheelSource::Unknown,
     });
     window.run_steps(10);
     assert!(app(&window).desk.view.is_some());

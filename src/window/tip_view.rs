@@ -6,7 +6,7 @@ use super::images::{MapRef, Pair, PairKey, paint_pair};
 use super::later::Later;
 use super::legend;
 use super::map_marks;
-use super::marks::{Sample, samples_ui, x_axis, y_axis};
+use super::marks::{Sample, samples_ui, title_ui, x_axis, y_axis};
 use super::state::ColourSpan;
 use super::view::View;
 use crate::heightmap::Profile;
@@ -114,17 +114,11 @@ pub fn tip_ui(ui: &mut Ui, found: Option<&Arc<TipResult>>, why: &str, view: &mut
     }
     let plots = Rect::from_min_max(pos2(scale.right() + 8.0, rect.top()), rect.max);
     let half = plots.height() / 2.0;
-    for (i, (name, meaning)) in [
-        ("Profile along x", "distance from the apex along x, nm"),
-        ("Profile along y", "distance from the apex along y, nm"),
-    ]
-    .into_iter()
-    .enumerate()
-    {
+    for (i, name) in ["Along x, nm", "Along y, nm"].into_iter().enumerate() {
         let top = plots.top() + i as f32 * half;
         let area = Rect::from_min_size(pos2(plots.left(), top), vec2(plots.width(), half - 8.0));
         if let Some((_, curves)) = &view.curves {
-            profile_ui(ui, area, name, meaning, &curves[i], found);
+            profile_ui(ui, area, name, &curves[i], found);
         }
     }
 }
@@ -184,14 +178,13 @@ fn azimuth_ui(ui: &mut Ui, rect: Rect, found: &TipResult) {
         return;
     };
     let p = Palette::of(ui);
-    ui.painter().text(
-        pos2(rect.left(), rect.top() + 11.0),
-        eframe::egui::Align2::LEFT_CENTER,
-        "Half-angle by azimuth",
-        eframe::egui::FontId::proportional(14.0),
-        p.text,
-    );
     let head = Rect::from_min_size(rect.min, vec2(rect.width(), 22.0));
+    title_ui(
+        ui,
+        head,
+        "Half-angle",
+        "over azimuth from +x towards +y, degrees",
+    );
     let samples = [
         (Sample::Line(2.0), p.corrected, "flank"),
         (Sample::Dashed, p.faint, "mean"),
@@ -209,8 +202,8 @@ fn azimuth_ui(ui: &mut Ui, rect: Rect, found: &TipResult) {
         // Never so near that the noise of a round tip looks like a shape.
         .include_y(angle.value - 2.0)
         .include_y(angle.value + 2.0)
-        .custom_x_axes(vec![x_axis("azimuth, ° from +x towards +y")])
-        .custom_y_axes(vec![y_axis("half-angle, °")])
+        .custom_x_axes(vec![x_axis()])
+        .custom_y_axes(vec![y_axis()])
         .grid_color(p.line)
         .label_formatter(|_| None)
         .show(&mut child, |plot| {
@@ -233,22 +226,8 @@ fn azimuth_ui(ui: &mut Ui, rect: Rect, found: &TipResult) {
     });
 }
 
-fn profile_ui(
-    ui: &mut Ui,
-    rect: Rect,
-    name: &str,
-    meaning: &'static str,
-    curves: &TipCurves,
-    found: &TipResult,
-) {
+fn profile_ui(ui: &mut Ui, rect: Rect, name: &str, curves: &TipCurves, found: &TipResult) {
     let p = Palette::of(ui);
-    ui.painter().text(
-        pos2(rect.left() + 6.0, rect.top() + 11.0),
-        eframe::egui::Align2::LEFT_CENTER,
-        name,
-        eframe::egui::FontId::proportional(14.0),
-        p.text,
-    );
     let mut samples = vec![(Sample::Line(3.0), p.corrected, "tip")];
     if !curves.sphere.is_empty() {
         samples.push((Sample::Dashed, p.scanned, "apex radius"));
@@ -260,6 +239,7 @@ fn profile_ui(
         samples.push((Sample::Dashed, p.warn, "exercised depth"));
     }
     let head = Rect::from_min_size(rect.min, vec2(rect.width(), 22.0));
+    title_ui(ui, head, name, "");
     samples_ui(ui, head, &samples);
     let area = Rect::from_min_max(pos2(rect.left(), rect.top() + 24.0), rect.max);
     let mut child = ui.new_child(UiBuilder::new().max_rect(area).id_salt(name));
@@ -267,8 +247,8 @@ fn profile_ui(
         .data_aspect(1.0)
         .allow_scroll(false)
         .allow_boxed_zoom(false)
-        .custom_x_axes(vec![x_axis(meaning)])
-        .custom_y_axes(vec![y_axis("height, nm")])
+        .custom_x_axes(vec![x_axis()])
+        .custom_y_axes(vec![y_axis()])
         .grid_color(p.line)
         .label_formatter(|_| None);
     let response = plot.show(&mut child, |plot| {
@@ -308,7 +288,7 @@ fn profile_ui(
     response.response.widget_info(|| {
         let reach = curves.tip.last().map_or(0.0, |l| l[0]);
         let text = format!(
-            "{name}, {} nm to either side, {} nm deep",
+            "Tip profile {name}: {} to either side, {} nm deep",
             format::significant(reach, 3),
             format::significant(found.tip.depth_nm(), 3)
         );
