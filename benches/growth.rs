@@ -96,7 +96,7 @@ fn relatives(what: &str, map: &Array2<f32>, tip: &Array2<f32>) {
     });
     let marks = [0.0, 0.5].map(|tolerance| {
         cost(|| {
-            black_box(certainty_map(s, i, p, tolerance, &watch).unwrap());
+            black_box(certainty_map(s, i, p, tolerance, [0, 0], &watch).unwrap());
         })
     });
     println!(

@@ -72,7 +72,7 @@ fn contact_search(bencher: Bencher, name: &str) {
 fn certainty(bencher: Bencher, name: &str) {
     let (scan, surface, tip) = scanned(name);
     let (s, i, p) = (surface.view(), scan.view(), tip.view());
-    bencher.bench(|| certainty_map(s, i, p, 0.5, &Progress::new()));
+    bencher.bench(|| certainty_map(s, i, p, 0.5, [0, 0], &Progress::new()));
 }
 
 #[divan::bench(args = USUAL)]

@@ -50,7 +50,7 @@ fn every_job_fits_its_scan_and_its_truth() {
         assert!(NAMES.contains(&name), "{name}");
         let truth = truth(name);
         for request in &job.dimensions {
-            let region = request.region.unwrap();
+            let region = request.region.unwrap_or(scan.whole());
             assert!(region.left >= 0.0 && region.left + region.width <= scan.width_nm());
             assert!(region.top >= 0.0 && region.top + region.height <= scan.length_nm());
             let known = truth["dimension"].as_array().unwrap();

@@ -27,7 +27,11 @@ pub(super) fn bias(tip: &Tip, axis: Axis, outwards_positive: bool, slope: f64, n
         Axis::X => (tip.shape(), tip.pitch().x),
         Axis::Y => (tip.shape().reversed_axes(), tip.pitch().y),
     };
-    let fall = if slope.is_finite() { pitch / slope.max(0.02) } else { 0.0 };
+    let fall = if slope.is_finite() {
+        pitch / slope.max(0.02)
+    } else {
+        0.0
+    };
     let fall = if outwards_positive { fall } else { -fall };
     let centre = (shape.ncols() / 2) as f64;
     // Height of each cell above the falling plane through the apex; the highest cell touches.
@@ -65,7 +69,11 @@ fn rise_to_vertex(before: f64, middle: f64, after: f64) -> f64 {
     let curvature = 2.0 * middle - before - after;
     let rise = (after - before).powi(2) / (8.0 * curvature);
     // Outside the tip a neighbour is -inf: no parabola, no rise.
-    if rise.is_finite() && curvature > 0.0 { rise } else { 0.0 }
+    if rise.is_finite() && curvature > 0.0 {
+        rise
+    } else {
+        0.0
+    }
 }
 
 /// Mean of `min (gap_i + n_i)` over independent standard normal `n_i`; 0 without any.
@@ -101,7 +109,13 @@ mod tests {
     /// statistics, common practice).
     #[test]
     fn the_least_of_equal_constraints_is_the_normal_extreme() {
-        for (n, extreme) in [(1, 0.0), (9, 1.485), (25, 1.965), (100, 2.508), (1000, 3.241)] {
+        for (n, extreme) in [
+            (1, 0.0),
+            (9, 1.485),
+            (25, 1.965),
+            (100, 2.508),
+            (1000, 3.241),
+        ] {
             let mean = expected_least(&vec![0.0; n]);
             assert!((mean + extreme).abs() < 2e-3, "{n}: {mean}");
         }
@@ -109,11 +123,17 @@ mod tests {
 
     #[test]
     fn a_wall_is_eroded_less_than_a_flat_and_without_noise_nothing_is() {
-        let model = Model::SphereCone { radius: 8.0, half_angle: 8.0 };
+        let model = Model::SphereCone {
+            radius: 8.0,
+            half_angle: 8.0,
+        };
         let tip = model.sample(41.0, Pitch::square(1.0)).unwrap();
         let flat = bias(&tip, Axis::X, true, f64::INFINITY, 0.3);
         let wall = bias(&tip, Axis::X, true, 0.2, 0.3);
-        assert!(flat.noise < wall.noise && wall.noise <= 0.0, "{flat:?} {wall:?}");
+        assert!(
+            flat.noise < wall.noise && wall.noise <= 0.0,
+            "{flat:?} {wall:?}"
+        );
         assert!(wall.grid > 0.0);
         let quiet = bias(&tip, Axis::Y, false, f64::INFINITY, 0.0);
         assert_eq!((quiet.noise, quiet.grid), (0.0, 0.0));

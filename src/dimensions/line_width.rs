@@ -1,6 +1,7 @@
 //! Line width: the distance between the two walls of a ridge or a trench at fractions of its
 //! height above the lower plateau, the plateaus taken locally from both sides.
 
+use super::erosion;
 use super::sections::{self, Frame, Layout};
 use super::statistics::{self, Level};
 use super::wall::{self, Hold, Outline, Wall};
@@ -20,10 +21,6 @@ const ASSUMPTIONS: &str = "Height fractions between local plateaus (densest leve
 
 /// Sections used for the mean course of a wall; the widths use all.
 const CURVE_SECTIONS: usize = 200;
-/// Contact windows of erosion hold a few to about 25 pixels: their expected lowest noise is 1 to
-/// 2 deviations below zero, on the plateaus more than on the walls by about this much.
-const EROSION_EXCESS: f64 = 1.0;
-
 /// Measures the width at each height fraction asked for, one line each.
 ///
 /// Where the region holds several features the most central one is measured, and flagged. Errors
@@ -117,6 +114,8 @@ struct Trace {
     ridge: bool,
     /// Step between the plateaus, nm.
     height: f64,
+    /// Heights of the lower and the upper plateau, nm.
+    levels: [f64; 2],
     /// Standard uncertainty of a threshold's height, nm.
     level_u: f64,
     /// Heights of the plateaus left and right of the feature differ by this much, nm.
@@ -148,7 +147,7 @@ impl Trace {
         let plateaus = Plateaus::of(sections, &rough, reach, frame.noise)?;
         let (low, high) = plateaus.low_high(ridge);
         let height = high.value - low.value;
-        if !(height > 0.0) {
+        if height.is_nan() || height <= 0.0 {
             return None;
         }
         let middle = middle_of(low.value + 0.5 * height);
@@ -185,7 +184,7 @@ impl Trace {
                 1.0
             };
             let grid: Vec<f64> = (1..50).map(|i| f64::from(i) * 0.02).collect();
-            let mut u = 0.0f64;
+            let mut u = Vec::with_capacity(grid.len());
             let outwards = grid
                 .iter()
                 .map(|&f| {
@@ -196,11 +195,11 @@ impl Trace {
                         .collect();
                     let kept = statistics::clipped(&off, 4.0);
                     let n = kept.iter().filter(|v| v.is_finite()).count();
+                    let scatter = statistics::robust_deviation(&kept).unwrap_or(0.0);
+                    u.push(scatter / (n.max(1) as f64).sqrt() * frame.pitch);
                     if 2 * n < off.len() {
                         return f64::NAN;
                     }
-                    let scatter = statistics::robust_deviation(&off).unwrap_or(0.0);
-                    u = u.max(scatter / (n as f64).sqrt());
                     outward * statistics::mean(&kept) * frame.pitch * cosine
                 })
                 .collect();
@@ -208,12 +207,14 @@ impl Trace {
                 fractions: grid,
                 outwards,
                 height,
-                u: u * frame.pitch,
+                u,
+                noise: frame.noise,
             }
         });
         Some(Self {
             ridge,
             height,
+            levels: [low.value, high.value],
             level_u: plateaus.u(ridge),
             imbalance: plateaus.imbalance(),
             cosine,
@@ -397,8 +398,9 @@ fn budget_of(trace: &Trace, i: usize, series: &Series, calibration: f64, fractio
         Distribution::Normal,
         series.mean,
     );
-    // A wall that spans several pixels is interpolated better than one pixel by as many; edges
-    // that wander over the pixel grid average the rest out.
+    // One pixel's worth where the wall is a jump; interpolation over a wall of several pixels
+    // leaves the square of that less, never below a fortieth of a pixel; edges that wander over
+    // the grid average it out. Chosen on virtual scans (examples/dimension_validation.rs).
     let pixel = |k: usize| {
         let span = trace.walls[k].slope(fraction) * 0.25 * trace.height / trace.pitch;
         let span = if span.is_finite() { span.max(1.0) } else { 1.0 };
@@ -408,7 +410,7 @@ fn budget_of(trace: &Trace, i: usize, series: &Series, calibration: f64, fractio
         } else {
             1.0
         };
-        trace.pitch / 12f64.sqrt() / span / average
+        (trace.pitch / 12f64.sqrt() / (span * span)).max(trace.pitch / 40.0) / average
     };
     budget.push(
         "pixel, both edges",
@@ -502,7 +504,6 @@ fn correct(
         .filter(|s| s.is_finite())
         .sum();
     tip_band(&mut budget, correction, i, slope);
-    // Outwards is wider for a ridge and narrower for a trench.
     let inward: f64 = holds
         .iter()
         .map(|h| h.slack)
@@ -535,13 +536,25 @@ fn correct(
         let u = (inward + outward) / 12f64.sqrt();
         budget.push("wall between its bounds", u, Distribution::OneSided, 1.0);
     }
-    // The middle of what the physics leaves.
+    // Outwards is wider for a ridge and narrower for a trench.
     let sign = if surface.ridge { 1.0 } else { -1.0 };
-    let value = series.mean + sign * (outward - inward) / 2.0;
-    let half = (inward + outward) / 2.0;
-    let erosion = EROSION_EXCESS * frame.noise * slope;
-    budget.push_one_sided("noise in the reconstruction", erosion);
-    let mut out = half + erosion;
+    let erosion = erosion_shift(frame, scan, surface, given, &holds);
+    budget.push(
+        "noise and pixel grid in the reconstruction",
+        erosion.abs() / 12f64.sqrt(),
+        Distribution::Rectangular,
+        1.0,
+    );
+    // The middle of what the physics leaves.
+    let likely: f64 = holds
+        .iter()
+        .map(|h| h.likely)
+        .filter(|s| s.is_finite())
+        .sum();
+    let shift = (outward - likely) / 2.0;
+    let value = series.mean + sign * (shift - erosion);
+    let inner = shift + inward;
+    let mut out = outward - shift;
     if given.contains_feature_radius {
         let radius = correction.outlines[0].apex_radius().unwrap_or(0.0);
         let shift: f64 = holds
@@ -556,9 +569,9 @@ fn correct(
         ));
     }
     let (below, above) = if surface.ridge {
-        (half, out)
+        (inner, out)
     } else {
-        (out, half)
+        (out, inner)
     };
     let (low, high) = budget.interval(value, below, above, 0.95);
     let all = budget.combined(0.95);
@@ -582,6 +595,40 @@ fn correct(
             .push("the scan shows less than half of the corrected height".to_owned());
     }
     line.budget = budget.into_components();
+}
+
+/// How much further out than the surface the two walls of the reconstruction stand, together, nm,
+/// because noise erodes the plateaus more than the walls and contacts fall between tip cells. The
+/// noise part is scaled by what the plateaus were seen to sink, so that it also holds for noise
+/// that is not white.
+fn erosion_shift(
+    frame: &Frame,
+    scan: &Trace,
+    surface: &Trace,
+    given: &Corrected,
+    holds: &[Hold; 2],
+) -> f64 {
+    let bias = |positive: bool, slope: f64| {
+        erosion::bias(given.tip, frame.axis, positive, slope, frame.noise)
+    };
+    let flat = bias(true, f64::INFINITY).noise;
+    let sunk = (0..2)
+        .map(|i| surface.levels[i] - scan.levels[i])
+        .sum::<f64>()
+        / 2.0;
+    let scale = if flat < 0.0 {
+        (sunk / flat).clamp(0.0, 1.5)
+    } else {
+        0.0
+    };
+    [(!surface.ridge, holds[0]), (surface.ridge, holds[1])]
+        .into_iter()
+        .filter(|(_, hold)| hold.slope.is_finite())
+        .map(|(positive, hold)| {
+            let wall = bias(positive, hold.slope);
+            hold.slope * (wall.grid + scale * (wall.noise - flat))
+        })
+        .sum()
 }
 
 /// The tip's doubt: from the surfaces with the band's tips, else from its heights.

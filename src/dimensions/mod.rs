@@ -1,6 +1,7 @@
 //! Dimensions, as scanned and corrected. One small file per kind of measurand.
 
 mod erosion;
+mod find;
 mod line_width;
 mod particle;
 mod pitch;
@@ -12,6 +13,8 @@ mod step_height;
 mod tests;
 mod texture;
 mod wall;
+
+pub use find::{Find, find};
 
 use crate::error::Result;
 use crate::heightmap::{HeightMap, Region};

@@ -5,15 +5,15 @@
 //! get, and the widest circle that was touched shows it too narrow. The truth lies between.
 
 use super::erosion;
-use super::segmentation::{self, Segment};
 use super::sections::{self, region_pixels};
-use super::statistics;
+use super::segmentation::{self, Segment};
+use super::statistics::{self, Level};
 use super::wall::{self, Outline, Wall};
 use super::{
     Axis, Corrected, CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer,
 };
 use crate::error::Result;
-use crate::heightmap::{PixelRegion, Pitch};
+use crate::heightmap::{Pitch, PixelRegion};
 use crate::leveling::least_squares;
 use crate::progress::Progress;
 use crate::uncertainty::{Budget, Component, Distribution, Series};
@@ -42,7 +42,13 @@ pub(super) fn measure(
     let view = sections::cut(input.scan, pixels);
     let noise = sections::noise(input, pixels);
     let refuse = |reason: String| {
-        let mut line = answer(request, Kind::Particle, "particle height", "nm", ASSUMPTIONS);
+        let mut line = answer(
+            request,
+            Kind::Particle,
+            "particle height",
+            "nm",
+            ASSUMPTIONS,
+        );
         line.flags.push(format!("not measured: {reason}"));
         Ok(vec![line])
     };
@@ -71,9 +77,13 @@ pub(super) fn measure(
         pitch: input.scan.pitch(),
         pixels,
         noise,
-        base: base.value,
+        base,
         corrected: input.corrected,
-        calibration: [input.calibration.x, input.calibration.y, input.calibration.z],
+        calibration: [
+            input.calibration.x,
+            input.calibration.y,
+            input.calibration.z,
+        ],
     };
     let mut found = Vec::with_capacity(inside.len());
     for (i, segment) in inside.iter().enumerate() {
@@ -86,21 +96,32 @@ pub(super) fn measure(
     }
     let mut flags = Vec::new();
     if border > 0 {
-        flags.push(format!("{border} particles at the border or at voids left out"));
+        flags.push(format!(
+            "{border} particles at the border or at voids left out"
+        ));
     }
     let touching = found.iter().filter(|p| p.touching).count();
     if touching > 0 {
-        flags.push(format!("{touching} touching particles split, and left out of the means"));
+        flags.push(format!(
+            "{touching} touching particles split, and left out of the means"
+        ));
     }
     if all.len() - border > MEASURED {
-        flags.push(format!("only the {MEASURED} largest of {} were measured", all.len() - border));
+        flags.push(format!(
+            "only the {MEASURED} largest of {} were measured",
+            all.len() - border
+        ));
     }
     Ok(lines(request, &field, &found, &flags))
 }
 
 fn lines(request: &Request, field: &Field, found: &[Particle], flags: &[String]) -> Vec<Dimension> {
     let alone: Vec<&Particle> = found.iter().filter(|p| !p.touching).collect();
-    let marks: Vec<[f64; 4]> = found.iter().take(MEASURED).flat_map(Particle::marks).collect();
+    let marks: Vec<[f64; 4]> = found
+        .iter()
+        .take(MEASURED)
+        .flat_map(Particle::marks)
+        .collect();
     let mut lines = Vec::new();
     let empty = |quantity: &str| answer(request, Kind::Particle, quantity, "nm", ASSUMPTIONS);
     if found.len() > 1 && !alone.is_empty() {
@@ -110,7 +131,8 @@ fn lines(request: &Request, field: &Field, found: &[Particle], flags: &[String])
         ] {
             let mut line = empty(quantity);
             line.flags = flags.to_vec();
-            line.flags.push(format!("mean over {} particles", alone.len()));
+            line.flags
+                .push(format!("mean over {} particles", alone.len()));
             line.marks.clone_from(&marks);
             let figures: Vec<&Figure> = alone.iter().map(|p| figure(p)).collect();
             mean_of(&mut line, field, &figures);
@@ -118,7 +140,10 @@ fn lines(request: &Request, field: &Field, found: &[Particle], flags: &[String])
         }
     }
     for (i, particle) in found.iter().take(LISTED).enumerate() {
-        for (quantity, figure) in [("height", &particle.height), ("diameter", &particle.diameter)] {
+        for (quantity, figure) in [
+            ("height", &particle.height),
+            ("diameter", &particle.diameter),
+        ] {
             let mut line = empty(quantity);
             if found.len() > 1 {
                 line.name = format!("{} {}", request.name, i + 1);
@@ -126,7 +151,8 @@ fn lines(request: &Request, field: &Field, found: &[Particle], flags: &[String])
                 line.flags = flags.to_vec();
             }
             if particle.touching {
-                line.flags.push("touches its neighbour: cut off at the saddle".to_owned());
+                line.flags
+                    .push("touches its neighbour: cut off at the saddle".to_owned());
             }
             line.flags.extend(figure.flags.iter().cloned());
             line.marks = particle.marks();
@@ -135,7 +161,9 @@ fn lines(request: &Request, field: &Field, found: &[Particle], flags: &[String])
         }
     }
     if found.len() > LISTED {
-        lines[0].flags.push(format!("{LISTED} of {} particles are listed", found.len()));
+        lines[0]
+            .flags
+            .push(format!("{LISTED} of {} particles are listed", found.len()));
     }
     lines
 }
@@ -147,7 +175,12 @@ fn mean_of(line: &mut Dimension, field: &Field, figures: &[&Figure]) {
     };
     let scatter = |series: &Series, calibration: f64| {
         let mut budget = Budget::new();
-        budget.push("calibration", calibration, Distribution::Normal, series.mean);
+        budget.push(
+            "calibration",
+            calibration,
+            Distribution::Normal,
+            series.mean,
+        );
         budget.add(Component {
             source: "scatter of the particles".to_owned(),
             u: series.deviation / (series.count as f64).sqrt(),
@@ -167,11 +200,11 @@ fn mean_of(line: &mut Dimension, field: &Field, figures: &[&Figure]) {
         u: Some(budget.combined(0.95).u),
     });
     if let Some(corrected) = values(&|f| f.corrected) {
-        let half = values(&|f| Some(f.half)).map_or(0.0, |s| s.mean);
+        let room = [0, 1].map(|i| values(&|f| Some(f.room[i])).map_or(0.0, |s| s.mean));
         budget = scatter(&corrected, calibration);
         let all = figures.iter().all(|f| f.touched);
         let radius = values(&|f| Some(f.radius_shift)).map_or(0.0, |s| s.mean);
-        column(line, field, budget, corrected.mean, half, radius, all);
+        column(line, field, budget, corrected.mean, room, radius, all);
     } else {
         line.budget = budget.into_components();
     }
@@ -183,20 +216,31 @@ fn column(
     field: &Field,
     mut budget: Budget,
     value: f64,
-    half: f64,
+    room: [f64; 2],
     radius_shift: f64,
     touched: bool,
 ) {
-    if half > 0.0 {
-        budget.push("below the equator, between bounds", half / 3f64.sqrt(), Distribution::OneSided, 1.0);
+    let between = room[0] + room[1];
+    if between > 0.0 {
+        let u = between / 12f64.sqrt();
+        budget.push(
+            "below the equator, between bounds",
+            u,
+            Distribution::OneSided,
+            1.0,
+        );
     }
     if radius_shift > 0.0 {
         budget.push_one_sided("radius of the feature that showed the tip", radius_shift);
     }
     let identified = field.corrected.is_some_and(|c| c.identified) || touched;
     let scanned = line.as_scanned.map_or(value, |v| v.value);
-    let above = if identified { half } else { half.max(scanned - value) };
-    let (low, high) = budget.interval(value, half, above + radius_shift, 0.95);
+    let above = if identified {
+        room[1]
+    } else {
+        room[1].max(scanned - value)
+    };
+    let (low, high) = budget.interval(value, room[0], above + radius_shift, 0.95);
     let all = budget.combined(0.95);
     line.corrected = Some(CorrectedValue {
         value: identified.then_some(value),
@@ -207,9 +251,14 @@ fn column(
         high: Some(high),
     });
     if !identified {
-        line.flags.push("the tip is not identified: bounds only".to_owned());
+        line.flags
+            .push("the tip is not identified: bounds only".to_owned());
     }
-    line.status = Some(if touched { Status::Touched } else { Status::Bounded });
+    line.status = Some(if touched {
+        Status::Touched
+    } else {
+        Status::Bounded
+    });
     line.budget = budget.into_components();
 }
 
@@ -217,8 +266,8 @@ fn column(
 struct Figure {
     scanned: f64,
     corrected: Option<f64>,
-    /// Half the interval that the tip leaves, nm.
-    half: f64,
+    /// How far below and above the value the tip leaves room, nm.
+    room: [f64; 2],
     /// What an unknown feature radius may add, nm.
     radius_shift: f64,
     touched: bool,
@@ -246,7 +295,15 @@ impl Figure {
         });
         match self.corrected {
             Some(value) => {
-                column(line, field, budget(value), value, self.half, self.radius_shift, self.touched);
+                column(
+                    line,
+                    field,
+                    budget(value),
+                    value,
+                    self.room,
+                    self.radius_shift,
+                    self.touched,
+                );
             }
             None => line.budget = scanned.into_components(),
         }
@@ -277,7 +334,7 @@ struct Field<'a> {
     pitch: Pitch,
     pixels: PixelRegion,
     noise: f64,
-    base: f64,
+    base: Level,
     corrected: Option<Corrected<'a>>,
     calibration: [f64; 3],
 }
@@ -287,13 +344,14 @@ impl Field<'_> {
         let window = Window::around(segment, self.scan.dim());
         let size = (segment.pixels.len() as f64 / PI).sqrt();
         let summit = summit(self.scan, segment, size)?;
-        let base = window.base(self.scan, self.noise).unwrap_or(self.base);
+        let level = window.base(self.scan, self.noise).unwrap_or(self.base);
+        let base = level.value;
         let height = summit.height - base;
-        if !(height > 0.0) {
+        if height.is_nan() || height <= 0.0 {
             return None;
         }
         let cell = (self.pitch.x * self.pitch.y).sqrt();
-        let scanned = window.course(self.scan, segment, base, height, self.pitch);
+        let scanned = self.course(&window, self.scan, segment, base, height);
         let width = 2.0 * scanned.at(0.5);
         if !width.is_finite() {
             return None;
@@ -301,7 +359,7 @@ impl Field<'_> {
         let mut figure = Figure {
             scanned: width,
             corrected: None,
-            half: 0.0,
+            room: [0.0; 2],
             radius_shift: 0.0,
             touched: false,
             parts: Vec::new(),
@@ -310,15 +368,27 @@ impl Field<'_> {
         };
         // Pixels along the outline err independently by about p / sqrt 12 each.
         let around = (PI * width / cell).max(1.0).sqrt();
-        figure.parts.push(("pixel", 2.0 * cell / 12f64.sqrt() / around));
-        figure.parts.push(("noise", 2.0 * self.noise * scanned.slope(0.5).max(0.0) / around));
+        figure
+            .parts
+            .push(("pixel", 2.0 * cell / 12f64.sqrt() / around));
+        figure.parts.push((
+            "noise",
+            2.0 * self.noise * scanned.slope(0.5).max(0.0) / around,
+        ));
         let mut height_figure = Figure {
             scanned: height,
             corrected: self.corrected.map(|_| height),
-            half: 0.0,
+            room: [0.0; 2],
             radius_shift: 0.0,
             touched: true,
-            parts: vec![("noise of the fitted summit", self.noise * summit.gain)],
+            parts: vec![
+                ("noise of the fitted summit", self.noise * summit.gain),
+                // A hundredth of the pixels taken as independent: drift and waviness.
+                (
+                    "level of the surroundings",
+                    level.deviation / (level.count as f64 / 100.0).max(1.0).sqrt(),
+                ),
+            ],
             calibration: self.calibration[2],
             flags: Vec::new(),
         };
@@ -329,9 +399,9 @@ impl Field<'_> {
         }
         if let (Some(surface), Some(given)) = (self.surface, self.corrected) {
             let below = summit_height(surface, segment, size);
-            let floor = window.base(surface, self.noise);
+            let floor = window.base(surface, self.noise).map(|l| l.value);
             if let (Some(below), Some(floor)) = (below, floor) {
-                let course = window.course(surface, segment, floor, below - floor, self.pitch);
+                let course = self.course(&window, surface, segment, floor, below - floor);
                 self.correct(&mut figure, &course, &given);
             }
         }
@@ -347,14 +417,92 @@ impl Field<'_> {
         })
     }
 
+    /// Radius of the circle of equal area over the height fraction.
+    fn course(
+        &self,
+        window: &Window,
+        map: ArrayView2<f32>,
+        segment: &Segment,
+        base: f64,
+        height: f64,
+    ) -> Wall {
+        let pitch = self.pitch;
+        let part = window.of(map);
+        // What is not the particle's counts as base.
+        let mut own = ndarray::Array2::from_elem(part.dim(), base);
+        for &[r, c] in &segment.pixels {
+            let z = f64::from(map[[r, c]]);
+            if z.is_finite() {
+                own[[r - window.rows.start, c - window.columns.start]] = z;
+            }
+        }
+        let fine = if segment.pixels.len() > 20_000 { 1 } else { 4 };
+        let mut samples = Vec::new();
+        for r in 1..own.nrows() {
+            for c in 1..own.ncols() {
+                let corner = [
+                    own[[r - 1, c - 1]],
+                    own[[r - 1, c]],
+                    own[[r, c - 1]],
+                    own[[r, c]],
+                ];
+                if corner.iter().all(|&z| z <= base) {
+                    continue;
+                }
+                for i in 0..fine * fine {
+                    let f = |k: usize| (k as f64 + 0.5) / fine as f64;
+                    let (fy, fx) = (f(i / fine), f(i % fine));
+                    let top = corner[0] + fx * (corner[1] - corner[0]);
+                    let bottom = corner[2] + fx * (corner[3] - corner[2]);
+                    samples.push(top + fy * (bottom - top));
+                }
+            }
+        }
+        samples.sort_unstable_by(f64::total_cmp);
+        let cell = pitch.x * pitch.y / (fine * fine) as f64;
+        let fractions: Vec<f64> = (1..50).map(|i| f64::from(i) * 0.02).collect();
+        let outwards: Vec<f64> = fractions
+            .iter()
+            .map(|f| {
+                let above = samples.len() - samples.partition_point(|&z| z <= base + f * height);
+                if above == 0 {
+                    f64::NAN
+                } else {
+                    (above as f64 * cell / PI).sqrt()
+                }
+            })
+            .collect();
+        // Pixels along the outline err independently by about p / sqrt 12 each.
+        let step = (pitch.x * pitch.y).sqrt();
+        let u = outwards
+            .iter()
+            .map(|r| step / 12f64.sqrt() / (2.0 * PI * r / step).max(1.0).sqrt())
+            .collect();
+        Wall {
+            u,
+            fractions,
+            outwards,
+            height,
+            noise: self.noise,
+        }
+    }
+
     fn correct(&self, figure: &mut Figure, course: &Wall, given: &Corrected) {
         let radius = course.at(0.5);
         if !radius.is_finite() {
-            figure.flags.push("no corrected diameter: too small in the surface".to_owned());
+            figure
+                .flags
+                .push("no corrected diameter: too small in the surface".to_owned());
             return;
         }
-        let sides = [(Axis::X, true), (Axis::X, false), (Axis::Y, true), (Axis::Y, false)];
+        let sides = [
+            (Axis::X, true),
+            (Axis::X, false),
+            (Axis::Y, true),
+            (Axis::Y, false),
+        ];
         let mut slack = 0.0;
+        let mut likely = 0.0;
         let mut shift = 0.0;
         let mut sharp = 0.0;
         let mut slope = 0.0;
@@ -364,6 +512,7 @@ impl Field<'_> {
             let hold = course.hold(&outline, 0.5, given.height_u_nm);
             figure.touched &= hold.touched;
             slack += hold.slack / 2.0;
+            likely += hold.likely / 2.0;
             slope += hold.slope / 2.0;
             let bias = |slope| erosion::bias(given.tip, axis, positive, slope, self.noise);
             let (wall, flat) = (bias(hold.slope), bias(f64::INFINITY));
@@ -376,11 +525,16 @@ impl Field<'_> {
         if !(slack.is_finite() && shift.is_finite()) {
             return;
         }
-        figure.half = slack / 2.0;
-        figure.corrected = Some(2.0 * radius - shift - slack / 2.0);
+        figure.room = [(slack - likely / 2.0).max(0.0), likely / 2.0];
+        figure.corrected = Some(2.0 * radius - shift - likely / 2.0);
         figure.radius_shift = sharp;
-        figure.parts.push(("noise and pixel grid in the reconstruction", shift.abs() / 3f64.sqrt()));
-        figure.parts.push(("heights of the tip", given.height_u_nm.max(0.0) * slope));
+        figure.parts.push((
+            "noise and pixel grid in the reconstruction",
+            shift.abs() / 3f64.sqrt(),
+        ));
+        figure
+            .parts
+            .push(("heights of the tip", given.height_u_nm.max(0.0) * slope));
         if !figure.touched {
             figure.flags.push(
                 "the tip did not touch the particle at half height: the diameter lies between the \
@@ -417,7 +571,7 @@ impl Window {
     }
 
     /// Densest level on the window's rim, nm; `None` when it has too few pixels.
-    fn base(&self, map: ArrayView2<f32>, noise: f64) -> Option<f64> {
+    fn base(&self, map: ArrayView2<f32>, noise: f64) -> Option<Level> {
         let part = self.of(map);
         let (rows, columns) = part.dim();
         let rim = |r: usize, c: usize| r < 3 || c < 3 || r + 3 >= rows || c + 3 >= columns;
@@ -427,61 +581,7 @@ impl Window {
             .map(|(_, &z)| f64::from(z))
             .collect();
         let level = statistics::level(&mut heights, noise)?;
-        (level.count >= 20).then_some(level.value)
-    }
-
-    /// Radius of the circle of equal area over the height fraction.
-    fn course(
-        &self,
-        map: ArrayView2<f32>,
-        segment: &Segment,
-        base: f64,
-        height: f64,
-        pitch: Pitch,
-    ) -> Wall {
-        let part = self.of(map);
-        // What is not the particle's counts as base.
-        let mut own = ndarray::Array2::from_elem(part.dim(), base);
-        for &[r, c] in &segment.pixels {
-            let z = f64::from(map[[r, c]]);
-            if z.is_finite() {
-                own[[r - self.rows.start, c - self.columns.start]] = z;
-            }
-        }
-        let fine = if segment.pixels.len() > 20_000 { 1 } else { 4 };
-        let mut samples = Vec::new();
-        for r in 1..own.nrows() {
-            for c in 1..own.ncols() {
-                let corner = [own[[r - 1, c - 1]], own[[r - 1, c]], own[[r, c - 1]], own[[r, c]]];
-                if corner.iter().all(|&z| z <= base) {
-                    continue;
-                }
-                for i in 0..fine * fine {
-                    let f = |k: usize| (k as f64 + 0.5) / fine as f64;
-                    let (fy, fx) = (f(i / fine), f(i % fine));
-                    let top = corner[0] + fx * (corner[1] - corner[0]);
-                    let bottom = corner[2] + fx * (corner[3] - corner[2]);
-                    samples.push(top + fy * (bottom - top));
-                }
-            }
-        }
-        samples.sort_unstable_by(f64::total_cmp);
-        let cell = pitch.x * pitch.y / (fine * fine) as f64;
-        let fractions: Vec<f64> = (1..50).map(|i| f64::from(i) * 0.02).collect();
-        let outwards = fractions
-            .iter()
-            .map(|f| {
-                let above = samples.len() - samples.partition_point(|&z| z <= base + f * height);
-                if above == 0 { f64::NAN } else { (above as f64 * cell / PI).sqrt() }
-            })
-            .collect();
-        Wall {
-            u: vec![0.0; fractions.len()],
-            fractions,
-            outwards,
-            height,
-            noise: 0.0,
-        }
+        (level.count >= 20).then_some(level)
     }
 }
 

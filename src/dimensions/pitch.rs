@@ -30,18 +30,31 @@ pub(super) fn measure(
     };
     progress.check()?;
     if grating.lines.len() < 4 {
-        line.flags.push(format!("only {} whole lines: few for a pitch", grating.lines.len()));
+        line.flags.push(format!(
+            "only {} whole lines: few for a pitch",
+            grating.lines.len()
+        ));
     }
     let voids = sections.iter().filter(|z| z.is_nan()).count();
     if voids > 0 {
-        line.flags.push(format!("{voids} void pixels inside the region"));
+        line.flags
+            .push(format!("{voids} void pixels inside the region"));
     }
     let refined = refine(sections, grating.period, progress)?;
     let (tangent, series) = match &refined {
         Some(r) => (r.shear * frame.pitch / frame.spacing, r.periods),
         None => {
-            line.flags.push("too short for the Fourier refinement: centroids only".to_owned());
-            (0.0, Series { mean: grating.period, deviation: 0.0, count: 1, effective: 1.0 })
+            line.flags
+                .push("too short for the Fourier refinement: centroids only".to_owned());
+            (
+                0.0,
+                Series {
+                    mean: grating.period,
+                    deviation: 0.0,
+                    count: 1,
+                    effective: 1.0,
+                },
+            )
         }
     };
     let cosine = 1.0 / tangent.hypot(1.0);
@@ -59,10 +72,12 @@ pub(super) fn measure(
         Axis::Y => input.calibration.y,
     };
     if calibration == 0.0 {
-        line.flags.push("no uncertainty of the axis calibration was given".to_owned());
+        line.flags
+            .push("no uncertainty of the axis calibration was given".to_owned());
     }
     if frame.axis == Axis::Y {
-        line.flags.push("taken along the slow axis: drift enters in full".to_owned());
+        line.flags
+            .push("taken along the slow axis: drift enters in full".to_owned());
     }
     let mut budget = Budget::new();
     budget.push("axis calibration", calibration, Distribution::Normal, value);
@@ -82,9 +97,13 @@ pub(super) fn measure(
         degrees_of_freedom: Some((grating.lines.len() as f64 - 2.0).max(1.0)),
     });
     let all = budget.combined(0.95);
-    line.as_scanned = Some(Value { value, u: Some(all.u) });
+    line.as_scanned = Some(Value {
+        value,
+        u: Some(all.u),
+    });
     if (value - centroid).abs() > 4.0 * placement.max(2e-4 * value) {
-        line.flags.push(format!("the centroid method gives {centroid:.3} nm"));
+        line.flags
+            .push(format!("the centroid method gives {centroid:.3} nm"));
     }
     line.marks = grating.marks(&frame);
     if let Some(given) = input.corrected {
@@ -98,7 +117,8 @@ pub(super) fn measure(
         });
         line.status = Some(Status::Touched);
         if !given.identified {
-            line.flags.push("the tip is not identified; a pitch does not depend on it".to_owned());
+            line.flags
+                .push("the tip is not identified; a pitch does not depend on it".to_owned());
         }
     }
     line.budget = budget.into_components();
@@ -169,7 +189,11 @@ fn centroid(profile: &[f64], from: f64, to: f64, level: f64) -> f64 {
             moment += weight * x;
         }
     }
-    if sum > 0.0 { moment / sum } else { (from + to) / 2.0 }
+    if sum > 0.0 {
+        moment / sum
+    } else {
+        (from + to) / 2.0
+    }
 }
 
 struct Refined {
@@ -183,7 +207,7 @@ struct Refined {
 /// taken in up to 16 groups, so that their scatter is seen. `None` with fewer than three periods.
 fn refine(sections: ArrayView2<f32>, rough: f64, progress: &Progress) -> Result<Option<Refined>> {
     let (count, columns) = sections.dim();
-    if !(rough > 2.0) || (columns as f64) < 3.0 * rough {
+    if rough.is_nan() || rough <= 2.0 || (columns as f64) < 3.0 * rough {
         return Ok(None);
     }
     let groups = count.min(16);
@@ -208,7 +232,10 @@ fn refine(sections: ArrayView2<f32>, rough: f64, progress: &Progress) -> Result<
             continue;
         };
         periods.push(period);
-        phases.push(((part.start + part.end) as f64 / 2.0, component(&profile, rough)));
+        phases.push((
+            (part.start + part.end) as f64 / 2.0,
+            component(&profile, rough),
+        ));
     }
     let shear = shear_of(&phases, rough);
     Ok(Series::of(&periods).map(|periods| Refined { periods, shear }))
@@ -218,12 +245,15 @@ fn refine(sections: ArrayView2<f32>, rough: f64, progress: &Progress) -> Result<
 fn component(profile: &[f64], period: f64) -> (f64, f64) {
     let n = profile.len() as f64;
     let middle = (n - 1.0) / 2.0;
-    profile.iter().enumerate().fold((0.0, 0.0), |(re, im), (i, z)| {
-        let x = i as f64;
-        let window = 0.5 - 0.5 * (TAU * (x + 0.5) / n).cos();
-        let (sin, cos) = (TAU * (x - middle) / period).sin_cos();
-        (re + window * z * cos, im - window * z * sin)
-    })
+    profile
+        .iter()
+        .enumerate()
+        .fold((0.0, 0.0), |(re, im), (i, z)| {
+            let x = i as f64;
+            let window = 0.5 - 0.5 * (TAU * (x + 0.5) / n).cos();
+            let (sin, cos) = (TAU * (x - middle) / period).sin_cos();
+            (re + window * z * cos, im - window * z * sin)
+        })
 }
 
 /// Period of the largest component within a window's width of `rough`, by golden section.
@@ -241,7 +271,11 @@ fn strongest(profile: &[f64], rough: f64) -> Option<f64> {
     for _ in 0..40 {
         let a = high - ratio * (high - low);
         let b = low + ratio * (high - low);
-        if power(a) > power(b) { high = b } else { low = a }
+        if power(a) > power(b) {
+            high = b
+        } else {
+            low = a
+        }
     }
     Some(2.0 / (low + high))
 }
@@ -282,7 +316,9 @@ mod tests {
             at: Vec::new(),
             across: None,
         };
-        measure(&input, &request, &Progress::new()).unwrap().remove(0)
+        measure(&input, &request, &Progress::new())
+            .unwrap()
+            .remove(0)
     }
 
     #[test]

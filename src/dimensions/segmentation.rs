@@ -115,11 +115,18 @@ fn collect(
         }
         let segment = &mut found[slot[root]];
         segment.pixels.push(place);
-        let seen = neighbours(place, heights.dim()).filter(|n| !heights[*n].is_nan()).count();
+        let seen = neighbours(place, heights.dim())
+            .filter(|n| !heights[*n].is_nan())
+            .count();
         segment.at_border |= seen < 8;
     }
     found.retain(|s| s.pixels.len() >= fewest);
-    found.sort_by(|a, b| b.pixels.len().cmp(&a.pixels.len()).then(a.peak.cmp(&b.peak)));
+    found.sort_by(|a, b| {
+        b.pixels
+            .len()
+            .cmp(&a.pixels.len())
+            .then(a.peak.cmp(&b.peak))
+    });
     found
 }
 
@@ -156,16 +163,19 @@ mod tests {
 
     fn bumps(centres: &[[f64; 2]], rows: usize, columns: usize) -> Array2<f32> {
         Array2::from_shape_fn((rows, columns), |(r, c)| {
-            let height = |b: &[f64; 2]| {
-                10.0 - 0.2 * ((r as f64 - b[0]).powi(2) + (c as f64 - b[1]).powi(2))
-            };
+            let height =
+                |b: &[f64; 2]| 10.0 - 0.2 * ((r as f64 - b[0]).powi(2) + (c as f64 - b[1]).powi(2));
             centres.iter().map(height).fold(0.0, f64::max) as f32
         })
     }
 
     #[test]
     fn apart_touching_and_at_the_border() {
-        let map = bumps(&[[20.0, 20.0], [20.0, 50.0], [20.0, 61.0], [2.0, 80.0]], 40, 90);
+        let map = bumps(
+            &[[20.0, 20.0], [20.0, 50.0], [20.0, 61.0], [2.0, 80.0]],
+            40,
+            90,
+        );
         let found = segments(map.view(), 0.5, 9, |top| 0.15 * top);
         assert_eq!(found.len(), 4);
         assert_eq!(found.iter().filter(|s| s.touching).count(), 2);

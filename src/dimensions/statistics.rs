@@ -9,7 +9,7 @@ pub(super) fn median(values: &mut Vec<f64>) -> Option<f64> {
         return None;
     }
     let middle = values.len() / 2;
-    let even = values.len() % 2 == 0;
+    let even = values.len().is_multiple_of(2);
     let (below, &mut upper, _) = values.select_nth_unstable_by(middle, f64::total_cmp);
     if !even {
         return Some(upper);
@@ -142,7 +142,7 @@ pub(super) fn two_class_threshold(heights: &[f64]) -> Option<f64> {
         .fold((f64::INFINITY, f64::NEG_INFINITY), |(l, h), &v| {
             (l.min(v), h.max(v))
         });
-    if !(high > low) {
+    if high <= low {
         return None;
     }
     let scale = BINS as f64 / (high - low);

@@ -651,13 +651,10 @@ fn floor_lost(line: &mut Dimension, input: &Input, frame: &Frame, zones: &Zones)
                 .iter()
                 .map(|&(c, _)| f64::from(sections[[section, c]]))
                 .collect();
-            let mut inside: Vec<f64> = (a.max(0.0) as usize..=b.max(0.0) as usize)
+            let lowest = (a.max(0.0) as usize..=b.max(0.0) as usize)
                 .filter_map(|c| sections.get([section, c]).map(|&z| f64::from(z)))
                 .filter(|z| z.is_finite())
-                .collect();
-            inside.sort_unstable_by(f64::total_cmp);
-            // The mean of the lowest three is less of a noise extreme than the lowest.
-            let lowest = statistics::mean(&inside[..inside.len().min(3)]);
+                .fold(f64::INFINITY, f64::min);
             statistics::median(&mut rim).unwrap_or(f64::NAN) - lowest
         })
         .collect();
@@ -678,7 +675,7 @@ fn floor_lost(line: &mut Dimension, input: &Input, frame: &Frame, zones: &Zones)
         series.mean,
     );
     budget.push(
-        "noise of the lowest pixels",
+        "noise of the lowest pixel",
         frame.noise,
         Distribution::Normal,
         1.0,

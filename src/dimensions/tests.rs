@@ -62,6 +62,7 @@ impl Made {
             scan.heights(),
             tip.shape(),
             (3.0 * noise) as f32,
+            [0, 0],
             &progress,
         )
         .unwrap();
@@ -127,11 +128,17 @@ fn a_vertical_line_is_scanned_too_wide_and_bounded() {
         let f = line.at.unwrap();
         let expected = 100.0 + 2.0 * sphere_cone_half_width(10.0, 15.0, (1.0 - f) * 50.0);
         let scanned = line.as_scanned.unwrap().value;
-        assert!((scanned - expected).abs() < 0.3, "{f}: {scanned} {expected}");
+        assert!(
+            (scanned - expected).abs() < 0.3,
+            "{f}: {scanned} {expected}"
+        );
         let c = line.corrected.unwrap();
         assert_eq!(line.status, Some(Status::Bounded), "{f}");
-        assert!(c.low.unwrap() <= 100.0 && 100.0 <= c.high.unwrap(), "{f}: {c:?}");
-        assert!(line.flags.iter().any(|f| f.contains("not touched")));
+        assert!(
+            c.low.unwrap() <= 100.0 && 100.0 <= c.high.unwrap(),
+            "{f}: {c:?}"
+        );
+        assert!(line.flags.iter().any(|f| f.contains("was touched")));
         assert_eq!(line.marks.len(), 3);
         assert!(line.budget.iter().any(|b| b.source == "axis calibration"));
     }
@@ -141,7 +148,9 @@ fn a_vertical_line_is_scanned_too_wide_and_bounded() {
 fn walls_flatter_than_the_flank_are_touched_and_right() {
     let lines = Lines::new(90.4, 400.0, 1, 61.7, 50.0).walls(78.0, 0.0);
     let made = Made::new(&lines, SLIM, 24, 180, 0.2);
-    let line = made.measure(made.corrected(), &request(Kind::LineWidth)).remove(0);
+    let line = made
+        .measure(made.corrected(), &request(Kind::LineWidth))
+        .remove(0);
     let c = line.corrected.unwrap();
     assert_eq!(line.quantity, "line width");
     assert_eq!(line.status, Some(Status::Touched), "{:?}", line.flags);
@@ -154,14 +163,23 @@ fn walls_flatter_than_the_flank_are_touched_and_right() {
 fn a_trench_is_found_as_one_and_crossing_along_y_gives_the_same() {
     let lines = Lines::new(33.2, 155.0, 2, 100.0, 50.0).walls(78.0, 0.0);
     let made = Made::new(&lines, SLIM, 24, 220, 0.2);
-    let across = made.measure(made.corrected(), &request(Kind::LineWidth)).remove(0);
+    let across = made
+        .measure(made.corrected(), &request(Kind::LineWidth))
+        .remove(0);
     assert_eq!(across.quantity, "trench width");
     let value = across.corrected.unwrap().value.unwrap();
     assert!((value - 55.0).abs() < 0.3, "{value}");
-    let turned = made.scan.heights().reversed_axes().as_standard_layout().into_owned();
+    let turned = made
+        .scan
+        .heights()
+        .reversed_axes()
+        .as_standard_layout()
+        .into_owned();
     let turned = HeightMap::new(turned, Pitch::square(1.0)).unwrap();
     let turned = Made::of(turned, made.tip.clone(), 0.2);
-    let along = turned.measure(turned.corrected(), &request(Kind::LineWidth)).remove(0);
+    let along = turned
+        .measure(turned.corrected(), &request(Kind::LineWidth))
+        .remove(0);
     let other = along.corrected.unwrap().value.unwrap();
     assert!((value - other).abs() < 0.05, "{value} {other}");
 }
@@ -177,7 +195,10 @@ fn a_tip_not_identified_gives_bounds_and_no_value() {
         };
         let line = made.measure(corrected, &request(kind)).remove(0);
         let c = line.corrected.unwrap();
-        assert_eq!((c.value, c.u, line.status), (None, None, Some(Status::Bounded)));
+        assert_eq!(
+            (c.value, c.u, line.status),
+            (None, None, Some(Status::Bounded))
+        );
         assert!(line.flags.iter().any(|f| f.contains("not identified")));
         let scanned = line.as_scanned.unwrap().value;
         assert!(c.low.unwrap() < scanned && scanned < c.high.unwrap());
@@ -188,7 +209,9 @@ fn a_tip_not_identified_gives_bounds_and_no_value() {
 fn an_unknown_feature_radius_widens_the_interval_outwards_only() {
     let lines = Lines::new(90.4, 400.0, 1, 61.7, 50.0).walls(78.0, 0.0);
     let made = Made::new(&lines, SLIM, 16, 180, 0.1);
-    let plain = made.measure(made.corrected(), &request(Kind::LineWidth)).remove(0);
+    let plain = made
+        .measure(made.corrected(), &request(Kind::LineWidth))
+        .remove(0);
     let corrected = Corrected {
         contains_feature_radius: true,
         ..made.corrected()
@@ -218,7 +241,9 @@ fn a_tip_known_to_a_small_depth_only_bounds_the_width_by_the_scan() {
 fn steps_of_ridge_trench_and_edge() {
     let ridge = Lines::new(120.0, 500.0, 1, 60.0, 30.0).walls(85.0, 0.0);
     let made = Made::new(&ridge, SLIM, 24, 240, 0.2);
-    let line = made.measure(made.corrected(), &request(Kind::StepHeight)).remove(0);
+    let line = made
+        .measure(made.corrected(), &request(Kind::StepHeight))
+        .remove(0);
     assert!(line.quantity.contains("ridge"), "{line:?}");
     assert!((line.corrected.unwrap().value.unwrap() - 30.0).abs() < 0.05);
     assert_eq!(line.status, Some(Status::Touched));
@@ -229,7 +254,9 @@ fn steps_of_ridge_trench_and_edge() {
         wall_angle_deg: 80.0,
     };
     let made = Made::new(&step, SLIM, 24, 160, 0.2);
-    let line = made.measure(made.corrected(), &request(Kind::StepHeight)).remove(0);
+    let line = made
+        .measure(made.corrected(), &request(Kind::StepHeight))
+        .remove(0);
     assert!(line.quantity.contains("edge"), "{line:?}");
     assert!((line.corrected.unwrap().value.unwrap() - 12.0).abs() < 0.1);
 }
@@ -240,12 +267,21 @@ fn steps_of_ridge_trench_and_edge() {
 fn a_trench_whose_floor_is_out_of_reach_has_a_lower_bound_only() {
     let lines = Lines::new(39.0, 122.0, 2, 100.0, 50.0);
     let made = Made::new(&lines, STOUT, 12, 200, 0.0);
-    let line = made.measure(made.corrected(), &request(Kind::StepHeight)).remove(0);
+    let line = made
+        .measure(made.corrected(), &request(Kind::StepHeight))
+        .remove(0);
     let c = line.corrected.unwrap();
-    assert_eq!((c.value, c.high, line.status), (None, None, Some(Status::Bounded)));
+    assert_eq!(
+        (c.value, c.high, line.status),
+        (None, None, Some(Status::Bounded))
+    );
     let scanned = line.as_scanned.unwrap().value;
     assert!((10.5..12.5).contains(&scanned), "{scanned}");
-    assert!(line.flags.iter().any(|f| f.contains("lower")), "{:?}", line.flags);
+    assert!(
+        line.flags.iter().any(|f| f.contains("lower")),
+        "{:?}",
+        line.flags
+    );
 }
 
 /// Height exactly 2 r; half-height width of the image `2 sqrt(r^2 + 2 R r)` (computed
@@ -253,7 +289,11 @@ fn a_trench_whose_floor_is_out_of_reach_has_a_lower_bound_only() {
 #[test]
 fn a_sphere_on_a_flat() {
     let shape = BumpShape::Sphere { radius: 10.0 };
-    let bumps = Bumps::new(vec![Bump { at: [60.2, 59.6], shape }]).unwrap();
+    let bumps = Bumps::new(vec![Bump {
+        at: [60.2, 59.6],
+        shape,
+    }])
+    .unwrap();
     let made = Made::new(&bumps, STOUT, 120, 120, 0.1);
     let lines = made.measure(made.corrected(), &request(Kind::Particle));
     assert_eq!(lines.len(), 2);
@@ -269,7 +309,10 @@ fn a_sphere_on_a_flat() {
 #[test]
 fn several_particles_have_means_and_numbers() {
     let shape = BumpShape::Sphere { radius: 6.0 };
-    let bumps = Bumps::all(shape, &[[40.0, 40.0], [110.0, 50.0], [70.0, 110.0], [2.0, 90.0]]);
+    let bumps = Bumps::all(
+        shape,
+        &[[40.0, 40.0], [110.0, 50.0], [70.0, 110.0], [2.0, 90.0]],
+    );
     let made = Made::new(&bumps.unwrap(), SLIM, 150, 150, 0.1);
     let lines = made.measure(made.corrected(), &request(Kind::Particle));
     assert_eq!(lines[0].quantity, "mean height");
@@ -277,7 +320,12 @@ fn several_particles_have_means_and_numbers() {
     assert_eq!(lines.len(), 8);
     assert_eq!(lines[2].name, "a 1");
     assert!((lines[0].corrected.unwrap().value.unwrap() - 12.0).abs() < 0.1);
-    assert!(lines[0].flags.iter().any(|f| f.starts_with("1 particles at the border")));
+    assert!(
+        lines[0]
+            .flags
+            .iter()
+            .any(|f| f.starts_with("1 particles at the border"))
+    );
 }
 
 #[test]
@@ -337,8 +385,14 @@ fn answers(map: &HeightMap) {
                     line.corrected.and_then(|c| c.high),
                 ];
                 assert!(values.into_iter().flatten().all(f64::is_finite), "{line:?}");
-                assert!(line.as_scanned.is_some() || !line.flags.is_empty(), "{line:?}");
-                assert!(line.budget.iter().all(|b| b.u.is_finite() && b.u >= 0.0), "{line:?}");
+                assert!(
+                    line.as_scanned.is_some() || !line.flags.is_empty(),
+                    "{line:?}"
+                );
+                assert!(
+                    line.budget.iter().all(|b| b.u.is_finite() && b.u >= 0.0),
+                    "{line:?}"
+                );
             }
         }
     }
@@ -351,9 +405,21 @@ fn maps_that_no_tip_made_are_answered() {
         (1, 50, 1.0, |x, _| if x > 20.0 { 5.0 } else { 0.0 }),
         (50, 1, 1.0, |_, y| y),
         (20, 30, 1e9, |x, y| 1e11 + x + (y / 3e9).sin() * 1e9),
-        (20, 30, 500.0, |x, _| if x < 4000.0 { f64::NAN } else { (x * 1e-3).sin() }),
+        (20, 30, 500.0, |x, _| {
+            if x < 4000.0 {
+                f64::NAN
+            } else {
+                (x * 1e-3).sin()
+            }
+        }),
         (20, 30, 1.0, |_, _| f64::NAN),
-        (30, 30, 1.0, |x, y| if (x - 15.0).hypot(y - 15.0) < 6.0 { f64::NAN } else { x % 7.0 }),
+        (30, 30, 1.0, |x, y| {
+            if (x - 15.0).hypot(y - 15.0) < 6.0 {
+                f64::NAN
+            } else {
+                x % 7.0
+            }
+        }),
     ];
     for (rows, columns, pitch, f) in maps {
         answers(&HeightMap::from_fn(rows, columns, Pitch::square(pitch), f).unwrap());

@@ -37,7 +37,12 @@ impl Texture {
     /// Over the finite heights; `None` without any. Skewness and kurtosis of a perfect flat are
     /// NaN, Sdr without a complete 2 x 2 cell too.
     pub fn of(heights: ArrayView2<f32>, pitch: Pitch) -> Option<Self> {
-        let values = || heights.iter().map(|&z| f64::from(z)).filter(|z| z.is_finite());
+        let values = || {
+            heights
+                .iter()
+                .map(|&z| f64::from(z))
+                .filter(|z| z.is_finite())
+        };
         let n = values().count() as f64;
         if n == 0.0 {
             return None;
@@ -85,7 +90,9 @@ fn developed_area(heights: ArrayView2<f32>, pitch: Pitch) -> f64 {
             let (top, bottom) = ((z(1, 0) - z(1, 1)) / pitch.x, (z(0, 0) - z(0, 1)) / pitch.x);
             let (left, right) = ((z(0, 1) - z(1, 1)) / pitch.y, (z(0, 0) - z(1, 0)) / pitch.y);
             let area = |gx: f64, gy: f64| (1.0 + gx * gx + gy * gy).sqrt() - 1.0;
-            let mean = (area(top, left) + area(top, right) + area(bottom, left) + area(bottom, right)) / 4.0;
+            let mean =
+                (area(top, left) + area(top, right) + area(bottom, left) + area(bottom, right))
+                    / 4.0;
             if mean.is_finite() {
                 sum += mean;
                 cells += 1;
@@ -117,7 +124,8 @@ pub(super) fn measure(
     let empty = |quantity: &str, unit| answer(request, Kind::Texture, quantity, unit, ASSUMPTIONS);
     let Some(scanned) = Texture::of(view, pitch) else {
         let mut line = empty("Sq", "nm");
-        line.flags.push("not measured: the region is void".to_owned());
+        line.flags
+            .push("not measured: the region is void".to_owned());
         return Ok(vec![line]);
     };
     progress.check()?;
@@ -133,25 +141,32 @@ pub(super) fn measure(
         let share = |n: usize| n as f64 / certainty.len() as f64;
         Some((texture, share(never), share(leaning), c.identified))
     });
-    let lines = scanned.lines().into_iter().enumerate().map(|(i, (name, unit, value))| {
-        let mut line = empty(name, unit);
-        line.flags.clone_from(&flags);
-        let budget = budget_of(name, &scanned, noise, input.calibration.z);
-        let u = budget.as_ref().map(|b| b.combined(0.95).u);
-        if value.is_finite() {
-            line.as_scanned = Some(Value { value, u });
-        } else {
-            line.flags.push(format!("{name} is not defined here: the region is flat or too small"));
-        }
-        if u.is_none() {
-            line.flags.push(format!("no uncertainty is given for {name}"));
-        }
-        if let Some((texture, never, leaning, identified)) = corrected {
-            correct(&mut line, texture.lines()[i].2, never, leaning, identified);
-        }
-        line.budget = budget.map(Budget::into_components).unwrap_or_default();
-        line
-    });
+    let lines = scanned
+        .lines()
+        .into_iter()
+        .enumerate()
+        .map(|(i, (name, unit, value))| {
+            let mut line = empty(name, unit);
+            line.flags.clone_from(&flags);
+            let budget = budget_of(name, &scanned, noise, input.calibration.z);
+            let u = budget.as_ref().map(|b| b.combined(0.95).u);
+            if value.is_finite() {
+                line.as_scanned = Some(Value { value, u });
+            } else {
+                line.flags.push(format!(
+                    "{name} is not defined here: the region is flat or too small"
+                ));
+            }
+            if u.is_none() {
+                line.flags
+                    .push(format!("no uncertainty is given for {name}"));
+            }
+            if let Some((texture, never, leaning, identified)) = corrected {
+                correct(&mut line, texture.lines()[i].2, never, leaning, identified);
+            }
+            line.budget = budget.map(Budget::into_components).unwrap_or_default();
+            line
+        });
     Ok(lines.collect())
 }
 
@@ -171,7 +186,8 @@ fn correct(line: &mut Dimension, value: f64, never: f64, leaning: f64, identifie
     });
     line.status = Some(Status::Bounded);
     if !identified {
-        line.flags.push("the tip is not identified: no corrected value".to_owned());
+        line.flags
+            .push("the tip is not identified: no corrected value".to_owned());
     }
     line.flags.push(format!(
         "the reconstruction is an upper bound of the surface and noise sinks it: no interval can \
@@ -194,7 +210,7 @@ fn budget_of(name: &str, texture: &Texture, noise: f64, calibration: f64) -> Opt
         "Sq" => texture.sq,
         _ => return None,
     };
-    if !(texture.sq > 0.0) {
+    if texture.sq.is_nan() || texture.sq <= 0.0 {
         return None;
     }
     let mut budget = Budget::new();
@@ -250,6 +266,11 @@ mod tests {
         let void = ndarray::Array2::<f32>::from_elem((3, 3), f32::NAN);
         assert_eq!(Texture::of(void.view(), Pitch::square(1.0)), None);
         let one = ndarray::Array2::<f32>::from_elem((1, 1), 1.0);
-        assert!(Texture::of(one.view(), Pitch::square(1.0)).unwrap().sdr.is_nan());
+        assert!(
+            Texture::of(one.view(), Pitch::square(1.0))
+                .unwrap()
+                .sdr
+                .is_nan()
+        );
     }
 }

@@ -91,23 +91,22 @@ impl Outline {
         (self.half_width(to) - self.half_width(from)) / (to - from)
     }
 
-    /// Least lateral slope over windows of `span` that end at most at `height`: the steepest wall
-    /// that the lowest `height` of the tip can follow.
-    pub fn steepest(&self, height: f64, span: f64) -> f64 {
-        let top = height.min(self.depth());
-        let steps = 64;
-        (0..=steps)
+    /// The steepest wall that the tip can follow at these `heights` above the floor (nm,
+    /// increasing): least lateral slope of a straight line through its outline there or lower.
+    pub fn steepest(&self, heights: &[f64]) -> f64 {
+        const STEPS: u32 = 32;
+        let (Some(&low), Some(&high)) = (heights.first(), heights.last()) else {
+            return f64::INFINITY;
+        };
+        // Above its grid the tip is unknown: judge by what there is.
+        let over = (high - self.depth()).max(0.0).min(low);
+        (0..=STEPS)
             .map(|i| {
-                let end = top * f64::from(i) / f64::from(steps);
-                self.slope(end - span, end)
+                let down = over + (low - over) * f64::from(i) / f64::from(STEPS);
+                let lower: Vec<f64> = heights.iter().map(|z| z - down).collect();
+                let reach: Vec<f64> = lower.iter().map(|&z| self.half_width(z)).collect();
+                statistics::line(&lower, &reach).map_or(f64::INFINITY, |l| l.0)
             })
-            .zip(0..=steps)
-            // The first window must be a whole one, unless the tip has no whole one.
-            .filter(|&(_, i)| {
-                let end = top * f64::from(i) / f64::from(steps);
-                end >= span.min(top)
-            })
-            .map(|(slope, _)| slope)
             .fold(f64::INFINITY, f64::min)
     }
 
@@ -141,6 +140,9 @@ pub(super) struct Hold {
     pub touched: bool,
     /// How far inside the reconstruction it may lie, nm, `>= 0`.
     pub slack: f64,
+    /// The same without allowance for doubt in the shoulder's place: twice the best guess of how
+    /// far inside it lies.
+    pub likely: f64,
     /// Lateral slope of the reconstruction, nm per nm, `>= 0`.
     pub slope: f64,
 }
@@ -164,8 +166,8 @@ impl Wall {
         }
     }
 
-    /// Lateral slope about `fraction` by a straight line through the window, `>= 0`.
-    pub fn slope(&self, fraction: f64) -> f64 {
+    /// Indices of the heights in the window about `fraction`.
+    fn window(&self, fraction: f64) -> std::ops::Range<usize> {
         let inside = |f: &f64| (f - fraction).abs() <= HALF_WINDOW + 1e-9;
         let from = self
             .fractions
@@ -173,15 +175,29 @@ impl Wall {
         let to = self
             .fractions
             .partition_point(|f| *f < fraction || inside(f));
-        statistics::line(&self.fractions[from..to], &self.outwards[from..to])
+        from..to
+    }
+
+    /// The steepest wall that the tip can follow at the known heights about `fraction`.
+    fn steepest(&self, outline: &Outline, fraction: f64) -> f64 {
+        let heights: Vec<f64> = self
+            .window(fraction)
+            .filter(|&i| self.outwards[i].is_finite())
+            .map(|i| self.fractions[i] * self.height)
+            .collect();
+        outline.steepest(&heights)
+    }
+
+    /// Lateral slope about `fraction` by a straight line through the window, `>= 0`.
+    pub fn slope(&self, fraction: f64) -> f64 {
+        let window = self.window(fraction);
+        statistics::line(&self.fractions[window.clone()], &self.outwards[window])
             .map_or(f64::NAN, |(slope, _)| (-slope / self.height).max(0.0))
     }
 
     /// Mean standard uncertainty of the positions in the window about `fraction`, nm.
     fn u_about(&self, fraction: f64) -> f64 {
-        let inside = |f: f64| (f - fraction).abs() <= HALF_WINDOW + 1e-9;
-        let taken = self.fractions.iter().zip(&self.u);
-        let taken: Vec<f64> = taken.filter(|p| inside(*p.0)).map(|p| *p.1).collect();
+        let taken: Vec<f64> = self.window(fraction).map(|i| self.u[i]).collect();
         let mean = statistics::mean(&taken);
         if mean.is_finite() { mean } else { 0.0 }
     }
@@ -190,22 +206,36 @@ impl Wall {
     /// about two deviations, the shoulder hardly.
     fn shoulder_doubt(&self, fraction: f64) -> f64 {
         let slope = self.slope(fraction);
-        if slope.is_finite() { 2.0 * self.noise * slope } else { 0.0 }
+        if slope.is_finite() {
+            2.0 * self.noise * slope
+        } else {
+            0.0
+        }
     }
 
     /// Whether the tip with `outline` touched the wall at `fraction`. `tip_u` is the standard
     /// uncertainty of the tip's heights, nm.
     fn touched(&self, outline: &Outline, fraction: f64, tip_u: f64) -> bool {
         let span = 2.0 * HALF_WINDOW * self.height;
-        let tip = outline.steepest(fraction * self.height + 0.5 * span, span);
+        let tip = self.steepest(outline, fraction);
         // A straight line through n points knows its slope to sqrt(12 / n) u / span.
         let doubt = 2.0 * (1.5 * self.u_about(fraction) + 2f64.sqrt() * tip_u * tip) / span;
         // Noise sinks the floor by about two deviations against the fillet that the tip leaves at
         // its foot, which then looks flatter than the tip.
-        let (foot, head) = (fraction * self.height - 0.5 * span, fraction * self.height + 0.5 * span);
+        let (foot, head) = (
+            fraction * self.height - 0.5 * span,
+            fraction * self.height + 0.5 * span,
+        );
         let part = 0.2 * span;
-        let bend = (outline.slope(foot, foot.max(0.0) + part) - outline.slope(head - part, head)).max(0.0);
-        let doubt = doubt + 4.0 * self.noise * bend / span;
+        let bend = |foot: f64| {
+            let foot = foot.max(0.0);
+            (outline.slope(foot, foot + part) - outline.slope(head - part, head)).max(0.0)
+        };
+        let sinking = 4.0 * self.noise * bend(foot) / span;
+        // The last pixel in which the tip still stood on the floor may be a whole pixel away from
+        // the wall: so far out the fillet may lie against the flank.
+        let placing = bend(foot - 0.5 * span).min(outline.pitch / span);
+        let doubt = doubt + sinking + placing;
         self.slope(fraction) > tip + SLOPE_MARGIN + doubt
     }
 
@@ -217,6 +247,7 @@ impl Wall {
             return Hold {
                 touched: true,
                 slack: 0.0,
+                likely: 0.0,
                 slope,
             };
         }
@@ -234,17 +265,19 @@ impl Wall {
                 return Hold {
                     touched: false,
                     slack: (here - inner + self.shoulder_doubt(top)).max(0.0),
+                    likely: (here - shoulder).max(0.0),
                     slope,
                 };
             }
         }
         // Untouched up to where the curve ends: the tip's flank, carried on to the very top.
         let rest = (1.0 - top) * self.height;
-        let flank = outline.steepest(fraction * self.height, 2.0 * HALF_WINDOW * self.height);
+        let flank = self.steepest(outline, fraction);
         let flank = if flank.is_finite() { flank } else { slope };
         Hold {
             touched: false,
             slack: (here - shoulder + rest * flank + self.shoulder_doubt(top)).max(0.0),
+            likely: (here - shoulder + rest * flank).max(0.0),
             slope,
         }
     }
@@ -293,7 +326,7 @@ mod tests {
             assert!((outline.half_width(z) - expected).abs() < 0.12, "{z}");
         }
         assert!((outline.apex_radius().unwrap() - 10.0).abs() < 1e-4);
-        let flank = outline.steepest(45.0, 6.0);
+        let flank = outline.steepest(&[39.0, 42.0, 45.0]);
         assert!((flank - 15f64.to_radians().tan()).abs() < 1e-3, "{flank}");
     }
 
@@ -305,7 +338,7 @@ mod tests {
         let tip = model.sample(41.0, Pitch::square(1.0)).unwrap();
         let slope = |axis, positive| {
             Outline::of(&tip, axis, positive)
-                .steepest(10.0, 5.0)
+                .steepest(&[5.0, 7.0, 10.0])
                 .atan()
                 .to_degrees()
         };

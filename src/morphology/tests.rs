@@ -287,7 +287,14 @@ fn nothing_in_nothing_out() {
         );
         let found = contacts(empty.view(), tip.view(), &progress).unwrap();
         assert_eq!(found.offsets.dim(), dim);
-        let marks = certainty_map(empty.view(), empty.view(), tip.view(), 0.0, [0, 0], &progress);
+        let marks = certainty_map(
+            empty.view(),
+            empty.view(),
+            tip.view(),
+            0.0,
+            [0, 0],
+            &progress,
+        );
         assert_eq!(marks.unwrap().dim(), dim);
         let leaning = edge_leaning(empty.view(), empty.view(), tip.view(), &progress);
         assert_eq!(leaning.unwrap().dim(), dim);
@@ -439,7 +446,15 @@ fn progress_ends_at_one() {
 fn shapes_that_do_not_belong_together_are_refused() {
     let (a, b) = (Array2::<f32>::zeros((3, 4)), Array2::<f32>::zeros((4, 3)));
     let tip = array![[0.0_f32]];
-    let error = certainty_map(a.view(), b.view(), tip.view(), 0.0, [0, 0], &Progress::new()).unwrap_err();
+    let error = certainty_map(
+        a.view(),
+        b.view(),
+        tip.view(),
+        0.0,
+        [0, 0],
+        &Progress::new(),
+    )
+    .unwrap_err();
     assert_eq!(error.kind(), ErrorKind::Data);
     assert!(error.to_string().contains("3 x 4"));
     assert!(edge_leaning(a.view(), b.view(), tip.view(), &Progress::new()).is_err());

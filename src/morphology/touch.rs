@@ -47,9 +47,16 @@ pub(super) fn certainty_map(
         rule,
     };
     let mut marks = Array2::from_elem(surface.dim(), NEVER);
-    search.pass(&mut marks, Pass::Sole, &progress.part(0.0, 0.5))?;
+    let mut shared = vec![false; surface.len()];
+    search.pass(
+        &mut marks,
+        &mut shared,
+        Pass::Sole,
+        &progress.part(0.0, 0.5),
+    )?;
     let touched = search.padded(&marks);
-    search.pass(&mut marks, Pass::Shared(&touched), &progress.part(0.5, 1.0))?;
+    let rest = &progress.part(0.5, 1.0);
+    search.pass(&mut marks, &mut shared, Pass::Shared(&touched), rest)?;
     ndarray::Zip::from(&mut marks)
         .and(surface)
         .par_for_each(|mark, s| {
@@ -63,7 +70,7 @@ pub(super) fn certainty_map(
 /// What a pass over the scan marks.
 #[derive(Clone, Copy)]
 enum Pass<'a> {
-    /// The contacts of scan pixels that have only one: `TOUCHED`.
+    /// The contacts of scan pixels that have only one: `TOUCHED`. Notes which have several.
     Sole,
     /// The contacts of the other scan pixels, unless one of them is marked already: `BOUNDED`.
     /// The marks lie as [`Field::data`] does.
@@ -81,7 +88,14 @@ struct Search<'a> {
 }
 
 impl Search<'_> {
-    fn pass(&self, marks: &mut Array2<u8>, pass: Pass, progress: &Progress) -> Result<()> {
+    /// Marks the surface; `shared` says of each scan pixel whether its contacts count as several.
+    fn pass(
+        &self,
+        marks: &mut Array2<u8>,
+        shared: &mut [bool],
+        pass: Pass,
+        progress: &Progress,
+    ) -> Result<()> {
         let bands: Vec<Mutex<&mut [u8]>> = marks
             .as_slice_mut()
             .unwrap_or_default()
@@ -89,12 +103,14 @@ impl Search<'_> {
             .map(Mutex::new)
             .collect();
         let step = Steps::new(progress, self.field.rows);
-        (0..bands.len()).into_par_iter().try_for_each(|band| {
+        let shared = shared.par_chunks_mut(BAND * self.field.cols).enumerate();
+        shared.try_for_each(|(band, shared)| {
             let mut band = Band::new(self.field, self.tip, band);
             for row in band.tile_rows.clone() {
                 self.arch.dispatch(TouchRow {
                     band: &mut band,
                     search: self,
+                    shared,
                     pass,
                     row,
                     progress,
@@ -176,6 +192,8 @@ impl<'a> Band<'a> {
 struct TouchRow<'a, 'b> {
     band: &'b mut Band<'a>,
     search: &'b Search<'b>,
+    /// The band's part of the flags.
+    shared: &'b mut [bool],
     pass: Pass<'b>,
     row: usize,
     progress: &'b Progress,
@@ -185,7 +203,7 @@ impl WithSimd for TouchRow<'_, '_> {
     type Output = ();
 
     #[inline(always)]
-    fn with_simd<S: Simd>(self, simd: S) {
+    fn with_simd<S: Simd>(mut self, simd: S) {
         let (field, tip) = (self.band.field, self.band.tip);
         let mut touching = Vec::new();
         for col in (0..field.cols).step_by(S::F32_LANES) {
@@ -203,14 +221,15 @@ impl WithSimd for TouchRow<'_, '_> {
                 touching: &mut touching,
             };
             search(simd, field, tip, tile, &mut touch);
-            let sole = soles(simd, &touching, &thresholds, self.search.rule.spread);
             let values = match self.pass {
-                Pass::Sole => values(simd, TOUCHED, |r, lane| sole[r][lane] == Sole::Yes),
+                Pass::Sole => {
+                    let sole = soles(simd, &touching, &thresholds, self.search.rule.spread);
+                    self.note_shared(col, S::F32_LANES, &sole);
+                    values(simd, TOUCHED, |r, lane| sole[r][lane] == Sole::Yes)
+                }
                 Pass::Shared(touched) => {
                     let explained = explained(simd, &touching, &thresholds, touched);
-                    values(simd, BOUNDED, |r, lane| {
-                        sole[r][lane] == Sole::No && lanes(&explained[r])[lane] == 0
-                    })
+                    values(simd, BOUNDED, |r, lane| lanes(&explained[r])[lane] == 0)
                 }
             };
             let Some(values) = values else { continue };
@@ -224,16 +243,38 @@ impl WithSimd for TouchRow<'_, '_> {
 }
 
 impl TouchRow<'_, '_> {
-    /// The height from which a sum counts as a touch; `+inf` for voids and beyond the map.
+    /// The tile row's part of the flags, from its first row on.
     #[inline(always)]
-    fn thresholds<S: Simd>(&self, simd: S, col: usize) -> [S::f32s; BLOCK] {
+    fn flags(&mut self) -> &mut [bool] {
+        let above = BLOCK * (self.row - self.band.tile_rows.start);
+        &mut self.shared[above * self.band.field.cols..]
+    }
+
+    #[inline(always)]
+    fn note_shared(&mut self, col: usize, lanes: usize, sole: &[[Sole; TILE]; BLOCK]) {
+        let cols = self.band.field.cols;
+        for (flags, sole) in self.flags().chunks_exact_mut(cols).zip(sole) {
+            for (flag, &sole) in flags[col..].iter_mut().zip(&sole[..lanes]) {
+                *flag = sole == Sole::No;
+            }
+        }
+    }
+
+    /// The height from which a sum counts as a touch; `+inf` for voids, beyond the map, and where
+    /// this pass has nothing to mark.
+    #[inline(always)]
+    fn thresholds<S: Simd>(&mut self, simd: S, col: usize) -> [S::f32s; BLOCK] {
         let mut tile = [simd.splat_f32s(f32::INFINITY); BLOCK];
         let cols = self.band.field.cols;
         let rows = self.search.scan.chunks_exact(cols).skip(BLOCK * self.row);
-        for (vector, row) in tile.iter_mut().zip(rows) {
-            for (lane, &height) in vector.lanes_mut().iter_mut().zip(&row[col..]) {
-                let threshold = height - self.search.rule.tolerance;
-                if height.is_finite() && !threshold.is_nan() {
+        let tolerance = self.search.rule.tolerance;
+        let all = matches!(self.pass, Pass::Sole);
+        let rows = rows.zip(self.flags().chunks_exact(cols));
+        for (vector, (row, flags)) in tile.iter_mut().zip(rows) {
+            let pixels = row[col..].iter().zip(&flags[col..]);
+            for (lane, (&height, &shared)) in vector.lanes_mut().iter_mut().zip(pixels) {
+                let threshold = height - tolerance;
+                if height.is_finite() && !threshold.is_nan() && (all || shared) {
                     // No padding (-inf) ever counts.
                     *lane = threshold.max(f32::MIN);
                 }
