@@ -78,7 +78,6 @@ fn rough(seed: u64, px: f64) -> Scene {
 }
 
 /// Radius of curvature of the rough surface's summits within the scan, nm, sharpest first.
-#[allow(dead_code)]
 fn summit_radii(scene: &Scene, px: f64) -> Vec<f64> {
     let n = 2 * N;
     let h = px / 2.0;
