@@ -107,14 +107,11 @@ fn print_bytes(bytes: &[u8]) {
 
 /// Opens the window on the file or on the demo job; where there is none, runs the job headless.
 fn open_window(cli: &Cli, show: &Show) -> Result<u8> {
-    let mut job = match &cli.file {
-        Some(path) => run::open_job(path, &cli.common)?,
-        None => crate::job::demo()?,
-    };
-    let Some(why) = window_or_why(&mut job) else {
+    let Some(why) = window_or_why(cli)? else {
         return Ok(DONE);
     };
     show.note(&format!("{why}; running the job headless"));
+    let job = opening_job(cli)?;
     let stem = job.path.clone().unwrap_or_else(|| job.scan_path());
     let folder = Path::new("results").join(stem.file_stem().unwrap_or_default());
     let outcome = show.during("job", |progress| {
@@ -124,8 +121,29 @@ fn open_window(cli: &Cli, show: &Show) -> Result<u8> {
     Ok(DONE)
 }
 
+fn opening_job(cli: &Cli) -> Result<crate::job::Job> {
+    match &cli.file {
+        Some(path) => run::open_job(path, &cli.common),
+        None => crate::job::demo(),
+    }
+}
+
 /// Runs the window until it is closed; where it cannot be opened, says why.
+#[cfg(feature = "window")]
+fn window_or_why(cli: &Cli) -> Result<Option<String>> {
+    use crate::window::{self, Start};
+    let common = &cli.common;
+    let bare = common.pitch.is_none() && common.height_unit.is_none() && common.map.is_none();
+    let start = match &cli.file {
+        // A file that cannot be opened as it is becomes a question in the window.
+        Some(path) if bare => Start::file(path),
+        _ => Start::InMemory(Box::new(opening_job(cli)?)),
+    };
+    Ok(window::run(start).err().map(|why| why.to_string()))
+}
+
+/// Says why there is no window.
 #[cfg(not(feature = "window"))]
-fn window_or_why(_job: &mut crate::job::Job) -> Option<String> {
-    Some("no display: this build has no window".to_owned())
+fn window_or_why(_cli: &Cli) -> Result<Option<String>> {
+    Ok(Some("no display: this build has no window".to_owned()))
 }

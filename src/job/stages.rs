@@ -181,7 +181,17 @@ impl Stages {
 
         let tip = self.tip_of(job, &level, &progress.part(0.1, 0.7))?;
         match &*tip {
-            Ok(found) => outcome.tip = Some(Arc::new(found.clone())),
+            Ok(found) => {
+                if !found.identified {
+                    outcome.warnings.push(
+                        "The tip is not identified: surface and certainty are those of the \
+                         bluntest tip that the scan allows, and corrected dimensions are bounds \
+                         without a value."
+                            .to_owned(),
+                    );
+                }
+                outcome.tip = Some(Arc::new(found.clone()));
+            }
             Err(reason) => outcome.warnings.push(format!("No tip: {reason}")),
         }
         watch(&outcome);
