@@ -17,6 +17,14 @@ enum News {
     Done(Result<Outcome, Error>),
 }
 
+fn internal_error() -> Error {
+    Error::new(
+        crate::ErrorKind::Data,
+        "the computation stopped after an internal error",
+    )
+    .remedy("Save the job, undo the last change, and report the fault")
+}
+
 /// Runs jobs one after the other on a thread of its own. It keeps the last outcome while the next
 /// is under way; a new order cancels the one before, and what that still sends is dropped.
 pub struct Worker {
@@ -45,8 +53,15 @@ impl Worker {
                     let _ = outbox.send((order.run, news));
                     wake();
                 };
-                let result = stages.run(&order.job, &order.progress, &mut |outcome| {
-                    send(News::Partial(outcome.clone()));
+                let run = std::panic::AssertUnwindSafe(|| {
+                    stages.run(&order.job, &order.progress, &mut |outcome| {
+                        send(News::Partial(outcome.clone()));
+                    })
+                });
+                // A fault in a computation must not leave the window waiting for ever.
+                let result = std::panic::catch_unwind(run).unwrap_or_else(|_| {
+                    stages = Stages::default();
+                    Err(internal_error())
                 });
                 send(News::Done(result));
             }
@@ -75,13 +90,7 @@ impl Worker {
         };
         if self.orders.send(order).is_err() {
             self.under_way = None;
-            self.error = Some(
-                Error::new(
-                    crate::ErrorKind::Data,
-                    "the computing thread has stopped after an internal error",
-                )
-                .remedy("Save the job and start the program again"),
-            );
+            self.error = Some(internal_error());
         }
     }
 

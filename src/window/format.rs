@@ -131,6 +131,12 @@ pub fn round_length(nm: f64) -> String {
     format!("{} {unit}", (value * 1e6).round() / 1e6)
 }
 
+/// A tick's number, with the digits that ticks over `span` need.
+pub fn tick(value: f64, span: f64) -> String {
+    let decimals = (1 - span.abs().max(1e-9).log10().floor() as i32).clamp(0, 4) as usize;
+    plain(format!("{value:.decimals$}"))
+}
+
 #[cfg(test)]
 mod tests {
     use super::*;

@@ -55,6 +55,11 @@ impl<K: PartialEq + Clone, T: Send + 'static> Later<K, T> {
         self.held.as_ref().map(|(_, value)| value)
     }
 
+    /// The key of the last value.
+    pub fn last_key(&self) -> Option<&K> {
+        self.held.as_ref().map(|(key, _)| key)
+    }
+
     /// The value of `key`, if it is there.
     pub fn get(&self, key: &K) -> Option<&T> {
         self.held

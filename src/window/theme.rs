@@ -24,7 +24,10 @@ fn layout(style: &mut Style) {
         (TextStyle::Body, size(13.5)),
         (TextStyle::Button, size(13.5)),
         (TextStyle::Heading, size(17.0)),
-        (TextStyle::Monospace, FontId::new(12.5, FontFamily::Monospace)),
+        (
+            TextStyle::Monospace,
+            FontId::new(12.5, FontFamily::Monospace),
+        ),
     ]
     .into();
     let spacing = &mut style.spacing;

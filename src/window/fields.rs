@@ -1,0 +1,207 @@
+//! Small labelled widgets that the panels share. Every input has a name for screen readers.
+
+use super::colours::Palette;
+use crate::units::Length;
+use eframe::egui::{
+    Align, ComboBox, Layout, Response, RichText, TextEdit, Ui, UiBuilder, Widget, vec2,
+};
+
+/// Width of the names in front of fields and facts.
+const NAME: f32 = 108.0;
+
+/// A group's heading with air above.
+pub fn heading(ui: &mut Ui, text: &str) {
+    ui.add_space(8.0);
+    let p = Palette::of(ui);
+    ui.label(RichText::new(text).size(14.0).color(p.accent).strong());
+    ui.add_space(1.0);
+}
+
+/// A name and a value side by side.
+pub fn fact(ui: &mut Ui, name: &str, value: impl Into<String>) -> Response {
+    row(ui, name, |ui| {
+        ui.add(eframe::egui::Label::new(value.into()).wrap())
+    })
+    .1
+}
+
+/// A name in a column of its own, then what `add` puts beside it; both responses.
+pub fn row(ui: &mut Ui, name: &str, add: impl FnOnce(&mut Ui) -> Response) -> (Response, Response) {
+    let p = Palette::of(ui);
+    let left = ui.cursor().left();
+    ui.horizontal_top(|ui| {
+        let label = ui
+            .scope_builder(UiBuilder::new(), |ui| {
+                ui.set_width(NAME);
+                ui.add(eframe::egui::Label::new(RichText::new(name).color(p.faint)).wrap())
+            })
+            .inner;
+        ui.add_space((left + NAME + 8.0 - ui.cursor().left()).max(0.0));
+        let value = ui.vertical(add).inner;
+        (label, value)
+    })
+    .inner
+}
+
+/// A sentence of caution: a mark, then words.
+pub fn caution(ui: &mut Ui, text: &str) {
+    let p = Palette::of(ui);
+    ui.horizontal_top(|ui| {
+        ui.label(RichText::new("⚠").color(p.warn));
+        ui.add(eframe::egui::Label::new(text).wrap());
+    });
+}
+
+/// A sentence of explanation.
+pub fn remark(ui: &mut Ui, text: &str) {
+    let p = Palette::of(ui);
+    ui.add(eframe::egui::Label::new(RichText::new(text).size(12.5).color(p.faint)).wrap());
+}
+
+/// A text that is taken when the field is left or Enter pressed, not at every key.
+/// Returns the new text where it was changed.
+pub fn text_row(ui: &mut Ui, name: &str, help: &str, value: &str, hint: &str) -> Option<String> {
+    let mut taken = None;
+    row_labelled(ui, name, help, |ui| {
+        let id = ui.scope_id().with(("text", name));
+        let mut draft = ui
+            .data(|d| d.get_temp::<String>(id))
+            .unwrap_or_else(|| value.to_owned());
+        let width = ui.available_width().min(190.0);
+        let response = TextEdit::singleline(&mut draft)
+            .id(id.with("edit"))
+            .hint_text(hint)
+            .desired_width(width)
+            .ui(ui);
+        if response.has_focus() {
+            ui.data_mut(|d| d.insert_temp(id, draft));
+        } else if response.lost_focus() {
+            ui.data_mut(|d| d.remove::<String>(id));
+            if draft.trim() != value {
+                taken = Some(draft.trim().to_owned());
+            }
+        }
+        response
+    });
+    taken
+}
+
+fn row_labelled(ui: &mut Ui, name: &str, help: &str, add: impl FnOnce(&mut Ui) -> Response) {
+    let (label, field) = row(ui, name, add);
+    let label = if help.is_empty() {
+        label
+    } else {
+        label.on_hover_text(help)
+    };
+    let field = field.labelled_by(label.id);
+    if !help.is_empty() {
+        field.on_hover_text(help);
+    }
+}
+
+/// What [`parsed_row`] took: the value, or `None` for an emptied field.
+pub type Taken<T> = Option<Option<T>>;
+
+/// A field that `parse` understands; what it does not is said below the field until it is mended.
+pub fn parsed_row<T>(
+    ui: &mut Ui,
+    name: &str,
+    help: &str,
+    value: &str,
+    hint: &str,
+    parse: impl FnOnce(&str) -> Result<T, String>,
+) -> Taken<T> {
+    let id = ui.scope_id().with(("refused", name));
+    let refused = ui.data(|d| d.get_temp::<(String, String)>(id));
+    let mut taken = None;
+    let shown = refused.as_ref().map_or(value, |(text, _)| text);
+    if let Some(text) = text_row(ui, name, help, shown, hint) {
+        ui.data_mut(|d| d.remove::<(String, String)>(id));
+        if text.is_empty() {
+            taken = Some(None);
+        } else {
+            match parse(&text) {
+                Ok(value) => taken = Some(Some(value)),
+                Err(why) => {
+                    ui.data_mut(|d| d.insert_temp(id, (text, why)));
+                }
+            }
+        }
+    } else if let Some((_, why)) = refused {
+        let p = Palette::of(ui);
+        ui.label(RichText::new(format!("✖ {why}")).color(p.bad).size(12.5));
+    }
+    taken
+}
+
+/// A length with its unit; empty = `hint`.
+pub fn length_row(
+    ui: &mut Ui,
+    name: &str,
+    help: &str,
+    value: Option<Length>,
+    hint: &str,
+) -> Taken<Length> {
+    let text = value.map_or(String::new(), |l| l.to_string());
+    parsed_row(ui, name, help, &text, hint, |text| {
+        text.parse::<Length>().map_err(|e| e.to_string())
+    })
+}
+
+/// A bare number; empty = `hint`.
+pub fn number_row(
+    ui: &mut Ui,
+    name: &str,
+    help: &str,
+    value: Option<f64>,
+    hint: &str,
+) -> Taken<f64> {
+    let text = value.map_or(String::new(), |v| v.to_string());
+    parsed_row(ui, name, help, &text, hint, |text| {
+        text.parse::<f64>()
+            .ok()
+            .filter(|v| v.is_finite())
+            .ok_or_else(|| format!("\"{text}\" is not a number"))
+    })
+}
+
+/// One of several choices; returns the new one where it was changed.
+pub fn choice_row<T: Copy + PartialEq>(
+    ui: &mut Ui,
+    name: &str,
+    help: &str,
+    now: T,
+    choices: &[(T, &str, &str)],
+) -> Option<T> {
+    let mut taken = None;
+    row_labelled(ui, name, help, |ui| {
+        let text = choices.iter().find(|c| c.0 == now).map_or("–", |c| c.1);
+        ComboBox::from_id_salt(("choice", name))
+            .selected_text(text)
+            .width(ui.available_width().min(190.0))
+            .show_ui(ui, |ui| {
+                for (value, label, meaning) in choices {
+                    let response = ui.selectable_label(*value == now, *label);
+                    let response = if meaning.is_empty() {
+                        response
+                    } else {
+                        response.on_hover_text(*meaning)
+                    };
+                    if response.clicked() && *value != now {
+                        taken = Some(*value);
+                    }
+                }
+            })
+            .response
+    });
+    taken
+}
+
+/// Puts buttons at the right end of a dialog.
+pub fn at_right(ui: &mut Ui, add: impl FnOnce(&mut Ui)) {
+    ui.allocate_ui_with_layout(
+        vec2(ui.available_width(), 26.0),
+        Layout::right_to_left(Align::Center),
+        add,
+    );
+}

@@ -1,0 +1,41 @@
+//! The desktop window: plain state, commands, views. Nothing computes on the paint thread.
+//!
+//! A view is a plain data struct, a `..._ui` function that paints it, and commands out. [`run`] is
+//! the only door. The window talks to the rest of the library through [`crate::job`].
+
+mod app;
+mod chores;
+mod colours;
+mod command;
+mod desk;
+mod dialogs;
+mod dimensions_panel;
+mod fields;
+mod format;
+mod frame;
+mod grip;
+mod history;
+mod images;
+#[cfg(test)]
+mod invented;
+mod later;
+mod legend;
+mod map_marks;
+mod map_view;
+mod open_dialog;
+mod panels;
+mod record_view;
+mod section;
+mod settings;
+mod start;
+mod state;
+mod status;
+mod table;
+#[cfg(test)]
+mod tests;
+mod theme;
+mod tip_view;
+mod top;
+mod view;
+
+pub use start::{Start, WindowError, run};

@@ -1,0 +1,290 @@
+//! The tip on the desk: its map and its profiles along x and y.
+
+use super::colours::Palette;
+use super::format;
+use super::images::{MapRef, Pair, PairKey, paint_pair};
+use super::later::Later;
+use super::legend;
+use super::map_marks;
+use super::state::ColourSpan;
+use super::view::View;
+use crate::heightmap::Profile;
+use crate::job::TipResult;
+use crate::tip::Tip;
+use eframe::egui::accesskit::Role;
+use eframe::egui::{
+    Color32, Rect, Sense, Stroke, StrokeKind, Ui, UiBuilder, WidgetInfo, pos2, vec2,
+};
+use egui_plot::{FilledArea, HLine, Line, LineStyle, Plot, PlotPoints};
+use std::sync::Arc;
+
+/// Curves of one profile of the tip.
+#[derive(Debug, Clone, Default, PartialEq)]
+pub struct TipCurves {
+    /// The tip.
+    pub tip: Vec<[f64; 2]>,
+    /// The band: position, blunter tip's height, sharper tip's height.
+    pub band: (Vec<f64>, Vec<f64>, Vec<f64>),
+    /// The fitted sphere, to its fit depth.
+    pub sphere: Vec<[f64; 2]>,
+}
+
+fn finite(profile: &Profile) -> Vec<[f64; 2]> {
+    profile
+        .position_nm
+        .iter()
+        .zip(&profile.height_nm)
+        .filter(|(_, z)| z.is_finite())
+        .map(|(x, z)| [*x, f64::from(*z)])
+        .collect()
+}
+
+/// The curves along an azimuth.
+pub fn tip_curves(found: &TipResult, azimuth_deg: f64) -> TipCurves {
+    let profile = |tip: &Tip| tip.profile(azimuth_deg);
+    let mut curves = TipCurves {
+        tip: finite(&profile(&found.tip)),
+        ..TipCurves::default()
+    };
+    if let Some(band) = &found.band {
+        let (sharp, blunt) = (profile(&band.sharper), profile(&band.blunter));
+        for ((x, low), high) in sharp
+            .position_nm
+            .iter()
+            .zip(&sharp.height_nm)
+            .zip(&blunt.height_nm)
+        {
+            if low.is_finite() && high.is_finite() {
+                curves.band.0.push(*x);
+                curves.band.1.push(f64::from(low.min(*high)));
+                curves.band.2.push(f64::from(low.max(*high)));
+            }
+        }
+    }
+    if let Some(r) = &found.read_out.apex_radius {
+        let depth = r.fit_depth_nm.min(r.value);
+        let reach = (2.0 * r.value * depth - depth * depth).max(0.0).sqrt();
+        curves.sphere = (-40..=40)
+            .map(|i| {
+                let x = reach * f64::from(i) / 40.0;
+                [x, (r.value * r.value - x * x).max(0.0).sqrt() - r.value]
+            })
+            .collect();
+    }
+    curves
+}
+
+/// State of the tip's view.
+#[derive(Default)]
+pub struct TipView {
+    pictures: Later<PairKey, Pair>,
+    curves: Option<(MapRef, [TipCurves; 2])>,
+}
+
+/// Paints the tip into the whole of `ui`.
+pub fn tip_ui(ui: &mut Ui, found: Option<&Arc<TipResult>>, why: &str, view: &mut TipView) {
+    let rect = ui.available_rect_before_wrap();
+    ui.allocate_rect(rect, Sense::hover());
+    let p = Palette::of(ui);
+    let Some(found) = found else {
+        ui.painter().rect_filled(rect, 0.0, p.well);
+        map_marks::note(ui, rect, why, p.faint);
+        ui.interact(rect, ui.scope_id().with("no tip"), Sense::hover())
+            .widget_info(|| WidgetInfo::labeled(Role::Label, true, why));
+        return;
+    };
+    let of = MapRef::Tip(Arc::clone(found));
+    if view.curves.as_ref().is_none_or(|(was, _)| *was != of) {
+        view.curves = Some((
+            of.clone(),
+            [tip_curves(found, 0.0), tip_curves(found, 90.0)],
+        ));
+    }
+    let side = (rect.width() * 0.46).min(rect.height() - 30.0).max(60.0);
+    let map = Rect::from_min_size(rect.min, vec2(side, side + 24.0));
+    let scale = Rect::from_min_size(pos2(map.right() + 10.0, map.top() + 24.0), vec2(74.0, side));
+    tip_map(ui, map, scale, found, of, view);
+    let plots = Rect::from_min_max(pos2(scale.right() + 8.0, rect.top()), rect.max);
+    let half = plots.height() / 2.0;
+    for (i, (name, meaning)) in [
+        ("Profile along x", "distance from the apex along x, nm"),
+        ("Profile along y", "distance from the apex along y, nm"),
+    ]
+    .into_iter()
+    .enumerate()
+    {
+        let top = plots.top() + i as f32 * half;
+        let area = Rect::from_min_size(pos2(plots.left(), top), vec2(plots.width(), half - 8.0));
+        if let Some((_, curves)) = &view.curves {
+            profile_ui(ui, area, name, meaning, &curves[i], found);
+        }
+    }
+}
+
+fn tip_map(ui: &Ui, map: Rect, scale: Rect, found: &TipResult, of: MapRef, view: &mut TipView) {
+    let p = Palette::of(ui);
+    let key = PairKey {
+        left: of,
+        right: None,
+        span: ColourSpan::Full,
+        one_scale: true,
+    };
+    let (ctx, wanted) = (ui.ctx().clone(), key.clone());
+    view.pictures
+        .want(ui.ctx(), &key, move || paint_pair(&ctx, &wanted));
+    ui.painter().text(
+        pos2(map.left(), map.top() + 11.0),
+        eframe::egui::Align2::LEFT_CENTER,
+        "Tip, seen along its axis, apex up",
+        eframe::egui::FontId::proportional(14.0),
+        p.text,
+    );
+    let pane = Rect::from_min_max(pos2(map.left(), map.top() + 24.0), map.max);
+    let painter = ui.painter().with_clip_rect(pane);
+    painter.rect_filled(pane, 0.0, p.well);
+    let [w, h] = found.tip.support_nm();
+    let seen = View::fit((w, h), pane.size());
+    if let Some(pair) = view.pictures.get(&key) {
+        let uv = Rect::from_min_max(pos2(0.0, 0.0), pos2(1.0, 1.0));
+        painter.image(
+            pair.left.texture.id(),
+            seen.map_rect(pane, (w, h)),
+            uv,
+            Color32::WHITE,
+        );
+        legend::scale_ui(ui, scale, pair.left.range, "z, nm");
+    }
+    map_marks::cross(&painter, seen.to_screen(pane, (w / 2.0, h / 2.0)));
+    map_marks::scale_bar(&painter, pane, seen.nm_per_point);
+    ui.painter()
+        .rect_stroke(pane, 0.0, Stroke::new(1.0, p.line), StrokeKind::Outside);
+    let (rows, columns) = found.tip.shape().dim();
+    ui.interact(pane, ui.scope_id().with("tip map"), Sense::hover())
+        .widget_info(|| {
+            let text = format!(
+                "Tip map, {columns} by {rows} pixels, down to {} nm below the apex",
+                format::significant(found.tip.depth_nm(), 3)
+            );
+            WidgetInfo::labeled(Role::Image, true, text)
+        });
+}
+
+fn profile_ui(
+    ui: &mut Ui,
+    rect: Rect,
+    name: &str,
+    meaning: &str,
+    curves: &TipCurves,
+    found: &TipResult,
+) {
+    let p = Palette::of(ui);
+    ui.painter().text(
+        pos2(rect.left() + 6.0, rect.top() + 11.0),
+        eframe::egui::Align2::LEFT_CENTER,
+        name,
+        eframe::egui::FontId::proportional(14.0),
+        p.text,
+    );
+    let area = Rect::from_min_max(pos2(rect.left(), rect.top() + 24.0), rect.max);
+    let mut child = ui.new_child(UiBuilder::new().max_rect(area).id_salt(name));
+    let plot = Plot::new(name)
+        .data_aspect(1.0)
+        .allow_scroll(false)
+        .allow_boxed_zoom(false)
+        .x_axis_label(meaning)
+        .y_axis_label("height, nm")
+        .grid_color(p.line)
+        .label_formatter(|_| None)
+        .legend(
+            egui_plot::Legend::default()
+                .position(egui_plot::Corner::RightTop)
+                .follow_insertion_order(true)
+                .background_alpha(0.85),
+        );
+    let response = plot.show(&mut child, |plot| {
+        let (xs, low, high) = &curves.band;
+        if !xs.is_empty() {
+            plot.add(
+                FilledArea::new("band", xs, low, high)
+                    .fill_color(p.ghost.gamma_multiply(0.30))
+                    .allow_hover(false),
+            );
+        }
+        if let Some(depth) = found.exercised_depth_nm {
+            plot.hline(
+                HLine::new("exercised depth", -depth)
+                    .color(p.warn)
+                    .style(LineStyle::dashed_loose())
+                    .width(1.0)
+                    .allow_hover(false),
+            );
+        }
+        plot.line(
+            Line::new("tip", PlotPoints::new(curves.tip.clone()))
+                .color(p.corrected)
+                .width(2.2)
+                .allow_hover(false),
+        );
+        if !curves.sphere.is_empty() {
+            plot.line(
+                Line::new("apex radius", PlotPoints::new(curves.sphere.clone()))
+                    .color(p.scanned)
+                    .style(LineStyle::dashed_dense())
+                    .width(1.8)
+                    .allow_hover(false),
+            );
+        }
+    });
+    response.response.widget_info(|| {
+        let reach = curves.tip.last().map_or(0.0, |l| l[0]);
+        let text = format!(
+            "{name}, {} nm to either side, {} nm deep",
+            format::significant(reach, 3),
+            format::significant(found.tip.depth_nm(), 3)
+        );
+        WidgetInfo::labeled(Role::Image, true, text)
+    });
+}
+
+#[cfg(test)]
+mod tests {
+    use super::super::invented;
+    use super::*;
+    use crate::tip::Band;
+
+    #[test]
+    fn curves_start_at_the_apex_and_the_sphere_fits() {
+        let outcome = invented::outcome();
+        let found = outcome.tip.as_ref().unwrap();
+        let curves = tip_curves(found, 0.0);
+        let apex = curves.tip.iter().map(|p| p[1]).fold(f64::MIN, f64::max);
+        assert_eq!(apex, 0.0);
+        let lowest = curves.sphere.iter().map(|p| p[1]).fold(0.0, f64::min);
+        let r = found.read_out.apex_radius.unwrap();
+        assert!((lowest + r.fit_depth_nm).abs() < 1e-9);
+        assert!(curves.band.0.is_empty());
+    }
+
+    #[test]
+    fn the_band_encloses_the_tip() {
+        let outcome = invented::outcome();
+        let mut found = (**outcome.tip.as_ref().unwrap()).clone();
+        let scaled = |f: f32| Tip::new(found.tip.shape().mapv(|p| p * f), found.tip.pitch());
+        found.band = Some(Band {
+            sharper: scaled(1.1).unwrap(),
+            blunter: scaled(0.9).unwrap(),
+        });
+        let curves = tip_curves(&found, 90.0);
+        for (((x, low), high), tip) in curves
+            .band
+            .0
+            .iter()
+            .zip(&curves.band.1)
+            .zip(&curves.band.2)
+            .zip(&curves.tip)
+        {
+            assert_eq!(*x, tip[0]);
+            assert!(low <= &tip[1] && &tip[1] <= high);
+        }
+    }
+}
