@@ -15,18 +15,20 @@ use truewidth::virtual_scan::{
 };
 
 type Shape = Box<dyn Fn(f64, f64) -> f64 + Sync>;
+type ShapeOf = fn() -> Shape;
+type SceneOf = fn(u64, f64) -> Scene;
 
 /// One row of the table.
 struct Cell {
     name: &'static str,
     px: f64,
     noise: f64,
-    tip: fn() -> Shape,
+    tip: ShapeOf,
     /// What the scan identifies: the tip joined with its sharpest feature.
-    identified: fn() -> Shape,
+    identified: ShapeOf,
     /// Radius of it, `None` where a radius must be refused.
     radius: Option<f64>,
-    surface: fn(u64, f64) -> Scene,
+    surface: SceneOf,
     /// Limits: normal RMS nm, radius error.
     limits: Option<(f64, f64)>,
 }
@@ -78,7 +80,6 @@ fn rough(seed: u64, px: f64) -> Scene {
 }
 
 /// Radius of curvature of the rough surface's summits within the scan, nm, sharpest first.
-#[allow(dead_code)]
 fn summit_radii(scene: &Scene, px: f64) -> Vec<f64> {
     let n = 2 * N;
     let h = px / 2.0;
@@ -276,7 +277,7 @@ fn cells() -> Vec<Cell> {
             limits: Some((0.6, 0.10)),
         });
     }
-    let shapes: [(&str, fn() -> Shape, fn() -> Shape); 3] = [
+    let shapes: [(&str, ShapeOf, ShapeOf); 3] = [
         ("pyramid", pyramid, pyramid_and_spike),
         ("worn", worn, worn_and_spike),
         ("double", double, double_and_spike),
@@ -295,7 +296,7 @@ fn cells() -> Vec<Cell> {
             });
         }
     }
-    let refused: [(&str, fn(u64, f64) -> Scene); 4] = [
+    let refused: [(&str, SceneOf); 4] = [
         ("lines", wide_lines),
         ("blocks", blocks),
         ("flat", flat),

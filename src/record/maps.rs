@@ -174,7 +174,13 @@ pub fn height_maps(outcome: &Outcome, section: Option<&Section>) -> Result<Optio
         let small = reduce(map.heights(), MOST_PIXELS, scale);
         let picture = height_png(small.view(), scale)?;
         panel.image(&mut svg, "map", &data_address(&picture));
-        marks(&mut svg, &panel, outcome, section);
+        // On the scan alone: the corrected walls stay free of lines.
+        if i == 0 {
+            marks(&mut svg, &panel, outcome);
+        }
+        if let Some(Section { from, to, .. }) = section {
+            panel.line(&mut svg, "cut", [from.0, from.1, to.0, to.1]);
+        }
         panel.scale_bar(&mut svg);
         frame(&mut svg, panel.x, panel.y, "x", "y");
     }
@@ -184,15 +190,11 @@ pub fn height_maps(outcome: &Outcome, section: Option<&Section>) -> Result<Optio
     Ok(Some(svg))
 }
 
-fn marks(svg: &mut String, panel: &Panel, outcome: &Outcome, section: Option<&Section>) {
+fn marks(svg: &mut String, panel: &Panel, outcome: &Outcome) {
     for dimension in outcome.dimensions.iter().flat_map(|all| all.iter()) {
         for mark in &dimension.marks {
             panel.line(svg, "mark", *mark);
         }
-    }
-    if let Some(section) = section {
-        let (a, b) = (section.from, section.to);
-        panel.line(svg, "cut", [a.0, a.1, b.0, b.1]);
     }
 }
 

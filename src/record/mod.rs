@@ -39,6 +39,7 @@ mod json;
 mod maps;
 mod raster;
 mod report;
+mod results;
 mod sections;
 mod svg;
 mod table;

@@ -1,10 +1,8 @@
 //! report.html: one file, no reference outside it, no script; well-formed as XML.
 
-use super::format::{
-    Line, about, decimals_of, fixed, numbered_flags, numbers, percent, plain, reading_unit, with_u,
-    with_unit,
-};
+use super::format::{about, decimals_of, fixed, percent, plain};
 use super::maps::{height_maps, reduction_note, reliability_map};
+use super::results::{budgets, greatest_change, results};
 use super::sections::{Section, surface_section, tip_figure};
 use super::svg::{escape, minus};
 use super::table::{angle_words, origin, radius_words};
@@ -12,7 +10,6 @@ use crate::dimensions::{Dimension, Status};
 use crate::error::Result;
 use crate::heightmap::HeightMap;
 use crate::job::{Job, Outcome, TipFrom, TipResult};
-use crate::uncertainty::{Component, Distribution};
 use std::fmt::Write;
 
 /// The page; `time` is the time stamp it carries.
@@ -46,11 +43,13 @@ pub fn page(job: &Job, outcome: &Outcome, time: &str) -> Result<String> {
     Ok(html)
 }
 
-fn dimensions(outcome: &Outcome) -> impl Iterator<Item = &Dimension> {
+/// All results of `outcome`.
+pub fn dimensions(outcome: &Outcome) -> impl Iterator<Item = &Dimension> {
     outcome.dimensions.iter().flat_map(|all| all.iter())
 }
 
-fn list(html: &mut String, tag: &str, items: impl IntoIterator<Item = String>) {
+/// A list of that tag; `items` are already escaped.
+pub fn list(html: &mut String, tag: &str, items: impl IntoIterator<Item = String>) {
     let _ = writeln!(html, "<{tag}>");
     for item in items {
         let _ = writeln!(html, "<li>{item}</li>");
@@ -113,115 +112,6 @@ fn summary(html: &mut String, outcome: &Outcome) {
         list(html, "ul", outcome.warnings.iter().map(|w| escape(w)));
     }
     html.push_str("</section>\n");
-}
-
-/// Where the tip mattered most, relative to the value: one sentence.
-fn greatest_change(outcome: &Outcome) -> Option<String> {
-    let change = |d: &Dimension| {
-        let (scanned, corrected) = (d.as_scanned?.value, d.corrected?.value?);
-        let part = ((scanned - corrected) / corrected).abs();
-        part.is_finite().then_some((part, scanned - corrected))
-    };
-    let (dimension, (_, change)) = dimensions(outcome)
-        .filter_map(|d| Some((d, change(d)?)))
-        .max_by(|a, b| a.1.0.total_cmp(&b.1.0))?;
-    let line = Line::of(dimension);
-    let u = dimension.corrected.and_then(|c| c.u).unwrap_or(f64::NAN);
-    let sign = if change < 0.0 { "+" } else { "" };
-    Some(format!(
-        "The correction matters most for {}, {}: as scanned {}, corrected {}, a change of {}.",
-        escape(&line.name),
-        escape(&line.quantity),
-        minus(&line.as_scanned),
-        minus(&line.corrected),
-        sign.to_owned() + &minus(&with_u(-change, u, dimension.unit).0)
-    ))
-}
-
-fn status_mark(status: &str) -> String {
-    match status {
-        "–" => "–".to_owned(),
-        word => format!("<span class=\"mk {word}\"></span>{word}"),
-    }
-}
-
-fn results(html: &mut String, outcome: &Outcome) {
-    html.push_str("<section>\n<h2>Dimensions</h2>\n");
-    if dimensions(outcome).next().is_none() {
-        html.push_str("<p>None was asked for.</p>\n</section>\n");
-        return;
-    }
-    html.push_str(
-        "<table>\n<thead><tr><th scope=\"col\">Dimension</th>\
-         <th scope=\"col\" class=\"n\">As scanned</th><th scope=\"col\" class=\"n\">Corrected</th>\
-         <th scope=\"col\" class=\"n\"><abbr title=\"expanded uncertainty, k times u\">U</abbr></th>\
-         <th scope=\"col\" class=\"n\"><abbr title=\"coverage factor\">k</abbr></th>\
-         <th scope=\"col\" class=\"n\">95 % interval</th><th scope=\"col\">Status</th></tr></thead>\n\
-         <tbody>\n",
-    );
-    let all = outcome.dimensions.as_deref().map_or(&[][..], Vec::as_slice);
-    let (flags, carried) = numbered_flags(all);
-    for (dimension, carried) in all.iter().zip(carried) {
-        let line = Line::of(dimension);
-        let flagged = match carried.as_slice() {
-            [] => String::new(),
-            list => format!("<br /><span class=\"quiet\">flags {}</span>", numbers(list)),
-        };
-        let _ = writeln!(
-            html,
-            "<tr><th scope=\"row\">{}<br /><span class=\"quiet\">{}</span></th>\
-             <td class=\"n\">{}<br /><span class=\"quiet\">u = {}</span></td>\
-             <td class=\"n\">{}<br /><span class=\"quiet\">u = {}</span></td>\
-             <td class=\"n\">{}</td><td class=\"n\">{}</td><td class=\"n\">{}</td>\
-             <td class=\"status\">{}{flagged}</td></tr>",
-            escape(&line.name),
-            escape(&line.quantity),
-            escape(&minus(&line.as_scanned)),
-            escape(&line.as_scanned_u),
-            escape(&minus(&line.corrected)),
-            escape(&line.u),
-            escape(&line.expanded),
-            line.k,
-            escape(&line.interval.replace('-', "\u{2212}").replace("..", "to")),
-            status_mark(line.status)
-        );
-    }
-    html.push_str(
-        "</tbody>\n</table>\n<p class=\"quiet\">u: standard uncertainty; U = k u: expanded \
-         uncertainty. The interval encloses the true value with 95 % coverage under the assumptions \
-         below, one-sided effects of the tip included; its ends are rounded outward. A dash stands \
-         for what could not be had; the flags say why.</p>\n",
-    );
-    if !flags.is_empty() {
-        html.push_str("<h3>Flags</h3>\n");
-        list(html, "ol class=\"flags\"", flags.iter().map(|f| escape(f)));
-    }
-    html.push_str("<h3>What the figures assume</h3>\n");
-    list(html, "ul", assumptions(all));
-    html.push_str("</section>\n");
-}
-
-/// Each kind's assumptions and source once, with the quantities they stand for.
-fn assumptions(dimensions: &[Dimension]) -> Vec<String> {
-    let mut texts: Vec<(&str, Vec<&str>)> = Vec::new();
-    for dimension in dimensions.iter().filter(|d| !d.assumptions.is_empty()) {
-        let quantity = dimension.quantity.as_str();
-        match texts.iter_mut().find(|t| t.0 == dimension.assumptions) {
-            Some((_, quantities)) if quantities.contains(&quantity) => {}
-            Some((_, quantities)) => quantities.push(quantity),
-            None => texts.push((dimension.assumptions, vec![quantity])),
-        }
-    }
-    texts
-        .into_iter()
-        .map(|(text, quantities)| {
-            format!(
-                "<strong>{}</strong>: {}",
-                escape(&quantities.join(", ")),
-                escape(text)
-            )
-        })
-        .collect()
 }
 
 fn facts(html: &mut String, rows: &[(&str, String)]) {
@@ -426,10 +316,19 @@ fn figures(html: &mut String, job: &Job, outcome: &Outcome) -> Result<()> {
             if outcome.surface.is_none() {
                 caption.push_str("There is no corrected map because there is no tip. ");
             }
-            caption.push_str(
-                "Dark lines: where the dimensions were taken. Dashed: the section below. \
-                 Hatched: voids. ",
-            );
+            if dimensions(outcome).any(|d| !d.marks.is_empty()) {
+                caption.push_str("Dark lines: where the dimensions were taken. ");
+            }
+            if section.is_some() {
+                caption.push_str("Dashed: the section below. ");
+            }
+            let maps = [
+                outcome.level.as_deref().map(|l| &l.map),
+                outcome.surface.as_deref().map(|s| &s.surface),
+            ];
+            if maps.into_iter().flatten().any(|m| m.void_count() > 0) {
+                caption.push_str("Hatched: voids. ");
+            }
             if let Some(level) = outcome.level.as_deref() {
                 caption.push_str(&reduction_note(&level.map).unwrap_or_default());
             }
@@ -483,7 +382,9 @@ fn tip_section(html: &mut String, outcome: &Outcome) -> Result<()> {
              1.6 times that depth. ",
         );
     }
-    caption.push_str("Hatched: outside the tip.");
+    if tip.tip.shape().iter().any(|p| p.is_infinite()) {
+        caption.push_str("Hatched: outside the tip.");
+    }
     figure(html, &tip_figure(tip)?, &caption);
     facts(html, &tip_facts(tip));
     if !tip.diagnosis.is_empty() {
@@ -549,93 +450,6 @@ fn tip_facts(tip: &TipResult) -> Vec<(&'static str, String)> {
         },
     ));
     rows
-}
-
-fn budgets(html: &mut String, outcome: &Outcome) {
-    if dimensions(outcome).all(|d| d.budget.is_empty()) {
-        return;
-    }
-    html.push_str(
-        "<section>\n<h2>Uncertainty budgets</h2>\n<p class=\"quiet\">The input's standard uncertainty \
-         is in the input's own unit; times the sensitivity it is the contribution to the result.</p>\n",
-    );
-    for dimension in dimensions(outcome).filter(|d| !d.budget.is_empty()) {
-        budget(html, dimension);
-    }
-    html.push_str("</section>\n");
-}
-
-fn budget(html: &mut String, dimension: &Dimension) {
-    let line = Line::of(dimension);
-    let contribution = |c: &Component| (c.u * c.sensitivity).abs();
-    let squares: f64 = dimension
-        .budget
-        .iter()
-        .map(|c| contribution(c).powi(2))
-        .sum();
-    let largest = [
-        dimension.as_scanned.map(|v| v.value),
-        dimension.corrected.and_then(|c| c.value),
-    ];
-    let largest = largest
-        .iter()
-        .flatten()
-        .fold(0.0, |a: f64, b| a.max(b.abs()));
-    let (factor, unit) = reading_unit(dimension.unit, largest);
-    let combined = dimension
-        .corrected
-        .and_then(|c| c.u)
-        .or(dimension.as_scanned.and_then(|v| v.u));
-    let show = |u: f64| {
-        let decimals = decimals_of(u * factor).unwrap_or(0);
-        escape(&with_unit(&fixed(u * factor, decimals), &unit))
-    };
-    let _ = writeln!(
-        html,
-        "<details open=\"open\">\n<summary>{}, {}</summary>\n<table>\n<thead><tr>\
-         <th scope=\"col\">Source</th><th scope=\"col\" class=\"n\">u of the input</th>\
-         <th scope=\"col\">Distribution</th><th scope=\"col\" class=\"n\">Sensitivity</th>\
-         <th scope=\"col\" class=\"n\"><abbr title=\"degrees of freedom\">ν</abbr></th>\
-         <th scope=\"col\" class=\"n\">Contribution</th><th scope=\"col\" class=\"n\">Share of u²</th>\
-         </tr></thead>\n<tbody>",
-        escape(&line.name),
-        escape(&line.quantity)
-    );
-    for c in &dimension.budget {
-        let share = contribution(c).powi(2) / squares;
-        let _ = writeln!(
-            html,
-            "<tr><th scope=\"row\">{}</th><td class=\"n\">{}</td><td>{}</td><td class=\"n\">{}</td>\
-             <td class=\"n\">{}</td><td class=\"n\">{}</td><td class=\"n\">{}</td></tr>",
-            escape(&c.source),
-            about(c.u, ""),
-            distribution(c.distribution),
-            minus(&about(c.sensitivity, "")),
-            c.degrees_of_freedom
-                .filter(|f| f.is_finite())
-                .map_or_else(|| "∞".to_owned(), |f| fixed(f, 0)),
-            show(contribution(c)),
-            percent(share)
-        );
-    }
-    if let Some(u) = combined {
-        let _ = writeln!(
-            html,
-            "<tr class=\"sum\"><th scope=\"row\" colspan=\"5\">combined standard uncertainty</th>\
-             <td class=\"n\">{}</td><td></td></tr>",
-            show(u)
-        );
-    }
-    html.push_str("</tbody>\n</table>\n</details>\n");
-}
-
-fn distribution(distribution: Distribution) -> &'static str {
-    match distribution {
-        Distribution::Normal => "normal",
-        Distribution::Rectangular => "rectangular",
-        Distribution::Triangular => "triangular",
-        Distribution::OneSided => "one-sided",
-    }
 }
 
 fn settings(html: &mut String, job: &Job) {

@@ -135,7 +135,7 @@ pub fn surface_section(outcome: &Outcome, section: &Section) -> Option<String> {
     };
     let mut svg = open(
         PAGE,
-        330.0,
+        312.0,
         &format!("Section {}: height as scanned and corrected", section.place),
     );
     let _ = write!(
@@ -231,7 +231,9 @@ fn strip(svg: &mut String, surface: &SurfaceResult, section: &Section, x: Axis) 
 /// The tip as a map and its profiles along x and y with the band shaded.
 pub fn tip_figure(tip: &TipResult) -> Result<String> {
     let shape = tip.tip.shape();
-    let deepest = tip.tip.depth_nm();
+    // As deep as the profiles go: the corners of the grid lie deeper, and would only flatten them.
+    let curves = [0.0, 90.0].map(|azimuth| tip_curve(&tip.tip, azimuth));
+    let deepest = range(curves.iter().map(Vec::as_slice)).map_or(0.0, |(low, _)| -low);
     // What lies much deeper than was exercised says nothing: it would only flatten the rest.
     let shown = match tip.exercised_depth_nm {
         Some(depth) if depth > 0.0 => deepest.min(1.6 * depth),

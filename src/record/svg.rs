@@ -60,11 +60,10 @@ pub fn tick_labels(ticks: &[f64]) -> Vec<String> {
         .windows(2)
         .map(|t| t[1] - t[0])
         .fold(f64::NAN, f64::min);
-    let decimals = if step.is_finite() && step > 0.0 {
-        (-(step * (1.0 + 1e-9)).log10().floor()).max(0.0) as i32
-    } else {
-        1
-    };
+    if !(step.is_finite() && step > 0.0) {
+        return ticks.iter().map(|t| minus(&xy(*t))).collect();
+    }
+    let decimals = (-(step * (1.0 + 1e-9)).log10().floor()).max(0.0) as i32;
     ticks.iter().map(|t| minus(&fixed(*t, decimals))).collect()
 }
 
@@ -130,7 +129,7 @@ pub fn frame(svg: &mut String, x: Axis, y: Axis, x_name: &str, y_name: &str) {
     let marks = ticks(
         x.low * factor,
         x.high * factor,
-        ((right - left) / 70.0).max(2.0),
+        ((right - left) / 60.0).max(3.0),
     );
     for (value, label) in marks.iter().zip(tick_labels(&marks)) {
         let at = xy(x.at(value / factor));
@@ -166,7 +165,7 @@ pub fn frame(svg: &mut String, x: Axis, y: Axis, x_name: &str, y_name: &str) {
             xy(at + 3.5)
         );
     }
-    let (cx, cy) = (left - 38.0, (top + bottom) / 2.0);
+    let (cx, cy) = (left - 44.0, (top + bottom) / 2.0);
     let _ = write!(
         svg,
         r#"<text class="mid name" transform="translate({} {}) rotate(-90)">{} / {unit}</text>"#,
@@ -216,6 +215,7 @@ mod tests {
             ["\u{2212}0.5", "0.0", "0.5"]
         );
         assert_eq!(tick_labels(&[0.0, 200.0]), ["0", "200"]);
+        assert_eq!(tick_labels(&[0.0]), ["0"]);
     }
 
     #[test]

@@ -77,7 +77,8 @@ pub(super) fn further_apices(tip: &Tip, support: &Array2<u32>, least: f64) -> Ve
     for &(r, c) in &cells {
         let mut around: Vec<usize> = (r.saturating_sub(1)..(r + 2).min(rows))
             .flat_map(|i| (c.saturating_sub(1)..(c + 2).min(columns)).map(move |j| (i, j)))
-            .filter_map(|at| (hill[at] != usize::MAX).then(|| root(&parent, hill[at])))
+            .filter(|&at| hill[at] != usize::MAX)
+            .map(|at| root(&parent, hill[at]))
             .collect();
         around.sort_unstable();
         around.dedup();

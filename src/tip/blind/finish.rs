@@ -29,11 +29,14 @@ pub(super) fn finish(
     progress: &Progress,
 ) -> Result<Estimate> {
     let left = noise * smooth::gain(bound.smoothing);
-    let polished = if settings.method == Method::Auto {
+    let px = (scan.pitch().x * scan.pitch().y).sqrt();
+    // Corners of plateaus wider than the window are many and show no tip's apex.
+    let plateaus = 5 * bound.found.guarded > 2 * bound.found.candidates;
+    let polished = if settings.method == Method::Auto && !plateaus {
         let input = polish::Input {
             scan: scan.heights(),
             noise,
-            px: (scan.pitch().x * scan.pitch().y).sqrt(),
+            px,
             smoothing: bound.smoothing,
             smooth_noise: left,
         };
@@ -42,8 +45,8 @@ pub(super) fn finish(
         None
     };
     match polished {
-        // Plateau corners and the like do not show one and the same tip.
-        Some(p) if p.scale <= 3.0 * noise + AGREE_PX * (scan.pitch().x * scan.pitch().y).sqrt() => {
+        // Features must show one and the same tip.
+        Some(p) if p.scale <= 3.0 * noise + AGREE_PX * px => {
             from_polished(scan, noise, settings, &bound, &p)
         }
         _ => from_bound(scan, noise, settings, &bound, progress),
@@ -80,14 +83,7 @@ fn from_polished(
     if let Some((r, u)) = radius_u {
         height_u = height_u.max(r.fit_depth_nm * u / r.value);
     }
-    let band = band(
-        &tip,
-        &support,
-        &scatter,
-        &bound.found.shape,
-        noise * 0.3,
-        px,
-    )?;
+    let band = band(&tip, &support, &scatter, &bound.found.shape, noise * 0.3)?;
     let features = polished.features.len();
     let further = further_apices(&tip, &support, (5.0 * height_u).max(0.25 * px));
     if let Some(r) = settings.feature_radius_nm.filter(|r| *r > 0.0) {
@@ -135,7 +131,8 @@ fn from_polished(
         .collect();
     Ok(Estimate {
         tip,
-        band: Some(band),
+        // Fewer features do not show how far they scatter.
+        band: (features >= LEAST_FEATURES).then_some(band),
         threshold_nm: bound.threshold,
         smoothing_px: bound.smoothing,
         exercised_depth_nm: exercised,
@@ -271,7 +268,7 @@ impl Centring {
         let here = found.look(shape, centre);
         let error = polished.scale / f64::from(polished.support[centre].max(1.0)).sqrt();
         let apart = (here + fit.apex_depth).abs();
-        found.apex = if apart <= 3.0 * error + 0.01 * px {
+        found.apex = if apart <= 4.5 * error + 0.01 * px {
             -fit.apex_depth
         } else {
             here
@@ -386,7 +383,6 @@ fn band(
     scatter: &Array2<f64>,
     bound: &Array2<f32>,
     left: f64,
-    px: f64,
 ) -> Result<Band> {
     let shape = tip.shape();
     let (rows, columns) = shape.dim();
@@ -398,12 +394,23 @@ fn band(
         let (c0, c1) = (c.saturating_sub(1), (c + 1).min(columns - 1));
         along((r1, c), (r0, c), (r1 - r0) as f64).hypot(along((r, c1), (r, c0), (c1 - c0) as f64))
     };
-    let _ = px;
+    // What interpolation between cells can err by: an eighth of the second differences.
+    let bend = |r: usize, c: usize| {
+        let p = |i: usize, j: usize| f64::from(shape[(i, j)]);
+        let mut sum = 0.0;
+        if r > 0 && r + 1 < rows {
+            sum += (p(r - 1, c) - 2.0 * p(r, c) + p(r + 1, c)).abs() / 8.0;
+        }
+        if c > 0 && c + 1 < columns {
+            sum += (p(r, c - 1) - 2.0 * p(r, c) + p(r, c + 1)).abs() / 8.0;
+        }
+        sum
+    };
     let mut sharper = Array2::from_elem((rows, columns), f32::NEG_INFINITY);
     let mut blunter = shape.to_owned();
     for ((r, c), &p) in shape.indexed_iter() {
         let place = PLACE_PX * slope(r, c);
-        let half = (2.0 * scatter[(r, c)].hypot(place).hypot(left)) as f32;
+        let half = (2.0 * scatter[(r, c)].hypot(place).hypot(left) + bend(r, c)) as f32;
         if support[(r, c)] as f32 >= polish::LEAST_SUPPORT {
             sharper[(r, c)] = (p - half).min(0.0);
             blunter[(r, c)] = (p + half).min(0.0);

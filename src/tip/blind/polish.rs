@@ -63,9 +63,13 @@ pub(super) struct Input<'a> {
 }
 
 /// Rounds of finding contacts and fitting.
-const ROUNDS: usize = 4;
+const ROUNDS: usize = 3;
 /// Sweeps over features and tip within a round.
 const SWEEPS: usize = 14;
+/// Features fitted at most.
+const MOST_FEATURES: usize = 200;
+/// Sweeps in which features gather pixels anew.
+const GROWTH: [usize; 4] = [2, 4, 6, 9];
 /// Smoothing that takes noise but leaves the flanks, pixels.
 const LIGHT_PX: f64 = 1.0;
 /// How far features may lie beside their fitted places, pixels.
@@ -110,7 +114,7 @@ pub(super) fn polish<'a>(
             } else {
                 (3.5, SLACK_PX)
             };
-            if (2..SWEEPS - 3).contains(&sweep) {
+            if GROWTH.contains(&sweep) {
                 fit.extend(&light, &features, &tip);
                 fit.grow(&light, &level, &mut features, &core);
             }
@@ -229,6 +233,9 @@ fn features(input: &Input, offsets: &Array2<[i16; 2]>, tip: &Array2<f32>) -> Vec
         f.pixels.len() >= LEAST_CONTACTS / 2
             && reach(f, half, |i, j| -f64::from(tip[(i, j)])) > 5.0 * input.smooth_noise
     });
+    // More features cost time and tell little; those with the most contacts show the most.
+    features.sort_by_key(|f| (std::cmp::Reverse(f.pixels.len()), f.pixels[0]));
+    features.truncate(MOST_FEATURES);
     features
 }
 
@@ -312,6 +319,16 @@ fn interpolate(map: &Array2<f32>, [r, c]: [f64; 2]) -> Option<f64> {
     value.is_finite().then_some(value)
 }
 
+/// Slope by central differences over two cells to each side (noise matters here), nm per cell.
+fn slope_at(tip: &Array2<f64>, r: usize, c: usize) -> f64 {
+    let (rows, columns) = tip.dim();
+    let (r0, r1) = (r.saturating_sub(2), (r + 2).min(rows - 1));
+    let (c0, c1) = (c.saturating_sub(2), (c + 2).min(columns - 1));
+    let down = (tip[(r1, c)] - tip[(r0, c)]) / (r1 - r0).max(1) as f64;
+    let along = (tip[(r, c1)] - tip[(r, c0)]) / (c1 - c0).max(1) as f64;
+    down.hypot(along)
+}
+
 /// Weighted local quadratic over a square of half-width `reach` cells (Savitzky and Golay, Anal.
 /// Chem. 36, 1627 (1964), in two dimensions; from memory): takes noise, keeps curvature. Cells
 /// without weight stay.
@@ -328,6 +345,11 @@ fn local_quadratic(
         .map(|k| {
             let (r, c) = (k / columns, k % columns);
             if weight[(r, c)] < 0.5 {
+                return tip[(r, c)];
+            }
+            // On the flank height errors are small along the normal, and curvature changes fast.
+            let steep = slope_at(tip, r, c) * per_px;
+            if steep >= 0.8 {
                 return tip[(r, c)];
             }
             let mut normal = nalgebra::SMatrix::<f64, 6, 6>::zeros();
@@ -353,8 +375,6 @@ fn local_quadratic(
             let Some(fit) = normal.cholesky().map(|factor| factor.solve(&right)) else {
                 return tip[(r, c)];
             };
-            // On the flank height errors are small along the normal, and curvature changes fast.
-            let steep = fit[1].hypot(fit[2]) * per_px;
             // A change beyond the noise is shape.
             if fit[0].abs() > 3.0 * noise / f64::from(weight[(r, c)]).sqrt() {
                 return tip[(r, c)];
@@ -482,16 +502,21 @@ impl<'a> Fit<'a> {
     fn means(
         &self,
         features: &[Feature],
-        keep: impl Fn(usize) -> bool,
+        keep: impl Fn(usize) -> bool + Sync,
     ) -> (Array2<f64>, Array2<f32>) {
         let mut sum = Array2::<f64>::zeros(self.tip.dim());
         let mut weight = Array2::<f32>::zeros(self.tip.dim());
-        for (_, f) in features.iter().enumerate().filter(|(k, _)| keep(*k)) {
-            for (corner, e, _) in self.residuals(f) {
-                for (at, w) in corner.weights() {
-                    sum[at] += w * e;
-                    weight[at] += w as f32;
-                }
+        let residuals: Vec<_> = features
+            .par_iter()
+            .enumerate()
+            .filter(|(k, _)| keep(*k))
+            .map(|(_, f)| self.residuals(f))
+            .collect();
+        // Summed in feature order: the same bits for any number of threads.
+        for (corner, e, _) in residuals.into_iter().flatten() {
+            for (at, w) in corner.weights() {
+                sum[at] += w * e;
+                weight[at] += w as f32;
             }
         }
         (sum, weight)
