@@ -92,6 +92,8 @@ pub struct App {
     error_told: bool,
     title: String,
     closing: bool,
+    /// A question that was put away without an answer.
+    pub(super) unanswered: Option<Question>,
 }
 
 impl App {
@@ -140,6 +142,7 @@ impl App {
             error_told: true,
             title: String::new(),
             closing: false,
+            unanswered: None,
         };
         app.desk.reliability = app.settings.reliability;
         app.apply_theme(app.settings.theme);
@@ -243,6 +246,7 @@ impl App {
     fn run(&mut self) {
         self.state += 1;
         self.error_told = false;
+        self.unanswered = None;
         if let (Some(worker), Some(opened)) = (&mut self.worker, &self.opened) {
             worker.order(opened.job());
         }
@@ -310,9 +314,9 @@ impl App {
             let job = opened.job();
             Question::about(error, &job.scan_path(), &job.file.scan)
         });
-        self.message = Some(Message::of(error));
-        if let Some(question) = question {
-            self.dialog = Dialog::Question(question);
+        match question {
+            Some(question) => self.dialog = Dialog::Question(question),
+            None => self.message = Some(Message::of(error)),
         }
     }
 
@@ -629,7 +633,19 @@ impl App {
                 self.keep_settings();
             }
             Command::Help(true) => self.dialog = Dialog::Help,
-            Command::Help(false) | Command::Stay => self.dialog = Dialog::None,
+            Command::Help(false) => self.dialog = Dialog::None,
+            Command::Stay => {
+                if let Dialog::Question(question) =
+                    std::mem::replace(&mut self.dialog, Dialog::None)
+                {
+                    self.unanswered = Some(question);
+                }
+            }
+            Command::Ask => {
+                if let Some(question) = self.unanswered.take() {
+                    self.dialog = Dialog::Question(question);
+                }
+            }
             Command::Dismiss => self.message = None,
             _ => {}
         }

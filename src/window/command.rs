@@ -78,6 +78,8 @@ pub enum Command {
     Forget,
     /// Close without saving.
     CloseAnyway,
+    /// Ask again what the file does not say.
+    Ask,
     /// Do not close after all, or close the dialog at hand.
     Stay,
 }

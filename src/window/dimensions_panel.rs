@@ -1,8 +1,8 @@
 //! The panel of the dimensions: what is measured, and the chosen one's settings.
 
 use super::command::Command;
-use super::fields::{caution, choice_row, heading, length_row, parsed_row, remark, text_row};
-use super::panels::{Panel, request_title};
+use super::fields::{choice_row, heading, length_row, parsed_row, remark, text_row};
+use super::panels::{Panel, cautions, request_title};
 use super::state::{PLACEABLE, Tool, kind_name};
 use crate::dimensions::{Axis, Find, Kind, Request};
 use crate::heightmap::Region;
@@ -61,13 +61,7 @@ pub fn dimensions_ui(
         heading(ui, "The chosen one");
         ui.push_id(("request", i), |ui| request_ui(ui, panel, i, request, out));
     }
-    if panel.job.calibration.is_none() && !requests.is_empty() {
-        ui.add_space(6.0);
-        caution(
-            ui,
-            "No calibration of the axes is stated, so none is in the budgets. State it under Record.",
-        );
-    }
+    cautions(ui, panel);
 }
 
 /// A button that takes the tool placing `kind`.

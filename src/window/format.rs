@@ -84,17 +84,39 @@ pub fn interval(value: Option<CorrectedValue>) -> String {
     }
 }
 
+/// A unit for the numbers on an axis.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct Unit {
+    /// Nanometres in one.
+    pub nm: f64,
+    /// Its sign.
+    pub sign: &'static str,
+}
+
+/// The unit in which lengths of about this size have a few digits before the point.
+pub fn unit_for(nm: f64) -> Unit {
+    let (nm, sign) = match nm.abs() {
+        a if a >= 1e10 => (1e9, "m"),
+        a if a >= 1e7 => (1e6, "mm"),
+        a if a >= 1e4 => (1e3, "µm"),
+        _ => (1.0, "nm"),
+    };
+    Unit { nm, sign }
+}
+
 /// A height for the readouts, fixed digits so that it does not jump.
 pub fn height(nm: f32) -> String {
     if nm.is_nan() {
         return "void".to_owned();
     }
-    let a = nm.abs();
-    match a {
-        _ if a >= 1e5 => format!("{:.2} µm", nm / 1e3),
-        _ if a >= 1e3 => format!("{nm:.1} nm"),
-        _ => plain(format!("{nm:.2} nm")),
-    }
+    let unit = unit_for(f64::from(nm));
+    let value = f64::from(nm) / unit.nm;
+    let decimals = match value.abs() {
+        _ if unit.nm > 1.0 => 3,
+        a if a >= 1e3 => 1,
+        _ => 2,
+    };
+    format!("{} {}", plain(format!("{value:.decimals$}")), unit.sign)
 }
 
 /// A fraction as per cent.
@@ -124,6 +146,7 @@ pub fn round_step(limit: f64) -> f64 {
 /// A round length ("200 nm", "1 µm") for scale bars.
 pub fn round_length(nm: f64) -> String {
     let (value, unit) = match nm {
+        _ if nm >= 1e9 => (nm / 1e9, "m"),
         _ if nm >= 1e6 => (nm / 1e6, "mm"),
         _ if nm >= 1e3 => (nm / 1e3, "µm"),
         _ => (nm, "nm"),
@@ -133,7 +156,7 @@ pub fn round_length(nm: f64) -> String {
 
 /// A tick's number, with the digits that ticks over `span` need.
 pub fn tick(value: f64, span: f64) -> String {
-    let decimals = (1 - span.abs().max(1e-9).log10().floor() as i32).clamp(0, 4) as usize;
+    let decimals = (1 - span.abs().max(1e-9).log10().floor() as i32).clamp(0, 6) as usize;
     plain(format!("{value:.decimals$}"))
 }
 
@@ -174,5 +197,15 @@ mod tests {
         assert_eq!(round_step(2.0), 2.0);
         assert_eq!(round_length(2000.0), "2 µm");
         assert_eq!(round_length(200.0), "200 nm");
+    }
+
+    #[test]
+    fn heights_have_a_unit_that_suits_them() {
+        assert_eq!(height(59.5432), "59.54 nm");
+        assert_eq!(height(-9590.31), "-9590.3 nm");
+        assert_eq!(height(16094.0), "16.094 µm");
+        assert_eq!(height(-0.001), "0.00 nm");
+        assert_eq!(height(1.017e12), "1017.000 m");
+        assert_eq!(height(f32::NAN), "void");
     }
 }

@@ -154,12 +154,7 @@ impl App {
             return;
         };
         if self.shown.level.is_none() {
-            let text = if self.running() {
-                "Opening the scan…"
-            } else {
-                "The scan could not be shown. The message above says why."
-            };
-            ui.centered_and_justified(|ui| ui.label(text));
+            self.nothing_to_show(ui, out);
             return;
         }
         match self.stage {
@@ -183,6 +178,30 @@ impl App {
                 desk_ui(ui, &on, &mut self.desk, &mut self.cuts, out);
             }
         }
+    }
+
+    /// In place of the maps: that they are under way, or why there are none.
+    fn nothing_to_show(&self, ui: &mut Ui, out: &mut Vec<Command>) {
+        ui.vertical_centered(|ui| {
+            ui.add_space(ui.available_height() * 0.3);
+            ui.set_max_width(560.0);
+            if self.running() {
+                ui.label("Opening the scan…");
+                return;
+            }
+            if self.unanswered.is_some() {
+                ui.label("The file does not say everything that is needed to show it.");
+                ui.add_space(8.0);
+                if ui.button("Say what is missing…").clicked() {
+                    out.push(Command::Ask);
+                }
+                return;
+            }
+            if let Some(error) = self.worker.as_ref().and_then(Worker::error) {
+                ui.label(error.what());
+                remark(ui, error.remedy_text());
+            }
+        });
     }
 
     fn welcome(&self, ui: &mut Ui, out: &mut Vec<Command>) {

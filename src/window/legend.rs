@@ -13,6 +13,8 @@ use eframe::egui::{
 /// Paints the ramp from `range.0` (bottom) to `range.1` (top) with round ticks.
 pub fn scale_ui(ui: &Ui, rect: Rect, range: (f32, f32), what: &str) {
     let p = Palette::of(ui);
+    let (low, high) = (f64::from(range.0), f64::from(range.1));
+    let unit = format::unit_for(high - low);
     let bar = Rect::from_min_max(
         pos2(rect.left() + 2.0, rect.top() + 20.0),
         pos2(rect.left() + 16.0, rect.bottom() - 6.0),
@@ -24,7 +26,7 @@ pub fn scale_ui(ui: &Ui, rect: Rect, range: (f32, f32), what: &str) {
     painter.text(
         pos2(rect.left(), rect.top() + 8.0),
         Align2::LEFT_CENTER,
-        what,
+        format!("{what}, {}", unit.sign),
         FontId::proportional(12.0),
         p.faint,
     );
@@ -44,7 +46,6 @@ pub fn scale_ui(ui: &Ui, rect: Rect, range: (f32, f32), what: &str) {
     }
     painter.add(mesh);
     painter.rect_stroke(bar, 0.0, Stroke::new(1.0, p.line), StrokeKind::Outside);
-    let (low, high) = (f64::from(range.0), f64::from(range.1));
     for tick in ticks(low, high, (bar.height() / 36.0) as usize) {
         let y = bar.bottom() - ((tick - low) / (high - low)) as f32 * bar.height();
         painter.line_segment(
@@ -54,7 +55,7 @@ pub fn scale_ui(ui: &Ui, rect: Rect, range: (f32, f32), what: &str) {
         painter.text(
             pos2(bar.right() + 7.0, y),
             Align2::LEFT_CENTER,
-            format::tick(tick, high - low),
+            format::tick(tick / unit.nm, (high - low) / unit.nm),
             FontId::monospace(11.5),
             p.text,
         );

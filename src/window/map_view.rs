@@ -197,7 +197,7 @@ pub fn maps_ui(ui: &mut Ui, rect: Rect, data: &Maps, desk: &mut Desk, out: &mut 
         } else {
             strip.with_max_x(strip.center().x)
         };
-        let what = if data.one_scale { "z, nm" } else { "opened" };
+        let what = if data.one_scale { "z" } else { "opened" };
         legend::scale_ui(ui, half, picture.range, what);
         if let (false, Some(right)) = (data.one_scale, right_picture) {
             legend::scale_ui(

@@ -1,9 +1,11 @@
 //! Small drawn marks: the same in every font, told apart by shape before colour.
 
 use super::colours::Palette;
+use super::format::{self, Unit};
 use eframe::egui::{
-    Align2, Color32, FontId, Painter, Pos2, Rect, Sense, Shape, Stroke, Ui, pos2, vec2,
+    Align2, Color32, FontId, Painter, Pos2, Rangef, Rect, Sense, Shape, Stroke, Ui, pos2, vec2,
 };
+use egui_plot::{AxisHints, GridInput, GridMark};
 
 /// A mark.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -156,14 +158,47 @@ pub fn samples_ui(ui: &Ui, rect: Rect, samples: &[(Sample, Color32, &str)]) {
     }
 }
 
-/// A plot's axis along x whose numbers stand as near as they can be read.
-pub fn x_axis() -> egui_plot::AxisHints<'static> {
-    egui_plot::AxisHints::new_x().label_spacing(eframe::egui::Rangef::new(34.0, 70.0))
+/// A plot's axis along x whose numbers, in `unit`, stand as near as they can be read.
+pub fn x_axis(unit: Unit) -> AxisHints<'static> {
+    AxisHints::new_x()
+        .formatter(move |mark, _| number(mark, unit))
+        .label_spacing(Rangef::new(30.0, 44.0))
 }
 
-/// A plot's axis along y whose numbers stand as near as they can be read.
-pub fn y_axis() -> egui_plot::AxisHints<'static> {
-    egui_plot::AxisHints::new_y().label_spacing(eframe::egui::Rangef::new(15.0, 28.0))
+/// A plot's axis along y whose numbers, in `unit`, stand as near as they can be read.
+pub fn y_axis(unit: Unit) -> AxisHints<'static> {
+    AxisHints::new_y()
+        .formatter(move |mark, _| number(mark, unit))
+        .label_spacing(Rangef::new(12.0, 20.0))
+}
+
+fn number(mark: GridMark, unit: Unit) -> String {
+    // Ten steps are about what is seen of an axis.
+    format::tick(mark.value / unit.nm, 10.0 * mark.step_size / unit.nm)
+}
+
+/// Grid lines at 1, 2 or 5 times a power of ten of `unit`, at least `factor` times as far apart as
+/// lines may stand.
+pub fn grid(unit: Unit, factor: f64) -> impl Fn(GridInput) -> Vec<GridMark> {
+    let spacer = egui_plot::uniform_grid_spacer(move |input| {
+        let least = factor * input.base_step_size / unit.nm;
+        let below = format::round_step(least);
+        let step = [1.0, 2.0, 2.5, 5.0]
+            .into_iter()
+            .map(|m| format::round_step(m * below))
+            .find(|s| *s >= least)
+            .unwrap_or(10.0 * below);
+        [step, 5.0 * step, 10.0 * step].map(|s| s * unit.nm)
+    });
+    move |input| spacer(input)
+}
+
+/// The largest and the smallest value of curves along an axis, apart; 0 without curves.
+pub fn reach<'a>(points: impl Iterator<Item = &'a [f64; 2]>, axis: usize) -> f64 {
+    let (low, high) = points.fold((f64::MAX, f64::MIN), |(a, b), p| {
+        (a.min(p[axis]), b.max(p[axis]))
+    });
+    (high - low).max(0.0)
 }
 
 /// A title above a plot, with what its axes are in smaller print behind it.

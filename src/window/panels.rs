@@ -469,11 +469,11 @@ fn read_out_ui(ui: &mut Ui, found: &crate::job::TipResult) {
             fact(ui, "Half-angle", "not identified");
         }
     }
-    let depth = found
-        .exercised_depth_nm
-        .map_or("all of it".to_owned(), |d| {
-            format!("{} nm", format::significant(d, 3))
-        });
+    let depth = match found.exercised_depth_nm {
+        None => "all of it".to_owned(),
+        Some(d) if d > 0.0 => format!("{} nm", format::significant(d, 3)),
+        Some(_) => "none".to_owned(),
+    };
     fact(ui, "Exercised depth", depth).on_hover_text(
         "How far up from its apex the scan has tested the tip. Above that it is only a bound.",
     );
@@ -527,6 +527,7 @@ pub fn surface_ui(ui: &mut Ui, panel: &Panel, desk: &mut Desk, out: &mut Vec<Com
             );
         }
     }
+    cautions(ui, panel);
     heading(ui, "Ghost tip");
     let mut ghost = desk.ghost;
     if ui
@@ -540,6 +541,23 @@ pub fn surface_ui(ui: &mut Ui, panel: &Panel, desk: &mut Desk, out: &mut Vec<Com
         ui,
         "Its outline stands in the section, its contacts are marked on the corrected map. A click leaves the section there.",
     );
+}
+
+/// The cautions on the whole that concern corrected heights and dimensions.
+pub fn cautions(ui: &mut Ui, panel: &Panel) {
+    let o = panel.outcome;
+    let of_level = o.level.as_ref().map_or(&[][..], |l| &l.warnings);
+    let texts: Vec<&String> = o
+        .warnings
+        .iter()
+        .filter(|w| !of_level.contains(w))
+        .collect();
+    if !texts.is_empty() {
+        heading(ui, "Cautions");
+    }
+    for text in texts {
+        caution(ui, text);
+    }
 }
 
 /// The record: what a reader must know, where things are kept.

@@ -1,9 +1,9 @@
 //! The section along the line: both curves, and the ghost tip in contact.
 
 use super::colours::Palette;
-use super::format;
+use super::format::{self, Unit, unit_for};
 use super::map_view::pixel_at;
-use super::marks::{Sample, samples_ui, title_ui, x_axis, y_axis};
+use super::marks::{Sample, grid, reach, samples_ui, title_ui, x_axis, y_axis};
 use super::state::Line;
 use crate::heightmap::{HeightMap, Profile, Region};
 use crate::job::{GhostTip, Outcome};
@@ -214,14 +214,13 @@ fn summary(section: &Section) -> String {
     )
 }
 
-fn head_ui(ui: &Ui, rect: Rect, section: &Section) {
+fn head_ui(ui: &Ui, rect: Rect, section: &Section, units: [Unit; 2]) {
     let p = Palette::of(ui);
-    title_ui(
-        ui,
-        rect,
-        "Section",
-        "height over distance along the line, nm",
+    let axes = format!(
+        "height, {}, over distance along the line, {}",
+        units[1].sign, units[0].sign
     );
+    title_ui(ui, rect, "Section", &axes);
     let mut samples = vec![(Sample::Dashed, p.scanned, "as scanned")];
     if section.corrected {
         samples.push((Sample::Line(3.0), p.corrected, "corrected, touched"));
@@ -238,20 +237,26 @@ fn head_ui(ui: &Ui, rect: Rect, section: &Section) {
 pub fn section_ui(ui: &mut Ui, rect: Rect, section: &Section) -> Option<f64> {
     let p = Palette::of(ui);
     let head = Rect::from_min_size(rect.min, vec2(rect.width(), HEAD));
-    head_ui(ui, head, section);
+    let units = [0, 1].map(|axis| unit_for(reach(section.data.scanned.iter().flatten(), axis)));
+    head_ui(ui, head, section, units);
     let below = rect.with_min_y(rect.top() + HEAD);
     let mut child = ui.new_child(UiBuilder::new().max_rect(below).id_salt("section"));
     let plot = Plot::new("section plot")
         .allow_scroll(false)
         .allow_boxed_zoom(false)
         .set_margin_fraction(vec2(0.01, 0.08))
-        .custom_x_axes(vec![x_axis()])
-        .custom_y_axes(vec![y_axis()])
+        .x_grid_spacer(grid(units[0], 6.0))
+        .y_grid_spacer(grid(units[1], 2.5))
+        .custom_x_axes(vec![x_axis(units[0])])
+        .custom_y_axes(vec![y_axis(units[1])])
         .grid_color(p.line)
         .label_formatter(|_| None)
         .coordinates_formatter(
             egui_plot::Corner::RightTop,
-            egui_plot::CoordinatesFormatter::new(|at, _| format!("{:.1} nm, {:.2} nm", at.x, at.y)),
+            egui_plot::CoordinatesFormatter::new(|at, _| {
+                let place = crate::units::format_length(at.x);
+                format!("{place}, {}", format::height(at.y as f32))
+            }),
         );
     let response = plot.show(&mut child, |plot| {
         for [from, to] in section.spans {

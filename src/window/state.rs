@@ -119,6 +119,9 @@ pub fn progressed(stage: Stage, j: &Judged) -> Progressed {
             },
         },
         Stage::Surface => match (&o.surface, &o.tip) {
+            (Some(_), Some(tip)) if !tip.identified => {
+                Attention("The tip is not identified: the corrected surface is no more than what the bluntest tip gives".to_owned())
+            }
             (Some(_), _) => Done,
             (None, None) if !j.running => {
                 Waiting("Without a tip there is no corrected surface".to_owned())

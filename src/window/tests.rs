@@ -347,6 +347,12 @@ fn a_file_without_a_scale_is_asked_for_and_then_opened() {
     });
     wait(&mut window, |app| matches!(app.dialog, Dialog::Question(_)));
     window.run_steps(2);
+    // Put away, it can be asked again.
+    window.key_press(Key::Escape);
+    window.run_steps(3);
+    assert!(matches!(app(&window).dialog, Dialog::None));
+    click(&mut window, "Say what is missing…");
+    assert!(matches!(app(&window).dialog, Dialog::Question(_)));
     let field = |n: &egui_kittest::kittest::AccessKitNode<'_>| {
         n.role() == Role::TextInput && n.label().as_deref() == Some("Pixel pitch along x")
     };

@@ -1,12 +1,12 @@
 //! The tip on the desk: its map and its profiles along x and y.
 
 use super::colours::Palette;
-use super::format;
+use super::format::{self, Unit, unit_for};
 use super::images::{MapRef, Pair, PairKey, paint_pair};
 use super::later::Later;
 use super::legend;
 use super::map_marks;
-use super::marks::{Sample, samples_ui, title_ui, x_axis, y_axis};
+use super::marks::{Sample, grid, reach, samples_ui, title_ui, x_axis, y_axis};
 use super::state::ColourSpan;
 use super::view::View;
 use crate::heightmap::Profile;
@@ -18,6 +18,10 @@ use eframe::egui::{
 };
 use egui_plot::{FilledArea, HLine, Line, LineStyle, Plot, PlotPoints};
 use std::sync::Arc;
+
+const DEGREES: Unit = Unit {
+    nm: 1.0, sign: "°"
+};
 
 /// Curves of one profile of the tip.
 #[derive(Debug, Clone, Default, PartialEq)]
@@ -114,7 +118,7 @@ pub fn tip_ui(ui: &mut Ui, found: Option<&Arc<TipResult>>, why: &str, view: &mut
     }
     let plots = Rect::from_min_max(pos2(scale.right() + 8.0, rect.top()), rect.max);
     let half = plots.height() / 2.0;
-    for (i, name) in ["Along x, nm", "Along y, nm"].into_iter().enumerate() {
+    for (i, name) in ["Along x", "Along y"].into_iter().enumerate() {
         let top = plots.top() + i as f32 * half;
         let area = Rect::from_min_size(pos2(plots.left(), top), vec2(plots.width(), half - 8.0));
         if let Some((_, curves)) = &view.curves {
@@ -154,7 +158,7 @@ fn tip_map(ui: &Ui, map: Rect, scale: Rect, found: &TipResult, of: MapRef, view:
             uv,
             Color32::WHITE,
         );
-        legend::scale_ui(ui, scale, pair.left.range, "z, nm");
+        legend::scale_ui(ui, scale, pair.left.range, "z");
     }
     map_marks::cross(&painter, seen.to_screen(pane, (w / 2.0, h / 2.0)));
     map_marks::scale_bar(&painter, pane, seen.nm_per_point);
@@ -202,8 +206,9 @@ fn azimuth_ui(ui: &mut Ui, rect: Rect, found: &TipResult) {
         // Never so near that the noise of a round tip looks like a shape.
         .include_y(angle.value - 2.0)
         .include_y(angle.value + 2.0)
-        .custom_x_axes(vec![x_axis()])
-        .custom_y_axes(vec![y_axis()])
+        .y_grid_spacer(grid(DEGREES, 2.5))
+        .custom_x_axes(vec![x_axis(DEGREES)])
+        .custom_y_axes(vec![y_axis(DEGREES)])
         .grid_color(p.line)
         .label_formatter(|_| None)
         .show(&mut child, |plot| {
@@ -239,7 +244,8 @@ fn profile_ui(ui: &mut Ui, rect: Rect, name: &str, curves: &TipCurves, found: &T
         samples.push((Sample::Dashed, p.warn, "exercised depth"));
     }
     let head = Rect::from_min_size(rect.min, vec2(rect.width(), 22.0));
-    title_ui(ui, head, name, "");
+    let unit = unit_for(reach(curves.tip.iter(), 0));
+    title_ui(ui, head, name, unit.sign);
     samples_ui(ui, head, &samples);
     let area = Rect::from_min_max(pos2(rect.left(), rect.top() + 24.0), rect.max);
     let mut child = ui.new_child(UiBuilder::new().max_rect(area).id_salt(name));
@@ -247,8 +253,10 @@ fn profile_ui(ui: &mut Ui, rect: Rect, name: &str, curves: &TipCurves, found: &T
         .data_aspect(1.0)
         .allow_scroll(false)
         .allow_boxed_zoom(false)
-        .custom_x_axes(vec![x_axis()])
-        .custom_y_axes(vec![y_axis()])
+        .x_grid_spacer(grid(unit, 6.0))
+        .y_grid_spacer(grid(unit, 2.5))
+        .custom_x_axes(vec![x_axis(unit)])
+        .custom_y_axes(vec![y_axis(unit)])
         .grid_color(p.line)
         .label_formatter(|_| None);
     let response = plot.show(&mut child, |plot| {
