@@ -104,7 +104,7 @@ impl App {
         app.browse = dialog_likely();
         match start {
             Start::Nothing => {}
-            Start::Scan(path) => app.open_job(Job::on_scan(&path), Some(&path)),
+            Start::Scan(path) => app.open_scan(&path),
             Start::Job(path) => app.open_path(&path),
             Start::InMemory(job) => app.open_job(*job, None),
         }
@@ -205,13 +205,18 @@ impl App {
             .extension()
             .is_some_and(|e| e.eq_ignore_ascii_case("toml"));
         if !is_job {
-            self.open_job(Job::on_scan(path), Some(path));
+            self.open_scan(path);
             return;
         }
         match Job::open(path) {
             Ok(job) => self.open_job(job, Some(path)),
             Err(error) => self.message = Some(Message::of(&error)),
         }
+    }
+
+    fn open_scan(&mut self, path: &Path) {
+        self.stage = Stage::Scan;
+        self.open_job(Job::on_scan(path), Some(path));
     }
 
     fn open_job(&mut self, job: Job, path: Option<&Path>) {
@@ -547,6 +552,8 @@ impl App {
             Command::Go(stage) => {
                 self.stage = stage;
                 self.desk.tool = Tool::Look;
+                self.desk.pointer = None;
+                self.desk.plot_pointer = None;
             }
             Command::AskOpen => self.ask_path(Purpose::Open),
             Command::AskSave => self.ask_path(Purpose::Save),

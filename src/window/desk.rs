@@ -117,7 +117,7 @@ pub fn desk_ui(ui: &mut Ui, on: &OnDesk, desk: &mut Desk, cuts: &mut Cuts, out: 
     tools_ui(ui, on.stage, desk, out);
     let bare = Frame::new().inner_margin(Margin::symmetric(0, 6));
     if on.stage == Stage::Dimensions {
-        let tall = (ui.available_height() * 0.32).clamp(120.0, 420.0);
+        let tall = (ui.available_height() * 0.25).clamp(120.0, 360.0);
         Panel::bottom("results")
             .resizable(true)
             .default_size(tall)
@@ -134,9 +134,9 @@ pub fn desk_ui(ui: &mut Ui, on: &OnDesk, desk: &mut Desk, cuts: &mut Cuts, out: 
             });
     }
     let share = if on.stage == Stage::Dimensions {
-        0.34
+        0.28
     } else {
-        0.31
+        0.30
     };
     let tall = (ui.available_height() * share).clamp(120.0, 360.0);
     Panel::bottom(if on.stage == Stage::Dimensions {
@@ -223,7 +223,7 @@ fn maps_on<'a>(on: &'a OnDesk, line: Line, cuts: &'a Cuts) -> Maps<'a> {
         left,
         right,
         one_scale: !scan,
-        surface: o.surface.as_ref(),
+        surface: o.surface.as_ref().filter(|_| !scan),
         regions: regions_on(on),
         marks: marks_on(on),
         line: Some(line),

@@ -116,7 +116,7 @@ pub fn question_ui(
         question_fields(ui, question);
         if !question.refused.is_empty() {
             let p = super::colours::Palette::of(ui);
-            ui.label(RichText::new(format!("✖ {}", question.refused)).color(p.bad));
+            ui.label(RichText::new(question.refused.clone()).color(p.bad));
         }
         remark(ui, "The answer is kept in the job. Nothing is guessed.");
         ui.add_space(6.0);

@@ -1,13 +1,14 @@
 //! Small labelled widgets that the panels share. Every input has a name for screen readers.
 
 use super::colours::Palette;
+use super::marks::{Mark, mark_ui};
 use crate::units::Length;
 use eframe::egui::{
-    Align, ComboBox, Layout, Response, RichText, TextEdit, Ui, UiBuilder, Widget, vec2,
+    Align, ComboBox, Label, Layout, Response, RichText, TextEdit, Ui, Widget, vec2,
 };
 
 /// Width of the names in front of fields and facts.
-const NAME: f32 = 108.0;
+const NAME: f32 = 112.0;
 
 /// A group's heading with air above.
 pub fn heading(ui: &mut Ui, text: &str) {
@@ -19,25 +20,39 @@ pub fn heading(ui: &mut Ui, text: &str) {
 
 /// A name and a value side by side.
 pub fn fact(ui: &mut Ui, name: &str, value: impl Into<String>) -> Response {
-    row(ui, name, |ui| {
-        ui.add(eframe::egui::Label::new(value.into()).wrap())
+    row(ui, Align::Min, name, |ui| {
+        ui.add(Label::new(value.into()).wrap())
     })
     .1
 }
 
 /// A name in a column of its own, then what `add` puts beside it; both responses.
-pub fn row(ui: &mut Ui, name: &str, add: impl FnOnce(&mut Ui) -> Response) -> (Response, Response) {
+fn row(
+    ui: &mut Ui,
+    align: Align,
+    name: &str,
+    add: impl FnOnce(&mut Ui) -> Response,
+) -> (Response, Response) {
     let p = Palette::of(ui);
     let left = ui.cursor().left();
-    ui.horizontal_top(|ui| {
+    let height = if align == Align::Center { 26.0 } else { 17.0 };
+    let size = vec2(ui.available_width(), height);
+    ui.allocate_ui_with_layout(size, Layout::left_to_right(align), |ui| {
+        let text = RichText::new(name).color(p.faint);
         let label = ui
-            .scope_builder(UiBuilder::new(), |ui| {
-                ui.set_width(NAME);
-                ui.add(eframe::egui::Label::new(RichText::new(name).color(p.faint)).wrap())
+            .scope(|ui| {
+                ui.set_max_width(NAME);
+                ui.add(Label::new(text).wrap())
             })
             .inner;
         ui.add_space((left + NAME + 8.0 - ui.cursor().left()).max(0.0));
-        let value = ui.vertical(add).inner;
+        let width = ui.available_width();
+        let value = ui
+            .scope(|ui| {
+                ui.set_max_width(width);
+                add(ui)
+            })
+            .inner;
         (label, value)
     })
     .inner
@@ -45,17 +60,16 @@ pub fn row(ui: &mut Ui, name: &str, add: impl FnOnce(&mut Ui) -> Response) -> (R
 
 /// A sentence of caution: a mark, then words.
 pub fn caution(ui: &mut Ui, text: &str) {
-    let p = Palette::of(ui);
     ui.horizontal_top(|ui| {
-        ui.label(RichText::new("⚠").color(p.warn));
-        ui.add(eframe::egui::Label::new(text).wrap());
+        mark_ui(ui, Mark::Attention);
+        ui.add(Label::new(text).wrap());
     });
 }
 
 /// A sentence of explanation.
 pub fn remark(ui: &mut Ui, text: &str) {
     let p = Palette::of(ui);
-    ui.add(eframe::egui::Label::new(RichText::new(text).size(12.5).color(p.faint)).wrap());
+    ui.add(Label::new(RichText::new(text).size(12.5).color(p.faint)).wrap());
 }
 
 /// A text that is taken when the field is left or Enter pressed, not at every key.
@@ -87,7 +101,7 @@ pub fn text_row(ui: &mut Ui, name: &str, help: &str, value: &str, hint: &str) ->
 }
 
 fn row_labelled(ui: &mut Ui, name: &str, help: &str, add: impl FnOnce(&mut Ui) -> Response) {
-    let (label, field) = row(ui, name, add);
+    let (label, field) = row(ui, Align::Center, name, add);
     let label = if help.is_empty() {
         label
     } else {
@@ -129,7 +143,7 @@ pub fn parsed_row<T>(
         }
     } else if let Some((_, why)) = refused {
         let p = Palette::of(ui);
-        ui.label(RichText::new(format!("✖ {why}")).color(p.bad).size(12.5));
+        ui.label(RichText::new(why).color(p.bad).size(12.5));
     }
     taken
 }

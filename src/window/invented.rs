@@ -91,9 +91,15 @@ pub fn outcome() -> Outcome {
     let scan = morphology::dilate(truth.heights(), tip.shape(), &none).unwrap();
     let scan = truth.with_heights(scan, "invented");
     let surface = morphology::erode(scan.heights(), tip.shape(), &none).unwrap();
-    let certainty =
-        morphology::certainty_map(surface.view(), scan.heights(), tip.shape(), 0.01, &none)
-            .unwrap();
+    let certainty = morphology::certainty_map(
+        surface.view(),
+        scan.heights(),
+        tip.shape(),
+        0.01,
+        [0, 0],
+        &none,
+    )
+    .unwrap();
     let surface = SurfaceResult {
         surface: scan.with_heights(surface, "eroded"),
         upper: None,

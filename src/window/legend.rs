@@ -133,7 +133,7 @@ pub fn reliability_ui(ui: &mut Ui, swatches: &mut Swatches, r: &Reliability) {
         (
             "never",
             r.never,
-            "The tip never came here: the surface lies somewhere below.",
+            "Nothing in the scan says that the tip was here: the surface lies at or below.",
         ),
     ];
     for (texture, (name, fraction, meaning)) in textures.into_iter().zip(lines) {

@@ -51,8 +51,12 @@ pub fn region_rect(region: Region, to: impl Fn((f64, f64)) -> Pos2) -> Rect {
 
 /// Regions with their names; the chosen one last, filled and with grips.
 pub fn regions(painter: &Painter, marks: &[RegionMark], to: impl Fn((f64, f64)) -> Pos2 + Copy) {
-    let order = |chosen: bool| marks.iter().filter(move |m| m.chosen == chosen);
-    for mark in order(false).chain(order(true)) {
+    // Small ones over large ones, the chosen one over all.
+    let mut order: Vec<&RegionMark> = marks.iter().collect();
+    let area = |m: &RegionMark| m.region.width * m.region.height;
+    order.sort_by(|a, b| (a.chosen.cmp(&b.chosen)).then(area(b).total_cmp(&area(a))));
+    let mut plates = Vec::new();
+    for mark in order {
         // Drawn just inside, so that edges on the map's border are seen whole.
         let rect = region_rect(mark.region, to).shrink(1.0);
         let colour = colour_of(mark.kind);
@@ -95,25 +99,27 @@ pub fn regions(painter: &Painter, marks: &[RegionMark], to: impl Fn((f64, f64)) 
         // A name wider than its region would cover the neighbour's.
         let room = rect.right() - at.x;
         if mark.chosen || room > 7.0 * mark.name.len() as f32 {
-            plate(painter, at, Align2::LEFT_TOP, &mark.name, colour);
-        } else if room > 16.0 {
-            plate(
-                painter,
-                at,
-                Align2::LEFT_TOP,
-                &format!("{}", mark.index + 1),
-                colour,
-            );
+            plate(painter, at, &mark.name, colour, &mut plates);
+        } else if room > 14.0 {
+            let number = (mark.index + 1).to_string();
+            plate(painter, at, &number, colour, &mut plates);
         }
     }
 }
 
-/// Text on a dark plate.
-fn plate(painter: &Painter, at: Pos2, anchor: Align2, text: &str, colour: Color32) {
+/// Text on a dark plate, below the plates that are already there.
+fn plate(painter: &Painter, at: Pos2, text: &str, colour: Color32, others: &mut Vec<Rect>) {
     let galley = painter.layout_no_wrap(text.to_owned(), FontId::proportional(12.0), colour);
-    let rect = anchor.anchor_size(at, galley.size());
-    painter.rect_filled(rect.expand2(vec2(4.0, 2.0)), 3.0, PLATE);
-    painter.galley(rect.min, galley, colour);
+    let mut rect = Rect::from_min_size(at, galley.size()).expand2(vec2(4.0, 2.0));
+    for _ in 0..8 {
+        if !others.iter().any(|other| other.intersects(rect)) {
+            break;
+        }
+        rect = rect.translate(vec2(0.0, rect.height() + 2.0));
+    }
+    others.push(rect);
+    painter.rect_filled(rect, 3.0, PLATE);
+    painter.galley(rect.min + vec2(4.0, 2.0), galley, colour);
 }
 
 /// Segments of results.

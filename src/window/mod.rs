@@ -22,6 +22,7 @@ mod later;
 mod legend;
 mod map_marks;
 mod map_view;
+mod marks;
 mod open_dialog;
 mod panels;
 mod record_view;

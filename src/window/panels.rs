@@ -511,7 +511,7 @@ pub fn surface_ui(ui: &mut Ui, panel: &Panel, desk: &mut Desk, out: &mut Vec<Com
             }
             let leaning = surface.edge_leaning.iter().filter(|&&e| e).count();
             let all = surface.edge_leaning.len().max(1);
-            fact(ui, "Leans on the edge", format::percent(leaning as f64 / all as f64)).on_hover_text(
+            fact(ui, "Edge-leaning", format::percent(leaning as f64 / all as f64)).on_hover_text(
                 "Pixels whose height could change if more had been scanned: beyond the edge or in voids",
             );
             fact(

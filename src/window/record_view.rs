@@ -3,6 +3,7 @@
 use super::colours::Palette;
 use super::command::{BrowseFor, Command};
 use super::fields::{caution, heading, remark};
+use super::marks::{Mark, mark_ui};
 use super::table::{quantity, status, values};
 use crate::dimensions::Dimension;
 use crate::job::{Job, JobFile, Outcome};
@@ -31,7 +32,8 @@ pub fn folder_for(job: &Job) -> PathBuf {
     let stem = named
         .file_stem()
         .map_or_else(|| "job".into(), |s| s.to_string_lossy().into_owned());
-    job.folder.join(format!("{stem}-record"))
+    let folder = job.folder.join(format!("{stem}-record"));
+    std::path::absolute(&folder).unwrap_or(folder)
 }
 
 /// A relative uncertainty: "0.2 %" or "0.002".
@@ -88,7 +90,10 @@ pub fn keep_ui(ui: &mut Ui, keep: &Keep, browse: bool, out: &mut Vec<Command>) {
     });
     if let Some(written) = &keep.written {
         let p = Palette::of(ui);
-        ui.label(RichText::new("✔ Written").color(p.good));
+        ui.horizontal(|ui| {
+            mark_ui(ui, Mark::Done);
+            ui.label(RichText::new("Written").color(p.good));
+        });
         path_ui(ui, "Report", &written.report);
         path_ui(ui, "Results", &written.result);
     }
@@ -127,16 +132,14 @@ pub fn preview_ui(ui: &mut Ui, job: &JobFile, outcome: &Outcome) {
             _ => remark(ui, "None were asked for."),
         }
         heading(ui, "Cautions");
-        if outcome.warnings.is_empty() {
+        let findings = outcome.tip.iter().flat_map(|tip| &tip.diagnosis);
+        let mut cautions: Vec<&String> = outcome.warnings.iter().chain(findings).collect();
+        cautions.dedup();
+        if cautions.is_empty() {
             remark(ui, "None.");
         }
-        for warning in &outcome.warnings {
-            caution(ui, warning);
-        }
-        if let Some(tip) = &outcome.tip {
-            for finding in &tip.diagnosis {
-                caution(ui, finding);
-            }
+        for text in cautions {
+            caution(ui, text);
         }
         heading(ui, "Job file");
         remark(ui, "Reproduces all of this.");
@@ -181,7 +184,10 @@ fn lines_ui(ui: &mut Ui, lines: &[Dimension]) {
                     ui.monospace(text);
                 }
                 let (mark, word) = status(line);
-                ui.label(format!("{mark} {word}"));
+                ui.horizontal(|ui| {
+                    mark_ui(ui, mark);
+                    ui.label(word);
+                });
                 ui.end_row();
             }
         });

@@ -3,14 +3,18 @@
 use super::colours::Palette;
 use super::format;
 use super::map_view::pixel_at;
+use super::marks::{Sample, samples_ui, title_ui, x_axis, y_axis};
 use super::state::Line;
 use crate::heightmap::{HeightMap, Profile, Region};
 use crate::job::{GhostTip, Outcome};
 use crate::morphology::certainty;
 use crate::tip::Tip;
 use eframe::egui::accesskit::Role;
-use eframe::egui::{Rect, Stroke, Ui, UiBuilder, WidgetInfo};
+use eframe::egui::{Rect, Stroke, Ui, UiBuilder, WidgetInfo, vec2};
 use egui_plot::{Line as Curve, LineStyle, MarkerShape, Plot, PlotPoints, Points, Polygon, VLine};
+
+/// Height of the line of text above the plot.
+const HEAD: f32 = 22.0;
 
 /// A curve in pieces without voids, `[along, height]` in nm.
 pub type Pieces = Vec<Vec<[f64; 2]>>;
@@ -210,27 +214,44 @@ fn summary(section: &Section) -> String {
     )
 }
 
+fn head_ui(ui: &Ui, rect: Rect, section: &Section) {
+    let p = Palette::of(ui);
+    title_ui(
+        ui,
+        rect,
+        "Section",
+        "height over distance along the line, nm",
+    );
+    let mut samples = vec![(Sample::Dashed, p.scanned, "as scanned")];
+    if section.corrected {
+        samples.push((Sample::Line(3.0), p.corrected, "corrected, touched"));
+        samples.push((Sample::Line(1.0), p.corrected, "corrected, only a bound"));
+    }
+    if section.ghost.is_some() {
+        samples.push((Sample::Area, p.ghost.gamma_multiply(0.5), "ghost tip"));
+        samples.push((Sample::Diamond, p.ghost, "contact"));
+    }
+    samples_ui(ui, rect, &samples);
+}
+
 /// Paints the section into `rect`; the position along the line under the pointer, if any.
 pub fn section_ui(ui: &mut Ui, rect: Rect, section: &Section) -> Option<f64> {
     let p = Palette::of(ui);
-    let mut child = ui.new_child(UiBuilder::new().max_rect(rect).id_salt("section"));
+    let head = Rect::from_min_size(rect.min, vec2(rect.width(), HEAD));
+    head_ui(ui, head, section);
+    let below = rect.with_min_y(rect.top() + HEAD);
+    let mut child = ui.new_child(UiBuilder::new().max_rect(below).id_salt("section"));
     let plot = Plot::new("section plot")
         .allow_scroll(false)
         .allow_boxed_zoom(false)
-        .set_margin_fraction(eframe::egui::vec2(0.01, 0.08))
-        .x_axis_label("along the section line, nm")
-        .y_axis_label("height, nm")
+        .set_margin_fraction(vec2(0.01, 0.08))
+        .custom_x_axes(vec![x_axis()])
+        .custom_y_axes(vec![y_axis()])
         .grid_color(p.line)
         .label_formatter(|_| None)
         .coordinates_formatter(
             egui_plot::Corner::RightTop,
             egui_plot::CoordinatesFormatter::new(|at, _| format!("{:.1} nm, {:.2} nm", at.x, at.y)),
-        )
-        .legend(
-            egui_plot::Legend::default()
-                .position(egui_plot::Corner::LeftTop)
-                .follow_insertion_order(true)
-                .background_alpha(0.85),
         );
     let response = plot.show(&mut child, |plot| {
         for [from, to] in section.spans {

@@ -1,5 +1,6 @@
 //! Plain state of the window: stages, tools, the view on the maps, the section line.
 
+use super::marks::Mark;
 use crate::dimensions::{Dimension, Kind, Request};
 use crate::error::Error;
 use crate::heightmap::HeightMap;
@@ -57,12 +58,12 @@ pub enum Progressed {
 
 impl Progressed {
     /// A mark and a word: colour is never alone.
-    pub fn mark(&self) -> (&'static str, &'static str) {
+    pub fn mark(&self) -> (Mark, &'static str) {
         match self {
-            Self::Waiting(_) => ("○", "waiting"),
-            Self::UnderWay => ("⏳", "under way"),
-            Self::Done => ("✔", "done"),
-            Self::Attention(_) => ("⚠", "look here"),
+            Self::Waiting(_) => (Mark::Open, "waiting"),
+            Self::UnderWay => (Mark::UnderWay, "under way"),
+            Self::Done => (Mark::Done, "done"),
+            Self::Attention(_) => (Mark::Attention, "look here"),
         }
     }
 }

@@ -4,6 +4,7 @@ use super::colours::Palette;
 use super::command::Command;
 use super::format;
 use super::map_view::pixel_at;
+use super::marks::{Mark, mark_ui};
 use crate::error::Error;
 use crate::job::Outcome;
 use crate::progress::Progress;
@@ -91,13 +92,13 @@ pub fn status_ui(
 /// Paints a message with a button that puts it away.
 pub fn message_ui(ui: &mut Ui, message: &Message, out: &mut Vec<Command>) {
     let p = Palette::of(ui);
-    let (mark, colour) = if message.failed {
-        ("✖", p.bad)
+    let mark = if message.failed {
+        Mark::Failed
     } else {
-        ("✔", p.good)
+        Mark::Done
     };
     ui.horizontal_top(|ui| {
-        ui.label(RichText::new(mark).color(colour));
+        mark_ui(ui, mark);
         ui.with_layout(Layout::right_to_left(Align::Min), |ui| {
             if ui.small_button("Put away").clicked() {
                 out.push(Command::Dismiss);

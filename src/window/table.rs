@@ -4,6 +4,7 @@ use super::colours::Palette;
 use super::command::Command;
 use super::fields::{caution, fact, heading, remark};
 use super::format;
+use super::marks::{Mark, mark_ui};
 use super::state::request_of;
 use crate::dimensions::{Dimension, Request, Status};
 use crate::uncertainty::{Component, Distribution};
@@ -25,21 +26,17 @@ pub struct Results<'a> {
 /// The quantity with its height fraction.
 pub fn quantity(line: &Dimension) -> String {
     match line.at {
-        Some(at) => format!(
-            "{} at {} %",
-            line.quantity,
-            format::significant(100.0 * at, 3)
-        ),
+        Some(at) => format!("{} at {} %", line.quantity, (1e4 * at).round() / 100.0),
         None => line.quantity.clone(),
     }
 }
 
 /// Mark and word of a status.
-pub fn status(line: &Dimension) -> (&'static str, &'static str) {
+pub fn status(line: &Dimension) -> (Mark, &'static str) {
     match line.status {
-        Some(Status::Touched) => ("●", "touched"),
-        Some(Status::Bounded) => ("◐", "bounded"),
-        None => ("○", "not corrected"),
+        Some(Status::Touched) => (Mark::Full, "touched"),
+        Some(Status::Bounded) => (Mark::Half, "bounded"),
+        None => (Mark::Open, "not corrected"),
     }
 }
 
@@ -105,7 +102,10 @@ fn table(ui: &mut Ui, lines: &[Dimension], results: &Results, out: &mut Vec<Comm
         .column(Column::initial(130.0).at_least(90.0))
         .column(Column::remainder().at_least(110.0).clip(true))
         .header(24.0, |mut row| {
-            row.col(|ui| head(ui, "Name", ""));
+            row.col(|ui| {
+                ui.add_space(9.0);
+                head(ui, "Name", "");
+            });
             row.col(|ui| head(ui, "Quantity", ""));
             for (text, help) in [
                 (
@@ -175,15 +175,14 @@ pub fn values(line: &Dimension) -> [String; 3] {
 fn status_ui(ui: &mut Ui, line: &Dimension) {
     let p = Palette::of(ui);
     let (mark, word) = status(line);
-    let colour = match line.status {
-        Some(Status::Touched) => p.good,
-        Some(Status::Bounded) => p.warn,
-        None => p.faint,
-    };
-    ui.label(RichText::new(format!("{mark} {word}")).color(colour))
+    mark_ui(ui, mark);
+    ui.label(RichText::new(word).color(mark.colour(p)))
         .on_hover_text(meaning(line));
     if !line.flags.is_empty() {
-        let text = format!("⚑ {}", line.flags.len());
+        let text = match line.flags.len() {
+            1 => "1 note".to_owned(),
+            n => format!("{n} notes"),
+        };
         ui.label(RichText::new(text).color(p.faint))
             .on_hover_text(line.flags.join("\n\n"));
     }
@@ -245,12 +244,12 @@ mod tests {
     #[test]
     fn both_columns_stand_side_by_side() {
         let line = invented::dimension("line 1");
-        assert_eq!(quantity(&line), "line width at 50.0 %");
+        assert_eq!(quantity(&line), "line width at 50 %");
         assert_eq!(
             values(&line),
             ["128.70 ± 0.90 nm", "100.4 ± 2.2 nm", "97.9 … 103.1 nm"]
         );
-        assert_eq!(status(&line), ("◐", "bounded"));
+        assert_eq!(status(&line), (Mark::Half, "bounded"));
         let bare = Dimension {
             as_scanned: None,
             corrected: None,

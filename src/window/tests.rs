@@ -106,7 +106,7 @@ fn results_are_read_as_scanned_and_corrected() {
         "128.70 ± 0.90 nm",
         "100.4 ± 2.2 nm",
         "97.9 … 103.1 nm",
-        "◐ bounded",
+        "bounded",
     ] {
         window.get_by_label(text);
     }
@@ -226,6 +226,7 @@ fn the_wheel_zooms_and_f_fits() {
         delta: vec2(0.0, 3.0),
         phase: eframe::egui::TouchPhase::Move,
         modifiers: Modifiers::NONE,
+        source: eframe::egui::MouseWheelSource::Unknown,
     });
     window.run_steps(10);
     assert!(app(&window).desk.view.is_some());

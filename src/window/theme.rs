@@ -2,12 +2,18 @@
 
 use super::colours::Palette;
 use eframe::egui::{
-    Color32, Context, CornerRadius, FontFamily, FontId, Margin, Shadow, Stroke, Style, TextStyle,
-    Theme, Visuals, vec2,
+    Color32, Context, CornerRadius, FontDefinitions, FontFamily, FontId, Margin, Shadow, Stroke,
+    Style, TextStyle, Theme, Visuals, vec2,
 };
 
 /// Sets fonts, spacing and colours of both themes.
 pub fn apply(ctx: &Context) {
+    // Arrows and mathematical signs that the proportional font lacks come from the other one.
+    let mut fonts = FontDefinitions::default();
+    if let Some(families) = fonts.families.get_mut(&FontFamily::Proportional) {
+        families.push("Hack".to_owned());
+    }
+    ctx.set_fonts(fonts);
     for theme in [Theme::Dark, Theme::Light] {
         ctx.style_mut_of(theme, |style| {
             let dark = theme == Theme::Dark;

@@ -6,6 +6,7 @@ use super::images::{MapRef, Pair, PairKey, paint_pair};
 use super::later::Later;
 use super::legend;
 use super::map_marks;
+use super::marks::{Sample, samples_ui, title_ui, x_axis, y_axis};
 use super::state::ColourSpan;
 use super::view::View;
 use crate::heightmap::Profile;
@@ -104,19 +105,20 @@ pub fn tip_ui(ui: &mut Ui, found: Option<&Arc<TipResult>>, why: &str, view: &mut
     let map = Rect::from_min_size(rect.min, vec2(side, side + 24.0));
     let scale = Rect::from_min_size(pos2(map.right() + 10.0, map.top() + 24.0), vec2(74.0, side));
     tip_map(ui, map, scale, found, of, view);
+    let below = Rect::from_min_max(
+        pos2(map.left(), map.bottom() + 14.0),
+        pos2(scale.right(), rect.bottom() - 8.0),
+    );
+    if below.height() > 130.0 {
+        azimuth_ui(ui, below, found);
+    }
     let plots = Rect::from_min_max(pos2(scale.right() + 8.0, rect.top()), rect.max);
     let half = plots.height() / 2.0;
-    for (i, (name, meaning)) in [
-        ("Profile along x", "distance from the apex along x, nm"),
-        ("Profile along y", "distance from the apex along y, nm"),
-    ]
-    .into_iter()
-    .enumerate()
-    {
+    for (i, name) in ["Along x, nm", "Along y, nm"].into_iter().enumerate() {
         let top = plots.top() + i as f32 * half;
         let area = Rect::from_min_size(pos2(plots.left(), top), vec2(plots.width(), half - 8.0));
         if let Some((_, curves)) = &view.curves {
-            profile_ui(ui, area, name, meaning, &curves[i], found);
+            profile_ui(ui, area, name, &curves[i], found);
         }
     }
 }
@@ -169,38 +171,86 @@ fn tip_map(ui: &Ui, map: Rect, scale: Rect, found: &TipResult, of: MapRef, view:
         });
 }
 
-fn profile_ui(
-    ui: &mut Ui,
-    rect: Rect,
-    name: &str,
-    meaning: &str,
-    curves: &TipCurves,
-    found: &TipResult,
-) {
+/// The half-angle by azimuth, where it was had: a round tip gives a level curve.
+fn azimuth_ui(ui: &mut Ui, rect: Rect, found: &TipResult) {
+    let angle = found.read_out.half_angle.as_ref();
+    let Some(angle) = angle.filter(|a| a.per_azimuth.len() > 2) else {
+        return;
+    };
     let p = Palette::of(ui);
-    ui.painter().text(
-        pos2(rect.left() + 6.0, rect.top() + 11.0),
-        eframe::egui::Align2::LEFT_CENTER,
-        name,
-        eframe::egui::FontId::proportional(14.0),
-        p.text,
+    let head = Rect::from_min_size(rect.min, vec2(rect.width(), 22.0));
+    title_ui(
+        ui,
+        head,
+        "Half-angle",
+        "over azimuth from +x towards +y, degrees",
     );
+    let samples = [
+        (Sample::Line(2.0), p.corrected, "flank"),
+        (Sample::Dashed, p.faint, "mean"),
+    ];
+    samples_ui(ui, head, &samples);
+    let area = rect.with_min_y(rect.top() + 24.0);
+    let mut child = ui.new_child(UiBuilder::new().max_rect(area).id_salt("azimuth"));
+    let points: Vec<[f64; 2]> = angle.per_azimuth.iter().map(|(a, h)| [*a, *h]).collect();
+    let (low, high) = points.iter().fold((angle.value, angle.value), |(a, b), q| {
+        (a.min(q[1]), b.max(q[1]))
+    });
+    let response = Plot::new("azimuth plot")
+        .allow_scroll(false)
+        .allow_boxed_zoom(false)
+        // Never so near that the noise of a round tip looks like a shape.
+        .include_y(angle.value - 2.0)
+        .include_y(angle.value + 2.0)
+        .custom_x_axes(vec![x_axis()])
+        .custom_y_axes(vec![y_axis()])
+        .grid_color(p.line)
+        .label_formatter(|_| None)
+        .show(&mut child, |plot| {
+            plot.hline(
+                HLine::new("mean", angle.value)
+                    .color(p.faint)
+                    .style(LineStyle::dashed_loose())
+                    .allow_hover(false),
+            );
+            plot.line(
+                Line::new("flank", PlotPoints::new(points))
+                    .color(p.corrected)
+                    .width(2.0)
+                    .allow_hover(false),
+            );
+        });
+    response.response.widget_info(|| {
+        let text = format!("Half-angle by azimuth, from {low:.1} to {high:.1} degrees");
+        WidgetInfo::labeled(Role::Image, true, text)
+    });
+}
+
+fn profile_ui(ui: &mut Ui, rect: Rect, name: &str, curves: &TipCurves, found: &TipResult) {
+    let p = Palette::of(ui);
+    let mut samples = vec![(Sample::Line(3.0), p.corrected, "tip")];
+    if !curves.sphere.is_empty() {
+        samples.push((Sample::Dashed, p.scanned, "apex radius"));
+    }
+    if !curves.band.0.is_empty() {
+        samples.push((Sample::Area, p.ghost.gamma_multiply(0.5), "band"));
+    }
+    if found.exercised_depth_nm.is_some() {
+        samples.push((Sample::Dashed, p.warn, "exercised depth"));
+    }
+    let head = Rect::from_min_size(rect.min, vec2(rect.width(), 22.0));
+    title_ui(ui, head, name, "");
+    samples_ui(ui, head, &samples);
     let area = Rect::from_min_max(pos2(rect.left(), rect.top() + 24.0), rect.max);
     let mut child = ui.new_child(UiBuilder::new().max_rect(area).id_salt(name));
     let plot = Plot::new(name)
         .data_aspect(1.0)
         .allow_scroll(false)
         .allow_boxed_zoom(false)
-        .x_axis_label(meaning)
-        .y_axis_label("height, nm")
+        .custom_x_axes(vec![x_axis()])
+        .custom_y_axes(vec![y_axis()])
         .grid_color(p.line)
-        .label_formatter(|_| None)
-        .legend(
-            egui_plot::Legend::default()
-                .position(egui_plot::Corner::RightTop)
-                .follow_insertion_order(true)
-                .background_alpha(0.85),
-        );
+        .label_formatter(|_| None);
     let response = plot.show(&mut child, |plot| {
         let (xs, low, high) = &curves.band;
         if !xs.is_empty() {
@@ -238,7 +288,7 @@ fn profile_ui(
     response.response.widget_info(|| {
         let reach = curves.tip.last().map_or(0.0, |l| l[0]);
         let text = format!(
-            "{name}, {} nm to either side, {} nm deep",
+            "Tip profile {name}: {} to either side, {} nm deep",
             format::significant(reach, 3),
             format::significant(found.tip.depth_nm(), 3)
         );

@@ -4,9 +4,8 @@ use super::colours::Palette;
 use super::command::Command;
 use super::settings::ThemeChoice;
 use super::state::{Progressed, Stage};
-use eframe::egui::text::LayoutJob;
 use eframe::egui::{
-    Align, Button, FontId, Layout, RichText, Sense, Stroke, TextFormat, Ui, pos2, vec2,
+    Align, Align2, Button, FontId, Layout, RichText, Sense, Stroke, Ui, pos2, vec2,
 };
 
 /// Width that the buttons at the right need.
@@ -79,28 +78,26 @@ fn stage_ui(
 ) {
     let p = Palette::of(ui);
     let (mark, word) = progress.mark();
-    let colour = match progress {
-        Progressed::Done => p.good,
-        Progressed::Attention(_) => p.warn,
-        Progressed::UnderWay => p.accent,
-        Progressed::Waiting(_) => p.faint,
-    };
-    let format = |size: f32, color| TextFormat {
-        font_id: FontId::proportional(size),
-        color,
-        ..TextFormat::default()
-    };
-    let mut text = LayoutJob::default();
-    text.append(stage.name(), 0.0, format(14.5, p.text));
-    text.append(&format!("\n{mark} {word}"), 0.0, format(11.5, colour));
-    text.halign = Align::Center;
-    let fill = if chosen { p.chosen } else { p.button };
-    let stroke = if chosen { p.accent } else { p.line };
-    let button = Button::new(text)
-        .fill(fill)
-        .stroke(Stroke::new(1.0, stroke))
+    let button = Button::new("")
+        .fill(if chosen { p.chosen } else { p.button })
+        .stroke(Stroke::new(1.0, if chosen { p.accent } else { p.line }))
         .min_size(vec2(width, TALL));
     let response = ui.add(button);
+    let rect = response.rect;
+    let painter = ui.painter();
+    painter.text(
+        pos2(rect.center().x, rect.top() + 14.0),
+        Align2::CENTER_CENTER,
+        stage.name(),
+        FontId::proportional(14.5),
+        p.text,
+    );
+    let colour = mark.colour(p);
+    let galley = painter.layout_no_wrap(word.to_owned(), FontId::proportional(12.0), colour);
+    let left = rect.center().x - (galley.size().x + 18.0) / 2.0;
+    let y = rect.top() + 30.0;
+    mark.paint(painter, pos2(left + 6.0, y), colour);
+    painter.galley(pos2(left + 18.0, y - galley.size().y / 2.0), galley, colour);
     let response = match progress {
         Progressed::Waiting(why) | Progressed::Attention(why) => response.on_hover_text(why),
         _ => response,
