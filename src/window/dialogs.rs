@@ -1,15 +1,13 @@
 //! The other dialogs: what a file does not say, unsaved changes, the help.
 
 use super::command::Command;
-use super::fields::{at_right, remark};
+use super::fields::{at_right, dialog, remark};
 use crate::error::{Error, ErrorKind};
 use crate::files;
 use crate::heightmap::Pitch;
 use crate::job::ScanSpec;
 use crate::units::Length;
-use eframe::egui::{
-    Button, ComboBox, Context, Grid, Id, Key, Modal, RichText, TextEdit, Ui, Widget,
-};
+use eframe::egui::{Button, ComboBox, Context, Grid, Key, RichText, TextEdit, Ui, Widget};
 use std::path::Path;
 
 /// Units that heights are usually stated in.
@@ -107,7 +105,7 @@ pub fn question_ui(
     out: &mut Vec<Command>,
 ) -> Option<ScanSpec> {
     let mut answer = None;
-    let modal = Modal::new(Id::unique("question")).show(ctx, |ui| {
+    let modal = dialog(ctx, "question").show(ctx, |ui| {
         ui.set_width(460.0);
         ui.heading("The file does not say everything");
         ui.add_space(4.0);
@@ -198,7 +196,7 @@ fn question_fields(ui: &mut Ui, question: &mut Question) {
 
 /// Asks what to do with unsaved changes.
 pub fn close_ui(ctx: &Context, out: &mut Vec<Command>) {
-    let modal = Modal::new(Id::unique("close")).show(ctx, |ui| {
+    let modal = dialog(ctx, "close").show(ctx, |ui| {
         ui.set_width(400.0);
         ui.heading("The job has unsaved changes");
         ui.add_space(4.0);
@@ -248,7 +246,7 @@ pub const KEYS: [(&str, &str); 20] = [
 
 /// The help.
 pub fn help_ui(ctx: &Context, out: &mut Vec<Command>) {
-    let modal = Modal::new(Id::unique("help")).show(ctx, |ui| {
+    let modal = dialog(ctx, "help").show(ctx, |ui| {
         ui.set_width(520.0);
         ui.heading("Keys and pointer");
         ui.add_space(6.0);

@@ -4,7 +4,8 @@ use super::colours::Palette;
 use super::marks::{Mark, mark_ui};
 use crate::units::Length;
 use eframe::egui::{
-    Align, ComboBox, Label, Layout, Response, RichText, TextEdit, Ui, Widget, vec2,
+    Align, ComboBox, Context, Frame, Id, Label, Layout, Margin, Modal, Response, RichText,
+    TextEdit, Ui, Widget, vec2,
 };
 
 /// Width of the names in front of fields and facts.
@@ -218,4 +219,10 @@ pub fn at_right(ui: &mut Ui, add: impl FnOnce(&mut Ui)) {
         Layout::right_to_left(Align::Center),
         add,
     );
+}
+
+/// A dialog over everything, with air inside.
+pub fn dialog(ctx: &Context, name: &'static str) -> Modal {
+    let frame = Frame::popup(&ctx.global_style()).inner_margin(Margin::same(18));
+    Modal::new(Id::unique(name)).frame(frame)
 }

@@ -55,8 +55,7 @@ pub fn regions(painter: &Painter, marks: &[RegionMark], to: impl Fn((f64, f64)) 
     let mut order: Vec<&RegionMark> = marks.iter().collect();
     let area = |m: &RegionMark| m.region.width * m.region.height;
     order.sort_by(|a, b| (a.chosen.cmp(&b.chosen)).then(area(b).total_cmp(&area(a))));
-    let mut plates = Vec::new();
-    for mark in order {
+    for mark in &order {
         // Drawn just inside, so that edges on the map's border are seen whole.
         let rect = region_rect(mark.region, to).shrink(1.0);
         let colour = colour_of(mark.kind);
@@ -91,18 +90,20 @@ pub fn regions(painter: &Painter, marks: &[RegionMark], to: impl Fn((f64, f64)) 
                 painter.rect_filled(square, 1.0, colour);
             }
         }
-        let clip = painter.clip_rect();
-        let at = pos2(
-            rect.left().max(clip.left()) + 4.0,
-            rect.top().max(clip.top()) + 4.0,
-        );
+    }
+    let mut plates = Vec::new();
+    let clip = painter.clip_rect();
+    for mark in order {
+        let rect = region_rect(mark.region, to);
+        let corner = rect.left_top().max(clip.left_top()) + vec2(5.0, 5.0);
+        let room = rect.right().min(clip.right()) - corner.x;
+        let colour = colour_of(mark.kind);
         // A name wider than its region would cover the neighbour's.
-        let room = rect.right() - at.x;
         if mark.chosen || room > 7.0 * mark.name.len() as f32 {
-            plate(painter, at, &mark.name, colour, &mut plates);
+            plate(painter, corner, &mark.name, colour, &mut plates);
         } else if room > 14.0 {
             let number = (mark.index + 1).to_string();
-            plate(painter, at, &number, colour, &mut plates);
+            plate(painter, corner, &number, colour, &mut plates);
         }
     }
 }

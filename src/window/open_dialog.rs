@@ -2,12 +2,10 @@
 
 use super::colours::Palette;
 use super::command::{BrowseFor, Command};
-use super::fields::{at_right, remark};
+use super::fields::{at_right, dialog, remark};
 use super::later::Later;
 use eframe::egui::text::{CCursor, CCursorRange};
-use eframe::egui::{
-    Context, EventFilter, Id, Key, Modal, RichText, ScrollArea, TextEdit, Ui, vec2,
-};
+use eframe::egui::{Context, EventFilter, Key, RichText, ScrollArea, TextEdit, Ui, vec2};
 use std::path::{MAIN_SEPARATOR, Path, PathBuf};
 
 /// How many entries of a folder are listed.
@@ -141,7 +139,7 @@ impl PathDialog {
         browse: bool,
         out: &mut Vec<Command>,
     ) {
-        let modal = Modal::new(Id::unique("path dialog")).show(ctx, |ui| {
+        let modal = dialog(ctx, "path dialog").show(ctx, |ui| {
             ui.set_width(600.0);
             self.inside(ui, recent, browse, out);
         });

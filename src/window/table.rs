@@ -64,7 +64,7 @@ pub fn results_ui(ui: &mut Ui, results: &Results, out: &mut Vec<Command>) {
     let chosen = results.line.and_then(|i| lines.get(i));
     let wide = ui.available_width();
     let side = if chosen.is_some() && wide > 760.0 {
-        300.0
+        (0.32 * wide).clamp(300.0, 460.0)
     } else {
         0.0
     };

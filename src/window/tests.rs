@@ -44,7 +44,7 @@ fn app(window: &Window) -> &App {
 
 fn click(window: &mut Window, label: &str) {
     window.get_by_label(label).click();
-    window.run_steps(2);
+    window.run_steps(4);
 }
 
 /// Where a map lies.
