@@ -38,7 +38,9 @@ fn main() -> Result<()> {
         }
         "certainty" => {
             let surface = erode(m, p, &watch)?;
-            let marks = timed(repeats, || certainty_map(surface.view(), m, p, 0.0, [0, 0], &watch))?;
+            let marks = timed(repeats, || {
+                certainty_map(surface.view(), m, p, 0.0, [0, 0], &watch)
+            })?;
             write_npy(out, &marks)?;
         }
         other => bail!("unknown operation \"{other}\""),

@@ -65,7 +65,7 @@ pub struct Common {
 pub enum Command {
     /// Run every stage of each job, headless, and write its record.
     ///
-    /// Per job the folder DIR/<stem of the job file>/ gets result.json, report.html, surface.npy,
+    /// Per job the folder DIR/STEM/ (the stem of the job file) gets result.json, report.html, surface.npy,
     /// certainty.npy and tip.npy. A scan may stand in place of a job: everything is then left to
     /// the program.
     Run {

@@ -400,7 +400,8 @@ fn answers(map: &HeightMap) {
 
 #[test]
 fn maps_that_no_tip_made_are_answered() {
-    let maps: [(usize, usize, f64, fn(f64, f64) -> f64); 7] = [
+    type Surface = fn(f64, f64) -> f64;
+    let maps: [(usize, usize, f64, Surface); 7] = [
         (1, 1, 1.0, |_, _| 1.0),
         (1, 50, 1.0, |x, _| if x > 20.0 { 5.0 } else { 0.0 }),
         (50, 1, 1.0, |_, y| y),

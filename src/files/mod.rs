@@ -4,8 +4,8 @@
 //! the [`OpenOptions`], from the sidecar `NAME.EXT.toml`, from the file; what none of them states
 //! is an error that says what to give, never a default. Here nothing is levelled or measured.
 //!
-//! To add a format: one file with a type that implements [`format::Format`], one line in
-//! [`FORMATS`]; to write it, one arm in [`write()`](write()).
+//! To add a format: one file with a type that implements `format::Format`, one line in
+//! `FORMATS`; to write it, one arm in [`write()`](write()).
 
 mod archive;
 mod format;

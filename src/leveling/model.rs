@@ -304,7 +304,7 @@ pub(super) fn core(
     kept
 }
 
-/// The widest neighbourhood of [`core`] that keeps a quarter of the marked pixels.
+/// The widest neighbourhood of `core` that keeps a quarter of the marked pixels.
 pub(super) fn core_reach(
     z: &Array2<f64>,
     mask: &Array2<bool>,

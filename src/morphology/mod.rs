@@ -111,7 +111,8 @@ pub mod certainty {
 /// each other they count as one contact, and are `TOUCHED`: something there was touched for
 /// certain. Else the contact is shared: if one of the pixels is `TOUCHED` already it explains the
 /// position, otherwise all are `BOUNDED`. What no position needs is `NEVER`, void surface pixels
-/// are `VOID`.
+/// are `VOID`. Last, a pixel within half the spread of a touched one and within `tolerance` of its
+/// height is `TOUCHED` as well: nothing tells the two apart.
 ///
 /// On a scan without noise take a tolerance of the size of the rounding and a spread of 0: then
 /// `TOUCHED` is the published certainty. Noise blurs where an apex of radius R touched by about

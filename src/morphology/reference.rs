@@ -100,6 +100,15 @@ pub(super) fn certainty_map(
             touched.iter().for_each(|&at| map[at] = BOUNDED);
         }
     }
+    let sole = map.clone();
+    for ((r, c), mark) in map.indexed_iter_mut().filter(|(_, mark)| **mark != VOID) {
+        for ((sr, sc), _) in sole.indexed_iter().filter(|(_, mark)| **mark == TOUCHED) {
+            let near = r.abs_diff(sr) <= spread[0] / 2 && c.abs_diff(sc) <= spread[1] / 2;
+            if near && (surface[(r, c)] - surface[(sr, sc)]).abs() <= tolerance {
+                *mark = TOUCHED;
+            }
+        }
+    }
     map
 }
 

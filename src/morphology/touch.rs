@@ -57,11 +57,15 @@ pub(super) fn certainty_map(
     let touched = search.padded(&marks);
     let rest = &progress.part(0.5, 1.0);
     search.pass(&mut marks, &mut shared, Pass::Shared(&touched), rest)?;
+    let same_contact = search.same_contact(&marks, surface);
     ndarray::Zip::from(&mut marks)
         .and(surface)
-        .par_for_each(|mark, s| {
+        .and(&same_contact)
+        .par_for_each(|mark, s, &same| {
             if !s.is_finite() {
                 *mark = VOID;
+            } else if same {
+                *mark = TOUCHED;
             }
         });
     Ok(marks)
@@ -120,6 +124,34 @@ impl Search<'_> {
             band.merge(&bands);
             Ok(())
         })
+    }
+
+    /// Surface pixels that the rule cannot tell from a touched one: within half the spread of it
+    /// and within the tolerance of its height.
+    fn same_contact(&self, marks: &Array2<u8>, surface: ArrayView2<f32>) -> Array2<bool> {
+        let (rows, cols) = marks.dim();
+        let [down, right] = self.rule.spread.map(|spread| spread / 2);
+        let mut same = Array2::from_elem(marks.dim(), false);
+        if down == 0 && right == 0 {
+            return same;
+        }
+        ndarray::Zip::indexed(&mut same)
+            .and(marks)
+            .and(surface)
+            .par_for_each(|(r, c), same, &mark, &s| {
+                let near = ndarray::s![
+                    r.saturating_sub(down)..(r + down + 1).min(rows),
+                    c.saturating_sub(right)..(c + right + 1).min(cols)
+                ];
+                *same =
+                    mark != TOUCHED
+                        && marks.slice(near).iter().zip(surface.slice(near)).any(
+                            |(&mark, other)| {
+                                mark == TOUCHED && (s - other).abs() <= self.rule.tolerance
+                            },
+                        );
+            });
+        same
     }
 
     /// The marks laid out as the field's data.

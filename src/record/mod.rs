@@ -51,7 +51,7 @@ use crate::files;
 use crate::job::{Job, Outcome, TipResult};
 use std::path::{Path, PathBuf};
 
-/// Files written by [`write`].
+/// Files written by [`write()`].
 #[derive(Debug, Clone, PartialEq)]
 pub struct Written {
     /// The folder.

@@ -613,11 +613,10 @@ impl App {
             Command::MoveRegion(index, region) => self.move_region(index, region),
             Command::Look(view) => self.desk.view = view,
             Command::Section(line) => self.desk.line = Some(line),
+            Command::Select(request) if request == self.chosen.request => {}
             Command::Select(request) => {
-                if request != self.chosen.request {
-                    let line = request.and_then(|i| self.first_line(i));
-                    self.chosen = Chosen { request, line };
-                }
+                let line = request.and_then(|i| self.first_line(i));
+                self.chosen = Chosen { request, line };
             }
             Command::SelectLine(i) => self.select_line(i),
             Command::Reliability(on) => {

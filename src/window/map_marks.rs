@@ -215,7 +215,7 @@ pub fn ghost(
 
 /// A row that jumps: a wedge at the map's left edge.
 pub fn row_jump(painter: &Painter, at: Pos2, p: &Palette) {
-    let wedge = vec![at, at + vec2(-8.0, -4.0), at + vec2(-8.0, 4.0)];
+    let wedge = [at, at + vec2(-8.0, -4.0), at + vec2(-8.0, 4.0)];
     painter.add(eframe::egui::Shape::convex_polygon(
         wedge.iter().map(|q| *q + vec2(9.0, 0.0)).collect(),
         p.warn,

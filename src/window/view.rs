@@ -25,7 +25,7 @@ impl View {
     }
 
     /// Screen position of a map point.
-    pub fn to_screen(&self, pane: Rect, (x, y): (f64, f64)) -> Pos2 {
+    pub fn to_screen(self, pane: Rect, (x, y): (f64, f64)) -> Pos2 {
         let middle = pane.center();
         pos2(
             middle.x + ((x - self.middle.0) / self.nm_per_point) as f32,
@@ -34,7 +34,7 @@ impl View {
     }
 
     /// Map point at a screen position.
-    pub fn to_map(&self, pane: Rect, position: Pos2) -> (f64, f64) {
+    pub fn to_map(self, pane: Rect, position: Pos2) -> (f64, f64) {
         let d = position - pane.center();
         (
             self.middle.0 + f64::from(d.x) * self.nm_per_point,

@@ -45,12 +45,25 @@ pub(super) fn finish(
         None
     };
     match polished {
-        // Features must show one and the same tip.
-        Some(p) if p.scale <= 3.0 * noise + AGREE_PX * px => {
+        // Features must show one and the same tip, and one that has a tip's apex.
+        Some(p) if p.scale <= 3.0 * noise + AGREE_PX * px && !is_plateau(&p.shape) => {
             from_polished(scan, noise, settings, &bound, &p)
         }
         _ => from_bound(scan, noise, settings, &bound, progress),
     }
+}
+
+/// Whether the shape stays next to level half-way to the window's rim on some side: the corner of a
+/// plateau, not a tip.
+fn is_plateau(shape: &Array2<f64>) -> bool {
+    let (rows, columns) = shape.dim();
+    let deepest = -shape.iter().copied().fold(0.0, f64::min);
+    let ring = shape.indexed_iter().filter(|((r, c), _)| {
+        let (dr, dc) = (r.abs_diff(rows / 2), c.abs_diff(columns / 2));
+        dr <= rows / 4 && dc <= columns / 4 && (dr == rows / 4 || dc == columns / 4)
+    });
+    let shallowest = ring.map(|(_, p)| -p).fold(f64::INFINITY, f64::min);
+    shallowest < 0.05 * deepest
 }
 
 /// Shape, band and figures from the least-squares fit.
