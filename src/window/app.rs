@@ -288,6 +288,9 @@ impl App {
             old.warnings = fresh.warnings;
         }
         self.drop_misfits();
+        if let (Some(request), None) = (self.chosen.request, self.chosen.line) {
+            self.chosen.line = self.first_line(request);
+        }
     }
 
     /// Maps of another size than the scan's cannot stand beside it.

@@ -166,9 +166,21 @@ impl Store {
     }
 }
 
-/// Whether a process runs; this one counts. Known only where there is `/proc`.
+/// Whether a process of this program runs under that number; this one counts. Known only where
+/// there is `/proc`.
 fn alive(process: u32) -> bool {
-    process == std::process::id() || Path::new(&format!("/proc/{process}")).exists()
+    let stat = |of: &str| std::fs::read_to_string(format!("/proc/{of}/stat")).ok();
+    // "number (name) state ...": one that has ended but was not waited for is in state Z.
+    let name_and_state = |text: String| {
+        let (front, back) = text.rsplit_once(')')?;
+        let name = front.split_once('(')?.1.to_owned();
+        Some((name, back.trim_start().chars().next()?))
+    };
+    let Some((name, state)) = stat(&process.to_string()).and_then(name_and_state) else {
+        return process == std::process::id();
+    };
+    let own = stat("self").and_then(name_and_state);
+    !matches!(state, 'Z' | 'X') && own.is_some_and(|(own, _)| own == name)
 }
 
 #[derive(Serialize, Deserialize)]
@@ -243,5 +255,11 @@ mod tests {
         assert_eq!(left.job.folder, Path::new("/scans"));
         left.forget();
         assert!(store.left_behind().is_none());
+    }
+
+    #[test]
+    fn this_process_is_alive_and_others_are_not_this_program() {
+        assert!(alive(std::process::id()));
+        assert!(!alive(1) && !alive(u32::MAX));
     }
 }
