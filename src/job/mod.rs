@@ -5,6 +5,8 @@ mod demo;
 mod ghost;
 mod spec;
 mod stages;
+#[cfg(test)]
+mod tests;
 mod worker;
 
 pub use demo::{data_folder, demo};

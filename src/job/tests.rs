@@ -1,0 +1,206 @@
+//! The job file, the stages and the worker.
+
+use super::*;
+use crate::dimensions::{Axis, Kind, Request};
+use crate::error::ErrorKind;
+use crate::files;
+use crate::heightmap::{HeightMap, Pitch};
+use crate::progress::Progress;
+use crate::units::Length;
+use std::path::Path;
+use std::sync::Arc;
+use std::time::Duration;
+
+/// The job file of the outward contract.
+const CONTRACT: &str = r#"
+title = "Stamp 14, field 3"
+
+[scan]
+file = "stamp-14-f3.tiff"
+pitch = ["2 nm", "2 nm"]
+height-unit = "nm"
+
+[level]
+method = "auto"
+
+[tip]
+from = "blind"
+support = "130 nm"
+threshold = "auto"
+
+[calibration]
+x = 0.002
+y = 0.002
+z = 0.005
+
+[[dimension]]
+name = "line 2"
+kind = "line-width"
+region = ["120 nm", "0 nm", "400 nm", "1024 nm"]
+at = [0.1, 0.5, 0.9]
+"#;
+
+#[test]
+fn the_job_file_of_the_contract_is_read_and_written_back() {
+    let job = JobFile::from_toml(CONTRACT).unwrap();
+    assert_eq!(job.scan.pitch.unwrap()[0].nm(), 2.0);
+    assert_eq!(job.tip.support.unwrap().nm(), 130.0);
+    assert_eq!(job.dimensions[0].region.unwrap().width, 400.0);
+    assert_eq!(JobFile::from_toml(&job.to_toml().unwrap()).unwrap(), job);
+}
+
+#[test]
+fn a_bad_entry_is_named() {
+    for (good, bad, named) in [
+        ("method = \"auto\"", "method = \"magic\"", "magic"),
+        ("support = \"130 nm\"", "support = \"130\"", "130"),
+        ("support = \"130 nm\"", "suport = \"130 nm\"", "suport"),
+        ("threshold = \"auto\"", "threshold = \"-1 nm\"", "-1"),
+        ("x = 0.002", "x = 2", "x = 2"),
+        ("at = [0.1, 0.5, 0.9]", "at = [1.5]", "1.5"),
+        ("from = \"blind\"", "from = \"model\"", "radius"),
+        ("from = \"blind\"", "from = \"file\"", "file"),
+        (
+            "height-unit = \"nm\"",
+            "height-unit = \"furlong\"",
+            "furlong",
+        ),
+        (
+            "pitch = [\"2 nm\", \"2 nm\"]",
+            "pitch = [\"0 nm\", \"2 nm\"]",
+            "0 nm",
+        ),
+    ] {
+        let text = CONTRACT.replace(good, bad);
+        assert_ne!(text, CONTRACT);
+        let error = JobFile::from_toml(&text).unwrap_err();
+        assert_eq!(error.kind(), ErrorKind::Setting, "{bad}");
+        assert!(error.to_string().contains(named), "{bad}: {error}");
+    }
+    let known = CONTRACT.replace("from = \"blind\"", "from = \"known-shape\"");
+    assert_eq!(
+        JobFile::from_toml(&known).unwrap_err().kind(),
+        ErrorKind::Unsupported
+    );
+}
+
+/// A ridge of 20 nm under a sphere-cone, on disk, with a job that measures it.
+fn ridge(folder: &Path) -> Job {
+    let map = HeightMap::from_fn(48, 96, Pitch::square(2.0), |x, _| {
+        if (60.0..130.0).contains(&x) {
+            20.0
+        } else {
+            0.0
+        }
+    });
+    files::write(&folder.join("ridge.tiff"), &map.unwrap()).unwrap();
+    let mut job = Job::on_scan(&folder.join("ridge.tiff"));
+    job.file.tip.from = TipFrom::Model;
+    job.file.tip.radius = Some(Length::from_nm(8.0));
+    job.file.tip.half_angle = Some(15.0);
+    job.file.dimensions.push(Request {
+        name: "ridge".to_owned(),
+        kind: Kind::StepHeight,
+        region: None,
+        at: Vec::new(),
+        across: Some(Axis::X),
+    });
+    job
+}
+
+fn run(stages: &mut Stages, job: &Job) -> Outcome {
+    stages.run(job, &Progress::new(), &mut |_| {}).unwrap()
+}
+
+#[test]
+fn only_what_a_setting_touches_is_computed_anew() {
+    let folder = tempfile::tempdir().unwrap();
+    let mut job = ridge(folder.path());
+    let mut stages = Stages::default();
+    let same = |a: &Outcome, b: &Outcome| {
+        [
+            Arc::ptr_eq(a.level.as_ref().unwrap(), b.level.as_ref().unwrap()),
+            Arc::ptr_eq(a.surface.as_ref().unwrap(), b.surface.as_ref().unwrap()),
+            Arc::ptr_eq(
+                a.dimensions.as_ref().unwrap(),
+                b.dimensions.as_ref().unwrap(),
+            ),
+        ]
+    };
+    let first = run(&mut stages, &job);
+    assert_eq!(same(&first, &run(&mut stages, &job)), [true, true, true]);
+    job.file.dimensions[0].name = "renamed".to_owned();
+    let renamed = run(&mut stages, &job);
+    assert_eq!(same(&first, &renamed), [true, true, false]);
+    job.file.tip.radius = Some(Length::from_nm(9.0));
+    let blunter = run(&mut stages, &job);
+    assert_eq!(same(&renamed, &blunter), [true, false, false]);
+    job.file.level.method = LevelMethod::None;
+    assert_eq!(
+        same(&blunter, &run(&mut stages, &job)),
+        [false, false, false]
+    );
+}
+
+#[test]
+fn a_saved_job_still_points_to_its_scan() {
+    let folder = tempfile::tempdir().unwrap();
+    let mut job = ridge(folder.path());
+    let elsewhere = folder.path().join("jobs");
+    std::fs::create_dir(&elsewhere).unwrap();
+    job.save(&elsewhere.join("ridge.toml")).unwrap();
+    let back = Job::open(&elsewhere.join("ridge.toml")).unwrap();
+    assert!(back.scan_path().is_file());
+    assert_eq!(back.sha256, job.sha256);
+    job.save(&folder.path().join("ridge.toml")).unwrap();
+    assert_eq!(job.file.scan.file, Path::new("ridge.tiff"));
+}
+
+#[test]
+fn a_cancelled_run_is_an_error_of_its_kind() {
+    let folder = tempfile::tempdir().unwrap();
+    let progress = Progress::new();
+    progress.cancel();
+    let result = Stages::default().run(&ridge(folder.path()), &progress, &mut |_| {});
+    assert!(result.unwrap_err().is_cancelled());
+}
+
+#[test]
+fn the_worker_keeps_its_outcome_and_drops_the_stale_run() {
+    let folder = tempfile::tempdir().unwrap();
+    let mut job = ridge(folder.path());
+    let mut worker = Worker::start(|| {});
+    let wait = |worker: &mut Worker| {
+        for _ in 0..2000 {
+            worker.poll();
+            if worker.under_way().is_none() {
+                return;
+            }
+            std::thread::sleep(Duration::from_millis(5));
+        }
+        panic!("the worker does not end");
+    };
+    worker.order(job.clone());
+    job.file.dimensions[0].name = "second".to_owned();
+    worker.order(job.clone());
+    wait(&mut worker);
+    let named = |worker: &Worker| worker.latest().dimensions.as_ref().unwrap()[0].name.clone();
+    assert_eq!(named(&worker), "second");
+    job.file.scan.file = "missing.tiff".into();
+    worker.order(job);
+    wait(&mut worker);
+    assert_eq!(worker.error().unwrap().kind(), ErrorKind::Io);
+    assert_eq!(named(&worker), "second");
+}
+
+#[test]
+fn the_ghost_tip_stands_on_the_top_edge_of_a_wall() {
+    let folder = tempfile::tempdir().unwrap();
+    let mut job = ridge(folder.path());
+    job.file.level.method = LevelMethod::None;
+    let outcome = run(&mut Stages::default(), &job);
+    let ghost = ghost_tip(&outcome, 24, 45).unwrap();
+    assert_eq!(ghost.apex_height_nm, 20.0);
+    assert!(ghost.contacts.contains(&(24, 45)));
+    assert_eq!(ghost_tip(&outcome, 500, 0), None);
+}
