@@ -404,15 +404,17 @@ fn from_estimate(estimate: Estimate, spec: &TipSpec) -> TipResult {
     }
 }
 
-/// Rows and columns over which an apex within the tolerance cannot tell where it touched: an apex
-/// of radius R is that flat over `sqrt(2 R tolerance)` to each side. 0 where no radius is known.
+/// Rows and columns over which nothing tells where an apex touched: a pixel to each side, since a
+/// contact lies anywhere between pixels, or the `sqrt(2 R tolerance)` over which an apex of radius
+/// R is flat within the tolerance. None for a tip that is not identified.
 fn contact_spread(found: &TipResult, tolerance_nm: f64) -> [usize; 2] {
-    let Some(apex) = found.read_out.apex_radius else {
+    if !found.identified {
         return [0, 0];
-    };
-    let half_width = (2.0 * apex.value * tolerance_nm).sqrt();
+    }
+    let radius = found.read_out.apex_radius.map_or(0.0, |apex| apex.value);
+    let half_width = (2.0 * radius * tolerance_nm).sqrt();
     let pitch = found.tip.pitch();
-    [pitch.y, pitch.x].map(|pitch| 2 * (half_width / pitch) as usize)
+    [pitch.y, pitch.x].map(|pitch| 2 * ((half_width / pitch) as usize).max(1))
 }
 
 fn reconstruct(level: &Leveled, found: &TipResult, progress: &Progress) -> Result<SurfaceResult> {
@@ -425,10 +427,16 @@ fn reconstruct(level: &Leveled, found: &TipResult, progress: &Progress) -> Resul
     let tolerance_nm = (2.0 * level.noise_nm.unwrap_or(0.0))
         .max(rounding)
         .max(1e-4);
+    // A given tip's uncertainty is of its whole size, not of the course of its flank.
+    let flank_u = if found.from == TipFrom::Blind {
+        found.height_u_nm
+    } else {
+        0.0
+    };
     let certainty = morphology::certainty_map(
         eroded.view(),
         scan,
-        tip,
+        found.tip.for_contacts(flank_u).view(),
         tolerance_nm as f32,
         contact_spread(found, tolerance_nm),
         &progress.part(0.2, 0.5),

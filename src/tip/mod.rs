@@ -81,6 +81,34 @@ impl Tip {
         ]
     }
 
+    /// The shape for a search of contacts that the grid and an uncertain flank blur: each cell
+    /// raised by a quarter of its height step to the next cells, because a contact lies anywhere
+    /// between them, and by twice `flank_u_nm` (standard uncertainty of the surface along its
+    /// normal) as the slope makes it a height. Never above the apex. Common practice.
+    pub fn for_contacts(&self, flank_u_nm: f64) -> Array2<f32> {
+        let shape = &self.shape;
+        // The mean height step to the neighbours inside the tip, nm.
+        let step = |(i, j): (usize, usize), (di, dj): (usize, usize)| {
+            let here = shape[[i, j]];
+            let height = |at: (usize, usize)| shape.get(at).copied().filter(|p| p.is_finite());
+            let before = i.checked_sub(di).zip(j.checked_sub(dj)).and_then(height);
+            match (before, height((i + di, j + dj))) {
+                (Some(a), Some(b)) => f64::from(b - a).abs() / 2.0,
+                (Some(one), None) | (None, Some(one)) => f64::from(one - here).abs(),
+                (None, None) => 0.0,
+            }
+        };
+        Array2::from_shape_fn(shape.dim(), |at| {
+            if !shape[at].is_finite() {
+                return shape[at];
+            }
+            let (down, right) = (step(at, (1, 0)), step(at, (0, 1)));
+            let slope = (down / self.pitch.y).hypot(right / self.pitch.x);
+            let raised = 0.25 * down.hypot(right) + 2.0 * flank_u_nm * slope;
+            (shape[at] + raised as f32).min(0.0)
+        })
+    }
+
     /// Greatest depth below the apex of a cell inside the tip, nm.
     pub fn depth_nm(&self) -> f64 {
         let lowest = self
@@ -131,4 +159,33 @@ pub struct Band {
     pub sharper: Tip,
     /// A tip that encloses the true one.
     pub blunter: Tip,
+}
+
+#[cfg(test)]
+mod tests {
+    use super::model::Model;
+    use super::*;
+
+    #[test]
+    fn a_cone_for_contacts_is_raised_by_a_quarter_step_and_the_uncertainty() {
+        let (radius, half_angle) = (0.0, 45.0);
+        let tip = Model::SphereCone { radius, half_angle }
+            .sample(18.0, Pitch::square(2.0))
+            .unwrap();
+        // On the axis of a 45 degree cone the step from pixel to pixel of 2 nm is 2 nm, slope 1.
+        let raised = tip.for_contacts(0.1)[[4, 7]];
+        assert!(
+            (f64::from(raised) - (-6.0 + 0.25 * 2.0 + 0.2)).abs() < 1e-5,
+            "{raised}"
+        );
+        assert_eq!(tip.for_contacts(0.1)[[4, 4]], 0.0);
+    }
+
+    #[test]
+    fn what_is_outside_the_tip_stays_outside() {
+        let mut shape = Array2::from_elem((3, 3), f32::NEG_INFINITY);
+        shape[[1, 1]] = 0.0;
+        let tip = Tip::new(shape.clone(), Pitch::square(1.0)).unwrap();
+        assert_eq!(tip.for_contacts(1.0), shape);
+    }
 }
