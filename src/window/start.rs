@@ -126,7 +126,11 @@ fn sorted(error: eframe::Error) -> WindowError {
         eframe::Error::WinitEventLoop(_) if text.contains("Library") || text.contains(".so") => {
             WindowError::MissingLibrary(text)
         }
-        eframe::Error::WinitEventLoop(_) | eframe::Error::Winit(_) => WindowError::NoDisplay(text),
+        eframe::Error::WinitEventLoop(_) | eframe::Error::Winit(_) => {
+            // The front of the message names a source file of the windowing library.
+            let plain = text.rsplit_once(": ").map_or(text.as_str(), |(_, last)| last);
+            WindowError::NoDisplay(plain.to_owned())
+        }
         _ => WindowError::Failed(text),
     }
 }
