@@ -20,7 +20,7 @@ pub struct Question {
     pub why: String,
     /// Pixel pitch as typed, x and y, where it is missing.
     pub pitch: Option<[String; 2]>,
-    /// Height unit, where it is missing.
+    /// Height unit, where it is missing; empty until chosen, for a unit is never guessed.
     pub unit: Option<String>,
     /// The maps of the file by name, and the one chosen, where there are several.
     pub maps: Option<(Vec<String>, usize)>,
@@ -41,7 +41,7 @@ impl Question {
         let mut question = Self {
             why: error.what().to_owned(),
             pitch: (kind == MissingPitch).then(|| [String::new(), String::new()]),
-            unit: (kind == MissingHeightUnit).then(|| "nm".to_owned()),
+            unit: (kind == MissingHeightUnit).then(String::new),
             maps: None,
             refused: String::new(),
         };
@@ -60,7 +60,7 @@ impl Question {
                     question.pitch = Some([String::new(), String::new()]);
                 }
                 if seen.nm_per_count.is_none() {
-                    question.unit = Some("nm".to_owned());
+                    question.unit = Some(String::new());
                 }
             }
         } else if kind == SeveralMaps {
@@ -88,6 +88,9 @@ impl Question {
             spec.pitch = Some([x, y]);
         }
         if let Some(unit) = &self.unit {
+            if unit.is_empty() {
+                return Err("Choose the unit of the stored heights.".to_owned());
+            }
             spec.height_unit = Some(unit.clone());
         }
         if let Some((_, chosen)) = &self.maps {
@@ -161,7 +164,7 @@ fn question_fields(ui: &mut Ui, question: &mut Question) {
                     .label("A stored 1 is one")
                     .on_hover_text("Unit of the stored heights");
                 ComboBox::from_id_salt("unit")
-                    .selected_text(unit.as_str())
+                    .selected_text(if unit.is_empty() { "choose" } else { unit })
                     .show_ui(ui, |ui| {
                         for known in UNITS {
                             ui.selectable_value(unit, known.to_owned(), known);
@@ -300,6 +303,8 @@ mod tests {
         question.pitch = Some(["2".to_owned(), String::new()]);
         assert!(question.answered(&spec).unwrap_err().contains("unit"));
         question.pitch = Some(["2 nm".to_owned(), String::new()]);
+        assert!(question.answered(&spec).unwrap_err().contains("heights"));
+        question.unit = Some("nm".to_owned());
         let answered = question.answered(&spec).unwrap();
         let map = files::open(&path, &answered.open_options().unwrap()).unwrap();
         assert_eq!(map.pitch(), Pitch::square(2.0));

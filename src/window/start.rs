@@ -128,7 +128,9 @@ fn sorted(error: eframe::Error) -> WindowError {
         }
         eframe::Error::WinitEventLoop(_) | eframe::Error::Winit(_) => {
             // The front of the message names a source file of the windowing library.
-            let plain = text.rsplit_once(": ").map_or(text.as_str(), |(_, last)| last);
+            let plain = text
+                .rsplit_once(": ")
+                .map_or(text.as_str(), |(_, last)| last);
             WindowError::NoDisplay(plain.to_owned())
         }
         _ => WindowError::Failed(text),

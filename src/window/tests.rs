@@ -360,6 +360,16 @@ fn a_file_without_a_scale_is_asked_for_and_then_opened() {
     window.run_steps(1);
     window.get_by(field).type_text("2 nm");
     window.run_steps(1);
+    // No unit is chosen beforehand.
+    window.get_by_label("Open with this").click();
+    window.run_steps(2);
+    assert!(matches!(app(&window).dialog, Dialog::Question(_)));
+    window
+        .get_by_role_and_label(Role::ComboBox, "A stored 1 is one")
+        .click();
+    window.run_steps(3);
+    window.get_by_role_and_label(Role::Button, "nm").click();
+    window.run_steps(3);
     window.get_by_label("Open with this").click();
     wait(&mut window, |app| app.shown.level.is_some());
     let scan = &app(&window).opened.as_ref().unwrap().history.now().scan;
