@@ -164,7 +164,11 @@ fn question_fields(ui: &mut Ui, question: &mut Question) {
                     .label("A stored 1 is one")
                     .on_hover_text("Unit of the stored heights");
                 ComboBox::from_id_salt("unit")
-                    .selected_text(if unit.is_empty() { "choose" } else { unit })
+                    .selected_text(if unit.is_empty() {
+                        "choose"
+                    } else {
+                        unit.as_str()
+                    })
                     .show_ui(ui, |ui| {
                         for known in UNITS {
                             ui.selectable_value(unit, known.to_owned(), known);
