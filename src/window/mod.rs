@@ -35,6 +35,7 @@ mod table;
 #[cfg(test)]
 mod tests;
 mod theme;
+mod tip_panel;
 mod tip_view;
 mod top;
 mod view;

@@ -1,0 +1,261 @@
+//! The panel of the tip: where it comes from, what it is, what is wrong with it.
+
+use super::command::{BrowseFor, Command};
+use super::fields::{caution, choice_row, fact, heading, length_row, number_row, text_row};
+use super::format;
+use super::panels::Panel;
+use crate::job::{Threshold, TipFrom, TipShape, TipSpec};
+use crate::units::Length;
+use eframe::egui::Ui;
+use std::path::PathBuf;
+
+const SOURCES: [(TipFrom, &str, &str); 3] = [
+    (
+        TipFrom::Blind,
+        "Blind, this scan",
+        "The bluntest tip that the scan allows. It holds the bluntness of the sharpest feature too.",
+    ),
+    (TipFrom::Model, "Model", "A shape given by its formula."),
+    (TipFrom::File, "File", "A tip on the scan's own grid."),
+];
+
+/// The tip: where it comes from, what it is, what is wrong with it.
+pub fn tip_ui(ui: &mut Ui, panel: &Panel, out: &mut Vec<Command>) {
+    heading(ui, "Where the tip comes from");
+    let tip = &panel.job.tip;
+    if let Some(from) = choice_row(
+        ui,
+        "From",
+        "Where the tip's shape comes from",
+        tip.from,
+        &SOURCES,
+    ) {
+        panel.edit(out, |job| take_source(&mut job.tip, from));
+        if from == TipFrom::File && tip.file.is_none() && panel.browse {
+            out.push(Command::Browse(BrowseFor::Tip));
+        }
+    }
+    let support = length_row(
+        ui,
+        "Support",
+        "Full width of the tip's grid. It must hold the tip over the height of the features, and both apexes of a double tip.",
+        tip.support,
+        "chosen from the scan",
+    );
+    if let Some(support) = support {
+        panel.edit(out, |job| job.tip.support = support);
+    }
+    match tip.from {
+        TipFrom::Blind | TipFrom::KnownShape => blind_settings(ui, panel, out),
+        TipFrom::Model => model_settings(ui, panel, out),
+        TipFrom::File => file_settings(ui, panel, out),
+    }
+    if let Some(found) = &panel.outcome.tip {
+        heading(ui, "What it is");
+        read_out_ui(ui, found);
+    }
+    let none = panel
+        .outcome
+        .warnings
+        .iter()
+        .filter(|w| w.starts_with("No tip"));
+    let found = panel.outcome.tip.iter().flat_map(|t| t.diagnosis.iter());
+    let findings: Vec<&String> = none.chain(found).collect();
+    if !findings.is_empty() {
+        heading(ui, "Findings");
+        for finding in findings {
+            caution(ui, finding);
+        }
+    }
+}
+
+/// Another source with settings that can be used at once.
+fn take_source(tip: &mut TipSpec, from: TipFrom) {
+    tip.from = from;
+    if from == TipFrom::Model {
+        tip.shape.get_or_insert(TipShape::SphereCone);
+        tip.radius.get_or_insert(Length::from_nm(10.0));
+        tip.half_angle.get_or_insert(17.0);
+    }
+}
+
+fn blind_settings(ui: &mut Ui, panel: &Panel, out: &mut Vec<Command>) {
+    let tip = &panel.job.tip;
+    let value = tip.fixed_threshold_nm().map(Length::from_nm);
+    let threshold = length_row(
+        ui,
+        "Threshold",
+        "Height differences below it count as noise. Too small and noise sharpens the tip to a spike, too large and it stays blunt.",
+        value,
+        "from the noise",
+    );
+    if let Some(threshold) = threshold {
+        panel.edit(out, |job| {
+            job.tip.threshold = threshold.map(Threshold::Fixed)
+        });
+    }
+    let radius = length_row(
+        ui,
+        "Feature radius",
+        "Apex radius of the sharpest feature, where you know it. The estimate holds tip radius plus feature radius.",
+        tip.feature_radius,
+        "not stated",
+    );
+    if let Some(radius) = radius {
+        panel.edit(out, |job| job.tip.feature_radius = radius);
+    }
+}
+
+const SHAPES: [(TipShape, &str, &str); 3] = [
+    (
+        TipShape::SphereCone,
+        "Sphere and cone",
+        "A sphere that goes over into a cone",
+    ),
+    (TipShape::Paraboloid, "Paraboloid", ""),
+    (
+        TipShape::Pyramid,
+        "Pyramid",
+        "Four faces, each with its own half-angle",
+    ),
+];
+
+fn model_settings(ui: &mut Ui, panel: &Panel, out: &mut Vec<Command>) {
+    let tip = &panel.job.tip;
+    let shape = tip.shape.unwrap_or_default();
+    if let Some(shape) = choice_row(ui, "Shape", "The model's formula", shape, &SHAPES) {
+        panel.edit(out, |job| {
+            job.tip.shape = Some(shape);
+            if shape == TipShape::Pyramid {
+                job.tip.half_angles.get_or_insert([17.0; 4]);
+            }
+        });
+    }
+    if shape != TipShape::Pyramid
+        && let Some(Some(r)) = length_row(ui, "Apex radius", "", tip.radius, "")
+    {
+        panel.edit(out, |job| job.tip.radius = Some(r));
+    }
+    if shape == TipShape::SphereCone {
+        let help = "Degrees between the axis and the flank";
+        if let Some(Some(a)) = number_row(ui, "Half-angle, °", help, tip.half_angle, "") {
+            panel.edit(out, |job| job.tip.half_angle = Some(a));
+        }
+    }
+    if shape == TipShape::Pyramid {
+        let angles = tip.half_angles.unwrap_or([17.0; 4]);
+        for (i, side) in ["−x", "+x", "−y", "+y"].into_iter().enumerate() {
+            let name = format!("Face {side}, °");
+            let help = "Degrees between the axis and this face";
+            if let Some(Some(a)) = number_row(ui, &name, help, Some(angles[i]), "") {
+                panel.edit(out, |job| {
+                    let mut angles = angles;
+                    angles[i] = a;
+                    job.tip.half_angles = Some(angles);
+                });
+            }
+        }
+    }
+    uncertainty_setting(ui, panel, out);
+}
+
+fn file_settings(ui: &mut Ui, panel: &Panel, out: &mut Vec<Command>) {
+    let now = panel
+        .job
+        .tip
+        .file
+        .as_ref()
+        .map_or(String::new(), |f| f.display().to_string());
+    let help = "A tip on the scan's grid: a .npy array with its apex, height 0, at the centre, or any map this program reads";
+    if let Some(path) = text_row(ui, "Tip file", help, &now, "path of tip.npy") {
+        panel.edit(out, |job| {
+            job.tip.file = (!path.is_empty()).then(|| PathBuf::from(path));
+        });
+    }
+    if panel.browse && ui.button("Browse…").clicked() {
+        out.push(Command::Browse(BrowseFor::Tip));
+    }
+    uncertainty_setting(ui, panel, out);
+}
+
+fn uncertainty_setting(ui: &mut Ui, panel: &Panel, out: &mut Vec<Command>) {
+    let help =
+        "Standard uncertainty of the given tip's surface. It goes into every corrected value.";
+    let u = length_row(
+        ui,
+        "Uncertainty",
+        help,
+        panel.job.tip.uncertainty,
+        "not stated",
+    );
+    if let Some(u) = u {
+        panel.edit(out, |job| job.tip.uncertainty = u);
+    }
+}
+
+fn read_out_ui(ui: &mut Ui, found: &crate::job::TipResult) {
+    match &found.read_out.apex_radius {
+        Some(r) => {
+            fact(
+                ui,
+                "Apex radius",
+                format!("{} nm", format::with_u(r.value, Some(r.u))),
+            )
+            .on_hover_text(format!(
+                "Principal radii {} nm and {} nm; ± is the standard uncertainty",
+                format::significant(r.principal_nm[0], 3),
+                format::significant(r.principal_nm[1], 3)
+            ));
+            fact(
+                ui,
+                "Fit depth",
+                format!("{} nm", format::significant(r.fit_depth_nm, 2)),
+            )
+            .on_hover_text("Depth below the apex that the radius was fitted over");
+        }
+        None => {
+            fact(ui, "Apex radius", "not identified");
+        }
+    }
+    match &found.read_out.half_angle {
+        Some(a) => {
+            fact(
+                ui,
+                "Half-angle",
+                format!("{}°", format::with_u(a.value, Some(a.u))),
+            )
+            .on_hover_text(format!(
+                "Mean over all azimuths, between {} nm and {} nm below the apex",
+                format::significant(a.between_nm[0], 3),
+                format::significant(a.between_nm[1], 3)
+            ));
+        }
+        None => {
+            fact(ui, "Half-angle", "not identified");
+        }
+    }
+    let depth = match found.exercised_depth_nm {
+        None => "all of it".to_owned(),
+        Some(d) if d > 0.0 => format!("{} nm", format::significant(d, 3)),
+        Some(_) => "none".to_owned(),
+    };
+    fact(ui, "Exercised depth", depth).on_hover_text(
+        "How far up from its apex the scan has tested the tip. Above that it is only a bound.",
+    );
+    if let Some(estimate) = &found.estimate {
+        fact(
+            ui,
+            "Threshold used",
+            format!("{} nm", format::significant(estimate.threshold_nm, 2)),
+        );
+    }
+    let (rows, columns) = found.tip.shape().dim();
+    fact(ui, "Grid", format!("{columns} × {rows} pixels"));
+    let band = if found.band.is_some() {
+        "shown shaded"
+    } else {
+        "none"
+    };
+    fact(ui, "Band", band)
+        .on_hover_text("The pair of tips, sharper and blunter, between which the true one lies");
+}
