@@ -77,6 +77,17 @@ impl Error {
         self
     }
 
+    /// Puts `path` in front of a message that does not name it yet.
+    #[must_use]
+    pub fn at(self, path: &std::path::Path) -> Self {
+        let name = path.display().to_string();
+        if self.what.starts_with(&name) {
+            self
+        } else {
+            self.context(name)
+        }
+    }
+
     /// The error that a cancelled computation returns.
     pub fn cancelled() -> Self {
         Self::new(ErrorKind::Cancelled, "cancelled")

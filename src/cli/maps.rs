@@ -25,17 +25,7 @@ fn options(common: &Common) -> OpenOptions {
 }
 
 fn open(path: &Path, common: &Common) -> Result<HeightMap> {
-    files::open(path, &options(common)).map_err(|e| at(path, e))
-}
-
-/// Names the file in the message, once.
-fn at(path: &Path, error: Error) -> Error {
-    let name = path.display().to_string();
-    if error.what().contains(&name) {
-        error
-    } else {
-        error.context(name)
-    }
+    files::open(path, &options(common))
 }
 
 /// `truewidth inspect`
@@ -161,10 +151,10 @@ pub fn tip(
         .into_owned();
     let found = show
         .during(&name, |progress| Stages::default().tip(&job, progress))
-        .map_err(|e| at(scan, e))?;
+        .map_err(|e| e.at(scan))?;
     let found = (*found)
         .as_ref()
-        .map_err(|reason| Error::new(ErrorKind::Data, format!("{}: {reason}", scan.display())))?;
+        .map_err(|reason| Error::new(ErrorKind::Data, reason).at(scan))?;
     write_tip(out, &found.tip)?;
     if json {
         let value = record::tip_json(found);
@@ -197,7 +187,7 @@ pub fn reconstruct(
     show: &Show,
 ) -> Result<()> {
     let map = open(scan, common)?;
-    let tip = job::open_tip(tip, &map)?;
+    let (tip, _) = job::open_tip(tip, &map)?;
     show.during("reconstruct", |progress| {
         let surface = morphology::erode(map.heights(), tip.shape(), &progress.part(0.0, 0.5))?;
         if let Some(path) = certainty {
@@ -230,7 +220,7 @@ pub fn simulate(
     show: &Show,
 ) -> Result<()> {
     let map = open(surface, common)?;
-    let tip = job::open_tip(tip, &map)?;
+    let (tip, _) = job::open_tip(tip, &map)?;
     let scan = show.during("simulate", |progress| {
         morphology::dilate(map.heights(), tip.shape(), progress)
     })?;

@@ -114,10 +114,8 @@ fn open_window(cli: &Cli, show: &Show) -> Result<u8> {
     let job = opening_job(cli)?;
     let stem = job.path.clone().unwrap_or_else(|| job.scan_path());
     let folder = Path::new("results").join(stem.file_stem().unwrap_or_default());
-    let outcome = show.during("job", |progress| {
-        crate::job::Stages::default().run(&job, progress, &mut |_| {})
-    })?;
-    println!("{}", run::write_record(&job, &outcome, &folder)?);
+    let text = show.during("job", |progress| run::run_job(&job, &folder, progress))?;
+    println!("{text}");
     Ok(DONE)
 }
 

@@ -3,13 +3,12 @@
 use super::args::Common;
 use super::show::Show;
 use crate::error::{Error, ErrorKind, Result};
-use crate::job::{Job, Outcome, Stages};
+use crate::job::{Job, Stages};
 use crate::progress::Progress;
 use crate::record;
 use crate::units::Length;
 use std::collections::BTreeMap;
 use std::io::Write;
-use std::panic::AssertUnwindSafe;
 use std::path::{Path, PathBuf};
 use std::sync::Mutex;
 use std::sync::atomic::{AtomicUsize, Ordering};
@@ -38,13 +37,14 @@ pub fn run_all(
                         break;
                     };
                     let name = path.file_name().unwrap_or_default().to_string_lossy();
-                    let result =
-                        show.during(&name, |progress| run_one(path, folder, common, progress));
+                    let result = show.during(&name, |progress| {
+                        run_job(&open_job(path, common)?, folder, progress)
+                    });
                     let text = match result {
                         Ok(table) => table,
                         Err(error) => {
                             failed.fetch_add(1, Ordering::Relaxed);
-                            show.error(&error.context(path.display()).to_string());
+                            show.error(&error.at(path).to_string());
                             String::new()
                         }
                     };
@@ -58,28 +58,14 @@ pub fn run_all(
     Ok(failed.into_inner())
 }
 
-/// Runs one job and writes its record; returns the text for stdout.
-fn run_one(path: &Path, folder: &Path, common: &Common, progress: &Progress) -> Result<String> {
-    let job = open_job(path, common)?;
-    // One job that trips over an internal error must not take the batch down.
-    let outcome = std::panic::catch_unwind(AssertUnwindSafe(|| {
-        Stages::default().run(&job, progress, &mut |_| {})
-    }))
-    .unwrap_or_else(|_| {
-        Err(
-            Error::new(ErrorKind::Data, "an internal error stopped this job")
-                .remedy("Please report it with the file and the message above"),
-        )
-    })?;
-    write_record(&job, &outcome, folder)
-}
-
-/// Writes the record and returns the text for stdout: title, table, where the report lies.
-pub fn write_record(job: &Job, outcome: &Outcome, folder: &Path) -> Result<String> {
-    let written = record::write(folder, job, outcome)?;
+/// Runs a job and writes its record; returns the text for stdout: title, table, where the report
+/// lies.
+pub fn run_job(job: &Job, folder: &Path, progress: &Progress) -> Result<String> {
+    let outcome = Stages::default().run(job, progress, &mut |_| {})?;
+    let written = record::write(folder, job, &outcome)?;
     Ok(format!(
         "{}\nReport: {}\n",
-        record::text_table(job, outcome).trim_end(),
+        record::text_table(job, &outcome).trim_end(),
         written.report.display()
     ))
 }

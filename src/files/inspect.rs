@@ -3,7 +3,7 @@
 use super::format::{HeightScale, MapHead};
 use super::samples::Samples;
 use super::scale::Scale;
-use super::{OpenOptions, OpenedFile, named, sha256_hex};
+use super::{OpenOptions, OpenedFile, sha256_hex};
 use crate::error::Result;
 use serde::Serialize;
 use std::path::{Path, PathBuf};
@@ -67,7 +67,7 @@ pub struct Inspection {
 ///
 /// Errors: as [`super::open`], without `MissingPitch`, `MissingHeightUnit`, `SeveralMaps`.
 pub fn inspect(path: &Path, options: &OpenOptions) -> Result<Inspection> {
-    inspect_in(path, options).map_err(|e| named(path, e))
+    inspect_in(path, options).map_err(|e| e.at(path))
 }
 
 fn inspect_in(path: &Path, options: &OpenOptions) -> Result<Inspection> {

@@ -65,7 +65,7 @@ pub struct OpenOptions {
 /// options nor the sidecar nor the file states them; `SeveralMaps` when the file holds several
 /// and none is chosen; `Setting` for a bad option or sidecar. All messages begin with the path.
 pub fn open(path: &Path, options: &OpenOptions) -> Result<HeightMap> {
-    open_in(path, options).map_err(|e| named(path, e))
+    open_in(path, options).map_err(|e| e.at(path))
 }
 
 fn open_in(path: &Path, options: &OpenOptions) -> Result<HeightMap> {
@@ -139,16 +139,6 @@ impl OpenedFile {
             )
             .remedy("Choose one by its number")),
         }
-    }
-}
-
-/// Puts the path in front of a message that does not carry it yet.
-fn named(path: &Path, error: Error) -> Error {
-    let path = path.display().to_string();
-    if error.what().starts_with(&path) {
-        error
-    } else {
-        error.context(path)
     }
 }
 

@@ -3,7 +3,7 @@
 //! [`HeightMap`]: crate::heightmap::HeightMap
 
 use super::scale::Scale;
-use super::{OpenOptions, OpenedFile, format, named, sha256_hex, write};
+use super::{OpenOptions, OpenedFile, format, sha256_hex, write};
 use crate::error::Result;
 use crate::heightmap::{Pitch, Provenance};
 use ndarray::{Array2, ArrayView2};
@@ -27,7 +27,7 @@ pub struct TipGrid {
 /// nanometres, as [`write_tip_npy`] writes it and the tip file is defined; any other format must
 /// state its unit. Errors: as [`super::open`], without `MissingPitch`.
 pub fn read_tip_grid(path: &Path, options: &OpenOptions) -> Result<TipGrid> {
-    read(path, options).map_err(|e| named(path, e))
+    read(path, options).map_err(|e| e.at(path))
 }
 
 fn read(path: &Path, options: &OpenOptions) -> Result<TipGrid> {

@@ -351,7 +351,15 @@ impl TipSpec {
         model.checked().map(Some)
     }
 
-    /// Whether the user stated a threshold of his own.
+    /// The tip file, relative to the job file. An error of kind `Setting` where none is given.
+    pub fn given_file(&self) -> Result<&Path> {
+        self.file.as_deref().ok_or_else(|| {
+            Error::new(ErrorKind::Setting, "[tip] from = \"file\" without file")
+                .remedy("Add file = \"tip.npy\"")
+        })
+    }
+
+    /// The threshold that the user stated; `None` = from the noise.
     pub fn fixed_threshold_nm(&self) -> Option<f64> {
         match self.threshold {
             Some(Threshold::Fixed(length)) => Some(length.nm()),
@@ -368,11 +376,8 @@ impl TipSpec {
             )
             .remedy("Use from = \"blind\" on a scan of sharp features, \"model\" or \"file\""));
         }
-        if self.from == TipFrom::File && self.file.is_none() {
-            return Err(
-                Error::new(ErrorKind::Setting, "[tip] from = \"file\" without file")
-                    .remedy("Add file = \"tip.npy\""),
-            );
+        if self.from == TipFrom::File {
+            self.given_file()?;
         }
         for (key, length) in [
             ("support", self.support),

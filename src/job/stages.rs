@@ -12,6 +12,7 @@ use crate::tip::blind::{self, Estimate};
 use crate::tip::read_out::{ReadOut, read_out};
 use crate::tip::{Band, Tip};
 use ndarray::Array2;
+use std::panic::{AssertUnwindSafe, catch_unwind};
 use std::path::PathBuf;
 use std::sync::Arc;
 
@@ -132,12 +133,13 @@ fn stamp(path: PathBuf) -> FileStamp {
 }
 
 /// A tip, or why the data do not allow one.
-pub type TipOrReason = std::result::Result<TipResult, String>;
+pub type TipOrReason = std::result::Result<Arc<TipResult>, String>;
 
-type ScanKey = (FileStamp, ScanSpec);
+/// The file, its sidecar, and what the job says of them.
+type ScanKey = (FileStamp, FileStamp, ScanSpec);
 type LevelKey = (Same<HeightMap>, LevelSpec);
 type TipKey = (Same<Leveled>, TipSpec, Option<FileStamp>);
-type SurfaceKey = (Same<Leveled>, Same<TipOrReason>);
+type SurfaceKey = (Same<Leveled>, Same<TipResult>);
 type DimensionsKey = (
     Same<Leveled>,
     Option<Same<SurfaceResult>>,
@@ -158,9 +160,28 @@ pub struct Stages {
 impl Stages {
     /// Runs `job` through all stages. `watch` sees the outcome after each stage.
     ///
-    /// Errors: the scan or the tip file cannot be opened, a setting cannot be used, cancelled.
-    /// A tip that the data do not allow is no error: the outcome then has no tip and a warning.
+    /// Errors: the scan or the tip file cannot be opened, a setting cannot be used, cancelled; a
+    /// fault of the program itself (kind `Data`), which so neither takes a batch down nor leaves a
+    /// window waiting. A tip that the data do not allow is no error: the outcome then has no tip
+    /// and a warning.
     pub fn run(
+        &mut self,
+        job: &Job,
+        progress: &Progress,
+        watch: &mut dyn FnMut(&Outcome),
+    ) -> Result<Outcome> {
+        let run = AssertUnwindSafe(|| self.run_all(job, progress, watch));
+        catch_unwind(run).unwrap_or_else(|_| {
+            *self = Self::default();
+            Err(Error::new(
+                ErrorKind::Data,
+                "the computation stopped after an internal error",
+            )
+            .remedy("Save the job, undo the last change, and report the fault"))
+        })
+    }
+
+    fn run_all(
         &mut self,
         job: &Job,
         progress: &Progress,
@@ -190,7 +211,7 @@ impl Stages {
                             .to_owned(),
                     );
                 }
-                outcome.tip = Some(Arc::new(found.clone()));
+                outcome.tip = Some(Arc::clone(found));
             }
             Err(reason) => outcome.warnings.push(format!("No tip: {reason}")),
         }
@@ -199,7 +220,7 @@ impl Stages {
         if let Ok(found) = &*tip {
             progress.check()?;
             progress.say("reconstructing the surface");
-            let key = (Same(Arc::clone(&level)), Same(Arc::clone(&tip)));
+            let key = (Same(Arc::clone(&level)), Same(Arc::clone(found)));
             let part = progress.part(0.7, 0.9);
             outcome.surface = Some(
                 self.surface
@@ -246,9 +267,10 @@ impl Stages {
         progress.say("opening the scan");
         let spec = &job.file.scan;
         let path = job.scan_path();
-        self.scan.get((stamp(path.clone()), spec.clone()), || {
-            files::open(&path, &spec.open_options()?)
-        })
+        let sidecar = files::sidecar_path(&path);
+        let key = (stamp(path.clone()), stamp(sidecar), spec.clone());
+        self.scan
+            .get(key, || files::open(&path, &spec.open_options()?))
     }
 
     fn level(
@@ -299,7 +321,7 @@ fn find_tip(job: &Job, level: &Leveled, progress: &Progress) -> Result<TipOrReas
             ..blind::Settings::default()
         };
         return match blind::estimate(scan, level.noise_nm, &settings, progress) {
-            Ok(estimate) => Ok(Ok(from_estimate(estimate, spec))),
+            Ok(estimate) => Ok(Ok(Arc::new(from_estimate(estimate, spec)))),
             Err(e) if e.kind() == ErrorKind::Data => Ok(Err(e.to_string())),
             Err(e) => Err(e),
         };
@@ -311,7 +333,7 @@ fn find_tip(job: &Job, level: &Leveled, progress: &Progress) -> Result<TipOrReas
                 .map_or_else(|| default_support_nm(scan), |l| l.nm());
             (model.sample(support, scan.pitch())?, None)
         }
-        None => tip_from_file(job, scan)?,
+        None => open_tip(&job.folder.join(spec.given_file()?), scan)?,
     };
     let height_u_nm = spec.uncertainty.map_or(0.0, |l| l.nm());
     let mut diagnosis = Vec::new();
@@ -323,7 +345,7 @@ fn find_tip(job: &Job, level: &Leveled, progress: &Progress) -> Result<TipOrReas
         );
     }
     let read_out = read_out(&tip, tip.depth_nm(), height_u_nm);
-    Ok(Ok(TipResult {
+    Ok(Ok(Arc::new(TipResult {
         from: spec.from,
         band: None,
         identified: true,
@@ -334,46 +356,30 @@ fn find_tip(job: &Job, level: &Leveled, progress: &Progress) -> Result<TipOrReas
         read_out,
         estimate: None,
         tip,
-    }))
+    })))
 }
 
-fn tip_from_file(job: &Job, scan: &HeightMap) -> Result<(Tip, Option<String>)> {
-    let Some(file) = &job.file.tip.file else {
-        return Err(
-            Error::new(ErrorKind::Setting, "[tip] from = \"file\" without file")
-                .remedy("Add file = \"tip.npy\""),
-        );
-    };
-    let path = job.folder.join(file);
-    let tip = open_tip(&path, scan)?;
-    let sha256 = std::fs::read(&path)
-        .map(|bytes| files::sha256_hex(&bytes))
-        .ok();
-    Ok((tip, sha256))
-}
-
-/// Opens a tip file for use with `scan`: a tip without a pitch of its own has the scan's, one with
-/// another pitch is refused (kind `Data`). Other errors as [`files::read_tip_grid`], [`Tip::new`].
-pub fn open_tip(path: &std::path::Path, scan: &HeightMap) -> Result<Tip> {
+/// Opens a tip file for use with `scan`; gives its SHA-256 too. A tip without a pitch of its own
+/// has the scan's, one with another pitch is refused (kind `Data`). Other errors as
+/// [`files::read_tip_grid`], [`Tip::new`].
+pub fn open_tip(path: &std::path::Path, scan: &HeightMap) -> Result<(Tip, Option<String>)> {
     let grid = files::read_tip_grid(path, &files::OpenOptions::default())?;
+    let wanted = scan.pitch();
     if let Some(pitch) = grid.pitch
-        && !pitch.agrees_with(scan.pitch())
+        && !pitch.agrees_with(wanted)
     {
-        let wanted = scan.pitch();
         return Err(Error::new(
             ErrorKind::Data,
             format!(
-                "{}: the tip's pixel pitch is {} nm x {} nm, the scan's {} nm x {} nm",
-                path.display(),
-                pitch.x,
-                pitch.y,
-                wanted.x,
-                wanted.y
+                "the tip's pixel pitch is {} nm x {} nm, the scan's {} nm x {} nm",
+                pitch.x, pitch.y, wanted.x, wanted.y
             ),
         )
-        .remedy("Give a tip on the scan's own grid"));
+        .remedy("Give a tip on the scan's own grid")
+        .at(path));
     }
-    Tip::new(grid.heights, scan.pitch()).map_err(|e| e.context(path.display()))
+    let tip = Tip::new(grid.heights, wanted).map_err(|e| e.at(path))?;
+    Ok((tip, grid.provenance.sha256))
 }
 
 fn from_estimate(estimate: Estimate, spec: &TipSpec) -> TipResult {

@@ -143,6 +143,24 @@ fn only_what_a_setting_touches_is_computed_anew() {
 }
 
 #[test]
+fn a_changed_sidecar_is_noticed() {
+    let folder = tempfile::tempdir().unwrap();
+    let path = folder.path().join("bare.npy");
+    ndarray_npy::write_npy(&path, &ndarray::Array2::<f32>::zeros((32, 32))).unwrap();
+    let state = |pitch: &str| {
+        let text = format!("pitch = [\"{pitch}\", \"{pitch}\"]\nheight-unit = \"nm\"\n");
+        std::fs::write(files::sidecar_path(&path), text).unwrap();
+    };
+    let mut stages = Stages::default();
+    let job = Job::on_scan(&path);
+    let mut pitch = || run(&mut stages, &job).scan.unwrap().pitch();
+    state("2 nm");
+    assert_eq!(pitch(), Pitch::square(2.0));
+    state("25 nm");
+    assert_eq!(pitch(), Pitch::square(25.0));
+}
+
+#[test]
 fn a_saved_job_still_points_to_its_scan() {
     let folder = tempfile::tempdir().unwrap();
     let mut job = ridge(folder.path());

@@ -2,7 +2,7 @@
 
 use super::spec::Job;
 use super::stages::{Outcome, Stages};
-use crate::error::Error;
+use crate::error::{Error, ErrorKind};
 use crate::progress::Progress;
 use std::sync::mpsc::{Receiver, Sender, channel};
 
@@ -15,14 +15,6 @@ struct Order {
 enum News {
     Partial(Outcome),
     Done(Result<Outcome, Error>),
-}
-
-fn internal_error() -> Error {
-    Error::new(
-        crate::ErrorKind::Data,
-        "the computation stopped after an internal error",
-    )
-    .remedy("Save the job, undo the last change, and report the fault")
 }
 
 /// Runs jobs one after the other on a thread of its own. It keeps the last outcome while the next
@@ -53,15 +45,8 @@ impl Worker {
                     let _ = outbox.send((order.run, news));
                     wake();
                 };
-                let run = std::panic::AssertUnwindSafe(|| {
-                    stages.run(&order.job, &order.progress, &mut |outcome| {
-                        send(News::Partial(outcome.clone()));
-                    })
-                });
-                // A fault in a computation must not leave the window waiting for ever.
-                let result = std::panic::catch_unwind(run).unwrap_or_else(|_| {
-                    stages = Stages::default();
-                    Err(internal_error())
+                let result = stages.run(&order.job, &order.progress, &mut |outcome| {
+                    send(News::Partial(outcome.clone()));
                 });
                 send(News::Done(result));
             }
@@ -90,7 +75,10 @@ impl Worker {
         };
         if self.orders.send(order).is_err() {
             self.under_way = None;
-            self.error = Some(internal_error());
+            self.error = Some(
+                Error::new(ErrorKind::Data, "the computing thread has stopped")
+                    .remedy("Save the job and start the program again"),
+            );
         }
     }
 
