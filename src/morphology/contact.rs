@@ -2,6 +2,7 @@
 
 use super::dilation::Steps;
 use super::field::{BLOCK, Field};
+use super::part::{Engine, Part};
 use super::search::{
     Tile, Vector, Visitor, Window, any_reaches, load, lowest, peaks, raise, search, wanted,
 };
@@ -10,12 +11,12 @@ use super::{Contacts, NO_CONTACT};
 use crate::error::Result;
 use crate::progress::Progress;
 use ndarray::{Array2, ArrayView2};
-use pulp::{Arch, Simd, WithSimd};
+use pulp::{Simd, WithSimd};
 use rayon::prelude::*;
 
 /// The contacts; see the public function.
 pub(super) fn contacts(
-    arch: Arch,
+    engine: Engine,
     surface: ArrayView2<f32>,
     tip: ArrayView2<f32>,
     progress: &Progress,
@@ -29,26 +30,33 @@ pub(super) fn contacts(
         return Ok(found);
     }
     let tip = Tip::new(tip, Order::Max, surface.dim(), true);
-    let field = Field::new(arch, surface, Order::Max, progress)?;
-    let chunk = BLOCK * field.cols;
-    let heights = found.heights.as_slice_mut().unwrap_or_default();
-    let offsets = found.offsets.as_slice_mut().unwrap_or_default();
-    let step = Steps::new(progress, field.rows);
-    heights
-        .par_chunks_mut(chunk)
-        .zip(offsets.par_chunks_mut(chunk))
-        .enumerate()
-        .try_for_each(|(row, (heights, offsets))| {
-            arch.dispatch(ContactRow {
-                field: &field,
-                tip: &tip,
-                row,
-                heights,
-                offsets,
-                progress,
-            });
-            step.done()
-        })?;
+    let (rows, cols) = surface.dim();
+    let parts = Part::cut(engine, [0..rows, 0..cols], (rows, cols), tip.reach);
+    let steps = Steps::new(progress, &parts);
+    let mut field = Field::default();
+    for part in &parts {
+        field.load(engine.arch, part.seen(surface), Order::Max, progress)?;
+        let all = part.rows.start * cols..part.rows.end * cols;
+        let heights = &mut found.heights.as_slice_mut().unwrap_or_default()[all.clone()];
+        let offsets = &mut found.offsets.as_slice_mut().unwrap_or_default()[all];
+        heights
+            .par_chunks_mut(BLOCK * cols)
+            .zip(offsets.par_chunks_mut(BLOCK * cols))
+            .enumerate()
+            .try_for_each(|(row, (heights, offsets))| {
+                engine.arch.dispatch(ContactRow {
+                    field: &field,
+                    tip: &tip,
+                    part,
+                    row: part.first_tile_row() + row,
+                    heights,
+                    offsets,
+                    stride: cols,
+                    progress,
+                });
+                steps.done()
+            })?;
+    }
     Ok(found)
 }
 
@@ -56,10 +64,13 @@ pub(super) fn contacts(
 struct ContactRow<'a> {
     field: &'a Field,
     tip: &'a Tip,
+    part: &'a Part,
+    /// Counted in what the part sees, as the field is.
     row: usize,
-    /// Up to `BLOCK` rows of results.
+    /// Up to `BLOCK` whole rows of results, `stride` columns each.
     heights: &'a mut [f32],
     offsets: &'a mut [[i16; 2]],
+    stride: usize,
     progress: &'a Progress,
 }
 
@@ -68,17 +79,20 @@ impl WithSimd for ContactRow<'_> {
 
     #[inline(always)]
     fn with_simd<S: Simd>(mut self, simd: S) {
-        let cols = self.field.cols;
-        let rows = self.heights.len() / cols;
+        let rows = self.heights.len() / self.stride;
+        let cols = self.part.cols.clone();
         let mut candidates = Vec::new();
-        for col in (0..cols).step_by(S::F32_LANES) {
+        for col in cols.clone().step_by(S::F32_LANES) {
             if self.progress.is_cancelled() {
                 return;
             }
-            let tile = Tile { row: self.row, col };
+            let tile = Tile {
+                row: self.row,
+                col: col - self.part.seen_cols.start,
+            };
             candidates.clear();
             // Not -inf: an equal value would count as a tie among things unseen.
-            let start = wanted(simd, (rows, cols - col), f32::MIN);
+            let start = wanted(simd, (rows, cols.end - col), f32::MIN);
             let mut record = Record {
                 floors: lowest(simd, &start),
                 floor: f32::MIN,
@@ -101,15 +115,14 @@ impl WithSimd for ContactRow<'_> {
 impl ContactRow<'_> {
     #[inline(always)]
     fn write<V: Vector>(&mut self, col: usize, values: &[V], keys: &[V]) {
-        let cols = self.field.cols;
-        let rows = self.heights.chunks_exact_mut(cols).zip(values);
-        for (row, vector) in rows {
-            for (to, &value) in row[col..].iter_mut().zip(vector.lanes()) {
+        let end = self.part.cols.end;
+        for (row, vector) in self.heights.chunks_exact_mut(self.stride).zip(values) {
+            for (to, &value) in row[col..end].iter_mut().zip(vector.lanes()) {
                 *to = if value > f32::MIN { value } else { f32::NAN };
             }
         }
-        for (row, vector) in self.offsets.chunks_exact_mut(cols).zip(keys) {
-            for (to, &key) in row[col..].iter_mut().zip(vector.lanes()) {
+        for (row, vector) in self.offsets.chunks_exact_mut(self.stride).zip(keys) {
+            for (to, &key) in row[col..end].iter_mut().zip(vector.lanes()) {
                 if key < f32::INFINITY {
                     *to = self.tip.ranked[rank_of(key)];
                 }
@@ -119,21 +132,21 @@ impl ContactRow<'_> {
 }
 
 /// A block that reached the running maxima somewhere when it was looked at.
-struct Candidate<'a, S: Simd> {
+struct Candidate<'a, 't, S: Simd> {
     window: Window<'a>,
-    block: &'a Block,
+    block: &'t Block,
     peaks: [S::f32s; BLOCK],
 }
 
 /// The running maxima of a tile and the blocks that may hold them.
-struct Record<'a, 'c, S: Simd> {
+struct Record<'a, 't, 'c, S: Simd> {
     values: [S::f32s; BLOCK],
     floors: S::f32s,
     floor: f32,
-    candidates: &'c mut Vec<Candidate<'a, S>>,
+    candidates: &'c mut Vec<Candidate<'a, 't, S>>,
 }
 
-impl<'a, S: Simd> Visitor<'a, S> for Record<'a, '_, S> {
+impl<'a, 't, S: Simd> Visitor<'a, 't, S> for Record<'a, 't, '_, S> {
     const EQUAL_MATTERS: bool = true;
 
     #[inline(always)]
@@ -147,7 +160,7 @@ impl<'a, S: Simd> Visitor<'a, S> for Record<'a, '_, S> {
     }
 
     #[inline(always)]
-    fn visit(&mut self, simd: S, window: Window<'a>, block: &'a Block) {
+    fn visit(&mut self, simd: S, window: Window<'a>, block: &'t Block) {
         let peaks = peaks(simd, window, block);
         if any_reaches(simd, &peaks, &self.values) {
             raise(simd, &mut self.values, &peaks);

@@ -2,18 +2,19 @@
 
 use super::field::{BLOCK, Field};
 use super::flat;
+use super::part::{Engine, Part};
 use super::search::{Tile, Vector, Visitor, Window, lowest, peaks, raise, search, wanted};
 use super::tip::{Block, Order, Tip};
 use crate::error::Result;
 use crate::progress::Progress;
 use ndarray::{Array2, ArrayView2};
-use pulp::{Arch, Simd, WithSimd};
+use pulp::{Simd, WithSimd};
 use rayon::prelude::*;
 use std::sync::atomic::{AtomicUsize, Ordering};
 
 /// Dilation (`Order::Max`) or erosion (`Order::Min`); see the module's conventions.
 pub(super) fn extreme(
-    arch: Arch,
+    engine: Engine,
     map: ArrayView2<f32>,
     tip: ArrayView2<f32>,
     order: Order,
@@ -24,25 +25,33 @@ pub(super) fn extreme(
         return Ok(Array2::zeros(map.dim()));
     }
     if let Some(depth) = flat::flat_depth(tip) {
-        return flat::extreme(arch, map, tip.dim(), depth, order, progress);
+        return flat::extreme(engine.arch, map, tip.dim(), depth, order, progress);
     }
     let tip = Tip::new(tip, order, map.dim(), false);
-    let field = Field::new(arch, map, order, progress)?;
     let mut out = Array2::zeros(map.dim());
-    let values = out.as_slice_mut().unwrap_or_default();
-    let rows = values.par_chunks_mut(BLOCK * field.cols).enumerate();
-    let step = Steps::new(progress, field.rows);
-    rows.try_for_each(|(row, values)| {
-        arch.dispatch(TileRow {
-            field: &field,
-            tip: &tip,
-            row,
-            order,
-            values,
-            progress,
-        });
-        step.done()
-    })?;
+    let (rows, cols) = map.dim();
+    let parts = Part::cut(engine, [0..rows, 0..cols], (rows, cols), tip.reach);
+    let steps = Steps::new(progress, &parts);
+    let mut field = Field::default();
+    for part in &parts {
+        field.load(engine.arch, part.seen(map), order, progress)?;
+        let values = out.as_slice_mut().unwrap_or_default();
+        let values = &mut values[part.rows.start * cols..part.rows.end * cols];
+        let tile_rows = values.par_chunks_mut(BLOCK * cols).enumerate();
+        tile_rows.try_for_each(|(row, values)| {
+            engine.arch.dispatch(TileRow {
+                field: &field,
+                tip: &tip,
+                part,
+                row: part.first_tile_row() + row,
+                order,
+                values,
+                stride: cols,
+                progress,
+            });
+            steps.done()
+        })?;
+    }
     Ok(out)
 }
 
@@ -54,11 +63,11 @@ pub(super) struct Steps<'a> {
 }
 
 impl<'a> Steps<'a> {
-    pub(super) fn new(progress: &'a Progress, rows: usize) -> Self {
+    pub(super) fn new(progress: &'a Progress, parts: &[Part]) -> Self {
         Self {
             progress,
             done: AtomicUsize::new(0),
-            all: rows.div_ceil(BLOCK),
+            all: parts.iter().map(Part::tile_rows).sum(),
         }
     }
 
@@ -73,10 +82,13 @@ impl<'a> Steps<'a> {
 struct TileRow<'a> {
     field: &'a Field,
     tip: &'a Tip,
+    part: &'a Part,
+    /// Counted in what the part sees, as the field is.
     row: usize,
     order: Order,
-    /// Up to `BLOCK` rows of results.
+    /// Up to `BLOCK` whole rows of results, `stride` columns each.
     values: &'a mut [f32],
+    stride: usize,
     progress: &'a Progress,
 }
 
@@ -85,14 +97,17 @@ impl WithSimd for TileRow<'_> {
 
     #[inline(always)]
     fn with_simd<S: Simd>(mut self, simd: S) {
-        let cols = self.field.cols;
-        let rows = self.values.len() / cols;
-        for col in (0..cols).step_by(S::F32_LANES) {
+        let rows = self.values.len() / self.stride;
+        let cols = self.part.cols.clone();
+        for col in cols.clone().step_by(S::F32_LANES) {
             if self.progress.is_cancelled() {
                 return;
             }
-            let tile = Tile { row: self.row, col };
-            let start = wanted(simd, (rows, cols - col), f32::NEG_INFINITY);
+            let tile = Tile {
+                row: self.row,
+                col: col - self.part.seen_cols.start,
+            };
+            let start = wanted(simd, (rows, cols.end - col), f32::NEG_INFINITY);
             let mut raise = Raise::new(simd, start);
             search(simd, self.field, self.tip, tile, &mut raise);
             self.write(col, &raise.values);
@@ -103,8 +118,9 @@ impl WithSimd for TileRow<'_> {
 impl TileRow<'_> {
     #[inline(always)]
     fn write<V: Vector>(&mut self, col: usize, tile: &[V]) {
-        for (row, vector) in self.values.chunks_exact_mut(self.field.cols).zip(tile) {
-            for (to, &value) in row[col..].iter_mut().zip(vector.lanes()) {
+        let end = self.part.cols.end;
+        for (row, vector) in self.values.chunks_exact_mut(self.stride).zip(tile) {
+            for (to, &value) in row[col..end].iter_mut().zip(vector.lanes()) {
                 *to = match self.order {
                     _ if value == f32::NEG_INFINITY => f32::NAN,
                     Order::Max => value,
@@ -136,7 +152,7 @@ impl<S: Simd> Raise<S> {
     }
 }
 
-impl<'a, S: Simd> Visitor<'a, S> for Raise<S> {
+impl<'a, 't, S: Simd> Visitor<'a, 't, S> for Raise<S> {
     const EQUAL_MATTERS: bool = false;
 
     #[inline(always)]
@@ -150,7 +166,7 @@ impl<'a, S: Simd> Visitor<'a, S> for Raise<S> {
     }
 
     #[inline(always)]
-    fn visit(&mut self, simd: S, window: Window<'a>, block: &'a Block) {
+    fn visit(&mut self, simd: S, window: Window<'a>, block: &'t Block) {
         raise(simd, &mut self.values, &peaks(simd, window, block));
         self.floors = lowest(simd, &self.values);
     }

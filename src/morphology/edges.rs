@@ -1,17 +1,17 @@
 //! Which surface pixels lean on what nobody saw.
 
 use super::dilation::extreme;
+use super::part::Engine;
 use super::tip::Order;
 use crate::error::Result;
 use crate::progress::Progress;
 use ndarray::{Array2, ArrayView2, Axis};
-use pulp::Arch;
 use rayon::prelude::*;
 
 /// The marks; see the public function. The deepest unseen tip cell decides: rounded subtraction
 /// is monotonic, so the highest `p` over the unseen pixels gives the lowest constraint.
 pub(super) fn edge_leaning(
-    arch: Arch,
+    engine: Engine,
     scan: ArrayView2<f32>,
     surface: ArrayView2<f32>,
     tip: ArrayView2<f32>,
@@ -44,7 +44,7 @@ pub(super) fn edge_leaning(
             .and(scan)
             .par_for_each(|to: &mut f32, z| *to = if z.is_finite() { f32::NAN } else { 0.0 });
         let part = progress.part(0.0, 0.9);
-        Some(extreme(arch, unseen.view(), tip, Order::Min, &part)?)
+        Some(extreme(engine, unseen.view(), tip, Order::Min, &part)?)
     } else {
         None
     };

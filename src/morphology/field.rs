@@ -22,13 +22,15 @@ pub(super) const TOP: usize = 6;
 /// Map column 0 lies in this padded column, so that superblock windows begin at multiples of 16.
 pub(super) const LEFT: usize = 26;
 
-/// A padded map and upper bounds over its windows. Everything unseen is `-inf`.
+/// A padded map, or a part of one, and upper bounds over its windows. Everything unseen is `-inf`.
+/// Loading another map keeps the memory.
 ///
 /// - `data[[TOP + r, LEFT + c]]`: the height, negated for an erosion.
 /// - `columns[[i, c]]`: maximum over padded rows `4 i ..= 4 i + 6`, columns `c ..= c + 3`.
 /// - `fine[[i, j]]`: the same rows, columns `4 j ..= 4 j + 18` (a tile and a tip block).
 /// - `coarse[[i, j]]`: rows `4 (i - 3) ..= 4 i + 6`, columns `16 j ..= 16 j + 30`
 ///   (a tile and a superblock).
+#[derive(Default)]
 pub(super) struct Field {
     pub(super) rows: usize,
     pub(super) cols: usize,
@@ -52,58 +54,52 @@ pub(super) fn larger(a: f32, b: f32) -> f32 {
 
 impl Field {
     /// Errors only when cancelled. The map must not be empty.
-    pub(super) fn new(
+    pub(super) fn load(
+        &mut self,
         arch: Arch,
         map: ArrayView2<f32>,
         order: Order,
         progress: &Progress,
-    ) -> Result<Self> {
+    ) -> Result<()> {
         let (rows, cols) = map.dim();
-        let fine_rows = (TOP + rows - 1) / BLOCK + 1;
-        let fine_cols = (LEFT + cols - 1) / BLOCK + 1;
-        let padded_rows = BLOCK * (fine_rows - 1) + WINDOW_ROWS;
-        let mut stride = (BLOCK * (fine_cols - 1) + WINDOW_COLUMNS + BLOCK).next_multiple_of(TILE);
-        if stride.is_multiple_of(256) {
+        (self.rows, self.cols) = (rows, cols);
+        self.fine_rows = (TOP + rows - 1) / BLOCK + 1;
+        self.fine_cols = (LEFT + cols - 1) / BLOCK + 1;
+        let padded_rows = BLOCK * (self.fine_rows - 1) + WINDOW_ROWS;
+        let width = BLOCK * (self.fine_cols - 1) + WINDOW_COLUMNS + BLOCK;
+        self.stride = width.next_multiple_of(TILE);
+        if self.stride.is_multiple_of(256) {
             // Rows a power of two apart would fall on the same cache lines.
-            stride += TILE;
+            self.stride += TILE;
         }
-        let mut data = vec![0.0_f32; padded_rows * stride];
-        let rows_of_data = data.par_chunks_mut(stride).enumerate();
+        self.data.resize(padded_rows * self.stride, 0.0);
+        let rows_of_data = self.data.par_chunks_mut(self.stride).enumerate();
         rows_of_data.try_for_each(|(r, to)| {
-            to.fill(f32::NEG_INFINITY);
-            if (TOP..TOP + rows).contains(&r) {
-                let from = map.index_axis(Axis(0), r - TOP);
-                let to = &mut to[LEFT..LEFT + cols];
-                match from.as_slice() {
-                    Some(from) => arch.dispatch(Load { from, to, order }),
-                    None => to
-                        .iter_mut()
-                        .zip(from)
-                        .for_each(|(to, &z)| *to = seen(z, order)),
-                }
+            if !(TOP..TOP + rows).contains(&r) {
+                to.fill(f32::NEG_INFINITY);
+                return progress.check();
+            }
+            to[..LEFT].fill(f32::NEG_INFINITY);
+            to[LEFT + cols..].fill(f32::NEG_INFINITY);
+            let from = map.index_axis(Axis(0), r - TOP);
+            let to = &mut to[LEFT..LEFT + cols];
+            match from.as_slice() {
+                Some(from) => arch.dispatch(Load { from, to, order }),
+                None => to
+                    .iter_mut()
+                    .zip(from)
+                    .for_each(|(to, &z)| *to = seen(z, order)),
             }
             progress.check()
         })?;
-        let mut field = Self {
-            rows,
-            cols,
-            stride,
-            data,
-            columns: vec![0.0; fine_rows * stride],
-            fine_rows,
-            fine_cols,
-            fine: vec![0.0; fine_rows * fine_cols],
-            coarse_cols: fine_cols.div_ceil(SUPER),
-            coarse: Vec::new(),
-            highest: f32::NEG_INFINITY,
-        };
-        field.bound(arch, progress)?;
-        Ok(field)
+        self.bound(arch, progress)
     }
 
     /// Fills the tables of local maxima.
     fn bound(&mut self, arch: Arch, progress: &Progress) -> Result<()> {
         let (stride, data) = (self.stride, &self.data);
+        self.columns.resize(self.fine_rows * stride, 0.0);
+        self.fine.resize(self.fine_rows * self.fine_cols, 0.0);
         self.columns
             .par_chunks_mut(stride)
             .zip(self.fine.par_chunks_mut(self.fine_cols))
@@ -119,8 +115,10 @@ impl Field {
             })?;
         self.highest = self.fine.iter().copied().fold(f32::NEG_INFINITY, larger);
         let (fine, fine_rows, fine_cols) = (&self.fine, self.fine_rows, self.fine_cols);
-        let coarse_cols = self.coarse_cols;
-        self.coarse = vec![0.0; (fine_rows + SUPER - 1) * coarse_cols];
+        let coarse_cols = fine_cols.div_ceil(SUPER);
+        self.coarse_cols = coarse_cols;
+        self.coarse
+            .resize((fine_rows + SUPER - 1) * coarse_cols, 0.0);
         self.coarse
             .par_chunks_mut(coarse_cols)
             .enumerate()

@@ -19,6 +19,7 @@ mod dilation;
 mod edges;
 mod field;
 mod flat;
+mod part;
 #[cfg(test)]
 mod reference;
 mod search;
@@ -30,7 +31,7 @@ mod touch;
 use crate::error::{Error, ErrorKind, Result};
 use crate::progress::Progress;
 use ndarray::{Array2, ArrayView2};
-use pulp::Arch;
+use part::Engine;
 use tip::Order;
 
 /// The scan that a probe of shape `tip` records of `surface`: `max over u of S(x + u) + p(u)`.
@@ -41,7 +42,7 @@ pub fn dilate(
     tip: ArrayView2<f32>,
     progress: &Progress,
 ) -> Result<Array2<f32>> {
-    dilation::extreme(Arch::new(), surface, tip, Order::Max, progress)
+    dilation::extreme(Engine::new(), surface, tip, Order::Max, progress)
 }
 
 /// The highest surface compatible with `scan`: `min over u of I(s - u) - p(u)`.
@@ -52,7 +53,7 @@ pub fn erode(
     tip: ArrayView2<f32>,
     progress: &Progress,
 ) -> Result<Array2<f32>> {
-    dilation::extreme(Arch::new(), scan, tip, Order::Min, progress)
+    dilation::extreme(Engine::new(), scan, tip, Order::Min, progress)
 }
 
 /// `dilate(erode(scan))`: what of the scan the tip explains; `<= scan` everywhere.
@@ -89,7 +90,7 @@ pub fn contacts(
     tip: ArrayView2<f32>,
     progress: &Progress,
 ) -> Result<Contacts> {
-    contact::contacts(Arch::new(), surface, tip, progress)
+    contact::contacts(Engine::new(), surface, tip, progress)
 }
 
 /// Certainty values (contract of `certainty.npy`).
@@ -131,7 +132,7 @@ pub fn certainty_map(
 ) -> Result<Array2<u8>> {
     same_shape(surface, scan)?;
     let rule = touch::Rule { tolerance, spread };
-    touch::certainty_map(Arch::new(), surface, scan, tip, rule, progress)
+    touch::certainty_map(Engine::new(), surface, scan, tip, rule, progress)
 }
 
 /// Surface pixels that lean on the edge of the scan or on a void: a pixel nobody saw, as low as
@@ -145,7 +146,7 @@ pub fn edge_leaning(
     progress: &Progress,
 ) -> Result<Array2<bool>> {
     same_shape(surface, scan)?;
-    edges::edge_leaning(Arch::new(), scan, surface, tip, progress)
+    edges::edge_leaning(Engine::new(), scan, surface, tip, progress)
 }
 
 fn same_shape(surface: ArrayView2<f32>, scan: ArrayView2<f32>) -> Result<()> {

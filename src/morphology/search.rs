@@ -25,6 +25,29 @@ pub(super) struct Window<'a> {
 }
 
 impl<'a> Window<'a> {
+    /// Of a tile and a block; `None` where the block meets nothing of the map.
+    #[inline(always)]
+    pub(super) fn of(field: &'a Field, tile: Tile, block: &Block) -> Option<Self> {
+        let (i, j) = (tile.row as isize + block.row, block.col);
+        // Negative positions wrap to huge ones and fail the comparison.
+        let (i, j) = (
+            (i + 1) as usize,
+            (4 * (tile.col / TILE) as isize + j + 6) as usize,
+        );
+        (i < field.fine_rows && j < field.fine_cols).then_some(Self {
+            field,
+            row: i * BLOCK,
+            col: BLOCK * j + tile.col % TILE,
+        })
+    }
+
+    /// The highest that the tile's whole group of columns meets there.
+    #[inline(always)]
+    fn highest(self, tile: Tile) -> f32 {
+        let (i, j) = (self.row / BLOCK, (self.col - tile.col % TILE) / BLOCK);
+        self.field.fine[i * self.field.fine_cols + j]
+    }
+
     /// From one row to the next in the padded map.
     #[inline(always)]
     pub(super) fn stride(self) -> usize {
@@ -51,7 +74,7 @@ pub(super) fn load<S: Simd>(from: &[f32]) -> S::f32s {
 }
 
 /// What is done with a tile: it says which values still matter and takes in blocks.
-pub(super) trait Visitor<'a, S: Simd> {
+pub(super) trait Visitor<'a, 't, S: Simd> {
     /// Whether a value equal to the floor still matters.
     const EQUAL_MATTERS: bool;
     /// The lowest value that matters anywhere in the tile.
@@ -59,17 +82,17 @@ pub(super) trait Visitor<'a, S: Simd> {
     /// The same for each column of the tile.
     fn floors(&self) -> S::f32s;
     /// Takes in a block.
-    fn visit(&mut self, simd: S, window: Window<'a>, block: &'a Block);
+    fn visit(&mut self, simd: S, window: Window<'a>, block: &'t Block);
     /// Called once after some blocks were taken in.
     fn settle(&mut self, simd: S);
 }
 
 /// Shows `visitor` every block that can matter to `tile`.
 #[inline(always)]
-pub(super) fn search<'a, S: Simd, V: Visitor<'a, S>>(
+pub(super) fn search<'a, 't, S: Simd, V: Visitor<'a, 't, S>>(
     simd: S,
     field: &'a Field,
-    tip: &'a Tip,
+    tip: &'t Tip,
     tile: Tile,
     visitor: &mut V,
 ) {
@@ -100,16 +123,14 @@ pub(super) fn search<'a, S: Simd, V: Visitor<'a, S>>(
         }
         let mut visited = false;
         for block in &superblock.blocks {
-            let j = (4 * tile_col as isize + block.col + 6) as usize;
-            let i = (tile.row as isize + block.row + 1) as usize;
-            if j >= field.fine_cols || i >= field.fine_rows {
+            let Some(window) = Window::of(field, tile, block) else {
+                continue;
+            };
+            if out_of_reach(window.highest(tile) + block.max, floor) {
                 continue;
             }
-            if out_of_reach(field.fine[i * field.fine_cols + j] + block.max, floor) {
-                continue;
-            }
-            let col = BLOCK * j + tile.col % TILE;
-            let reach = load::<S>(&field.columns[i * field.stride + col..]);
+            let columns = &field.columns[window.row / BLOCK * field.stride + window.col..];
+            let reach = load::<S>(columns);
             let bounds = simd.add_f32s(reach, simd.splat_f32s(block.max));
             let matters = if V::EQUAL_MATTERS {
                 simd.greater_than_or_equal_f32s(bounds, visitor.floors())
@@ -119,11 +140,6 @@ pub(super) fn search<'a, S: Simd, V: Visitor<'a, S>>(
             if simd.first_true_m32s(matters) == S::F32_LANES {
                 continue;
             }
-            let window = Window {
-                field,
-                row: i * BLOCK,
-                col,
-            };
             visitor.visit(simd, window, block);
             visited = true;
         }

@@ -8,15 +8,18 @@ use super::tip::Order;
 use super::*;
 use ndarray::{Array2, array};
 use proptest::prelude::*;
+use pulp::Arch;
 use rand::{Rng, SeedableRng};
 use rand_chacha::ChaCha8Rng;
 
-/// Every instruction set that this machine has.
-fn architectures() -> Vec<Arch> {
+/// Every instruction set that this machine has, with the map in one part and in many.
+fn engines() -> Vec<Engine> {
     let mut all = vec![Arch::Scalar, Arch::new()];
     #[cfg(target_arch = "x86_64")]
     all.extend(pulp::x86::V3::try_new().map(Arch::V3));
-    all
+    let engine = |part| move |&arch: &Arch| Engine { arch, part, rim: 0 };
+    let whole = all.iter().map(engine(Engine::new().part));
+    whole.chain(all.iter().map(engine([8, 16]))).collect()
 }
 
 /// What the random scenes vary.
@@ -97,33 +100,33 @@ fn bits(map: &Array2<f32>) -> Vec<u32> {
         .collect()
 }
 
-fn fast(map: &Array2<f32>, tip: &Array2<f32>, order: Order, arch: Arch) -> Array2<f32> {
-    dilation::extreme(arch, map.view(), tip.view(), order, &Progress::new()).unwrap()
+fn fast(map: &Array2<f32>, tip: &Array2<f32>, order: Order, engine: Engine) -> Array2<f32> {
+    dilation::extreme(engine, map.view(), tip.view(), order, &Progress::new()).unwrap()
 }
 
 fn agree_with_the_twins(map: &Array2<f32>, tip: &Array2<f32>) {
     let progress = Progress::new();
     let dilated = reference::contacts(map.view(), tip.view());
     let eroded = reference::erode(map.view(), tip.view());
-    for arch in architectures() {
+    for engine in engines() {
         assert_eq!(
-            bits(&fast(map, tip, Order::Max, arch)),
+            bits(&fast(map, tip, Order::Max, engine)),
             bits(&dilated.heights)
         );
-        assert_eq!(bits(&fast(map, tip, Order::Min, arch)), bits(&eroded));
-        let contacts = contact::contacts(arch, map.view(), tip.view(), &progress).unwrap();
+        assert_eq!(bits(&fast(map, tip, Order::Min, engine)), bits(&eroded));
+        let contacts = contact::contacts(engine, map.view(), tip.view(), &progress).unwrap();
         assert_eq!(bits(&contacts.heights), bits(&dilated.heights));
         assert_eq!(contacts.offsets, dilated.offsets);
         for tolerance in [0.0, 0.6, 1e6, f32::INFINITY] {
             let (s, i, p) = (eroded.view(), map.view(), tip.view());
             for spread in [[0, 0], [1, 2], [3, 0]] {
                 let rule = touch::Rule { tolerance, spread };
-                let marks = touch::certainty_map(arch, s, i, p, rule, &progress).unwrap();
+                let marks = touch::certainty_map(engine, s, i, p, rule, &progress).unwrap();
                 assert_eq!(marks, reference::certainty_map(s, i, p, tolerance, spread));
             }
         }
         let (s, i, p) = (eroded.view(), map.view(), tip.view());
-        let leaning = edges::edge_leaning(arch, i, s, p, &progress).unwrap();
+        let leaning = edges::edge_leaning(engine, i, s, p, &progress).unwrap();
         assert_eq!(leaning, reference::edge_leaning(i, s, p));
     }
 }
@@ -163,8 +166,8 @@ proptest! {
         let (map, tip) = scene.build();
         let mirrored = tip.slice(ndarray::s![..;-1, ..;-1]).to_owned();
         let negated = map.mapv(|z| -z);
-        let dual = fast(&negated, &mirrored, Order::Max, Arch::new()).mapv(|z| 0.0 - z);
-        prop_assert_eq!(bits(&fast(&map, &tip, Order::Min, Arch::new())), bits(&dual));
+        let dual = fast(&negated, &mirrored, Order::Max, Engine::new()).mapv(|z| 0.0 - z);
+        prop_assert_eq!(bits(&fast(&map, &tip, Order::Min, Engine::new())), bits(&dual));
     }
 
     #[test]
@@ -186,8 +189,8 @@ proptest! {
         let (image, tip) = Scene { grain: 0.25, voids: 0.0, ..scene }.build();
         let (mut surface, _) = Scene { grain: 0.25, voids: 0.0, seed: other, ..scene }.build();
         surface += shift as f32 * 0.25;
-        let eroded = fast(&image, &tip, Order::Min, Arch::new());
-        let dilated = fast(&surface, &tip, Order::Max, Arch::new());
+        let eroded = fast(&image, &tip, Order::Min, Engine::new());
+        let dilated = fast(&surface, &tip, Order::Max, Engine::new());
         prop_assert_eq!(below(&surface, &eroded), below(&dilated, &image));
     }
 
@@ -196,8 +199,8 @@ proptest! {
         let (map, tip) = Scene { grain: 0.25, ..scene }.build();
         let lifted = &map + lift as f32 * 0.25;
         for order in [Order::Max, Order::Min] {
-            let plain = fast(&map, &tip, order, Arch::new());
-            let moved = fast(&lifted, &tip, order, Arch::new());
+            let plain = fast(&map, &tip, order, Engine::new());
+            let moved = fast(&lifted, &tip, order, Engine::new());
             prop_assert!(below(&plain, &moved));
             prop_assert_eq!(bits(&(plain + lift as f32 * 0.25)), bits(&moved));
         }
@@ -333,7 +336,7 @@ fn no_result_is_a_negative_zero() {
     let map = array![[-0.0_f32, 0.0, -0.0]];
     let tip = array![[-0.0_f32, -0.0, -0.0]];
     for order in [Order::Max, Order::Min] {
-        let result = fast(&map, &tip, order, Arch::new());
+        let result = fast(&map, &tip, order, Engine::new());
         assert!(result.iter().all(|z| z.to_bits() == 0));
     }
 }
@@ -394,13 +397,13 @@ fn heights_of_a_millimetre_and_subnormal_ones_are_exact() {
         [-6.0, -1.0, -2.0]
     ];
     for order in [Order::Max, Order::Min] {
-        let plain = fast(&map, &tip, order, Arch::new());
+        let plain = fast(&map, &tip, order, Engine::new());
         for lift in [-1e6_f32, 1e6] {
-            let lifted = fast(&(&map + lift), &tip, order, Arch::new());
+            let lifted = fast(&(&map + lift), &tip, order, Engine::new());
             assert_eq!(bits(&lifted), bits(&(&plain + lift)));
         }
         let tiny = f32::from_bits(1);
-        let small = fast(&(&map * tiny), &(&tip * tiny), order, Arch::new());
+        let small = fast(&(&map * tiny), &(&tip * tiny), order, Engine::new());
         assert_eq!(bits(&small), bits(&(&plain * tiny)));
     }
 }
@@ -420,12 +423,12 @@ fn a_shifted_surface_gives_a_shifted_scan() {
     };
     let (map, tip) = scene.build();
     for order in [Order::Max, Order::Min] {
-        let whole = fast(&map, &tip, order, Arch::new());
+        let whole = fast(&map, &tip, order, Engine::new());
         let part = fast(
             &map.slice(ndarray::s![3.., 5..]).to_owned(),
             &tip,
             order,
-            Arch::new(),
+            Engine::new(),
         );
         // Away from the edges by half a tip.
         let inner = ndarray::s![2..25, 3..42];

@@ -36,6 +36,8 @@ pub(super) struct Superblock {
 /// The tip, superblocks highest first; empty ones are left out.
 pub(super) struct Tip {
     pub(super) supers: Vec<Superblock>,
+    /// Rows and columns that it can reach from its apex on this map.
+    pub(super) reach: [usize; 2],
     /// Offsets `[dr, dc]` in the order in which equals win; empty unless asked for.
     pub(super) ranked: Vec<[i16; 2]>,
 }
@@ -90,6 +92,7 @@ impl Tip {
         supers.sort_by(|a, b| b.max.total_cmp(&a.max));
         let mut cut = Self {
             supers,
+            reach: [reach_r as usize, reach_c as usize],
             ranked: Vec::new(),
         };
         if with_ranks {

@@ -3,18 +3,19 @@
 use super::certainty::{BOUNDED, NEVER, TOUCHED, VOID};
 use super::dilation::Steps;
 use super::field::{BLOCK, Field, LEFT, TILE, TOP, WINDOW_ROWS};
-use super::search::{Tile, Vector, Visitor, Window, any_reaches, load, lowest, peaks, search};
+use super::part::{Engine, Part};
+use super::search::{Tile, Visitor, Window, any_reaches, load, lowest, peaks, search};
 use super::tip::{Block, Order, Tip};
 use crate::error::Result;
 use crate::progress::Progress;
-use ndarray::{Array2, ArrayView2};
-use pulp::{Arch, Simd, WithSimd};
+use ndarray::{Array2, ArrayView2, s};
+use pulp::{Simd, WithSimd};
 use rayon::prelude::*;
 use std::ops::Range;
 use std::sync::Mutex;
 
-/// Rows whose marks one thread keeps to itself until it has them all.
-const BAND: usize = 64;
+/// Rows of the surface whose marks one lock guards.
+const STRIP: usize = 64;
 
 /// When tip and surface count as touching.
 #[derive(Clone, Copy)]
@@ -27,7 +28,7 @@ pub(super) struct Rule {
 
 /// The certainty map; see the public function.
 pub(super) fn certainty_map(
-    arch: Arch,
+    engine: Engine,
     surface: ArrayView2<f32>,
     scan: ArrayView2<f32>,
     tip: ArrayView2<f32>,
@@ -38,26 +39,17 @@ pub(super) fn certainty_map(
     if surface.is_empty() {
         return Ok(Array2::zeros(surface.dim()));
     }
-    let scan = scan.as_standard_layout();
     let search = Search {
-        arch,
+        engine,
         tip: &Tip::new(tip, Order::Max, surface.dim(), false),
-        field: &Field::new(arch, surface, Order::Max, progress)?,
-        scan: scan.as_slice().unwrap_or_default(),
+        surface,
+        scan,
         rule,
     };
     let mut marks = Array2::from_elem(surface.dim(), NEVER);
-    let mut shared = vec![false; surface.len()];
-    search.pass(
-        &mut marks,
-        &mut shared,
-        Pass::Sole,
-        &progress.part(0.0, 0.5),
-    )?;
-    let touched = search.padded(&marks);
-    let rest = &progress.part(0.5, 1.0);
-    search.pass(&mut marks, &mut shared, Pass::Shared(&touched), rest)?;
-    let same_contact = search.same_contact(&marks, surface);
+    let shared = search.mark_sole(&mut marks, &progress.part(0.0, 0.6))?;
+    search.mark_shared(&mut marks, &shared, &progress.part(0.6, 1.0))?;
+    let same_contact = search.same_contact(&marks);
     ndarray::Zip::from(&mut marks)
         .and(surface)
         .and(&same_contact)
@@ -68,67 +60,123 @@ pub(super) fn certainty_map(
                 *mark = TOUCHED;
             }
         });
+    progress.report(1.0);
     Ok(marks)
-}
-
-/// What a pass over the scan marks.
-#[derive(Clone, Copy)]
-enum Pass<'a> {
-    /// The contacts of scan pixels that have only one: `TOUCHED`. Notes which have several.
-    Sole,
-    /// The contacts of the other scan pixels, unless one of them is marked already: `BOUNDED`.
-    /// The marks lie as [`Field::data`] does.
-    Shared(&'a [u32]),
 }
 
 /// All that a pass needs.
 #[derive(Clone, Copy)]
-struct Search<'a> {
-    arch: Arch,
-    field: &'a Field,
-    tip: &'a Tip,
-    scan: &'a [f32],
+struct Search<'s> {
+    engine: Engine,
+    tip: &'s Tip,
+    surface: ArrayView2<'s, f32>,
+    scan: ArrayView2<'s, f32>,
     rule: Rule,
 }
 
-impl Search<'_> {
-    /// Marks the surface; `shared` says of each scan pixel whether its contacts count as several.
-    fn pass(
+impl<'s> Search<'s> {
+    /// Marks the contacts of scan pixels that have only one: `TOUCHED`. The contacts of the others.
+    fn mark_sole(&self, marks: &mut Array2<u8>, progress: &Progress) -> Result<Vec<Shared<'s>>> {
+        let (mut field, mut shared) = (Field::default(), Vec::new());
+        let parts = self.parts();
+        let steps = Steps::new(progress, &parts);
+        for part in parts {
+            field.load(
+                self.engine.arch,
+                part.seen(self.surface),
+                Order::Max,
+                progress,
+            )?;
+            let strips = strips(marks);
+            let mut bands: Vec<Shared> = self.bands(part);
+            bands.par_iter_mut().try_for_each(|band| {
+                let mut left = Marks::new(&field, self.tip, band);
+                for row in 0..band.tile_rows() {
+                    self.engine.arch.dispatch(SoleRow {
+                        search: self,
+                        field: &field,
+                        band,
+                        marks: &mut left,
+                        row,
+                        progress,
+                    });
+                    steps.done()?;
+                }
+                left.merge(band, &strips, self.surface.ncols());
+                Ok(())
+            })?;
+            shared.push(bands);
+        }
+        Ok(shared.into_iter().flatten().collect())
+    }
+
+    /// Marks the contacts of scan pixels that have several, unless one of them is marked already:
+    /// `BOUNDED`.
+    fn mark_shared(
         &self,
         marks: &mut Array2<u8>,
-        shared: &mut [bool],
-        pass: Pass,
+        shared: &[Shared],
         progress: &Progress,
     ) -> Result<()> {
-        let bands: Vec<Mutex<&mut [u8]>> = marks
-            .as_slice_mut()
-            .unwrap_or_default()
-            .chunks_mut(BAND * self.field.cols)
-            .map(Mutex::new)
-            .collect();
-        let step = Steps::new(progress, self.field.rows);
-        let shared = shared.par_chunks_mut(BAND * self.field.cols).enumerate();
-        shared.try_for_each(|(band, shared)| {
-            let mut band = Band::new(self.field, self.tip, band);
-            for row in band.tile_rows.clone() {
-                self.arch.dispatch(TouchRow {
-                    band: &mut band,
-                    search: self,
-                    shared,
-                    pass,
-                    row,
+        let mut field = Field::default();
+        for bands in shared.chunk_by(|a, b| a.part == b.part) {
+            let part = &bands[0].part;
+            progress.report(part.rows.start as f32 / self.surface.nrows() as f32);
+            if bands.iter().all(|band| band.contacts.is_empty()) {
+                continue;
+            }
+            field.load(
+                self.engine.arch,
+                part.seen(self.surface),
+                Order::Max,
+                progress,
+            )?;
+            let touched = padded(&field, part.seen(marks.view()));
+            let strips = strips(marks);
+            bands.par_iter().try_for_each(|band| {
+                let mut left = Marks::new(&field, self.tip, band);
+                self.engine.arch.dispatch(SharedBand {
+                    field: &field,
+                    band,
+                    touched: &touched,
+                    marks: &mut left,
                     progress,
                 });
-                step.done()?;
-            }
-            band.merge(&bands);
-            Ok(())
-        })
+                left.merge(band, &strips, self.surface.ncols());
+                progress.check()
+            })?;
+        }
+        Ok(())
+    }
+
+    fn parts(&self) -> Vec<Part> {
+        let (rows, cols) = self.surface.dim();
+        Part::cut(
+            self.engine,
+            [0..rows, 0..cols],
+            (rows, cols),
+            self.tip.reach,
+        )
+    }
+
+    /// The part in bands. A band's marks reach as far beyond it as the tip does: a tall tip needs
+    /// high bands.
+    fn bands(&self, part: Part) -> Vec<Shared<'s>> {
+        let height = STRIP.max(4 * self.tip.reach[0]).next_multiple_of(BLOCK);
+        let bands = part.rows.clone().step_by(height);
+        bands
+            .map(|first| Shared {
+                rows: first..(first + height).min(part.rows.end),
+                part: part.clone(),
+                thresholds: Vec::new(),
+                contacts: Vec::new(),
+            })
+            .collect()
     }
 
     /// Surface pixels that the rule cannot tell from a touched one: within half the spread of it
     /// and within the tolerance of its height.
-    fn same_contact(&self, marks: &Array2<u8>, surface: ArrayView2<f32>) -> Array2<bool> {
+    fn same_contact(&self, marks: &Array2<u8>) -> Array2<bool> {
         let (rows, cols) = marks.dim();
         let [down, right] = self.rule.spread.map(|spread| spread / 2);
         let mut same = Array2::from_elem(marks.dim(), false);
@@ -137,52 +185,83 @@ impl Search<'_> {
         }
         ndarray::Zip::indexed(&mut same)
             .and(marks)
-            .and(surface)
-            .par_for_each(|(r, c), same, &mark, &s| {
-                let near = ndarray::s![
+            .and(self.surface)
+            .par_for_each(|(r, c), same, &mark, &z| {
+                if mark == TOUCHED {
+                    return;
+                }
+                let near = s![
                     r.saturating_sub(down)..(r + down + 1).min(rows),
                     c.saturating_sub(right)..(c + right + 1).min(cols)
                 ];
-                *same =
-                    mark != TOUCHED
-                        && marks.slice(near).iter().zip(surface.slice(near)).any(
-                            |(&mark, other)| {
-                                mark == TOUCHED && (s - other).abs() <= self.rule.tolerance
-                            },
-                        );
+                let mut others = marks.slice(near).into_iter().zip(self.surface.slice(near));
+                *same = others.any(|(&mark, other)| {
+                    mark == TOUCHED && (z - other).abs() <= self.rule.tolerance
+                });
             });
         same
     }
+}
 
-    /// The marks laid out as the field's data.
-    fn padded(&self, marks: &Array2<u8>) -> Vec<u32> {
-        let field = self.field;
-        let mut padded = vec![0; field.data.len()];
-        let rows = padded.chunks_exact_mut(field.stride).skip(TOP);
-        for (to, from) in rows.zip(marks.rows()) {
+/// Which surface pixels are marked as touched, laid out as the field's data.
+fn padded(field: &Field, marks: ArrayView2<u8>) -> Vec<u32> {
+    let mut padded = vec![0; field.data.len()];
+    let rows = padded.par_chunks_exact_mut(field.stride).skip(TOP);
+    rows.zip(marks.outer_iter().into_par_iter())
+        .for_each(|(to, from)| {
             for (to, &mark) in to[LEFT..].iter_mut().zip(from) {
-                *to = u32::from(mark);
+                *to = u32::from(mark == TOUCHED);
             }
-        }
-        padded
+        });
+    padded
+}
+
+/// The surface's marks, strip by strip, each behind a lock.
+fn strips(marks: &mut Array2<u8>) -> Vec<Mutex<&mut [u8]>> {
+    let strip = STRIP * marks.ncols();
+    let marks = marks.as_slice_mut().unwrap_or_default();
+    marks.chunks_mut(strip).map(Mutex::new).collect()
+}
+
+/// Some tile rows of a part, and which blocks the pixels with several contacts touch.
+struct Shared<'s> {
+    part: Part,
+    rows: Range<usize>,
+    /// Of each open tile and row of it, one vector: the height from which a sum counts as a touch;
+    /// `+inf` where nothing is left to mark.
+    thresholds: Vec<f32>,
+    contacts: Vec<Open<'s>>,
+}
+
+/// A tile that has pixels with several contacts.
+struct Open<'s> {
+    tile: Tile,
+    blocks: Vec<(&'s Block, [bool; BLOCK])>,
+}
+
+impl Shared<'_> {
+    fn tile_rows(&self) -> usize {
+        self.rows.len().div_ceil(BLOCK)
+    }
+
+    /// Its first tile row, counted in what the part sees.
+    fn first_tile_row(&self) -> usize {
+        (self.rows.start - self.part.seen_rows.start) / BLOCK
     }
 }
 
-/// Some tile rows and the marks that they leave, which reach as far beyond them as the tip does.
-struct Band<'a> {
-    field: &'a Field,
-    tip: &'a Tip,
-    tile_rows: Range<usize>,
+/// The marks that a band leaves.
+struct Marks {
     /// The first padded row that can be marked.
     first: usize,
-    /// Marks by padded row (from `first`) and column, in the field's stride.
+    stride: usize,
+    /// By padded row (from `first`) and column.
     marks: Vec<u32>,
 }
 
-impl<'a> Band<'a> {
-    fn new(field: &'a Field, tip: &'a Tip, band: usize) -> Self {
-        let start = band * BAND / BLOCK;
-        let end = (start + BAND / BLOCK).min(field.rows.div_ceil(BLOCK));
+impl Marks {
+    fn new(field: &Field, tip: &Tip, band: &Shared) -> Self {
+        let start = band.first_tile_row();
         let (mut above, mut below) = (0, 0);
         for block in tip.supers.iter().flat_map(|s| &s.blocks) {
             above = above.min(block.row);
@@ -190,141 +269,223 @@ impl<'a> Band<'a> {
         }
         // Windows begin at padded row 4 (tile row + block row + 1).
         let first = start.saturating_add_signed(above + 1);
-        let last = end.saturating_add_signed(below).min(field.fine_rows - 1);
-        let rows = (last.max(first) - first) * BLOCK + WINDOW_ROWS;
+        let last = (start + band.tile_rows()).saturating_add_signed(below);
+        let last = last.min(field.fine_rows - 1).max(first);
         Self {
-            field,
-            tip,
-            tile_rows: start..end,
             first: first * BLOCK,
-            marks: vec![0; rows * field.stride],
+            stride: field.stride,
+            // The last vector of a window may reach beyond its row.
+            marks: vec![0; ((last - first) * BLOCK + WINDOW_ROWS) * field.stride + TILE],
         }
     }
 
-    /// Takes its marks into the surface's.
-    fn merge(&self, bands: &[Mutex<&mut [u8]>]) {
-        let (stride, rows, cols) = (self.field.stride, self.field.rows, self.field.cols);
-        for (i, from) in self.marks.chunks_exact(stride).enumerate() {
-            let Some(row) = (self.first + i).checked_sub(TOP).filter(|&r| r < rows) else {
+    /// From the window's first pixel on.
+    #[inline(always)]
+    fn at(&mut self, window: Window) -> &mut [u32] {
+        &mut self.marks[(window.row - self.first) * self.stride + window.col..]
+    }
+
+    /// Takes them into the surface's.
+    fn merge(&self, band: &Shared, strips: &[Mutex<&mut [u8]>], stride: usize) {
+        let (seen_rows, seen_cols) = (&band.part.seen_rows, &band.part.seen_cols);
+        for (i, from) in self.marks.chunks_exact(self.stride).enumerate() {
+            let row = (self.first + i)
+                .checked_sub(TOP)
+                .map(|r| r + seen_rows.start);
+            let Some(row) = row.filter(|row| seen_rows.contains(row)) else {
                 continue;
             };
             // A poisoned lock cannot be: nothing here panics.
-            let Ok(mut to) = bands[row / BAND].lock() else {
+            let Ok(mut to) = strips[row / STRIP].lock() else {
                 continue;
             };
-            let to = &mut to[row % BAND * cols..][..cols];
+            let to = &mut to[row % STRIP * stride..][seen_cols.clone()];
             for (to, &mark) in to.iter_mut().zip(&from[LEFT..]) {
-                *to = (*to).max(mark.min(u32::from(TOUCHED)) as u8);
+                *to = (*to).max(mark as u8);
             }
         }
     }
 }
 
-/// One row of tiles.
-struct TouchRow<'a, 'b> {
-    band: &'b mut Band<'a>,
-    search: &'b Search<'b>,
-    /// The band's part of the flags.
-    shared: &'b mut [bool],
-    pass: Pass<'b>,
+/// One row of tiles, searched for contacts.
+struct SoleRow<'a, 's> {
+    search: &'a Search<'s>,
+    field: &'a Field,
+    band: &'a mut Shared<'s>,
+    marks: &'a mut Marks,
+    /// Counted in the band.
     row: usize,
-    progress: &'b Progress,
+    progress: &'a Progress,
 }
 
-impl WithSimd for TouchRow<'_, '_> {
+impl WithSimd for SoleRow<'_, '_> {
     type Output = ();
 
     #[inline(always)]
-    fn with_simd<S: Simd>(mut self, simd: S) {
-        let (field, tip) = (self.band.field, self.band.tip);
+    fn with_simd<S: Simd>(self, simd: S) {
+        let (band, tip) = (self.band, self.search.tip);
+        let row = band.first_tile_row() + self.row;
+        let top = band.rows.start + BLOCK * self.row;
+        let rows = top..(top + BLOCK).min(band.rows.end);
+        let cols = band.part.cols.clone();
+        let width = cols.len().next_multiple_of(TILE);
+        let tolerance = self.search.rule.tolerance;
+        let mut all = vec![f32::INFINITY; BLOCK * width];
+        let scan = self.search.scan.slice(s![rows, cols.clone()]);
+        for (to, from) in all.chunks_exact_mut(width).zip(scan.outer_iter()) {
+            for (to, &height) in to.iter_mut().zip(from) {
+                let threshold = height - tolerance;
+                if height.abs() < f32::INFINITY && !threshold.is_nan() {
+                    // No padding (-inf) ever counts.
+                    *to = threshold.max(f32::MIN);
+                }
+            }
+        }
         let mut touching = Vec::new();
-        for col in (0..field.cols).step_by(S::F32_LANES) {
+        for col in (0..cols.len()).step_by(S::F32_LANES) {
             if self.progress.is_cancelled() {
                 return;
             }
-            let tile = Tile { row: self.row, col };
-            touching.clear();
-            let thresholds = self.thresholds(simd, col);
+            let mut thresholds = [simd.splat_f32s(0.0); BLOCK];
+            for (r, vector) in thresholds.iter_mut().enumerate() {
+                *vector = load::<S>(&all[r * width + col..]);
+            }
             let floors = lowest(simd, &thresholds);
+            touching.clear();
             let mut touch = Touch {
                 thresholds,
                 floors,
                 floor: simd.reduce_min_f32s(floors),
                 touching: &mut touching,
             };
-            search(simd, field, tip, tile, &mut touch);
-            let values = match self.pass {
-                Pass::Sole => {
-                    let sole = soles(simd, &touching, &thresholds, self.search.rule.spread);
-                    self.note_shared(col, S::F32_LANES, &sole);
-                    values(simd, TOUCHED, |r, lane| sole[r][lane] == Sole::Yes)
-                }
-                Pass::Shared(touched) => {
-                    let explained = explained(simd, &touching, &thresholds, touched);
-                    values(simd, BOUNDED, |r, lane| lanes(&explained[r])[lane] == 0)
-                }
+            let tile = Tile {
+                row,
+                col: cols.start - band.part.seen_cols.start + col,
             };
-            let Some(values) = values else { continue };
-            for &(window, block) in &touching {
-                let at = (window.row - self.band.first) * field.stride + window.col;
-                let marks = &mut self.band.marks[at..];
-                mark(simd, window, block, &thresholds, &values, marks);
+            search(simd, self.field, tip, tile, &mut touch);
+            let (values, open) = soles(simd, &touching, &thresholds, self.search.rule.spread);
+            if any(simd, &values) {
+                for contact in &touching {
+                    let marks = self.marks.at(contact.window);
+                    leave(simd, contact, &thresholds, &values, marks);
+                }
+            }
+            let far = simd.splat_f32s(f32::INFINITY);
+            if simd.first_true_m32s(simd.less_than_f32s(lowest(simd, &open), far)) < S::F32_LANES {
+                for vector in &open {
+                    let lanes = pulp::bytemuck::cast_slice(std::slice::from_ref(vector));
+                    band.thresholds.extend_from_slice(lanes);
+                }
+                let blocks = touching.iter().map(|c| (c.block, c.rows)).collect();
+                band.contacts.push(Open { tile, blocks });
             }
         }
     }
 }
 
-impl TouchRow<'_, '_> {
-    /// The tile row's part of the flags, from its first row on.
-    #[inline(always)]
-    fn flags(&mut self) -> &mut [bool] {
-        let above = BLOCK * (self.row - self.band.tile_rows.start);
-        &mut self.shared[above * self.band.field.cols..]
-    }
+/// The open tiles of a band.
+struct SharedBand<'a, 's> {
+    field: &'a Field,
+    band: &'a Shared<'s>,
+    touched: &'a [u32],
+    marks: &'a mut Marks,
+    progress: &'a Progress,
+}
+
+impl WithSimd for SharedBand<'_, '_> {
+    type Output = ();
 
     #[inline(always)]
-    fn note_shared(&mut self, col: usize, lanes: usize, sole: &[[Sole; TILE]; BLOCK]) {
-        let cols = self.band.field.cols;
-        for (flags, sole) in self.flags().chunks_exact_mut(cols).zip(sole) {
-            for (flag, &sole) in flags[col..].iter_mut().zip(&sole[..lanes]) {
-                *flag = sole == Sole::No;
+    fn with_simd<S: Simd>(self, simd: S) {
+        let all = self.band.thresholds.chunks_exact(BLOCK * S::F32_LANES);
+        let mut touching = Vec::new();
+        for (open, from) in self.band.contacts.iter().zip(all) {
+            if self.progress.is_cancelled() {
+                return;
             }
-        }
-    }
-
-    /// The height from which a sum counts as a touch; `+inf` for voids, beyond the map, and where
-    /// this pass has nothing to mark.
-    #[inline(always)]
-    fn thresholds<S: Simd>(&mut self, simd: S, col: usize) -> [S::f32s; BLOCK] {
-        let mut tile = [simd.splat_f32s(f32::INFINITY); BLOCK];
-        let cols = self.band.field.cols;
-        let rows = self.search.scan.chunks_exact(cols).skip(BLOCK * self.row);
-        let tolerance = self.search.rule.tolerance;
-        let all = matches!(self.pass, Pass::Sole);
-        let rows = rows.zip(self.flags().chunks_exact(cols));
-        for (vector, (row, flags)) in tile.iter_mut().zip(rows) {
-            let pixels = row[col..].iter().zip(&flags[col..]);
-            for (lane, (&height, &shared)) in vector.lanes_mut().iter_mut().zip(pixels) {
-                let threshold = height - tolerance;
-                if height.is_finite() && !threshold.is_nan() && (all || shared) {
-                    // No padding (-inf) ever counts.
-                    *lane = threshold.max(f32::MIN);
+            let mut thresholds = [simd.splat_f32s(0.0); BLOCK];
+            for (r, vector) in thresholds.iter_mut().enumerate() {
+                *vector = load::<S>(&from[r * S::F32_LANES..]);
+            }
+            touching.clear();
+            for &(block, rows) in &open.blocks {
+                if let Some(window) = Window::of(self.field, open.tile, block) {
+                    touching.push(Contact {
+                        window,
+                        block,
+                        rows,
+                    });
+                }
+            }
+            let values = unexplained(simd, &touching, &thresholds, self.touched);
+            if any(simd, &values) {
+                for contact in &touching {
+                    let marks = self.marks.at(contact.window);
+                    leave(simd, contact, &thresholds, &values, marks);
                 }
             }
         }
-        tile
     }
 }
 
-/// Keeps the blocks in which some pixel of the tile touches.
-struct Touch<'a, 't, S: Simd> {
+/// Whether any pixel of a tile is to be marked.
+#[inline(always)]
+fn any<S: Simd>(simd: S, values: &[S::u32s; BLOCK]) -> bool {
+    let mut all = values[0];
+    for &row in &values[1..] {
+        all = simd.or_u32s(all, row);
+    }
+    let marked = simd.greater_than_u32s(all, simd.splat_u32s(0));
+    simd.first_true_m32s(marked) < S::U32_LANES
+}
+
+/// The first vector of a slice.
+#[inline(always)]
+fn load_u32s<S: Simd>(from: &[u32]) -> S::u32s {
+    pulp::bytemuck::pod_read_unaligned(pulp::bytemuck::cast_slice(&from[..S::U32_LANES]))
+}
+
+#[inline(always)]
+fn store<V: pulp::bytemuck::Pod, T: pulp::bytemuck::Pod>(to: &mut [T], vector: &V) {
+    let from: &[T] = pulp::bytemuck::cast_slice(std::slice::from_ref(vector));
+    to[..from.len()].copy_from_slice(from);
+}
+
+/// A block with which some pixel of the tile touches.
+#[derive(Clone, Copy)]
+struct Contact<'a, 't> {
+    window: Window<'a>,
+    block: &'t Block,
+    /// Which rows of the tile touch.
+    rows: [bool; BLOCK],
+}
+
+impl Contact<'_, '_> {
+    /// The sums of row `r` of the tile with each of the block's cells. Row by row all that is done
+    /// with them stays in registers.
+    #[inline(always)]
+    fn sums<S: Simd>(&self, simd: S, r: usize) -> [[S::f32s; BLOCK]; BLOCK] {
+        let rows = self.window.rows::<S>();
+        let mut sums = [[simd.splat_f32s(0.0); BLOCK]; BLOCK];
+        for i in 0..BLOCK {
+            for j in 0..BLOCK {
+                let cell = simd.splat_f32s(self.block.cells[i][j]);
+                sums[i][j] = simd.add_f32s(load::<S>(&rows[r + i][j..]), cell);
+            }
+        }
+        sums
+    }
+}
+
+/// Keeps the blocks with which some pixel of the tile touches.
+struct Touch<'a, 't, 'c, S: Simd> {
     thresholds: [S::f32s; BLOCK],
     floors: S::f32s,
     floor: f32,
-    touching: &'t mut Vec<(Window<'a>, &'a Block)>,
+    touching: &'c mut Vec<Contact<'a, 't>>,
 }
 
-impl<'a, S: Simd> Visitor<'a, S> for Touch<'a, '_, S> {
+impl<'a, 't, S: Simd> Visitor<'a, 't, S> for Touch<'a, 't, '_, S> {
     const EQUAL_MATTERS: bool = true;
 
     #[inline(always)]
@@ -338,9 +499,19 @@ impl<'a, S: Simd> Visitor<'a, S> for Touch<'a, '_, S> {
     }
 
     #[inline(always)]
-    fn visit(&mut self, simd: S, window: Window<'a>, block: &'a Block) {
-        if any_reaches(simd, &peaks(simd, window, block), &self.thresholds) {
-            self.touching.push((window, block));
+    fn visit(&mut self, simd: S, window: Window<'a>, block: &'t Block) {
+        let peaks = peaks(simd, window, block);
+        if any_reaches(simd, &peaks, &self.thresholds) {
+            let mut rows = [false; BLOCK];
+            for (r, row) in rows.iter_mut().enumerate() {
+                let hit = simd.greater_than_or_equal_f32s(peaks[r], self.thresholds[r]);
+                *row = simd.first_true_m32s(hit) < S::F32_LANES;
+            }
+            self.touching.push(Contact {
+                window,
+                block,
+                rows,
+            });
         }
     }
 
@@ -348,156 +519,162 @@ impl<'a, S: Simd> Visitor<'a, S> for Touch<'a, '_, S> {
     fn settle(&mut self, _: S) {}
 }
 
-/// Calls `f` with each cell of a block (its row and column in the block), each row of the tile,
-/// and where the two touch.
-#[inline(always)]
-fn for_each_hit<S: Simd>(
-    simd: S,
-    (window, block): (Window, &Block),
-    thresholds: &[S::f32s; BLOCK],
-    mut f: impl FnMut(usize, usize, usize, S::m32s),
-) {
-    let rows = window.rows::<S>();
-    for j in 0..BLOCK {
-        for i in 0..BLOCK {
-            let cell = simd.splat_f32s(block.cells[i][j]);
-            for r in 0..BLOCK {
-                let sum = simd.add_f32s(load::<S>(&rows[r + i][j..]), cell);
-                f(i, j, r, simd.greater_than_or_equal_f32s(sum, thresholds[r]));
-            }
-        }
-    }
-}
-
-/// Whether a scan pixel has one contact only.
-#[derive(Clone, Copy, PartialEq)]
-enum Sole {
-    Yes,
-    No,
-    /// It has no contact at all.
-    None,
-}
-
-/// For each pixel of a tile, row by row, whether its contacts count as one.
+/// For each pixel of a tile: `TOUCHED` if its contacts count as one, else 0; and its threshold if
+/// they count as several, else `+inf`.
 #[inline(always)]
 fn soles<S: Simd>(
     simd: S,
-    touching: &[(Window, &Block)],
+    touching: &[Contact],
     thresholds: &[S::f32s; BLOCK],
     spread: [usize; 2],
-) -> [[Sole; TILE]; BLOCK] {
+) -> ([S::u32s; BLOCK], [S::f32s; BLOCK]) {
     let far = simd.splat_f32s(f32::INFINITY);
     let near = simd.splat_f32s(f32::NEG_INFINITY);
-    let (mut top, mut left) = ([far; BLOCK], [far; BLOCK]);
-    let (mut bottom, mut right) = ([near; BLOCK], [near; BLOCK]);
-    for &(window, block) in touching {
-        for_each_hit(simd, (window, block), thresholds, |i, j, r, hit| {
-            // Tip rows and columns are far below 2^24: exact as f32.
-            let row = simd.splat_f32s((BLOCK as isize * block.row + i as isize) as f32);
-            let col = simd.splat_f32s((BLOCK as isize * block.col + j as isize) as f32);
-            top[r] = simd.select_f32s(hit, simd.min_f32s(top[r], row), top[r]);
-            bottom[r] = simd.select_f32s(hit, simd.max_f32s(bottom[r], row), bottom[r]);
-            left[r] = simd.select_f32s(hit, simd.min_f32s(left[r], col), left[r]);
-            right[r] = simd.select_f32s(hit, simd.max_f32s(right[r], col), right[r]);
-        });
-    }
-    let within = |low: &S::f32s, high: &S::f32s, lane: usize, most: usize| {
-        high.lanes()[lane] - low.lanes()[lane] <= most as f32
-    };
-    let mut soles = [[Sole::None; TILE]; BLOCK];
-    for (r, soles) in soles.iter_mut().enumerate() {
-        for (lane, sole) in soles.iter_mut().enumerate().take(S::F32_LANES) {
-            if top[r].lanes()[lane] < f32::INFINITY {
-                let one = within(&top[r], &bottom[r], lane, spread[0])
-                    && within(&left[r], &right[r], lane, spread[1]);
-                *sole = if one { Sole::Yes } else { Sole::No };
+    let (mut low, mut high) = ([[far; BLOCK]; 2], [[near; BLOCK]; 2]);
+    for contact in touching {
+        for r in 0..BLOCK {
+            if !contact.rows[r] {
+                continue;
+            }
+            let sums = contact.sums(simd, r);
+            let mut peaks = [[near; BLOCK]; 2];
+            for i in 0..BLOCK {
+                for j in 0..BLOCK {
+                    peaks[0][i] = simd.max_f32s(peaks[0][i], sums[i][j]);
+                    peaks[1][j] = simd.max_f32s(peaks[1][j], sums[i][j]);
+                }
+            }
+            for axis in 0..2 {
+                let corner = BLOCK as isize * [contact.block.row, contact.block.col][axis];
+                let (mut least, mut most) = (low[axis][r], high[axis][r]);
+                for k in 0..BLOCK {
+                    // Tip rows and columns are far below 2^24: exact as f32.
+                    let at = simd.splat_f32s((corner + k as isize) as f32);
+                    let hit = simd.greater_than_or_equal_f32s(peaks[axis][k], thresholds[r]);
+                    least = simd.select_f32s(hit, simd.min_f32s(least, at), least);
+                    most = simd.select_f32s(hit, simd.max_f32s(most, at), most);
+                }
+                (low[axis][r], high[axis][r]) = (least, most);
             }
         }
     }
-    soles
+    let mut values = [simd.splat_u32s(0); BLOCK];
+    let mut open = [far; BLOCK];
+    for r in 0..BLOCK {
+        let some = simd.less_than_f32s(low[0][r], far);
+        let mut one = some;
+        for axis in 0..2 {
+            let extent = simd.sub_f32s(high[axis][r], low[axis][r]);
+            let most = simd.splat_f32s(spread[axis] as f32);
+            one = simd.and_m32s(one, simd.less_than_or_equal_f32s(extent, most));
+        }
+        let touched = simd.splat_u32s(u32::from(TOUCHED));
+        values[r] = simd.select_u32s(one, touched, values[r]);
+        let several = simd.select_f32s(one, far, thresholds[r]);
+        open[r] = simd.select_f32s(some, several, far);
+    }
+    (values, open)
 }
 
-/// For each pixel of a tile, whether it touches (non-zero) what is marked as touched.
+/// For each open pixel of a tile: `BOUNDED` unless it touches what is marked as touched, then 0.
 #[inline(always)]
-fn explained<S: Simd>(
+fn unexplained<S: Simd>(
     simd: S,
-    touching: &[(Window, &Block)],
+    touching: &[Contact],
     thresholds: &[S::f32s; BLOCK],
     touched: &[u32],
 ) -> [S::u32s; BLOCK] {
-    let mut explained = [simd.splat_u32s(0); BLOCK];
-    for &(window, block) in touching {
-        for_each_hit(simd, (window, block), thresholds, |i, j, r, hit| {
-            let at = (window.row + r + i) * window.stride() + window.col + j;
-            let marks: S::u32s = pulp::bytemuck::pod_read_unaligned(pulp::bytemuck::cast_slice(
-                &touched[at..at + S::U32_LANES],
-            ));
-            let both = simd.or_u32s(explained[r], marks);
-            explained[r] = simd.select_u32s(hit, both, explained[r]);
-        });
+    let zero = simd.splat_u32s(0);
+    let mut explained = [zero; BLOCK];
+    let mut open = [false; BLOCK];
+    let far = simd.splat_f32s(f32::INFINITY);
+    for r in 0..BLOCK {
+        let some = simd.less_than_f32s(thresholds[r], far);
+        open[r] = simd.first_true_m32s(some) < S::F32_LANES;
     }
-    explained
-}
-
-#[inline(always)]
-fn lanes<V: pulp::bytemuck::Pod>(vector: &V) -> &[u32] {
-    pulp::bytemuck::cast_slice(std::slice::from_ref(vector))
-}
-
-/// `value` for the pixels of a tile that are `wanted` (row, lane), 0 for the others; `None` if
-/// none is.
-#[inline(always)]
-fn values<S: Simd>(
-    simd: S,
-    value: u8,
-    wanted: impl Fn(usize, usize) -> bool,
-) -> Option<[S::u32s; BLOCK]> {
-    let mut values = [simd.splat_u32s(0); BLOCK];
-    let mut any = false;
-    for (r, vector) in values.iter_mut().enumerate() {
-        let vector: &mut [u32] = pulp::bytemuck::cast_slice_mut(std::slice::from_mut(vector));
-        for (lane, to) in vector.iter_mut().enumerate() {
-            if wanted(r, lane) {
-                *to = u32::from(value);
-                any = true;
+    for contact in touching {
+        let window = contact.window;
+        for r in 0..BLOCK {
+            if !(contact.rows[r] && open[r]) {
+                continue;
+            }
+            let sums = contact.sums(simd, r);
+            for i in 0..BLOCK {
+                let row = &touched[(window.row + r + i) * window.stride() + window.col..];
+                for j in 0..BLOCK {
+                    let marks = load_u32s::<S>(&row[j..]);
+                    let both = simd.or_u32s(explained[r], marks);
+                    let hit = simd.greater_than_or_equal_f32s(sums[i][j], thresholds[r]);
+                    explained[r] = simd.select_u32s(hit, both, explained[r]);
+                }
             }
         }
     }
-    any.then_some(values)
+    let bounded = simd.splat_u32s(u32::from(BOUNDED));
+    let mut values = [zero; BLOCK];
+    for (value, &marks) in values.iter_mut().zip(&explained) {
+        *value = simd.select_u32s(simd.equal_u32s(marks, zero), bounded, zero);
+    }
+    values
 }
 
-/// Leaves the marks of a block on its window: of each pixel the values given to it, as bits.
+/// Leaves the marks of a block on its window: of each pixel the value given to it, as bits.
+///
+/// What the block's four columns leave is shifted into place in registers: a load that overlaps a
+/// fresh store only in part would have to wait for it.
 #[inline(always)]
-fn mark<S: Simd>(
+fn leave<S: Simd>(
     simd: S,
-    window: Window,
-    block: &Block,
+    contact: &Contact,
     thresholds: &[S::f32s; BLOCK],
     values: &[S::u32s; BLOCK],
     marks: &mut [u32],
 ) {
     let zero = simd.splat_u32s(0);
-    let rows = window.rows::<S>();
-    let mut targets: [&mut [u32]; WINDOW_ROWS] = Default::default();
-    for (to, row) in targets.iter_mut().zip(marks.chunks_mut(window.stride())) {
-        *to = &mut row[..S::F32_LANES + BLOCK - 1];
-    }
+    let lanes = load_u32s::<S>(&LANES);
+    let (mut here, mut beyond) = ([zero; WINDOW_ROWS], [zero; WINDOW_ROWS]);
+    let rows = contact.window.rows::<S>();
     for j in 0..BLOCK {
+        let mut map = [simd.splat_f32s(0.0); WINDOW_ROWS];
+        for i in 0..WINDOW_ROWS {
+            map[i] = load::<S>(&rows[i][j..]);
+        }
         let mut column = [zero; WINDOW_ROWS];
         for i in 0..BLOCK {
-            let cell = simd.splat_f32s(block.cells[i][j]);
+            let cell = simd.splat_f32s(contact.block.cells[i][j]);
             for r in 0..BLOCK {
-                let sum = simd.add_f32s(load::<S>(&rows[r + i][j..]), cell);
+                let sum = simd.add_f32s(map[r + i], cell);
                 let hit = simd.greater_than_or_equal_f32s(sum, thresholds[r]);
                 let both = simd.or_u32s(column[r + i], values[r]);
                 column[r + i] = simd.select_u32s(hit, both, column[r + i]);
             }
         }
-        for (to, &column) in targets.iter_mut().zip(&column) {
-            let to = &mut to[j..j + S::U32_LANES];
-            let old: S::u32s = pulp::bytemuck::pod_read_unaligned(pulp::bytemuck::cast_slice(to));
-            let new = simd.or_u32s(old, column);
-            to.copy_from_slice(pulp::bytemuck::cast_slice(std::slice::from_ref(&new)));
+        if S::U32_LANES < BLOCK {
+            // Without vectors there is nothing to shift.
+            for (row, &new) in column.iter().enumerate() {
+                let to = &mut marks[row * contact.window.stride() + j..];
+                let old = load_u32s::<S>(to);
+                store(to, &simd.or_u32s(old, new));
+            }
+            continue;
+        }
+        let inside = simd.greater_than_or_equal_u32s(lanes, simd.splat_u32s(j as u32));
+        for row in 0..WINDOW_ROWS {
+            let turned = simd.rotate_right_u32s(column[row], j);
+            here[row] = simd.or_u32s(here[row], simd.select_u32s(inside, turned, zero));
+            beyond[row] = simd.or_u32s(beyond[row], simd.select_u32s(inside, zero, turned));
+        }
+    }
+    let stride = contact.window.stride();
+    for row in 0..WINDOW_ROWS {
+        for (at, new) in [(0, here[row]), (S::U32_LANES, beyond[row])] {
+            if simd.first_true_m32s(simd.greater_than_u32s(new, zero)) < S::U32_LANES {
+                let to = &mut marks[row * stride + at..];
+                let old = load_u32s::<S>(to);
+                store(to, &simd.or_u32s(old, new));
+            }
         }
     }
 }
+
+const LANES: [u32; TILE] = [0, 1, 2, 3, 4, 5, 6, 7, 8, 9, 10, 11, 12, 13, 14, 15];
