@@ -31,7 +31,7 @@ pub(super) fn contacts(
     }
     let tip = Tip::new(tip, Order::Max, surface.dim(), true);
     let (rows, cols) = surface.dim();
-    let parts = Part::cut(engine, [0..rows, 0..cols], (rows, cols), tip.reach);
+    let parts = Part::cut(engine, (rows, cols), tip.reach);
     let steps = Steps::new(progress, &parts);
     let mut field = Field::default();
     for part in &parts {

@@ -20,23 +20,36 @@ pub(super) fn extreme(
     order: Order,
     progress: &Progress,
 ) -> Result<Array2<f32>> {
+    let mut out = Array2::zeros(map.dim());
+    let values = out.as_slice_mut().unwrap_or_default();
+    extreme_into(engine, map, tip, order, values, progress)?;
+    Ok(out)
+}
+
+/// The same into `out`, row by row, as long as the map has pixels.
+pub(super) fn extreme_into(
+    engine: Engine,
+    map: ArrayView2<f32>,
+    tip: ArrayView2<f32>,
+    order: Order,
+    out: &mut [f32],
+    progress: &Progress,
+) -> Result<()> {
     progress.check()?;
     if map.is_empty() {
-        return Ok(Array2::zeros(map.dim()));
+        return Ok(());
     }
     if let Some(depth) = flat::flat_depth(tip) {
-        return flat::extreme(engine.arch, map, tip.dim(), depth, order, progress);
+        return flat::extreme_into(engine.arch, map, tip.dim(), depth, order, out, progress);
     }
     let tip = Tip::new(tip, order, map.dim(), false);
-    let mut out = Array2::zeros(map.dim());
     let (rows, cols) = map.dim();
-    let parts = Part::cut(engine, [0..rows, 0..cols], (rows, cols), tip.reach);
+    let parts = Part::cut(engine, (rows, cols), tip.reach);
     let steps = Steps::new(progress, &parts);
     let mut field = Field::default();
     for part in &parts {
         field.load(engine.arch, part.seen(map), order, progress)?;
-        let values = out.as_slice_mut().unwrap_or_default();
-        let values = &mut values[part.rows.start * cols..part.rows.end * cols];
+        let values = &mut out[part.rows.start * cols..part.rows.end * cols];
         let tile_rows = values.par_chunks_mut(BLOCK * cols).enumerate();
         tile_rows.try_for_each(|(row, values)| {
             engine.arch.dispatch(TileRow {
@@ -52,7 +65,7 @@ pub(super) fn extreme(
             steps.done()
         })?;
     }
-    Ok(out)
+    Ok(())
 }
 
 /// Counts finished tile rows, reports them, and passes a cancellation on.

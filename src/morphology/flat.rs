@@ -8,7 +8,7 @@ use super::field::{Load, larger};
 use super::tip::Order;
 use crate::error::Result;
 use crate::progress::Progress;
-use ndarray::{Array2, ArrayView2};
+use ndarray::ArrayView2;
 use pulp::{Arch, Simd, WithSimd};
 use rayon::prelude::*;
 
@@ -19,17 +19,19 @@ pub(super) fn flat_depth(tip: ArrayView2<f32>) -> Option<f32> {
     (centred && depth.is_finite() && tip.iter().all(|&p| p == depth)).then_some(depth + 0.0)
 }
 
-/// Dilation or erosion by a flat tip of `size` cells at `depth`. The map must not be empty.
+/// Dilation or erosion by a flat tip of `size` cells at `depth` into `out`, as long as the map has
+/// pixels. The map must not be empty.
 ///
 /// Rounded addition is monotonic, so the maximum may be taken before the depth is added.
-pub(super) fn extreme(
+pub(super) fn extreme_into(
     arch: Arch,
     map: ArrayView2<f32>,
     size: (usize, usize),
     depth: f32,
     order: Order,
+    out: &mut [f32],
     progress: &Progress,
-) -> Result<Array2<f32>> {
+) -> Result<()> {
     let (rows, cols) = map.dim();
     // A tip reaching past the opposite edge sees no more than one that just reaches it.
     let (half_r, half_c) = ((size.0 / 2).min(rows - 1), (size.1 / 2).min(cols - 1));
@@ -52,11 +54,8 @@ pub(super) fn extreme(
             },
         )?;
     progress.report(0.5);
-    let mut out = Array2::zeros((rows, cols));
     let height = 2 * half_r + 1;
-    out.as_slice_mut()
-        .unwrap_or_default()
-        .par_chunks_mut(height * cols)
+    out.par_chunks_mut(height * cols)
         .enumerate()
         .try_for_each(|(block, to)| {
             arch.dispatch(Across {
@@ -72,7 +71,7 @@ pub(super) fn extreme(
             progress.check()
         })?;
     progress.report(1.0);
-    Ok(out)
+    Ok(())
 }
 
 /// The running maximum along one row.

@@ -30,8 +30,9 @@ mod touch;
 
 use crate::error::{Error, ErrorKind, Result};
 use crate::progress::Progress;
-use ndarray::{Array2, ArrayView2};
+use ndarray::{Array2, ArrayView2, ArrayViewMut2, s};
 use part::Engine;
+use std::ops::Range;
 use tip::Order;
 
 /// The scan that a probe of shape `tip` records of `surface`: `max over u of S(x + u) + p(u)`.
@@ -54,6 +55,105 @@ pub fn erode(
     progress: &Progress,
 ) -> Result<Array2<f32>> {
     dilation::extreme(Engine::new(), scan, tip, Order::Min, progress)
+}
+
+/// [`dilate`] into `scan`, whatever that holds: in memory that is in use already, or in a mapped
+/// file, where maps larger than the memory can be worked on. Working memory stays at some
+/// megabytes.
+///
+/// Errors: kind `Data` when the shapes differ or `scan` is not row by row in memory; when
+/// cancelled, which leaves `scan` half done.
+pub fn dilate_into(
+    surface: ArrayView2<f32>,
+    tip: ArrayView2<f32>,
+    scan: ArrayViewMut2<f32>,
+    progress: &Progress,
+) -> Result<()> {
+    extreme_into(surface, tip, scan, Order::Max, progress)
+}
+
+/// [`erode`] into `surface`; see [`dilate_into`].
+///
+/// Errors: as there.
+pub fn erode_into(
+    scan: ArrayView2<f32>,
+    tip: ArrayView2<f32>,
+    surface: ArrayViewMut2<f32>,
+    progress: &Progress,
+) -> Result<()> {
+    extreme_into(scan, tip, surface, Order::Min, progress)
+}
+
+fn extreme_into(
+    from: ArrayView2<f32>,
+    tip: ArrayView2<f32>,
+    mut to: ArrayViewMut2<f32>,
+    order: Order,
+    progress: &Progress,
+) -> Result<()> {
+    same_shape(to.view(), from)?;
+    let Some(to) = to.as_slice_mut() else {
+        return Err(Error::new(
+            ErrorKind::Data,
+            "the map to be filled does not lie row by row in memory",
+        )
+        .remedy("Give a map in standard layout (C order)"));
+    };
+    dilation::extreme_into(Engine::new(), from, tip, order, to, progress)
+}
+
+/// Brings `surface`, the erosion of `scan` before its pixels in `rows` and `columns` changed, up to
+/// date: only what the tip can reach from there is computed again.
+///
+/// Errors: kind `Data` when the shapes differ or the changed pixels lie beyond the map; when
+/// cancelled, which leaves `surface` as it was.
+pub fn erode_again(
+    scan: ArrayView2<f32>,
+    tip: ArrayView2<f32>,
+    mut surface: ArrayViewMut2<f32>,
+    [rows, columns]: [Range<usize>; 2],
+    progress: &Progress,
+) -> Result<()> {
+    same_shape(surface.view(), scan)?;
+    if rows.end > scan.nrows() || columns.end > scan.ncols() {
+        return Err(Error::new(
+            ErrorKind::Data,
+            format!(
+                "pixels up to row {} and column {} changed, but the scan has {} x {}",
+                rows.end,
+                columns.end,
+                scan.nrows(),
+                scan.ncols()
+            ),
+        )
+        .remedy("Give rows and columns of the scan"));
+    }
+    if rows.is_empty() || columns.is_empty() {
+        return Ok(());
+    }
+    let (down, right) = (tip.nrows() / 2, tip.ncols() / 2);
+    let wider = |range: &Range<usize>, by: usize, end: usize| {
+        range.start.saturating_sub(by)..(range.end + by).min(end)
+    };
+    let again = [
+        wider(&rows, down, scan.nrows()),
+        wider(&columns, right, scan.ncols()),
+    ];
+    let seen = [
+        wider(&again[0], down, scan.nrows()),
+        wider(&again[1], right, scan.ncols()),
+    ];
+    let around = erode(
+        scan.slice(s![seen[0].clone(), seen[1].clone()]),
+        tip,
+        progress,
+    )?;
+    let within =
+        |axis: usize| again[axis].start - seen[axis].start..again[axis].end - seen[axis].start;
+    surface
+        .slice_mut(s![again[0].clone(), again[1].clone()])
+        .assign(&around.slice(s![within(0), within(1)]));
+    Ok(())
 }
 
 /// `dilate(erode(scan))`: what of the scan the tip explains; `<= scan` everywhere.

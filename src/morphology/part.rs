@@ -40,19 +40,12 @@ pub(super) struct Part {
 }
 
 impl Part {
-    /// Cuts `wanted` (rows, columns) of a map of `dim` for a tip that reaches `reach` rows and
-    /// columns from its apex.
-    pub(super) fn cut(
-        engine: Engine,
-        wanted: [Range<usize>; 2],
-        dim: (usize, usize),
-        reach: [usize; 2],
-    ) -> Vec<Self> {
+    /// Cuts a map of `dim` for a tip that reaches `reach` rows and columns from its apex.
+    pub(super) fn cut(engine: Engine, dim: (usize, usize), reach: [usize; 2]) -> Vec<Self> {
         let dim = [dim.0, dim.1];
         let size = |axis: usize| engine.part[axis].max(engine.rim * reach[axis]);
-        let [rows, cols] = wanted;
-        let rows = stretches(rows, size(0), BLOCK);
-        let cols = stretches(cols, size(1), TILE);
+        let rows = stretches(dim[0], size(0), BLOCK);
+        let cols = stretches(dim[1], size(1), TILE);
         let seen = |wanted: &Range<usize>, axis: usize, grain: usize| {
             let first = wanted.start.saturating_sub(reach[axis]);
             first - first % grain..(wanted.end + reach[axis]).min(dim[axis])
@@ -84,16 +77,14 @@ impl Part {
     }
 }
 
-/// `all` in stretches of nearly the same length near `size`, each beginning at a multiple of
+/// `length` in stretches of nearly the same length near `size`, each beginning at a multiple of
 /// `grain`, as tiles do.
-fn stretches(all: Range<usize>, size: usize, grain: usize) -> Vec<Range<usize>> {
-    let start = all.start - all.start % grain;
-    let length = all.end.saturating_sub(start);
+fn stretches(length: usize, size: usize, grain: usize) -> Vec<Range<usize>> {
     let count = ((length + size / 2) / size).max(1);
     let step = length.div_ceil(count).next_multiple_of(grain).max(grain);
-    (start..all.end)
-        .step_by(step)
-        .map(|first| first..(first + step).min(all.end))
+    let firsts = (0..length).step_by(step);
+    firsts
+        .map(|first| first..(first + step).min(length))
         .collect()
 }
 
@@ -113,8 +104,7 @@ mod tests {
                 part: size,
                 rim: 0,
             };
-            let wanted = [0..dim[0], 0..dim[1]];
-            let parts = Part::cut(engine, wanted, (dim[0], dim[1]), reach);
+            let parts = Part::cut(engine, (dim[0], dim[1]), reach);
             let area: usize = parts.iter().map(|p| p.rows.len() * p.cols.len()).sum();
             assert_eq!(area, dim[0] * dim[1]);
             for part in &parts {

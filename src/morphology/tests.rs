@@ -462,3 +462,65 @@ fn shapes_that_do_not_belong_together_are_refused() {
     assert!(error.to_string().contains("3 x 4"));
     assert!(edge_leaning(a.view(), b.view(), tip.view(), &Progress::new()).is_err());
 }
+
+#[test]
+fn a_map_is_filled_in_place_as_it_is_returned() {
+    let scene = Scene {
+        seed: 5,
+        rows: 37,
+        cols: 61,
+        tip_rows: 7,
+        tip_cols: 11,
+        steep: 0.3,
+        grain: 0.25,
+        voids: 0.05,
+        holes: 0.2,
+    };
+    let progress = Progress::new();
+    for (map, tip) in [
+        scene.build(),
+        Scene {
+            steep: 0.0,
+            ..scene
+        }
+        .build(),
+    ] {
+        let (m, p) = (map.view(), tip.view());
+        let mut out = Array2::from_elem(map.dim(), 7.0);
+        dilate_into(m, p, out.view_mut(), &progress).unwrap();
+        assert_eq!(bits(&out), bits(&dilate(m, p, &progress).unwrap()));
+        erode_into(m, p, out.view_mut(), &progress).unwrap();
+        assert_eq!(bits(&out), bits(&erode(m, p, &progress).unwrap()));
+        let turned = out.view_mut().reversed_axes();
+        let turned = erode_into(m.reversed_axes(), p, turned, &progress).unwrap_err();
+        assert!(turned.to_string().contains("row by row"), "{turned}");
+    }
+    let (map, tip) = scene.build();
+    let mut small = Array2::zeros((3, 3));
+    let small = erode_into(map.view(), tip.view(), small.view_mut(), &progress).unwrap_err();
+    assert!(small.to_string().contains("3 x 3"), "{small}");
+}
+
+proptest! {
+    #![proptest_config(ProptestConfig::with_cases(64))]
+
+    #[test]
+    fn an_erosion_brought_up_to_date_is_the_erosion(
+        scene in scenes(),
+        corner in (0.0..1.0_f64, 0.0..1.0_f64),
+        size in (0..9_usize, 0..20_usize),
+    ) {
+        let (mut map, tip) = scene.build();
+        let progress = Progress::new();
+        let mut surface = erode(map.view(), tip.view(), &progress).unwrap();
+        let range = |at: f64, size: usize, length: usize| {
+            let first = (at * length as f64) as usize;
+            first..(first + size).min(length)
+        };
+        let rows = range(corner.0, size.0, scene.rows);
+        let cols = range(corner.1, size.1, scene.cols);
+        map.slice_mut(s![rows.clone(), cols.clone()]).mapv_inplace(|z| 3.0 * scene.grain - z);
+        erode_again(map.view(), tip.view(), surface.view_mut(), [rows, cols], &progress).unwrap();
+        prop_assert_eq!(bits(&surface), bits(&reference::erode(map.view(), tip.view())));
+    }
+}

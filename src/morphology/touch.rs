@@ -76,7 +76,7 @@ struct Search<'s> {
 
 impl<'s> Search<'s> {
     /// Marks the contacts of scan pixels that have only one: `TOUCHED`. The contacts of the others.
-    fn mark_sole(&self, marks: &mut Array2<u8>, progress: &Progress) -> Result<Vec<Shared<'s>>> {
+    fn mark_sole(&self, marks: &mut Array2<u8>, progress: &Progress) -> Result<Vec<Band<'s>>> {
         let (mut field, mut shared) = (Field::default(), Vec::new());
         let parts = self.parts();
         let steps = Steps::new(progress, &parts);
@@ -88,7 +88,7 @@ impl<'s> Search<'s> {
                 progress,
             )?;
             let strips = strips(marks);
-            let mut bands: Vec<Shared> = self.bands(part);
+            let mut bands = self.bands(part);
             bands.par_iter_mut().try_for_each(|band| {
                 let mut left = Marks::new(&field, self.tip, band);
                 for row in 0..band.tile_rows() {
@@ -115,7 +115,7 @@ impl<'s> Search<'s> {
     fn mark_shared(
         &self,
         marks: &mut Array2<u8>,
-        shared: &[Shared],
+        shared: &[Band],
         progress: &Progress,
     ) -> Result<()> {
         let mut field = Field::default();
@@ -150,22 +150,16 @@ impl<'s> Search<'s> {
     }
 
     fn parts(&self) -> Vec<Part> {
-        let (rows, cols) = self.surface.dim();
-        Part::cut(
-            self.engine,
-            [0..rows, 0..cols],
-            (rows, cols),
-            self.tip.reach,
-        )
+        Part::cut(self.engine, self.surface.dim(), self.tip.reach)
     }
 
     /// The part in bands. A band's marks reach as far beyond it as the tip does: a tall tip needs
     /// high bands.
-    fn bands(&self, part: Part) -> Vec<Shared<'s>> {
+    fn bands(&self, part: Part) -> Vec<Band<'s>> {
         let height = STRIP.max(4 * self.tip.reach[0]).next_multiple_of(BLOCK);
         let bands = part.rows.clone().step_by(height);
         bands
-            .map(|first| Shared {
+            .map(|first| Band {
                 rows: first..(first + height).min(part.rows.end),
                 part: part.clone(),
                 thresholds: Vec::new(),
@@ -224,7 +218,7 @@ fn strips(marks: &mut Array2<u8>) -> Vec<Mutex<&mut [u8]>> {
 }
 
 /// Some tile rows of a part, and which blocks the pixels with several contacts touch.
-struct Shared<'s> {
+struct Band<'s> {
     part: Part,
     rows: Range<usize>,
     /// Of each open tile and row of it, one vector: the height from which a sum counts as a touch;
@@ -239,7 +233,7 @@ struct Open<'s> {
     blocks: Vec<(&'s Block, [bool; BLOCK])>,
 }
 
-impl Shared<'_> {
+impl Band<'_> {
     fn tile_rows(&self) -> usize {
         self.rows.len().div_ceil(BLOCK)
     }
@@ -260,7 +254,7 @@ struct Marks {
 }
 
 impl Marks {
-    fn new(field: &Field, tip: &Tip, band: &Shared) -> Self {
+    fn new(field: &Field, tip: &Tip, band: &Band) -> Self {
         let start = band.first_tile_row();
         let (mut above, mut below) = (0, 0);
         for block in tip.supers.iter().flat_map(|s| &s.blocks) {
@@ -286,7 +280,7 @@ impl Marks {
     }
 
     /// Takes them into the surface's.
-    fn merge(&self, band: &Shared, strips: &[Mutex<&mut [u8]>], stride: usize) {
+    fn merge(&self, band: &Band, strips: &[Mutex<&mut [u8]>], stride: usize) {
         let (seen_rows, seen_cols) = (&band.part.seen_rows, &band.part.seen_cols);
         for (i, from) in self.marks.chunks_exact(self.stride).enumerate() {
             let row = (self.first + i)
@@ -311,7 +305,7 @@ impl Marks {
 struct SoleRow<'a, 's> {
     search: &'a Search<'s>,
     field: &'a Field,
-    band: &'a mut Shared<'s>,
+    band: &'a mut Band<'s>,
     marks: &'a mut Marks,
     /// Counted in the band.
     row: usize,
@@ -386,7 +380,7 @@ impl WithSimd for SoleRow<'_, '_> {
 /// The open tiles of a band.
 struct SharedBand<'a, 's> {
     field: &'a Field,
-    band: &'a Shared<'s>,
+    band: &'a Band<'s>,
     touched: &'a [u32],
     marks: &'a mut Marks,
     progress: &'a Progress,
