@@ -541,10 +541,10 @@ fn soles<S: Simd>(
             for axis in 0..2 {
                 let corner = BLOCK as isize * [contact.block.row, contact.block.col][axis];
                 let (mut least, mut most) = (low[axis][r], high[axis][r]);
-                for k in 0..BLOCK {
+                for (k, &peak) in peaks[axis].iter().enumerate() {
                     // Tip rows and columns are far below 2^24: exact as f32.
                     let at = simd.splat_f32s((corner + k as isize) as f32);
-                    let hit = simd.greater_than_or_equal_f32s(peaks[axis][k], thresholds[r]);
+                    let hit = simd.greater_than_or_equal_f32s(peak, thresholds[r]);
                     least = simd.select_f32s(hit, simd.min_f32s(least, at), least);
                     most = simd.select_f32s(hit, simd.max_f32s(most, at), most);
                 }
