@@ -122,7 +122,10 @@ pub fn estimate(
         None => crate::leveling::noise(scan).unwrap_or(0.0),
     };
     let bound = match settings.method {
-        Method::Auto => matched_bound(scan, noise, settings, &progress.part(0.0, 0.6))?,
+        Method::Auto => {
+            let bound = matched_bound(scan, noise, settings, &progress.part(0.0, 0.3))?;
+            wide_enough(scan, noise, settings, bound, &progress.part(0.3, 0.6))?
+        }
         Method::Textbook => textbook_bound(scan, noise, settings, &progress.part(0.0, 0.6))?,
     };
     finish::finish(scan, noise, settings, bound, &progress.part(0.6, 1.0))
@@ -209,6 +212,39 @@ fn matched_bound(
         settings,
         progress,
     )
+}
+
+impl Bound {
+    /// Whether most of what could show the tip is higher than the window can hold: corners of wide
+    /// plateaus, which show no apex.
+    fn mostly_guarded(&self) -> bool {
+        5 * self.found.guarded > 2 * self.found.candidates
+    }
+}
+
+/// Where the program chose the window and it cannot hold most features (a double tip shows each
+/// twice, further apart than one summit is wide), a wider one if that helps.
+fn wide_enough(
+    scan: &HeightMap,
+    noise: f64,
+    settings: &Settings,
+    bound: Bound,
+    progress: &Progress,
+) -> Result<Bound> {
+    if settings.support_nm.is_some() || !bound.mostly_guarded() {
+        return Ok(bound);
+    }
+    let (rows, columns) = bound.found.shape.dim();
+    let (y, x) = (
+        scan.pitch().y * rows as f64,
+        scan.pitch().x * columns as f64,
+    );
+    let wider = Settings {
+        support_nm: Some(1.5 * x.max(y)),
+        ..*settings
+    };
+    let wider = matched_bound(scan, noise, &wider, progress)?;
+    Ok(if wider.mostly_guarded() { bound } else { wider })
 }
 
 /// The published iteration with the half-pixel envelope; threshold four times the noise.

@@ -34,9 +34,7 @@ pub(super) fn finish(
 ) -> Result<Estimate> {
     let left = noise * smooth::gain(bound.smoothing);
     let px = (scan.pitch().x * scan.pitch().y).sqrt();
-    // Corners of plateaus wider than the window are many and show no tip's apex.
-    let plateaus = 5 * bound.found.guarded > 2 * bound.found.candidates;
-    let polished = if settings.method == Method::Auto && !plateaus {
+    let polished = if settings.method == Method::Auto && !bound.mostly_guarded() {
         let input = polish::Input {
             scan: scan.heights(),
             noise,
