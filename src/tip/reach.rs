@@ -6,11 +6,13 @@
 
 mod bluntest;
 mod closed_forms;
+mod plan;
 #[cfg(test)]
 mod tests;
 
 pub use bluntest::{Bluntest, Need, bluntest};
 pub use closed_forms::{groove_lost_depth, vertical_trench_reach};
+pub use plan::{Known, Plan, plan};
 
 use super::Tip;
 use super::model::Model;

@@ -16,6 +16,7 @@ mod tests;
 pub(crate) use quadric::Quadric;
 
 use super::Tip;
+#[cfg(test)]
 use crate::heightmap::Pitch;
 use apex::apex_radius;
 use flank::half_angle;

@@ -20,7 +20,7 @@ pub struct Need {
 /// The bluntest sphere-cones for a job.
 #[derive(Debug, Clone, PartialEq, Default)]
 pub struct Bluntest {
-    /// Greatest apex radius at the given half-angle, nm; infinite where any does.
+    /// Greatest apex radius at the given half-angle, nm.
     pub radius_nm: Option<f64>,
     /// Greatest half-angle at the given radius, degrees.
     pub half_angle_deg: Option<f64>,
@@ -64,6 +64,7 @@ pub fn bluntest(
     let does = |radius: f64, half_angle: f64| does_job(&feature, need, radius, half_angle);
     match half_angle_deg {
         Some(angle) => match greatest(1e7, |radius| does(radius, angle)) {
+            Some(f64::INFINITY) => found.reasons.push("Any radius does.".to_owned()),
             Some(radius) => found.radius_nm = Some(radius),
             None => found.reasons.push(format!(
                 "No radius: with a half-angle of {angle:.2} degrees even a sharp tip does not do it."
@@ -75,6 +76,7 @@ pub fn bluntest(
     }
     match radius_nm {
         Some(radius) => match greatest(89.9, |angle| does(radius, angle)) {
+            Some(f64::INFINITY) => found.reasons.push("Any half-angle does.".to_owned()),
             Some(angle) => found.half_angle_deg = Some(angle),
             None => found.reasons.push(format!(
                 "No half-angle: with an apex radius of {radius:.2} nm even an upright flank does not do it."
@@ -87,7 +89,8 @@ pub fn bluntest(
     Ok(found)
 }
 
-/// Greatest value in `0..=most` that does, where all below a value do and none above.
+/// Greatest value in `0..=most` that does, where all below a value do and none above; infinite where
+/// `most` does.
 fn greatest(most: f64, does: impl Fn(f64) -> bool) -> Option<f64> {
     if !does(0.0) {
         return None;
