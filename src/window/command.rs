@@ -68,6 +68,8 @@ pub enum Command {
     Span(ColourSpan),
     /// Light, dark or the system's.
     Theme(ThemeChoice),
+    /// Lay a second tip over the first, or take it off.
+    LayOver(Option<PathBuf>),
     /// Show or hide the help.
     Help(bool),
     /// Put a message away.
@@ -93,6 +95,8 @@ pub enum BrowseFor {
     Save,
     /// The tip's file.
     Tip,
+    /// The file of a second tip.
+    Second,
     /// Folder of the record.
     Record,
 }

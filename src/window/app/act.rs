@@ -139,6 +139,8 @@ impl App {
                 }
             }
             Command::WriteRecord(folder) => self.write_record(folder),
+            Command::LayOver(None) => self.laid = None,
+            Command::LayOver(Some(path)) => self.lay_over(&path),
             Command::Recover | Command::Forget => self.recover(command == Command::Recover),
             Command::CloseAnyway => {
                 if let Some(store) = &self.store {
@@ -269,6 +271,14 @@ impl App {
             let outcome = self.shown.clone();
             self.chores
                 .record(self.state, folder, opened.job(), outcome);
+        }
+    }
+
+    /// Opens a second tip; a relative path is seen from the job.
+    pub(super) fn lay_over(&mut self, path: &std::path::Path) {
+        if let Some(level) = &self.shown.level {
+            let path = self.here().join(path);
+            self.chores.lay_over(path, level.map.pitch());
         }
     }
 
