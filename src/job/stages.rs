@@ -365,7 +365,8 @@ impl TipResult {
             height_u_nm,
             sha256,
             diagnosis,
-            read_out: read_out(&tip, tip.depth_nm(), height_u_nm),
+            // The corners of a grid lie deeper than its flanks reach all round.
+            read_out: read_out(&tip, tip.enclosed_depth_nm(), height_u_nm),
             estimate: None,
             tip,
         }

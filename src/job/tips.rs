@@ -7,7 +7,7 @@ use crate::files;
 use crate::progress::Progress;
 use crate::tip::Tip;
 use crate::tip::area::{ContactArea, contact_area};
-use crate::tip::compare::{self, Comparison, Side};
+use crate::tip::compare::{self, Comparison, Side, Verdict};
 use crate::tip::outline::Cut;
 use crate::tip::probe_shape::{ProbeShape, distances_nm, probe_shape};
 use crate::tip::reach::{self, Feature, Known, Need, Plan, Probe};
@@ -15,12 +15,11 @@ use crate::units::Length;
 use std::path::Path;
 use std::sync::Arc;
 
-/// Points of a characteristic in figures and records.
+/// Distances from the apex in figures and records.
 const POINTS: usize = 24;
-/// Points of the area of contact.
-const AREAS: usize = 12;
 
-/// Figures of a tip's shape, down to the depth to which it is known.
+/// Figures of a tip's shape at the same distances from the apex, down to the depth to which it is
+/// known and its grid holds it on all sides.
 #[derive(Debug, Clone, PartialEq)]
 pub struct ShapeFigures {
     /// Probe shape characteristics of the projected profile, along x and along y.
@@ -31,19 +30,13 @@ pub struct ShapeFigures {
 
 /// The figures of `tip`; empty for one that was not exercised.
 pub fn shape_figures(tip: &TipResult) -> ShapeFigures {
-    let depth = tip.exercised_depth_nm.unwrap_or(f64::INFINITY);
-    let shapes = [0.0, 90.0].map(|azimuth| {
-        let known = tip
-            .tip
-            .outline(Cut::Silhouette, azimuth, 0.0)
-            .known_depth_nm();
-        // The last distance must not fall off the rim by rounding.
-        let distances = distances_nm(depth.min(known * (1.0 - 1e-9)), POINTS);
-        probe_shape(&tip.tip, Cut::Silhouette, azimuth, &distances)
-    });
+    let exercised = tip.exercised_depth_nm.unwrap_or(f64::INFINITY);
+    let depth = exercised.min(tip.tip.enclosed_depth_nm() * (1.0 - 1e-6));
+    let distances = distances_nm(depth, POINTS);
     ShapeFigures {
-        shapes,
-        areas: contact_area(&tip.tip, depth, AREAS),
+        shapes: [0.0, 90.0]
+            .map(|azimuth| probe_shape(&tip.tip, Cut::Silhouette, azimuth, &distances)),
+        areas: contact_area(&tip.tip, depth, POINTS),
     }
 }
 
@@ -99,13 +92,31 @@ impl<'a> From<&'a TipResult> for Side<'a> {
     }
 }
 
-/// Compares two tips; errors as [`compare::compare`].
+/// Compares two tips; no verdict on one that is not identified, as that is no more than a bound.
+/// Errors as [`compare::compare`].
 pub fn compare_tips(
     first: &TipResult,
     second: &TipResult,
     settings: &compare::Settings,
 ) -> Result<Comparison> {
-    compare::compare(&first.into(), &second.into(), settings)
+    let mut found = compare::compare(&first.into(), &second.into(), settings)?;
+    for (name, tip) in [("first", first), ("second", second)] {
+        if !tip.identified {
+            found.verdict = Verdict::Undecided;
+            found.notes.push(format!(
+                "The {name} tip is not identified: it is the bluntest that its scan allows, so a \
+                 difference need not be one of the tips."
+            ));
+        }
+    }
+    if [first, second].iter().any(|t| t.from == TipFrom::Blind) {
+        found.notes.push(
+            "A blind tip holds the radius of its scan's sharpest feature: compare tips seen on one \
+             and the same characterizer."
+                .to_owned(),
+        );
+    }
+    Ok(found)
 }
 
 /// What `tip` reaches of `feature` across `azimuth_deg`; errors as [`reach::plan`].
@@ -124,4 +135,49 @@ pub fn plan(
         half_angle_deg: tip.read_out.half_angle.as_ref().map(|a| a.value),
     };
     reach::plan(&known, feature, at, need)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::heightmap::Pitch;
+    use crate::tip::model::Model;
+
+    #[test]
+    fn a_tip_keeps_its_pitch_in_a_sidecar_and_none_is_invented() {
+        let folder = tempfile::tempdir().unwrap();
+        let path = folder.path().join("tip.npy");
+        let pitch = Pitch { x: 1.0, y: 2.0 };
+        let tip = Model::Paraboloid { radius: 9.0 }
+            .sample(31.0, pitch)
+            .unwrap();
+        let open =
+            |options: &files::OpenOptions| open_any_tip(&path, options, None, &Progress::new());
+        files::write_tip_npy(&path, tip.shape()).unwrap();
+        let error = open(&files::OpenOptions::default()).unwrap_err();
+        assert_eq!(error.kind(), ErrorKind::MissingPitch);
+        files::write_tip(&path, tip.shape(), pitch).unwrap();
+        let found = open(&files::OpenOptions::default()).unwrap();
+        assert_eq!(found.tip, tip);
+        assert!(found.diagnosis[0].contains("No uncertainty"));
+    }
+
+    #[test]
+    fn the_figures_share_their_distances_and_end_where_the_grid_does() {
+        let tip = Model::Paraboloid { radius: 9.0 }
+            .sample(31.0, Pitch { x: 1.0, y: 2.0 })
+            .unwrap();
+        let mut found = TipResult::given(TipFrom::File, tip, None, Some(0.1));
+        let figures = shape_figures(&found);
+        let [x, y] = &figures.shapes;
+        assert_eq!((x.points.len(), y.points.len()), (POINTS, POINTS));
+        for ((x, y), area) in x.points.iter().zip(&y.points).zip(&figures.areas) {
+            assert!(x.distance_nm == y.distance_nm && y.distance_nm == area.depth_nm);
+            // Round: the projected area is that of the circle of this width.
+            let circle = std::f64::consts::PI * x.width_nm() * x.width_nm() / 4.0;
+            assert!(area.depth_nm < 0.5 || (area.projected_nm2 / circle - 1.0).abs() < 0.02);
+        }
+        found.exercised_depth_nm = Some(0.0);
+        assert!(shape_figures(&found).areas.is_empty());
+    }
 }

@@ -45,6 +45,7 @@ mod svg;
 mod table;
 #[cfg(test)]
 mod tests;
+mod tip_shape;
 mod tips;
 
 use crate::error::{Error, Result};

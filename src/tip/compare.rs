@@ -108,7 +108,7 @@ pub enum Verdict {
     Changed,
     /// The difference lies within the uncertainty.
     NotDistinguishable,
-    /// No uncertainty is known to judge it by.
+    /// Too little is known of at least one to judge it by.
     Undecided,
 }
 
@@ -145,8 +145,8 @@ impl Verdict {
                  two. Wear smaller than that cannot be told from these data."
             }
             Self::Undecided => {
-                "Undecided: no uncertainty is known of at least one of the tips. State it, or use \
-                 tips that have a band."
+                "Undecided: what is known of at least one of the tips carries no verdict, see the \
+                 notes. State its uncertainty, or use a tip that its scan identifies."
             }
         }
     }

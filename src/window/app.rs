@@ -345,8 +345,10 @@ impl App {
                     Err(error) => self.message = Some(Message::of(&error)),
                 }
             }
-            Done::LaidOver(_, Err(error)) => self.message = Some(Message::of(&error)),
-            Done::LaidOver(path, Ok(found)) => self.laid = Some(LaidOver::new(path, found)),
+            Done::LaidOver(_, _, Err(error)) => self.message = Some(Message::of(&error)),
+            Done::LaidOver(path, uncertainty, Ok(found)) => {
+                self.laid = Some(LaidOver::new(path, uncertainty, found));
+            }
             Done::Compared([first, second], result) => {
                 if let Some(laid) = &mut self.laid
                     && std::sync::Arc::ptr_eq(&laid.found, &first)
@@ -400,7 +402,7 @@ impl App {
             BrowseFor::Save => self.execute(Command::SaveAs(path)),
             BrowseFor::Record => self.record_folder = Some(path),
             BrowseFor::Tip => self.change(|job| job.tip.file = Some(path)),
-            BrowseFor::Second => self.execute(Command::LayOver(Some(path))),
+            BrowseFor::Second => self.execute(Command::LayOver(Some((path, None)))),
         }
     }
 

@@ -10,6 +10,7 @@ use crate::leveling::Leveled;
 use crate::progress::Progress;
 use crate::record::{self, Written};
 use crate::tip::compare::{Comparison, Settings};
+use crate::units::Length;
 use eframe::egui::Context;
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
@@ -23,7 +24,7 @@ pub enum Done {
     /// The record was written: of which state, and where.
     Recorded(u64, Result<Written>),
     /// A second tip was opened.
-    LaidOver(PathBuf, Result<Arc<TipResult>>),
+    LaidOver(PathBuf, Option<Length>, Result<Arc<TipResult>>),
     /// The second tip (first of the pair) was compared with the job's.
     Compared([Arc<TipResult>; 2], Result<Comparison>),
     /// Things to measure were looked for.
@@ -92,20 +93,20 @@ impl Chores {
     }
 
     /// Opens a second tip; one whose pitch nobody states has the scan's.
-    pub fn lay_over(&self, path: PathBuf, scan: Pitch) {
+    pub fn lay_over(&self, path: PathBuf, uncertainty: Option<Length>, scan: Pitch) {
         self.start(move || {
             let open = |pitch: Option<Pitch>| {
                 let options = OpenOptions {
                     pitch,
                     ..OpenOptions::default()
                 };
-                job::open_any_tip(&path, &options, None, &Progress::new())
+                job::open_any_tip(&path, &options, uncertainty, &Progress::new())
             };
             let found = match open(None) {
                 Err(e) if e.kind() == ErrorKind::MissingPitch => open(Some(scan)),
                 found => found,
             };
-            Some(Done::LaidOver(path.clone(), found))
+            Some(Done::LaidOver(path.clone(), uncertainty, found))
         });
     }
 

@@ -1,11 +1,12 @@
 //! A second tip laid over the first: where it comes from, and how the two differ.
 
 use super::command::{BrowseFor, Command};
-use super::fields::{caution, fact, heading, remark, text_row};
+use super::fields::{caution, fact, heading, length_row, remark, text_row};
 use super::format;
 use super::panels::Panel;
-use crate::job::TipResult;
+use crate::job::{TipFrom, TipResult};
 use crate::tip::compare::{Change, Comparison, Verdict};
+use crate::units::Length;
 use eframe::egui::Ui;
 use std::path::PathBuf;
 use std::sync::Arc;
@@ -14,6 +15,8 @@ use std::sync::Arc;
 pub struct LaidOver {
     /// Its file.
     pub path: PathBuf,
+    /// Standard uncertainty of its heights as stated, for a tip file.
+    pub uncertainty: Option<Length>,
     /// The tip.
     pub found: Arc<TipResult>,
     /// The tip it was compared with, and what came of it; `None` while under way.
@@ -24,9 +27,10 @@ pub struct LaidOver {
 
 impl LaidOver {
     /// Just opened.
-    pub fn new(path: PathBuf, found: Arc<TipResult>) -> Self {
+    pub fn new(path: PathBuf, uncertainty: Option<Length>, found: Arc<TipResult>) -> Self {
         Self {
             path,
+            uncertainty,
             found,
             compared: None,
             asked: None,
@@ -63,8 +67,14 @@ pub fn laid_ui(ui: &mut Ui, panel: &Panel, out: &mut Vec<Command>) {
         .laid
         .map_or(String::new(), |l| l.path.display().to_string());
     if let Some(path) = text_row(ui, "Lay over", help, &now, "path of a tip or a job") {
-        let path = (!path.is_empty()).then(|| PathBuf::from(path));
+        let path = (!path.is_empty()).then(|| (PathBuf::from(path), None));
         out.push(Command::LayOver(path));
+    }
+    if let Some(laid) = panel.laid.filter(|l| l.found.from == TipFrom::File) {
+        let help = "Standard uncertainty of the second tip's surface. Without it nothing can be said of wear.";
+        if let Some(u) = length_row(ui, "Its uncertainty", help, laid.uncertainty, "not stated") {
+            out.push(Command::LayOver(Some((laid.path.clone(), u))));
+        }
     }
     ui.horizontal(|ui| {
         if panel.browse && ui.button("Browse for a second tip…").clicked() {

@@ -284,16 +284,13 @@ fn read_out_ui(ui: &mut Ui, found: &crate::job::TipResult) {
                 fact(
                     ui,
                     "Tilt",
-                    format!(
-                        "{}° towards {:.0}°",
-                        format::with_u(tilt.value, Some(tilt.u)),
-                        tilt.azimuth_deg
-                    ),
+                    format!("{}°", format::with_u(tilt.value, Some(tilt.u))),
                 )
-                .on_hover_text(
-                    "Lean of the flanks' bisector; the azimuth counts from +x towards +y and \
-                     means nothing where the tilt does not exceed its uncertainty",
-                );
+                .on_hover_text(format!(
+                    "Lean of the flanks' bisector, towards azimuth {:.0}° (from +x towards +y), \
+                     which means nothing where the tilt does not exceed twice its uncertainty",
+                    tilt.azimuth_deg
+                ));
             }
         }
         None => {

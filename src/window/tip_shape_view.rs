@@ -31,6 +31,12 @@ pub struct ShapeCurves {
     pub areas: [Vec<[f64; 2]>; 2],
 }
 
+/// The part of a curve that reaches no farther than a little beyond `end`.
+fn clipped(points: &[[f64; 2]], end: f64) -> Vec<[f64; 2]> {
+    let near = points.iter().filter(|p| p[0] <= 1.15 * end);
+    near.copied().collect()
+}
+
 /// The curves of `found`. Slow: not for the paint thread.
 pub fn shape_curves(found: &TipResult) -> ShapeCurves {
     let figures = shape_figures(found);
@@ -145,7 +151,7 @@ fn plot_ui(ui: &mut Ui, rect: Rect, curves: &Curves, p: &Palette) {
         (Sample::Dashed, p.corrected, curves.names[1]),
     ];
     if curves.other.is_some() {
-        samples.push((Sample::Line(2.0), p.accent, "second tip"));
+        samples.push((Sample::Line(2.0), p.text, "second tip"));
     }
     if curves.band.is_some() {
         samples.push((Sample::Area, p.ghost.gamma_multiply(0.5), "band"));
@@ -186,9 +192,11 @@ fn plot_ui(ui: &mut Ui, rect: Rect, curves: &Curves, p: &Palette) {
                     .width(width)
                     .allow_hover(false)
             };
-            if let Some([a, b]) = curves.other {
-                plot.line(line(a, p.accent, false, 1.6));
-                plot.line(line(b, p.accent, true, 1.6));
+            // Deeper than the first tip there is nothing to compare, and it would flatten the rest.
+            if let Some(other) = curves.other {
+                let end = curves.own[0].last().map_or(f64::INFINITY, |l| l[0]);
+                plot.line(line(&clipped(&other[0], end), p.text, false, 1.3));
+                plot.line(line(&clipped(&other[1], end), p.text, true, 1.3));
             }
             plot.line(line(&curves.own[0], p.corrected, false, 2.2));
             plot.line(line(&curves.own[1], p.corrected, true, 2.2));

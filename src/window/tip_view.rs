@@ -38,6 +38,14 @@ pub struct TipCurves {
     pub sphere: Vec<[f64; 2]>,
 }
 
+impl TipCurves {
+    /// The tip down to a little below `deepest`: what is deeper would only flatten a drawing.
+    fn above(&self, deepest: f64) -> Vec<[f64; 2]> {
+        let near = self.tip.iter().filter(|p| p[1] >= 1.15 * deepest);
+        near.copied().collect()
+    }
+}
+
 fn finite(profile: &Profile) -> Vec<[f64; 2]> {
     profile
         .position_nm
@@ -320,7 +328,7 @@ fn profile_ui(
     let p = Palette::of(ui);
     let mut samples = vec![(Sample::Line(3.0), p.corrected, "tip")];
     if second.is_some() {
-        samples.push((Sample::Line(1.6), p.accent, "second tip"));
+        samples.push((Sample::Line(1.3), p.text, "second tip"));
     }
     if !curves.sphere.is_empty() {
         samples.push((Sample::Dashed, p.scanned, "apex radius"));
@@ -331,11 +339,15 @@ fn profile_ui(
     if found.exercised_depth_nm.is_some() {
         samples.push((Sample::Dashed, p.warn, "exercised depth"));
     }
-    let head = Rect::from_min_size(rect.min, vec2(rect.width(), 22.0));
+    let mut head = Rect::from_min_size(rect.min, vec2(rect.width(), 22.0));
     let unit = unit_for(reach(curves.tip.iter(), 0));
     title_ui(ui, head, name, unit.sign);
+    if second.is_some() {
+        // One sample more than the line of the title holds.
+        head = head.translate(vec2(0.0, 18.0));
+    }
     samples_ui(ui, head, &samples);
-    let area = Rect::from_min_max(pos2(rect.left(), rect.top() + 24.0), rect.max);
+    let area = rect.with_min_y(head.bottom() + 2.0);
     let mut child = ui.new_child(UiBuilder::new().max_rect(area).id_salt(name));
     let plot = Plot::new(name)
         .data_aspect(1.0)
@@ -366,18 +378,19 @@ fn profile_ui(
             );
         }
         if let Some(second) = second {
+            let deepest = curves.tip.iter().map(|p| p[1]).fold(0.0, f64::min);
             let (xs, low, high) = &second.band;
             if !xs.is_empty() {
                 plot.add(
                     FilledArea::new("band of the second tip", xs, low, high)
-                        .fill_color(p.accent.gamma_multiply(0.18))
+                        .fill_color(p.text.gamma_multiply(0.14))
                         .allow_hover(false),
                 );
             }
             plot.line(
-                Line::new("second tip", PlotPoints::new(second.tip.clone()))
-                    .color(p.accent)
-                    .width(1.6)
+                Line::new("second tip", PlotPoints::new(second.above(deepest)))
+                    .color(p.text)
+                    .width(1.3)
                     .allow_hover(false),
             );
         }

@@ -96,11 +96,16 @@ fn from_polished(
     if let Some((r, u)) = radius_u {
         height_u = height_u.max(r.fit_depth_nm * u / r.value);
     }
-    let band = band(&tip, &support, &scatter, &bound.found.shape, noise * 0.3)?;
+    let mut band = band(&tip, &support, &scatter, &bound.found.shape, noise * 0.3)?;
     let features = polished.features.len();
     let further = further_apices(&tip, &support, (5.0 * height_u).max(0.25 * px));
     if let Some(r) = settings.feature_radius_nm.filter(|r| *r > 0.0) {
         tip = without_feature(&tip, r)?;
+        // The band is that of the tip, not of tip and feature together.
+        band = Band {
+            sharper: without_feature(&band.sharper, r)?,
+            blunter: without_feature(&band.blunter, r)?,
+        };
     }
     let mut read = match exercised {
         Some(z) => read_out(&tip, z, height_u),
@@ -450,6 +455,12 @@ fn without_feature(tip: &Tip, radius: f64) -> Result<Tip> {
     let centre = (shape.nrows() / 2, shape.ncols() / 2);
     let apex = shape[centre];
     shape.mapv_inplace(|p| (p - apex).min(0.0));
+    // The erosion passes over what is outside the tip; that stays outside.
+    shape.zip_mut_with(&tip.shape(), |p, &was| {
+        if !was.is_finite() {
+            *p = f32::NEG_INFINITY;
+        }
+    });
     Tip::new(shape, pitch)
 }
 
