@@ -26,7 +26,9 @@
 //! bound. Cross-hatched: never in contact, the surface lies somewhere below. Dotted: void.
 //!
 //! **Tip.** Trust it down to the exercised depth, no further. A radius is given with the depth it
-//! was fitted over; one that is not identified is not printed. The diagnosis says what to do.
+//! was fitted over; one that is not identified is not printed. Beside it stands what a sphere and a
+//! paraboloid read on the same cap. The probe shape gives the full width of the projected profile
+//! and the area of contact against the distance from the apex. The diagnosis says what to do.
 //!
 //! **Budgets.** Per result, largest contribution first: what to improve is at the top.
 //!

@@ -331,13 +331,23 @@ fn profile_ui(
         samples.push((Sample::Line(1.3), p.text, "second tip"));
     }
     if !curves.sphere.is_empty() {
-        samples.push((Sample::Dashed, p.scanned, "apex radius"));
+        let name = if second.is_some() {
+            "radius"
+        } else {
+            "apex radius"
+        };
+        samples.push((Sample::Dashed, p.scanned, name));
     }
     if !curves.band.0.is_empty() {
         samples.push((Sample::Area, p.ghost.gamma_multiply(0.5), "band"));
     }
     if found.exercised_depth_nm.is_some() {
-        samples.push((Sample::Dashed, p.warn, "exercised depth"));
+        let name = if second.is_some() {
+            "exercised"
+        } else {
+            "exercised depth"
+        };
+        samples.push((Sample::Dashed, p.warn, name));
     }
     let mut head = Rect::from_min_size(rect.min, vec2(rect.width(), 22.0));
     let unit = unit_for(reach(curves.tip.iter(), 0));
