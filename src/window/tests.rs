@@ -144,7 +144,10 @@ fn a_second_tip_is_laid_over_and_told_apart() {
     app.laid = Some(LaidOver::new("earlier.npy".into(), None, tip));
     // The comparison comes from another thread.
     let mut tries = 0;
-    while window.query_by_label_contains("Not distinguishable").is_none() {
+    while window
+        .query_by_label_contains("Not distinguishable")
+        .is_none()
+    {
         std::thread::sleep(std::time::Duration::from_millis(5));
         window.run_steps(1);
         tries += 1;
