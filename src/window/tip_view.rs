@@ -353,8 +353,9 @@ fn profile_ui(
     let unit = unit_for(reach(curves.tip.iter(), 0));
     title_ui(ui, head, name, unit.sign);
     if second.is_some() {
-        // One sample more than the line of the title holds.
+        // One sample more than the line of the title holds; a line of its own needs no room for it.
         head = head.translate(vec2(0.0, 18.0));
+        head.min.x -= 80.0;
     }
     samples_ui(ui, head, &samples);
     let area = rect.with_min_y(head.bottom() + 2.0);
