@@ -119,7 +119,7 @@ pub fn compare_tips(
     Ok(found)
 }
 
-/// What `tip` reaches of `feature` across `azimuth_deg`; errors as [`reach::plan`].
+/// What `tip` reaches of `feature` across `azimuth_deg`; errors as [`reach::plan()`].
 pub fn plan(
     tip: &TipResult,
     azimuth_deg: f64,

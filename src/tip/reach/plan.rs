@@ -37,7 +37,7 @@ pub struct Plan {
 }
 
 /// Plans `feature` for the probe `known`, with widths at the fractions `at`. Errors as [`reach`] and
-/// [`bluntest`].
+/// [`bluntest()`].
 pub fn plan(known: &Known, feature: &Feature, at: &[f64], need: &Need) -> Result<Plan> {
     let nominal = reach(&known.probe, feature, at)?;
     let mut cautions = Vec::new();
