@@ -337,3 +337,125 @@ fn without_a_display_the_demo_runs_headless_and_says_so() {
         .stdout(predicate::str::contains("Report:"));
     assert!(folder.path().join("results").is_dir());
 }
+
+/// A sphere-cone on a grid of 1 nm, from its closed form.
+fn sphere_cone(radius: f64, half_angle: f64) -> Array2<f32> {
+    let (sin, cos) = half_angle.to_radians().sin_cos();
+    Array2::from_shape_fn((61, 61), |(r, c)| {
+        let d = (r as f64 - 30.0).hypot(c as f64 - 30.0);
+        let deep = if d <= radius * cos {
+            radius - (radius * radius - d * d).sqrt()
+        } else {
+            radius * (1.0 - sin) + (d - radius * cos) * cos / sin
+        };
+        -deep as f32
+    })
+}
+
+fn json_of(command: &mut Command) -> Value {
+    let output = command.output().unwrap();
+    let said = String::from_utf8_lossy(&output.stderr).into_owned();
+    assert!(output.status.success(), "{said}");
+    serde_json::from_slice(&output.stdout).unwrap()
+}
+
+#[test]
+fn a_worn_tip_is_told_from_a_fresh_one() {
+    let folder = folder();
+    let path = |name: &str| folder.path().join(name);
+    write_npy(path("fresh.npy"), &sphere_cone(8.0, 15.0)).unwrap();
+    write_npy(path("worn.npy"), &sphere_cone(12.0, 15.0)).unwrap();
+    let mut command = truewidth();
+    command.args(["compare", "--quiet", "--json", "--pitch", "1nm"]);
+    command.args(["--uncertainty", "0.1nm", "--out"]);
+    command.arg(path("difference.npy"));
+    let found = json_of(command.arg(path("fresh.npy")).arg(path("worn.npy")));
+    assert_eq!(found["schema"], "truewidth.comparison/1");
+    assert_eq!(found["verdict"], "worn");
+    let difference = found["apex_radius_nm"]["difference"].as_f64().unwrap();
+    assert!((difference - 4.0).abs() < 0.1, "{difference}");
+    let map: Array2<f32> = read_npy(path("difference.npy")).unwrap();
+    // Blunter everywhere but at the common apex.
+    assert_eq!(map[[30, 30]], 0.0);
+    assert!(map[[30, 38]] > 0.5 && map[[38, 30]] > 0.5);
+    // Without a pitch nothing is assumed.
+    truewidth()
+        .arg("compare")
+        .args([path("fresh.npy"), path("worn.npy")])
+        .assert()
+        .code(1)
+        .stderr(predicate::str::contains("--pitch"));
+}
+
+#[test]
+fn reach_follows_the_closed_form_by_model_and_by_file() {
+    // R = 10, 15 degrees, a trench of 22 nm: 12.4155 nm.
+    let folder = folder();
+    let tip = folder.path().join("tip.npy");
+    write_npy(&tip, &sphere_cone(10.0, 15.0)).unwrap();
+    let trench = ["--trench-width", "22nm", "--depth", "60nm", "--json"];
+    let mut model = truewidth();
+    model.args(["reach", "--radius", "10nm", "--half-angle", "15"]);
+    let mut file = truewidth();
+    file.args(["reach", "--quiet", "--pitch", "1nm", "--tip"])
+        .arg(&tip);
+    for command in [&mut model, &mut file] {
+        let found = json_of(command.args(trench));
+        let depth = found["reach"]["imaged_nm"].as_f64().unwrap();
+        assert!((depth - 12.4155).abs() < 0.15, "{depth}");
+        assert_eq!(found["reach"]["reaches_bottom"], false);
+    }
+    for wrong in [
+        &["reach", "--trench-width", "22nm", "--depth", "60nm"][..],
+        &["reach", "--radius", "10nm", "--half-angle", "15"],
+        &[
+            "reach",
+            "--radius",
+            "10nm",
+            "--half-angle",
+            "15",
+            "--trench-width",
+            "22nm",
+        ],
+        &[
+            "reach",
+            "--radius",
+            "10nm",
+            "--half-angle",
+            "95",
+            "--particle",
+            "22nm",
+        ],
+    ] {
+        truewidth().args(wrong).assert().code(2);
+    }
+}
+
+#[test]
+fn a_tip_becomes_a_closed_mesh() {
+    let folder = folder();
+    let path = |name: &str| folder.path().join(name);
+    write_npy(path("tip.npy"), &sphere_cone(10.0, 15.0)).unwrap();
+    for name in ["tip.stl", "tip.ply"] {
+        truewidth()
+            .args(["convert", "--quiet", "--pitch", "1nm"])
+            .args([path("tip.npy"), path(name)])
+            .assert()
+            .success();
+    }
+    let stl = std::fs::read(path("tip.stl")).unwrap();
+    let count = u32::from_le_bytes(stl[80..84].try_into().unwrap()) as usize;
+    // Two triangles a cell above and below, two for each of the rim's 240 sides.
+    assert_eq!(count, 2 * 2 * 60 * 60 + 2 * 240);
+    assert_eq!(stl.len(), 84 + 50 * count);
+    let ply = std::fs::read(path("tip.ply")).unwrap();
+    assert!(ply.starts_with(b"ply\nformat binary_little_endian 1.0\n"));
+    // A scan is no tip.
+    write_npy(path("scan.npy"), &Array2::<f32>::ones((5, 5))).unwrap();
+    truewidth()
+        .args(["convert", "--pitch", "1nm"])
+        .args([path("scan.npy"), path("scan.stl")])
+        .assert()
+        .code(1)
+        .stderr(predicate::str::contains("centre"));
+}

@@ -92,7 +92,7 @@ pub enum Command {
         /// The file to read.
         #[arg(value_name = "IN")]
         input: PathBuf,
-        /// The file to write (.tiff, .npy, .png).
+        /// The file to write (.tiff, .npy, .png; a tip also .stl, .ply: closed mesh, nm).
         #[arg(value_name = "OUT")]
         output: PathBuf,
     },
@@ -100,7 +100,7 @@ pub enum Command {
     Tip {
         /// The scan; levelled before the estimate.
         scan: PathBuf,
-        /// The file to write the tip to (.npy, .tiff).
+        /// The file to write the tip to (.npy, .tiff, .stl, .ply).
         #[arg(long, value_name = "TIP")]
         out: PathBuf,
         /// Full width of the tip grid [default: from the scan].
@@ -113,6 +113,10 @@ pub enum Command {
         #[arg(long)]
         json: bool,
     },
+    /// Compare two tips: whether the later one is worn.
+    Compare(super::tips::CompareArgs),
+    /// Tell what a tip reaches of a planned feature, and the bluntest tip that would do.
+    Reach(super::tips::ReachArgs),
     /// Take the tip's effect off a scan: erosion and certainty.
     Reconstruct {
         /// The scan; taken as it is, without levelling.

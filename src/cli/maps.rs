@@ -8,6 +8,7 @@ use crate::heightmap::HeightMap;
 use crate::job::{self, Job, Stages, Threshold, TipFrom};
 use crate::leveling;
 use crate::morphology;
+use crate::progress::Progress;
 use crate::record;
 use crate::tip::Tip;
 use crate::units::Length;
@@ -123,8 +124,13 @@ fn facts_text(facts: &files::Inspection, noise_nm: Option<f64>) -> String {
 
 /// `truewidth convert`
 pub fn convert(input: &Path, output: &Path, common: &Common, show: &Show) -> Result<()> {
-    let map = open(input, common)?;
-    files::write(output, &map)?;
+    if files::is_mesh(output) {
+        let progress = Progress::new();
+        let found = job::open_any_tip(input, &options(common), None, &progress)?;
+        write_tip(output, &found.tip)?;
+    } else {
+        files::write(output, &open(input, common)?)?;
+    }
     show.note(&format!("wrote {}", output.display()));
     Ok(())
 }
@@ -167,14 +173,7 @@ pub fn tip(
 }
 
 fn write_tip(out: &Path, tip: &Tip) -> Result<()> {
-    if out
-        .extension()
-        .is_some_and(|e| e.eq_ignore_ascii_case("npy"))
-    {
-        files::write_tip_npy(out, tip.shape())
-    } else {
-        files::write(out, &tip.to_map()?)
-    }
+    files::write_tip(out, tip.shape(), tip.pitch())
 }
 
 /// `truewidth reconstruct`

@@ -4,6 +4,7 @@ mod args;
 mod maps;
 mod run;
 mod show;
+mod tips;
 
 pub use args::{Cli, Command, Common};
 
@@ -63,6 +64,8 @@ fn headless(command: &Command, common: &Common, show: &Show) -> Result<u8> {
         } => {
             maps::tip(scan, out, *support, *threshold, *json, common, show)?;
         }
+        Command::Compare(args) => tips::compare(args, common, show)?,
+        Command::Reach(args) => tips::reach(args, common, show)?,
         Command::Reconstruct {
             scan,
             tip,

@@ -12,6 +12,7 @@ mod format;
 mod inspect;
 mod known;
 mod limits;
+mod mesh;
 mod npy;
 mod npz;
 mod ome;
@@ -30,7 +31,8 @@ mod x3p;
 mod damage;
 
 pub use inspect::{Inspection, MapEntry, inspect};
-pub use tip::{TipGrid, read_tip_grid, write_tip_npy};
+pub use mesh::{Mesh, is_mesh, write_mesh};
+pub use tip::{TipGrid, read_tip_grid, write_tip, write_tip_npy};
 pub use write::{sha256_hex, write, write_atomically, write_npy_u8};
 
 use crate::error::{Error, ErrorKind, Result};

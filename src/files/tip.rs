@@ -3,9 +3,9 @@
 //! [`HeightMap`]: crate::heightmap::HeightMap
 
 use super::scale::Scale;
-use super::{OpenOptions, OpenedFile, format, sha256_hex, write};
+use super::{OpenOptions, OpenedFile, format, mesh, sha256_hex, sidecar, sidecar_path, write};
 use crate::error::Result;
-use crate::heightmap::{Pitch, Provenance};
+use crate::heightmap::{HeightMap, Pitch, Provenance};
 use ndarray::{Array2, ArrayView2};
 use std::path::Path;
 
@@ -65,4 +65,26 @@ fn read(path: &Path, options: &OpenOptions) -> Result<TipGrid> {
 /// Writes a tip grid in nm as a float32 `.npy` with its `-inf`, atomically. Errors: `Io`.
 pub fn write_tip_npy(path: &Path, heights: ArrayView2<'_, f32>) -> Result<()> {
     write::write_atomically(path, &write::npy(heights)?)
+}
+
+/// Writes a tip by the ending of `path`, atomically: `.npy` with its `-inf` and a sidecar that
+/// carries pitch and unit; `.stl` and `.ply` as a closed mesh ([`mesh::Mesh::closed`]); every other
+/// ending as [`super::write()`], which marks what is outside the tip as void.
+///
+/// Errors: `Io`; `Setting` for another ending; `Data` for a mesh of a tip of one cell.
+pub fn write_tip(path: &Path, heights: ArrayView2<'_, f32>, pitch: Pitch) -> Result<()> {
+    if mesh::is_mesh(path) {
+        return mesh::write_mesh(path, &mesh::Mesh::closed(heights, pitch)?);
+    }
+    let npy = path
+        .extension()
+        .is_some_and(|e| e.eq_ignore_ascii_case("npy"));
+    if !npy {
+        return super::write(path, &HeightMap::new(heights.to_owned(), pitch)?);
+    }
+    if let Some(nm) = format::HeightScale::of_unit("nm") {
+        let text = sidecar::text_of(pitch, &nm, None);
+        write::write_atomically(&sidecar_path(path), text.as_bytes())?;
+    }
+    write_tip_npy(path, heights)
 }

@@ -7,6 +7,7 @@ mod spec;
 mod stages;
 #[cfg(test)]
 mod tests;
+mod tips;
 mod worker;
 
 pub use demo::{data_folder, demo};
@@ -15,4 +16,5 @@ pub use spec::{
     Job, JobFile, LevelMethod, LevelSpec, ScanSpec, Threshold, TipFrom, TipShape, TipSpec,
 };
 pub use stages::{Outcome, Reliability, Stages, SurfaceResult, TipOrReason, TipResult, open_tip};
+pub use tips::{ShapeFigures, compare_tips, open_any_tip, plan, shape_figures};
 pub use worker::Worker;

@@ -335,28 +335,42 @@ fn find_tip(job: &Job, level: &Leveled, progress: &Progress) -> Result<TipOrReas
         }
         None => open_tip(&job.folder.join(spec.given_file()?), scan)?,
     };
-    let height_u_nm = spec.uncertainty.map_or(0.0, |l| l.nm());
-    let mut diagnosis = Vec::new();
-    if spec.uncertainty.is_none() {
-        diagnosis.push(
-            "No uncertainty was stated for this tip: none is carried into the results. \
-             State it as [tip] uncertainty."
-                .to_owned(),
-        );
+    let uncertainty = spec.uncertainty.map(|l| l.nm());
+    let found = TipResult::given(spec.from, tip, sha256, uncertainty);
+    Ok(Ok(Arc::new(found)))
+}
+
+impl TipResult {
+    /// A tip that was given, with the standard uncertainty of its heights (nm) where stated.
+    pub(super) fn given(
+        from: TipFrom,
+        tip: Tip,
+        sha256: Option<String>,
+        uncertainty_nm: Option<f64>,
+    ) -> Self {
+        let height_u_nm = uncertainty_nm.unwrap_or(0.0);
+        let mut diagnosis = Vec::new();
+        if uncertainty_nm.is_none() {
+            diagnosis.push(
+                "No uncertainty was stated for this tip: none is carried into the results. \
+                 State it as [tip] uncertainty."
+                    .to_owned(),
+            );
+        }
+        Self {
+            from,
+            band: None,
+            identified: true,
+            exercised_depth_nm: None,
+            height_u_nm,
+            sha256,
+            diagnosis,
+            // The corners of a grid lie deeper than its flanks reach all round.
+            read_out: read_out(&tip, tip.enclosed_depth_nm(), height_u_nm),
+            estimate: None,
+            tip,
+        }
     }
-    let read_out = read_out(&tip, tip.depth_nm(), height_u_nm);
-    Ok(Ok(Arc::new(TipResult {
-        from: spec.from,
-        band: None,
-        identified: true,
-        exercised_depth_nm: None,
-        height_u_nm,
-        sha256,
-        diagnosis,
-        read_out,
-        estimate: None,
-        tip,
-    })))
 }
 
 /// Opens a tip file for use with `scan`; gives its SHA-256 too. A tip without a pitch of its own

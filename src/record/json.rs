@@ -8,8 +8,12 @@
 use super::format::tame;
 use crate::dimensions::{Dimension, Kind, Status};
 use crate::heightmap::HeightMap;
-use crate::job::{Job, Outcome, Reliability, SurfaceResult, TipFrom, TipResult};
+use crate::job::{
+    Job, Outcome, Reliability, ShapeFigures, SurfaceResult, TipFrom, TipResult, shape_figures,
+};
 use crate::leveling::Leveled;
+use crate::tip::area::ContactArea;
+use crate::tip::probe_shape::ProbeShape;
 use crate::uncertainty::Distribution;
 use serde::Serialize;
 use std::path::Path;
@@ -85,7 +89,30 @@ pub struct TipPart {
     apex_radius_nm: Option<RadiusPart>,
     half_angle_deg: Option<AnglePart>,
     band: bool,
+    probe_shape: Option<ShapePart>,
+    contact_area: Vec<AreaPart>,
     diagnosis: Vec<String>,
+}
+
+/// Full widths of the projected profile, `[distance from the apex, width]` in nm.
+#[derive(Debug, Serialize)]
+struct ShapePart {
+    along_x_nm: Vec<[Option<f64>; 2]>,
+    along_y_nm: Vec<[Option<f64>; 2]>,
+}
+
+#[derive(Debug, Serialize)]
+struct AreaPart {
+    depth_nm: Option<f64>,
+    projected_nm2: Option<f64>,
+    surface_nm2: Option<f64>,
+}
+
+#[derive(Debug, Serialize)]
+struct TiltPart {
+    value: Option<f64>,
+    u: Option<f64>,
+    azimuth_deg: Option<f64>,
 }
 
 #[derive(Debug, Serialize)]
@@ -94,6 +121,8 @@ struct RadiusPart {
     u: Option<f64>,
     fit_depth_nm: Option<f64>,
     principal_nm: [Option<f64>; 2],
+    sphere_nm: Option<f64>,
+    paraboloid_nm: Option<f64>,
 }
 
 #[derive(Debug, Serialize)]
@@ -102,6 +131,7 @@ struct AnglePart {
     u: Option<f64>,
     between_nm: [Option<f64>; 2],
     per_azimuth_deg: Vec<[Option<f64>; 2]>,
+    tilt_deg: Option<TiltPart>,
 }
 
 #[derive(Debug, Serialize)]
@@ -168,7 +198,7 @@ fn significant(x: f64, digits: i32) -> Option<f64> {
 }
 
 /// To seven significant digits.
-fn number(x: f64) -> Option<f64> {
+pub(super) fn number(x: f64) -> Option<f64> {
     significant(x, 7)
 }
 
@@ -281,6 +311,7 @@ impl TipPart {
     /// The object for `tip` alone, as `truewidth tip --json` prints it.
     pub fn of_tip(tip: &TipResult) -> Self {
         let estimate = tip.estimate.as_ref();
+        let figures = shape_figures(tip);
         let mut diagnosis = tip.diagnosis.clone();
         if estimate.is_none() {
             diagnosis.push(
@@ -309,6 +340,8 @@ impl TipPart {
                     u: number(r.u),
                     fit_depth_nm: number(r.fit_depth_nm),
                     principal_nm: r.principal_nm.map(number),
+                    sphere_nm: r.sphere_nm.and_then(number),
+                    paraboloid_nm: r.paraboloid_nm.and_then(number),
                 })
             }),
             half_angle_deg: tip.read_out.half_angle.as_ref().and_then(|a| {
@@ -321,9 +354,16 @@ impl TipPart {
                         .iter()
                         .map(|&(azimuth, angle)| [number(azimuth), number(angle)])
                         .collect(),
+                    tilt_deg: a.tilt.map(|t| TiltPart {
+                        value: number(t.value),
+                        u: number(t.u),
+                        azimuth_deg: number(t.azimuth_deg),
+                    }),
                 })
             }),
             band: tip.band.is_some(),
+            probe_shape: shape_part(&figures),
+            contact_area: figures.areas.iter().map(area_part).collect(),
             diagnosis,
         }
     }
@@ -351,8 +391,33 @@ impl TipPart {
             apex_radius_nm: None,
             half_angle_deg: None,
             band: false,
+            probe_shape: None,
+            contact_area: Vec::new(),
             diagnosis,
         }
+    }
+}
+
+fn shape_part(figures: &ShapeFigures) -> Option<ShapePart> {
+    let points = |shape: &ProbeShape| -> Vec<[Option<f64>; 2]> {
+        let points = shape.points.iter();
+        points
+            .map(|p| [number(p.distance_nm), number(p.width_nm())])
+            .collect()
+    };
+    let [x, y] = &figures.shapes;
+    let part = ShapePart {
+        along_x_nm: points(x),
+        along_y_nm: points(y),
+    };
+    (!part.along_x_nm.is_empty() || !part.along_y_nm.is_empty()).then_some(part)
+}
+
+fn area_part(area: &ContactArea) -> AreaPart {
+    AreaPart {
+        depth_nm: number(area.depth_nm),
+        projected_nm2: number(area.projected_nm2),
+        surface_nm2: number(area.surface_nm2),
     }
 }
 

@@ -26,7 +26,9 @@
 //! bound. Cross-hatched: never in contact, the surface lies somewhere below. Dotted: void.
 //!
 //! **Tip.** Trust it down to the exercised depth, no further. A radius is given with the depth it
-//! was fitted over; one that is not identified is not printed. The diagnosis says what to do.
+//! was fitted over; one that is not identified is not printed. Beside it stands what a sphere and a
+//! paraboloid read on the same cap. The probe shape gives the full width of the projected profile
+//! and the area of contact against the distance from the apex. The diagnosis says what to do.
 //!
 //! **Budgets.** Per result, largest contribution first: what to improve is at the top.
 //!
@@ -45,10 +47,14 @@ mod svg;
 mod table;
 #[cfg(test)]
 mod tests;
+mod tip_shape;
+mod tips;
 
 use crate::error::{Error, Result};
 use crate::files;
 use crate::job::{Job, Outcome, TipResult};
+use crate::tip::compare::Comparison;
+use crate::tip::reach::Plan;
 use std::path::{Path, PathBuf};
 
 /// Files written by [`write()`].
@@ -90,8 +96,14 @@ fn write_at(folder: &Path, job: &Job, outcome: &Outcome, time: &str) -> Result<W
         }
     }
     match outcome.tip.as_deref() {
-        Some(tip) => files::write_tip_npy(&folder.join("tip.npy"), tip.tip.shape())?,
-        None => remove(&folder.join("tip.npy"))?,
+        Some(tip) => {
+            files::write_tip(&folder.join("tip.npy"), tip.tip.shape(), tip.tip.pitch())?;
+        }
+        None => {
+            for name in ["tip.npy", "tip.npy.toml"] {
+                remove(&folder.join(name))?;
+            }
+        }
     }
     let result = json::ResultFile::of(job, outcome, Some(time));
     let mut text = serde_json::to_string_pretty(&result).map_err(|e| {
@@ -128,6 +140,26 @@ pub fn text_table(job: &Job, outcome: &Outcome) -> String {
 /// The `tip` object of [`result_json`] alone.
 pub fn tip_json(tip: &TipResult) -> serde_json::Value {
     serde_json::to_value(json::TipPart::of_tip(tip)).unwrap_or_default()
+}
+
+/// The comparison of two tips, schema `truewidth.comparison/1`, without the difference map.
+pub fn comparison_json(found: &Comparison) -> serde_json::Value {
+    tips::comparison_json(found)
+}
+
+/// The comparison of two tips as text for a terminal.
+pub fn comparison_text(found: &Comparison) -> String {
+    tips::comparison_text(found)
+}
+
+/// What a tip reaches of a planned feature, schema `truewidth.reach/1`.
+pub fn reach_json(plan: &Plan) -> serde_json::Value {
+    tips::reach_json(plan)
+}
+
+/// What a tip reaches of a planned feature as text for a terminal.
+pub fn reach_text(plan: &Plan) -> String {
+    tips::reach_text(plan)
 }
 
 /// The tip's read-outs and diagnosis as text for a terminal.

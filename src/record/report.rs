@@ -6,6 +6,7 @@ use super::results::{budgets, greatest_change, results};
 use super::sections::{Section, surface_section, tip_figure};
 use super::svg::{escape, minus};
 use super::table::{angle_words, origin, radius_words};
+use super::tip_shape;
 use crate::dimensions::{Dimension, Status};
 use crate::error::Result;
 use crate::heightmap::HeightMap;
@@ -387,6 +388,7 @@ fn tip_section(html: &mut String, outcome: &Outcome) -> Result<()> {
     }
     figure(html, &tip_figure(tip)?, &caption);
     facts(html, &tip_facts(tip));
+    tip_shape::table(html, tip);
     if !tip.diagnosis.is_empty() {
         html.push_str("<h3>Diagnosis</h3>\n");
         list(html, "ul", tip.diagnosis.iter().map(|d| escape(d)));
@@ -426,6 +428,7 @@ fn tip_facts(tip: &TipResult) -> Vec<(&'static str, String)> {
             rows.push(("Half-angle towards", quarter.join(", ")));
         }
     }
+    rows.extend(tip_shape::facts(tip));
     rows.push((
         "Exercised depth",
         match tip.exercised_depth_nm {

@@ -4,8 +4,13 @@
 //! `<= 0`; `-inf` outside the tip. `shape[[c + i, c + j]]` is minus the height of the tip's surface
 //! at the lateral offset (i rows, j columns) from the apex, in the scan's own axes.
 
+pub mod area;
 pub mod blind;
+pub mod compare;
 pub mod model;
+pub mod outline;
+pub mod probe_shape;
+pub mod reach;
 pub mod read_out;
 
 use crate::error::{Error, ErrorKind, Result};

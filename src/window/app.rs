@@ -8,6 +8,7 @@ use super::command::{BrowseFor, Command};
 use super::desk::{Chosen, Cuts};
 use super::dialogs::Question;
 use super::history::History;
+use super::laid_over::LaidOver;
 use super::map_view::Desk;
 use super::open_dialog::PathDialog;
 use super::record_view::{Keep, folder_for};
@@ -78,6 +79,7 @@ pub struct App {
     pub(super) desk: Desk,
     pub(super) cuts: Cuts,
     pub(super) tip_view: TipView,
+    pub(super) laid: Option<LaidOver>,
     pub(super) chosen: Chosen,
     pub(super) message: Option<Message>,
     pub(super) dialog: Dialog,
@@ -128,6 +130,7 @@ impl App {
             desk: Desk::default(),
             cuts: Cuts::default(),
             tip_view: TipView::default(),
+            laid: None,
             chosen: Chosen::default(),
             message: None,
             dialog: Dialog::None,
@@ -265,6 +268,7 @@ impl App {
         for done in self.chores.poll() {
             self.take_done(done);
         }
+        self.compare_laid();
         self.keep_unsaved();
         self.retitle();
     }
@@ -341,6 +345,17 @@ impl App {
                     Err(error) => self.message = Some(Message::of(&error)),
                 }
             }
+            Done::LaidOver(_, _, Err(error)) => self.message = Some(Message::of(&error)),
+            Done::LaidOver(path, uncertainty, Ok(found)) => {
+                self.laid = Some(LaidOver::new(path, uncertainty, found));
+            }
+            Done::Compared([first, second], result) => {
+                if let Some(laid) = &mut self.laid
+                    && std::sync::Arc::ptr_eq(&laid.found, &first)
+                {
+                    laid.compared = Some((second, result.map_err(|e| e.to_string())));
+                }
+            }
             Done::Found(Err(error)) => self.message = Some(Message::of(&error)),
             Done::Found(Ok(found)) => self.found(found),
             Done::NoDialog => {
@@ -387,6 +402,7 @@ impl App {
             BrowseFor::Save => self.execute(Command::SaveAs(path)),
             BrowseFor::Record => self.record_folder = Some(path),
             BrowseFor::Tip => self.change(|job| job.tip.file = Some(path)),
+            BrowseFor::Second => self.execute(Command::LayOver(Some((path, None)))),
         }
     }
 
@@ -417,6 +433,19 @@ impl App {
             store.forget_own();
         }
         self.keep_settings();
+    }
+
+    /// Compares the second tip with the job's where that has not been asked for yet.
+    fn compare_laid(&mut self) {
+        if let (Some(laid), Some(tip)) = (&mut self.laid, &self.shown.tip)
+            && laid.must_compare(tip)
+        {
+            let pair = [
+                std::sync::Arc::clone(&laid.found),
+                std::sync::Arc::clone(tip),
+            ];
+            self.chores.compare(pair);
+        }
     }
 
     fn keep_settings(&self) {

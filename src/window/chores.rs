@@ -2,11 +2,15 @@
 
 use super::command::BrowseFor;
 use crate::dimensions::{Find, Request, find};
-use crate::error::{Error, Result};
-use crate::job::{Job, JobFile, Outcome};
+use crate::error::{Error, ErrorKind, Result};
+use crate::files::OpenOptions;
+use crate::heightmap::Pitch;
+use crate::job::{self, Job, JobFile, Outcome, TipResult};
 use crate::leveling::Leveled;
 use crate::progress::Progress;
 use crate::record::{self, Written};
+use crate::tip::compare::{Comparison, Settings};
+use crate::units::Length;
 use eframe::egui::Context;
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
@@ -19,6 +23,10 @@ pub enum Done {
     Saved(Box<JobFile>, Result<Box<Job>>),
     /// The record was written: of which state, and where.
     Recorded(u64, Result<Written>),
+    /// A second tip was opened.
+    LaidOver(PathBuf, Option<Length>, Result<Arc<TipResult>>),
+    /// The second tip (first of the pair) was compared with the job's.
+    Compared([Arc<TipResult>; 2], Result<Comparison>),
     /// Things to measure were looked for.
     Found(Result<Vec<Request>>),
     /// A file was chosen, or none.
@@ -84,6 +92,32 @@ impl Chores {
         });
     }
 
+    /// Opens a second tip; one whose pitch nobody states has the scan's.
+    pub fn lay_over(&self, path: PathBuf, uncertainty: Option<Length>, scan: Pitch) {
+        self.start(move || {
+            let open = |pitch: Option<Pitch>| {
+                let options = OpenOptions {
+                    pitch,
+                    ..OpenOptions::default()
+                };
+                job::open_any_tip(&path, &options, uncertainty, &Progress::new())
+            };
+            let found = match open(None) {
+                Err(e) if e.kind() == ErrorKind::MissingPitch => open(Some(scan)),
+                found => found,
+            };
+            Some(Done::LaidOver(path.clone(), uncertainty, found))
+        });
+    }
+
+    /// Compares the job's tip, the second of the pair, with the one laid over it.
+    pub fn compare(&self, pair: [Arc<TipResult>; 2]) {
+        self.start(move || {
+            let found = job::compare_tips(&pair[0], &pair[1], &Settings::default());
+            Some(Done::Compared(pair, found))
+        });
+    }
+
     /// Looks for things to measure.
     pub fn find(&self, level: Arc<Leveled>, what: Find) {
         self.start(move || {
@@ -100,6 +134,7 @@ impl Chores {
             let chosen = match purpose {
                 BrowseFor::Open => dialog.set_title("Open a scan or a job").pick_file(),
                 BrowseFor::Tip => dialog.set_title("Choose the tip's file").pick_file(),
+                BrowseFor::Second => dialog.set_title("Choose a second tip").pick_file(),
                 BrowseFor::Save => dialog
                     .set_title("Save the job")
                     .add_filter("job file", &["toml"])

@@ -6,6 +6,7 @@ use super::view::View;
 use crate::dimensions::Find;
 use crate::heightmap::Region;
 use crate::job::JobFile;
+use crate::units::Length;
 use std::path::PathBuf;
 
 /// One thing a view asks the window to do.
@@ -68,6 +69,9 @@ pub enum Command {
     Span(ColourSpan),
     /// Light, dark or the system's.
     Theme(ThemeChoice),
+    /// Lay a second tip over the first, with the standard uncertainty of its heights where it is a
+    /// tip file, or take it off.
+    LayOver(Option<(PathBuf, Option<Length>)>),
     /// Show or hide the help.
     Help(bool),
     /// Put a message away.
@@ -93,6 +97,8 @@ pub enum BrowseFor {
     Save,
     /// The tip's file.
     Tip,
+    /// The file of a second tip.
+    Second,
     /// Folder of the record.
     Record,
 }

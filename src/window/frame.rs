@@ -13,7 +13,7 @@ use super::record_view::preview_ui;
 use super::state::{Judged, Stage, Tool, progressed};
 use super::status::{message_ui, readout, status_ui};
 use super::tip_panel::tip_ui as tip_panel_ui;
-use super::tip_view::tip_ui;
+use super::tip_view::{OnTip, tip_ui};
 use super::top::{Top, top_ui};
 use crate::dimensions::Kind;
 use crate::job::Worker;
@@ -121,6 +121,7 @@ impl App {
             scan_path: job.scan_path(),
             outcome: &self.shown,
             browse: self.browse,
+            laid: self.laid.as_ref(),
         };
         let frame = Frame::new()
             .fill(p.panel)
@@ -166,7 +167,13 @@ impl App {
                     .iter()
                     .find(|w| w.starts_with("No tip"))
                     .map_or("The tip comes after the scan.", String::as_str);
-                tip_ui(ui, self.shown.tip.as_ref(), why, &mut self.tip_view);
+                let on = OnTip {
+                    found: self.shown.tip.as_ref(),
+                    why,
+                    level: self.shown.level.as_ref(),
+                    second: self.laid.as_ref().map(|l| &l.found),
+                };
+                tip_ui(ui, &on, &mut self.tip_view);
             }
             Stage::Record => preview_ui(ui, opened.history.now(), &self.shown),
             stage => {

@@ -213,6 +213,14 @@ pub fn ghost(
     }
 }
 
+/// Contact points.
+pub fn dots(painter: &Painter, places: impl IntoIterator<Item = Pos2>) {
+    for at in places {
+        painter.circle_filled(at, 2.8, RIM);
+        painter.circle_filled(at, 1.7, GHOST);
+    }
+}
+
 /// A row that jumps: a wedge at the map's left edge.
 pub fn row_jump(painter: &Painter, at: Pos2, p: &Palette) {
     let wedge = [at, at + vec2(-8.0, -4.0), at + vec2(-8.0, 4.0)];

@@ -18,6 +18,7 @@ mod history;
 mod images;
 #[cfg(test)]
 mod invented;
+mod laid_over;
 mod later;
 mod legend;
 mod map_marks;
@@ -35,7 +36,9 @@ mod table;
 #[cfg(test)]
 mod tests;
 mod theme;
+mod tip_evidence;
 mod tip_panel;
+mod tip_shape_view;
 mod tip_view;
 mod top;
 mod view;

@@ -3,6 +3,7 @@
 use super::command::Command;
 use super::fields::{caution, choice_row, fact, heading, parsed_row, remark, text_row};
 use super::format;
+use super::laid_over::LaidOver;
 use super::legend;
 use super::map_view::Desk;
 use super::state::{Tool, kind_name};
@@ -23,6 +24,8 @@ pub struct Panel<'a> {
     pub outcome: &'a Outcome,
     /// Whether the system's file dialog can be had.
     pub browse: bool,
+    /// The second tip.
+    pub laid: Option<&'a LaidOver>,
 }
 
 impl Panel<'_> {

@@ -3,6 +3,7 @@
 use super::app::{App, Dialog};
 use super::command::Command;
 use super::invented;
+use super::laid_over::LaidOver;
 use super::settings::Store;
 use super::start::Start;
 use super::state::{Stage, Tool};
@@ -132,6 +133,51 @@ fn both_maps_speak() {
     ] {
         assert!(labels.iter().any(|l| l.starts_with(begins)), "{labels:?}");
     }
+}
+
+#[test]
+fn a_second_tip_is_laid_over_and_told_apart() {
+    let mut window = window();
+    click(&mut window, "Tip, done");
+    let app = window.state_mut().as_mut().unwrap();
+    let tip = app.shown.tip.clone().unwrap();
+    app.laid = Some(LaidOver::new("earlier.npy".into(), None, tip));
+    // The comparison comes from another thread.
+    let mut tries = 0;
+    while window
+        .query_by_label_contains("Not distinguishable")
+        .is_none()
+    {
+        std::thread::sleep(std::time::Duration::from_millis(5));
+        window.run_steps(1);
+        tries += 1;
+        assert!(tries < 2000, "no comparison");
+    }
+    window.get_by_label("First: earlier.npy. Second: the tip of this job.");
+    window.check_accessibility();
+    for (sheet, says) in [
+        ("Probe shape", "Probe shape characteristic: along x"),
+        ("Evidence", "Scan map. The tip was given"),
+        ("Profiles", "Tip profile Along x"),
+    ] {
+        click(&mut window, sheet);
+        let speaks = |window: &Window| {
+            let mut images = window.get_all_by_role(Role::Image);
+            images.any(|n| {
+                let label = n.accesskit_node().label();
+                label.is_some_and(|l| l.starts_with(says))
+            })
+        };
+        let mut tries = 0;
+        while !speaks(&window) {
+            std::thread::sleep(std::time::Duration::from_millis(5));
+            window.run_steps(1);
+            tries += 1;
+            assert!(tries < 2000, "{says}");
+        }
+    }
+    click(&mut window, "Take it off");
+    assert!(window.state().as_ref().unwrap().laid.is_none());
 }
 
 #[test]

@@ -1,10 +1,11 @@
 //! The panel of the tip: where it comes from, what it is, what is wrong with it.
 
 use super::command::{BrowseFor, Command};
-use super::fields::{caution, choice_row, fact, heading, length_row, number_row, text_row};
+use super::fields::{caution, choice_row, fact, heading, length_row, number_row, remark, text_row};
 use super::format;
+use super::laid_over::laid_ui;
 use super::panels::Panel;
-use crate::job::{Threshold, TipFrom, TipShape, TipSpec};
+use crate::job::{Outcome, Threshold, TipFrom, TipShape, TipSpec};
 use crate::units::Length;
 use eframe::egui::Ui;
 use std::path::PathBuf;
@@ -54,19 +55,66 @@ pub fn tip_ui(ui: &mut Ui, panel: &Panel, out: &mut Vec<Command>) {
         heading(ui, "What it is");
         read_out_ui(ui, found);
     }
-    let none = panel
-        .outcome
-        .warnings
-        .iter()
-        .filter(|w| w.starts_with("No tip"));
-    let found = panel.outcome.tip.iter().flat_map(|t| t.diagnosis.iter());
-    let findings: Vec<&String> = none.chain(found).collect();
+    let findings = findings(panel.outcome);
     if !findings.is_empty() {
         heading(ui, "Findings");
-        for finding in findings {
-            caution(ui, finding);
+        for (finding, advice) in findings {
+            caution(ui, &finding);
+            if !advice.is_empty() {
+                ui.indent(("advice", &finding), |ui| {
+                    remark(ui, &format!("What to do: {advice}"));
+                });
+            }
         }
     }
+    laid_ui(ui, panel, out);
+}
+
+/// What was found about the tip and what to do about it, where that is a sentence of its own.
+fn findings(outcome: &Outcome) -> Vec<(String, String)> {
+    let none = outcome.warnings.iter().filter(|w| w.starts_with("No tip"));
+    let mut all: Vec<(String, String)> = none.map(|w| (w.clone(), advice_on(w))).collect();
+    let Some(tip) = &outcome.tip else {
+        return all;
+    };
+    let estimate = tip.estimate.iter().flat_map(|e| &e.diagnosis);
+    all.extend(
+        estimate
+            .clone()
+            .map(|d| (d.finding.clone(), d.advice.clone())),
+    );
+    // The same in one sentence each, and what the stage adds.
+    let told = |text: &str| {
+        let mut said = estimate.clone();
+        said.any(|d| text.starts_with(d.finding.trim_end_matches('.')))
+    };
+    let rest = tip.diagnosis.iter().filter(|d| !told(d));
+    all.extend(rest.map(|d| (d.clone(), advice_on(d))));
+    all
+}
+
+/// What to do about a sentence that does not say it.
+fn advice_on(finding: &str) -> String {
+    let advice = [
+        (
+            "No half-angle",
+            "Scan taller features, or give a wider support, so that the flank shows.",
+        ),
+        (
+            "No radius",
+            "Scan sharper, taller, isolated features with finer pixels.",
+        ),
+        (
+            "The tip shows no depth",
+            "Give a tip with more than its apex, or scan features that exercise it.",
+        ),
+        (
+            "No tip",
+            "Scan a characterizer with the same probe, and take its tip from a file.",
+        ),
+    ];
+    let found = advice.iter().find(|a| finding.starts_with(a.0));
+    found.map_or(String::new(), |a| a.1.to_owned())
 }
 
 /// Another source with settings that can be used at once.
@@ -202,9 +250,12 @@ fn read_out_ui(ui: &mut Ui, found: &crate::job::TipResult) {
                 format!("{} nm", format::with_u(r.value, Some(r.u))),
             )
             .on_hover_text(format!(
-                "Principal radii {} nm and {} nm; ± is the standard uncertainty",
+                "Principal radii {} nm and {} nm; ± is the standard uncertainty\n\
+                 On the same cap a sphere reads {} nm, a paraboloid {} nm",
                 format::significant(r.principal_nm[0], 3),
-                format::significant(r.principal_nm[1], 3)
+                format::significant(r.principal_nm[1], 3),
+                format::significant(r.sphere_nm.unwrap_or(f64::NAN), 3),
+                format::significant(r.paraboloid_nm.unwrap_or(f64::NAN), 3)
             ));
             fact(
                 ui,
@@ -229,6 +280,18 @@ fn read_out_ui(ui: &mut Ui, found: &crate::job::TipResult) {
                 format::significant(a.between_nm[0], 3),
                 format::significant(a.between_nm[1], 3)
             ));
+            if let Some(tilt) = a.tilt {
+                fact(
+                    ui,
+                    "Tilt",
+                    format!("{}°", format::with_u(tilt.value, Some(tilt.u))),
+                )
+                .on_hover_text(format!(
+                    "Lean of the flanks' bisector, towards azimuth {:.0}° (from +x towards +y), \
+                     which means nothing where the tilt does not exceed twice its uncertainty",
+                    tilt.azimuth_deg
+                ));
+            }
         }
         None => {
             fact(ui, "Half-angle", "not identified");
@@ -258,4 +321,26 @@ fn read_out_ui(ui: &mut Ui, found: &crate::job::TipResult) {
     };
     fact(ui, "Band", band)
         .on_hover_text("The pair of tips, sharper and blunter, between which the true one lies");
+}
+
+#[cfg(test)]
+mod tests {
+    use super::super::invented;
+    use super::*;
+
+    #[test]
+    fn every_finding_comes_once_with_what_to_do() {
+        let mut outcome = invented::outcome();
+        let mut tip = (**outcome.tip.as_ref().unwrap()).clone();
+        tip.diagnosis = vec!["No half-angle: the flank does not show.".to_owned()];
+        outcome.tip = Some(std::sync::Arc::new(tip));
+        let all = findings(&outcome);
+        assert_eq!(all.len(), 1);
+        assert!(all[0].1.contains("taller"));
+        outcome.tip = None;
+        outcome.warnings = vec!["No tip: nothing sharp.".to_owned(), "Else.".to_owned()];
+        let all = findings(&outcome);
+        assert_eq!(all.len(), 1);
+        assert!(all[0].1.contains("characterizer"));
+    }
 }

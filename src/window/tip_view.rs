@@ -1,4 +1,5 @@
-//! The tip on the desk: its map and its profiles along x and y.
+//! The tip on the desk: its map, and one of three sheets beside it: profiles along x and y, figures
+//! against the distance from the apex, the places where the scan showed it.
 
 use super::colours::Palette;
 use super::format::{self, Unit, unit_for};
@@ -8,9 +9,12 @@ use super::legend;
 use super::map_marks;
 use super::marks::{Sample, grid, reach, samples_ui, title_ui, x_axis, y_axis};
 use super::state::ColourSpan;
+use super::tip_evidence::{EvidenceView, evidence_ui};
+use super::tip_shape_view::{ShapeView, shape_ui};
 use super::view::View;
 use crate::heightmap::Profile;
 use crate::job::TipResult;
+use crate::leveling::Leveled;
 use crate::tip::Tip;
 use eframe::egui::accesskit::Role;
 use eframe::egui::{
@@ -32,6 +36,14 @@ pub struct TipCurves {
     pub band: (Vec<f64>, Vec<f64>, Vec<f64>),
     /// The fitted sphere, to its fit depth.
     pub sphere: Vec<[f64; 2]>,
+}
+
+impl TipCurves {
+    /// The tip down to a little below `deepest`: what is deeper would only flatten a drawing.
+    fn above(&self, deepest: f64) -> Vec<[f64; 2]> {
+        let near = self.tip.iter().filter(|p| p[1] >= 1.15 * deepest);
+        near.copied().collect()
+    }
 }
 
 fn finite(profile: &Profile) -> Vec<[f64; 2]> {
@@ -79,15 +91,55 @@ pub fn tip_curves(found: &TipResult, azimuth_deg: f64) -> TipCurves {
     curves
 }
 
+/// What stands beside the tip's map.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
+pub enum Sheet {
+    /// Profiles along x and y.
+    #[default]
+    Profiles,
+    /// Probe shape characteristic and area of contact.
+    Shape,
+    /// Where the scan showed the tip.
+    Evidence,
+}
+
 /// State of the tip's view.
 #[derive(Default)]
 pub struct TipView {
+    /// What stands beside the map.
+    pub sheet: Sheet,
     pictures: Later<PairKey, Pair>,
     curves: Option<(MapRef, [TipCurves; 2])>,
+    second: Option<(MapRef, [TipCurves; 2])>,
+    shape: ShapeView,
+    evidence: EvidenceView,
+}
+
+/// What the view shows.
+pub struct OnTip<'a> {
+    /// The tip.
+    pub found: Option<&'a Arc<TipResult>>,
+    /// Why there is none.
+    pub why: &'a str,
+    /// The scan.
+    pub level: Option<&'a Arc<Leveled>>,
+    /// A tip laid over it.
+    pub second: Option<&'a Arc<TipResult>>,
+}
+
+/// The curves of a tip along x and y, kept while it stays the same.
+fn keep(held: &mut Option<(MapRef, [TipCurves; 2])>, tip: Option<&Arc<TipResult>>) {
+    let of = tip.map(|t| MapRef::Tip(Arc::clone(t)));
+    if held.as_ref().map(|h| &h.0) != of.as_ref() {
+        *held = of
+            .zip(tip)
+            .map(|(of, tip)| (of, [tip_curves(tip, 0.0), tip_curves(tip, 90.0)]));
+    }
 }
 
 /// Paints the tip into the whole of `ui`.
-pub fn tip_ui(ui: &mut Ui, found: Option<&Arc<TipResult>>, why: &str, view: &mut TipView) {
+pub fn tip_ui(ui: &mut Ui, on: &OnTip, view: &mut TipView) {
+    let (found, why) = (on.found, on.why);
     let rect = ui.available_rect_before_wrap();
     ui.allocate_rect(rect, Sense::hover());
     let p = Palette::of(ui);
@@ -99,12 +151,8 @@ pub fn tip_ui(ui: &mut Ui, found: Option<&Arc<TipResult>>, why: &str, view: &mut
         return;
     };
     let of = MapRef::Tip(Arc::clone(found));
-    if view.curves.as_ref().is_none_or(|(was, _)| *was != of) {
-        view.curves = Some((
-            of.clone(),
-            [tip_curves(found, 0.0), tip_curves(found, 90.0)],
-        ));
-    }
+    keep(&mut view.curves, Some(found));
+    keep(&mut view.second, on.second);
     let side = (rect.width() * 0.46).min(rect.height() - 30.0).max(60.0);
     let map = Rect::from_min_size(rect.min, vec2(side, side + 24.0));
     let scale = Rect::from_min_size(pos2(map.right() + 10.0, map.top() + 24.0), vec2(74.0, side));
@@ -116,13 +164,51 @@ pub fn tip_ui(ui: &mut Ui, found: Option<&Arc<TipResult>>, why: &str, view: &mut
     if below.height() > 130.0 {
         azimuth_ui(ui, below, found);
     }
-    let plots = Rect::from_min_max(pos2(scale.right() + 8.0, rect.top()), rect.max);
+    let right = Rect::from_min_max(pos2(scale.right() + 8.0, rect.top()), rect.max);
+    let row = Rect::from_min_size(right.min, vec2(right.width(), 24.0));
+    sheets_ui(ui, row, &mut view.sheet);
+    let plots = right.with_min_y(row.bottom() + 8.0);
+    match (view.sheet, on.level) {
+        (Sheet::Shape, _) => shape_ui(ui, plots, found, on.second, &mut view.shape),
+        (Sheet::Evidence, Some(level)) => {
+            evidence_ui(ui, plots, found, level, &mut view.evidence);
+        }
+        _ => profiles_ui(ui, plots, found, view),
+    }
+}
+
+fn sheets_ui(ui: &mut Ui, row: Rect, sheet: &mut Sheet) {
+    let mut child = ui.new_child(UiBuilder::new().max_rect(row).id_salt("sheets"));
+    child.horizontal(|ui| {
+        for (which, name, help) in [
+            (Sheet::Profiles, "Profiles", "Sections along x and y"),
+            (
+                Sheet::Shape,
+                "Probe shape",
+                "Full width and area of contact against the distance from the apex",
+            ),
+            (
+                Sheet::Evidence,
+                "Evidence",
+                "Where on the scan the tip was seen",
+            ),
+        ] {
+            let label = ui.selectable_label(*sheet == which, name);
+            if label.on_hover_text(help).clicked() {
+                *sheet = which;
+            }
+        }
+    });
+}
+
+fn profiles_ui(ui: &mut Ui, plots: Rect, found: &TipResult, view: &TipView) {
     let half = plots.height() / 2.0;
     for (i, name) in ["Along x", "Along y"].into_iter().enumerate() {
         let top = plots.top() + i as f32 * half;
         let area = Rect::from_min_size(pos2(plots.left(), top), vec2(plots.width(), half - 8.0));
         if let Some((_, curves)) = &view.curves {
-            profile_ui(ui, area, name, &curves[i], found);
+            let second = view.second.as_ref().map(|(_, s)| &s[i]);
+            profile_ui(ui, area, name, &curves[i], second, found);
         }
     }
 }
@@ -231,23 +317,48 @@ fn azimuth_ui(ui: &mut Ui, rect: Rect, found: &TipResult) {
     });
 }
 
-fn profile_ui(ui: &mut Ui, rect: Rect, name: &str, curves: &TipCurves, found: &TipResult) {
+fn profile_ui(
+    ui: &mut Ui,
+    rect: Rect,
+    name: &str,
+    curves: &TipCurves,
+    second: Option<&TipCurves>,
+    found: &TipResult,
+) {
     let p = Palette::of(ui);
     let mut samples = vec![(Sample::Line(3.0), p.corrected, "tip")];
+    if second.is_some() {
+        samples.push((Sample::Line(1.3), p.text, "second tip"));
+    }
     if !curves.sphere.is_empty() {
-        samples.push((Sample::Dashed, p.scanned, "apex radius"));
+        let name = if second.is_some() {
+            "radius"
+        } else {
+            "apex radius"
+        };
+        samples.push((Sample::Dashed, p.scanned, name));
     }
     if !curves.band.0.is_empty() {
         samples.push((Sample::Area, p.ghost.gamma_multiply(0.5), "band"));
     }
     if found.exercised_depth_nm.is_some() {
-        samples.push((Sample::Dashed, p.warn, "exercised depth"));
+        let name = if second.is_some() {
+            "exercised"
+        } else {
+            "exercised depth"
+        };
+        samples.push((Sample::Dashed, p.warn, name));
     }
-    let head = Rect::from_min_size(rect.min, vec2(rect.width(), 22.0));
+    let mut head = Rect::from_min_size(rect.min, vec2(rect.width(), 22.0));
     let unit = unit_for(reach(curves.tip.iter(), 0));
     title_ui(ui, head, name, unit.sign);
+    if second.is_some() {
+        // One sample more than the line of the title holds; a line of its own needs no room for it.
+        head = head.translate(vec2(0.0, 18.0));
+        head.min.x -= 80.0;
+    }
     samples_ui(ui, head, &samples);
-    let area = Rect::from_min_max(pos2(rect.left(), rect.top() + 24.0), rect.max);
+    let area = rect.with_min_y(head.bottom() + 2.0);
     let mut child = ui.new_child(UiBuilder::new().max_rect(area).id_salt(name));
     let plot = Plot::new(name)
         .data_aspect(1.0)
@@ -274,6 +385,23 @@ fn profile_ui(ui: &mut Ui, rect: Rect, name: &str, curves: &TipCurves, found: &T
                     .color(p.warn)
                     .style(LineStyle::dashed_loose())
                     .width(1.0)
+                    .allow_hover(false),
+            );
+        }
+        if let Some(second) = second {
+            let deepest = curves.tip.iter().map(|p| p[1]).fold(0.0, f64::min);
+            let (xs, low, high) = &second.band;
+            if !xs.is_empty() {
+                plot.add(
+                    FilledArea::new("band of the second tip", xs, low, high)
+                        .fill_color(p.text.gamma_multiply(0.14))
+                        .allow_hover(false),
+                );
+            }
+            plot.line(
+                Line::new("second tip", PlotPoints::new(second.above(deepest)))
+                    .color(p.text)
+                    .width(1.3)
                     .allow_hover(false),
             );
         }

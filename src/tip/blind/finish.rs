@@ -98,11 +98,11 @@ fn from_polished(
     if let Some((r, u)) = radius_u {
         height_u = height_u.max(r.fit_depth_nm * u / r.value);
     }
-    let band = band(&tip, &support, &scatter, &bound.found.shape, LEFT * noise)?;
+    let mut band = band(&tip, &support, &scatter, &bound.found.shape, LEFT * noise)?;
     let features = polished.features.len();
     let further = further_apices(&tip, &support, (5.0 * height_u).max(0.25 * px));
     if let Some(r) = settings.feature_radius_nm.filter(|r| *r > 0.0) {
-        tip = without_feature(&tip, r)?;
+        (tip, band) = all_without_feature(&tip, &band, r)?;
     }
     let mut read = match exercised {
         Some(z) => read_out(&tip, z, height_u),
@@ -446,13 +446,43 @@ fn band(
 
 /// Takes a feature of apex radius `radius` out of the identified shape (erosion by its cap).
 fn without_feature(tip: &Tip, radius: f64) -> Result<Tip> {
+    let shape = eroded_by_cap(tip, radius)?;
+    raised(shape, None, tip.pitch())
+}
+
+/// The same out of tip and band, all three by the tip's own change of height, so that the band
+/// still encloses it.
+fn all_without_feature(tip: &Tip, band: &Band, radius: f64) -> Result<(Tip, Band)> {
+    let shape = eroded_by_cap(tip, radius)?;
+    let apex = shape[(shape.nrows() / 2, shape.ncols() / 2)];
+    let side = |side: &Tip| raised(eroded_by_cap(side, radius)?, Some(apex), tip.pitch());
+    let band = Band {
+        sharper: side(&band.sharper)?,
+        blunter: side(&band.blunter)?,
+    };
+    Ok((raised(shape, Some(apex), tip.pitch())?, band))
+}
+
+/// Stands for what is outside a tip, which is infinitely deep; nm.
+const OUTSIDE: f32 = -1e6;
+
+fn eroded_by_cap(tip: &Tip, radius: f64) -> Result<Array2<f32>> {
     let pitch = tip.pitch();
     let half_angle = 15.0;
     let cap = Model::SphereCone { radius, half_angle }.sample(2.0 * radius + pitch.x, pitch)?;
-    let mut shape = morphology::erode(tip.shape(), cap.shape(), &Progress::new())?;
+    let deep = tip.shape().mapv(|p| p.max(OUTSIDE));
+    morphology::erode(deep.view(), cap.shape(), &Progress::new())
+}
+
+/// A shape brought to its apex: lowered by `apex`, or by the height of its own centre.
+fn raised(mut shape: Array2<f32>, apex: Option<f32>, pitch: Pitch) -> Result<Tip> {
     let centre = (shape.nrows() / 2, shape.ncols() / 2);
-    let apex = shape[centre];
-    shape.mapv_inplace(|p| (p - apex).min(0.0));
+    let apex = apex.unwrap_or(shape[centre]);
+    shape.mapv_inplace(|p| match p {
+        p if p < 0.5 * OUTSIDE => f32::NEG_INFINITY,
+        p => (p - apex).min(0.0),
+    });
+    shape[centre] = 0.0;
     Tip::new(shape, pitch)
 }
 

@@ -85,6 +85,13 @@ fn a_stated_feature_radius_is_taken_out() {
     let e = estimate(&map, None, &settings, &Progress::new()).unwrap();
     let r = e.read_out.apex_radius.unwrap().value;
     assert!((r - 8.0).abs() < 0.5, "{r}");
+    // Out of the band too: it encloses the tip that is left, and is open where nothing was seen.
+    let band = e.band.unwrap();
+    let sides = band.sharper.shape().into_owned();
+    for ((at, p), sharp) in e.tip.shape().indexed_iter().zip(&sides) {
+        assert!(*sharp <= *p && *p <= band.blunter.shape()[at], "{at:?}");
+    }
+    assert_eq!(sides[[0, 0]], f32::NEG_INFINITY);
 }
 
 #[test]

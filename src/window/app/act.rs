@@ -10,6 +10,7 @@ use super::{App, Dialog};
 use crate::dimensions::{Kind, Request};
 use crate::heightmap::Region;
 use crate::job::{JobFile, ScanSpec};
+use crate::units::Length;
 use eframe::egui::ViewportCommand;
 use std::path::PathBuf;
 use std::time::Instant;
@@ -139,6 +140,8 @@ impl App {
                 }
             }
             Command::WriteRecord(folder) => self.write_record(folder),
+            Command::LayOver(None) => self.laid = None,
+            Command::LayOver(Some((path, uncertainty))) => self.lay_over(&path, uncertainty),
             Command::Recover | Command::Forget => self.recover(command == Command::Recover),
             Command::CloseAnyway => {
                 if let Some(store) = &self.store {
@@ -269,6 +272,15 @@ impl App {
             let outcome = self.shown.clone();
             self.chores
                 .record(self.state, folder, opened.job(), outcome);
+        }
+    }
+
+    /// Opens a second tip; a relative path is seen from the job.
+    pub(super) fn lay_over(&mut self, path: &std::path::Path, uncertainty: Option<Length>) {
+        if let Some(level) = &self.shown.level {
+            let path = self.here().join(path);
+            let pitch = level.map.pitch();
+            self.chores.lay_over(path, uncertainty, pitch);
         }
     }
 
