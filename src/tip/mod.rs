@@ -5,6 +5,7 @@
 //! at the lateral offset (i rows, j columns) from the apex, in the scan's own axes.
 
 pub mod blind;
+pub mod known;
 pub mod model;
 pub mod read_out;
 
