@@ -59,9 +59,15 @@ fn headless(command: &Command, common: &Common, show: &Show) -> Result<u8> {
             out,
             support,
             threshold,
+            known,
             json,
         } => {
-            maps::tip(scan, out, *support, *threshold, *json, common, show)?;
+            let how = maps::TipOptions {
+                support: *support,
+                threshold: *threshold,
+                known: known.as_deref(),
+            };
+            maps::tip(scan, out, &how, *json, common, show)?;
         }
         Command::Reconstruct {
             scan,

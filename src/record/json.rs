@@ -6,6 +6,7 @@
 //! `null`; NaN and infinities never appear.
 
 use super::format::tame;
+use super::known::KnownPart;
 use crate::dimensions::{Dimension, Kind, Status};
 use crate::heightmap::HeightMap;
 use crate::job::{Job, Outcome, Reliability, SurfaceResult, TipFrom, TipResult};
@@ -86,6 +87,9 @@ pub struct TipPart {
     half_angle_deg: Option<AnglePart>,
     band: bool,
     diagnosis: Vec<String>,
+    /// Both ways side by side, for a tip from a known shape.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    known: Option<KnownPart>,
 }
 
 #[derive(Debug, Serialize)]
@@ -168,7 +172,7 @@ fn significant(x: f64, digits: i32) -> Option<f64> {
 }
 
 /// To seven significant digits.
-fn number(x: f64) -> Option<f64> {
+pub(super) fn number(x: f64) -> Option<f64> {
     significant(x, 7)
 }
 
@@ -270,11 +274,8 @@ impl TipPart {
             Some(tip) => Self::of_tip(tip),
             None => Self::missing(spec.from, &outcome.warnings),
         };
-        part.file = spec
-            .file
-            .as_deref()
-            .filter(|_| spec.from == TipFrom::File)
-            .map(path_text);
+        let file = spec.file.as_deref().filter(|_| spec.from == TipFrom::File);
+        part.file = file.or(spec.own_scan()).map(path_text);
         part
     }
 
@@ -282,7 +283,7 @@ impl TipPart {
     pub fn of_tip(tip: &TipResult) -> Self {
         let estimate = tip.estimate.as_ref();
         let mut diagnosis = tip.diagnosis.clone();
-        if estimate.is_none() {
+        if estimate.is_none() && tip.known.is_none() {
             diagnosis.push(
                 "The tip was given, not estimated: it has no threshold and no exercised depth."
                     .to_owned(),
@@ -325,6 +326,7 @@ impl TipPart {
             }),
             band: tip.band.is_some(),
             diagnosis,
+            known: KnownPart::of(tip),
         }
     }
 
@@ -352,6 +354,7 @@ impl TipPart {
             half_angle_deg: None,
             band: false,
             diagnosis,
+            known: None,
         }
     }
 }

@@ -40,6 +40,17 @@ pub enum Formula {
     Pyramid,
 }
 
+impl Formula {
+    /// "sphere-cone", "paraboloid", "pyramid".
+    pub fn name(self) -> &'static str {
+        match self {
+            Self::SphereCone => "sphere-cone",
+            Self::Paraboloid => "paraboloid",
+            Self::Pyramid => "pyramid",
+        }
+    }
+}
+
 /// What to estimate from.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct Settings {
