@@ -169,7 +169,9 @@ fn the_tip_of_the_gauge_is_the_true_one_within_its_interval() {
     assert!(tip.identified && tip.band.is_some());
     let json = truewidth::record::tip_json(&tip);
     for way in ["model_fit", "free_form"] {
-        let radius = json["known"][way]["apex_radius_nm"]["value"].as_f64().unwrap();
+        let radius = json["known"][way]["apex_radius_nm"]["value"]
+            .as_f64()
+            .unwrap();
         assert!((radius - 8.0).abs() < 0.8, "{way} {radius}");
     }
     let corner = &json["known"]["certified"][4];

@@ -152,11 +152,27 @@ impl KnownSpec {
             ("width", self.width.is_some(), self.u_width.is_some()),
             ("height", self.height.is_some(), self.u_height.is_some()),
             ("pitch", self.pitch.is_some(), self.u_pitch.is_some()),
-            ("wall-angle", self.wall_angle.is_some(), self.u_wall_angle.is_some()),
-            ("corner-radius", self.corner_radius.is_some(), self.u_corner_radius.is_some()),
-            ("diameter", self.diameter.is_some(), self.u_diameter.is_some()),
+            (
+                "wall-angle",
+                self.wall_angle.is_some(),
+                self.u_wall_angle.is_some(),
+            ),
+            (
+                "corner-radius",
+                self.corner_radius.is_some(),
+                self.u_corner_radius.is_some(),
+            ),
+            (
+                "diameter",
+                self.diameter.is_some(),
+                self.u_diameter.is_some(),
+            ),
             ("radius", self.radius.is_some(), self.u_radius.is_some()),
-            ("half-angle", self.half_angle.is_some(), self.u_half_angle.is_some()),
+            (
+                "half-angle",
+                self.half_angle.is_some(),
+                self.u_half_angle.is_some(),
+            ),
         ];
         let own: &[&str] = match self.shape {
             KnownShape::Ridges => &["width", "height", "pitch", "wall-angle", "corner-radius"],
@@ -189,8 +205,7 @@ impl KnownSpec {
             self.wall_angle.unwrap_or(90.0),
             self.u_wall_angle.unwrap_or(0.0),
         );
-        let corner_radius =
-            Certified::new(nm(self.corner_radius), nm(self.u_corner_radius));
+        let corner_radius = Certified::new(nm(self.corner_radius), nm(self.u_corner_radius));
         let height = length(self.height, self.u_height);
         let shape = match self.shape {
             KnownShape::Ridges => Shape::Ridges {
@@ -251,14 +266,17 @@ fn result(known: Known, way: Way) -> TipResult {
     let mut diagnosis = known.diagnosis.clone();
     let free = way == Way::FreeForm;
     if free {
-        diagnosis.push(
-            "The free-form tip corrects: the fitted formula is shown beside it.".to_owned(),
-        );
+        diagnosis
+            .push("The free-form tip corrects: the fitted formula is shown beside it.".to_owned());
         diagnosis.extend(known.free_form.read_out.reasons.iter().cloned());
     }
     TipResult {
         from: TipFrom::KnownShape,
-        tip: if free { known.free_form.tip.clone() } else { known.tip.clone() },
+        tip: if free {
+            known.free_form.tip.clone()
+        } else {
+            known.tip.clone()
+        },
         read_out: if free {
             known.free_form.read_out.clone()
         } else {
@@ -269,7 +287,11 @@ fn result(known: Known, way: Way) -> TipResult {
         band: if free { None } else { known.band.clone() },
         identified: known.identified,
         exercised_depth_nm: Some(known.exercised_depth_nm),
-        height_u_nm: if free { known.free_form.height_u_nm } else { known.height_u_nm },
+        height_u_nm: if free {
+            known.free_form.height_u_nm
+        } else {
+            known.height_u_nm
+        },
         sha256: None,
         diagnosis,
         known: Some(Box::new((known, way))),
@@ -286,9 +308,15 @@ mod tests {
 
     #[test]
     fn a_grating_is_read_with_its_uncertainties() {
-        let text = "shape = \"ridges\"\nwidth = \"100 nm\"\nu-width = \"1 nm\"\npitch = \"0.2 um\"\n";
-        let Shape::Ridges { width, height, pitch, wall_angle, corner_radius } =
-            spec(text).to_shape().unwrap()
+        let text =
+            "shape = \"ridges\"\nwidth = \"100 nm\"\nu-width = \"1 nm\"\npitch = \"0.2 um\"\n";
+        let Shape::Ridges {
+            width,
+            height,
+            pitch,
+            wall_angle,
+            corner_radius,
+        } = spec(text).to_shape().unwrap()
         else {
             panic!("not ridges")
         };
@@ -302,12 +330,21 @@ mod tests {
     fn what_does_not_go_together_is_named() {
         for (text, named) in [
             ("shape = \"ridges\"", "width"),
-            ("shape = \"sphere\"\ndiameter = \"30 nm\"\npitch = \"1 nm\"", "pitch"),
+            (
+                "shape = \"sphere\"\ndiameter = \"30 nm\"\npitch = \"1 nm\"",
+                "pitch",
+            ),
             ("shape = \"sphere\"\ndiameter = \"-30 nm\"", "-30 nm"),
             ("shape = \"spike\"\nradius = \"2 nm\"", "half-angle"),
-            ("shape = \"step\"\nu-height = \"1 nm\"", "u-height without height"),
+            (
+                "shape = \"step\"\nu-height = \"1 nm\"",
+                "u-height without height",
+            ),
             ("shape = \"step\"\nwall-angle = 95", "95 deg"),
-            ("shape = \"ridges\"\nwidth = \"10 nm\"\ncorner-radius = \"8 nm\"", "-6.000 nm wide"),
+            (
+                "shape = \"ridges\"\nwidth = \"10 nm\"\ncorner-radius = \"8 nm\"",
+                "-6.000 nm wide",
+            ),
         ] {
             let error = spec(text).to_shape().unwrap_err();
             assert_eq!(error.kind(), ErrorKind::Setting);

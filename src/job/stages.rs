@@ -328,9 +328,7 @@ fn find_tip(job: &Job, level: &Leveled, progress: &Progress) -> Result<TipOrReas
         None => None,
     };
     let shown = own.as_ref().unwrap_or(level);
-    let sha256 = own
-        .as_ref()
-        .and_then(|o| o.map.provenance().sha256.clone());
+    let sha256 = own.as_ref().and_then(|o| o.map.provenance().sha256.clone());
     if spec.from == TipFrom::KnownShape {
         let support = spec
             .support

@@ -114,21 +114,30 @@ impl KnownPart {
                     half_angle_change_deg: i.half_angle_deg.and_then(number),
                 })
                 .collect(),
-            model_fit: way(&known.read_out, Some(known.formula.name()), known.height_u_nm),
+            model_fit: way(
+                &known.read_out,
+                Some(known.formula.name()),
+                known.height_u_nm,
+            ),
             free_form,
         })
     }
 }
 
 fn figures(read: &ReadOut) -> String {
-    let radius = read.apex_radius.map_or("radius not determined".to_owned(), |r| {
-        let (value, u) = with_u(r.value, r.u, "nm");
-        format!("radius {value} (u = {u})")
-    });
-    let angle = read.half_angle.as_ref().map_or("half-angle not determined".to_owned(), |a| {
-        let (value, u) = with_u(a.value, a.u, "deg");
-        format!("half-angle {value} (u = {u})")
-    });
+    let radius = read
+        .apex_radius
+        .map_or("radius not determined".to_owned(), |r| {
+            let (value, u) = with_u(r.value, r.u, "nm");
+            format!("radius {value} (u = {u})")
+        });
+    let angle = read
+        .half_angle
+        .as_ref()
+        .map_or("half-angle not determined".to_owned(), |a| {
+            let (value, u) = with_u(a.value, a.u, "deg");
+            format!("half-angle {value} (u = {u})")
+        });
     format!("{radius}, {angle}")
 }
 
@@ -150,7 +159,11 @@ pub fn rows(tip: &TipResult) -> Vec<(&'static str, String)> {
         ),
         (
             "Free form",
-            format!("{}{}", figures(&known.free_form.read_out), mark(Way::FreeForm)),
+            format!(
+                "{}{}",
+                figures(&known.free_form.read_out),
+                mark(Way::FreeForm)
+            ),
         ),
         ("Shape", shape(known)),
         (
@@ -172,7 +185,10 @@ pub fn rows(tip: &TipResult) -> Vec<(&'static str, String)> {
             about(i.certified.u, i.quantity.unit())
         );
         if let Some(change) = i.radius_nm {
-            text.push_str(&format!("; one u of it moves the radius by {}", about(change, "nm")));
+            text.push_str(&format!(
+                "; one u of it moves the radius by {}",
+                about(change, "nm")
+            ));
         }
         if let Some(change) = i.half_angle_deg {
             text.push_str(&format!("; the half-angle by {}", about(change, "deg")));

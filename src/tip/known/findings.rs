@@ -45,7 +45,9 @@ pub(super) fn known(
             format_length(fit.sd)
         ));
         read_out = ReadOut {
-            reasons: vec!["No radius and no half-angle: the fit does not describe the scan.".to_owned()],
+            reasons: vec![
+                "No radius and no half-angle: the fit does not describe the scan.".to_owned(),
+            ],
             ..ReadOut::default()
         };
     }
@@ -144,14 +146,22 @@ impl Seen {
                 let (depth, radius) = (under(90.0f64.min(wall.to_degrees())), state.radius);
                 let steepest = 0.5 * radius * wall.tan().powi(2);
                 Self {
-                    depth: if wall.to_degrees() >= 89.9 { depth } else { steepest.min(depth) },
+                    depth: if wall.to_degrees() >= 89.9 {
+                        depth
+                    } else {
+                        steepest.min(depth)
+                    },
                     flank: false,
                     tangent: f64::INFINITY,
                     azimuths,
                 }
             }
             _ => {
-                let radius = if state.formula == Formula::Pyramid { 0.0 } else { state.radius };
+                let radius = if state.formula == Formula::Pyramid {
+                    0.0
+                } else {
+                    state.radius
+                };
                 let flank_slope = 90.0 - angle;
                 let tangent = radius * (1.0 - angle.to_radians().sin());
                 let flank = flank_slope < wall && under(flank_slope) > tangent;
@@ -221,11 +231,14 @@ fn radius(fit: &Fit, seen: &Seen) -> std::result::Result<ApexRadius, String> {
             Shape::Spike { .. } => Quantity::Radius,
             _ => Quantity::CornerRadius,
         };
-        let by_shape = fit.index(Parameter::Radius).and_then(|i| {
-            Some(fit.shift(Parameter::Certified(quantity))?[i].abs())
-        });
+        let by_shape = fit
+            .index(Parameter::Radius)
+            .and_then(|i| Some(fit.shift(Parameter::Certified(quantity))?[i].abs()));
         let why = if by_shape.is_some_and(|s| s > 0.7 * u) {
-            format!("the certified {} is too uncertain for so sharp a tip", quantity.name())
+            format!(
+                "the certified {} is too uncertain for so sharp a tip",
+                quantity.name()
+            )
         } else {
             "the scan does not tell it".to_owned()
         };
@@ -369,12 +382,7 @@ fn influences(fit: &Fit, read: &ReadOut) -> Vec<Influence> {
 }
 
 /// The tip on its grid, the band, and the standard uncertainty along the normal.
-fn grids(
-    fit: &Fit,
-    seen: &Seen,
-    settings: &Settings,
-    misfit: f64,
-) -> Result<(Tip, Band, f64)> {
+fn grids(fit: &Fit, seen: &Seen, settings: &Settings, misfit: f64) -> Result<(Tip, Band, f64)> {
     let state = &fit.state;
     let model = state.model();
     let whole = model.sample(settings.support_nm, settings.pitch)?;
@@ -398,7 +406,11 @@ fn grids(
                 other
             };
             let down = (here - unknown.step).max(0.0);
-            (at(here + unknown.step), at(down), here + unknown.step - down)
+            (
+                at(here + unknown.step),
+                at(down),
+                here + unknown.step - down,
+            )
         })
         .collect();
     let flank_known = seen.flank || state.formula == Formula::Paraboloid;

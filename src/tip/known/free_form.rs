@@ -206,12 +206,7 @@ fn section(
 }
 
 /// The section turned about the apex: each half-plane has its own side, a single side serves both.
-fn turned(
-    state: &State,
-    section: &[(f64, f64)],
-    pitch: Pitch,
-    half: [usize; 2],
-) -> Array2<f64> {
+fn turned(state: &State, section: &[(f64, f64)], pitch: Pitch, half: [usize; 2]) -> Array2<f64> {
     let n = state.normal();
     let profile = Profile {
         at: section.to_vec(),

@@ -125,7 +125,11 @@ pub(super) fn faces_on_cap(faces: [f64; 4], r: f64, limit: f64, x: [f64; 2]) -> 
     let foot = gx * gx / (length * length);
     let nearest = gx * gy / length;
     let along = (gy * ay - gx * ax) / length;
-    let pull = if r > 0.0 { along / r } else { along * f64::INFINITY };
+    let pull = if r > 0.0 {
+        along / r
+    } else {
+        along * f64::INFINITY
+    };
     let mut y = if pull.is_nan() {
         0.0
     } else if pull.abs() < 1.0 {

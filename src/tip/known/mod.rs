@@ -305,12 +305,7 @@ fn fit_tip(scan: &HeightMap, start: State, pixels: &[Pixel], progress: &Progress
 
 /// Faces that ridges do not show are taken as the mean of those they do: with ridges slightly
 /// turned they have a small part in the section.
-fn with_level_faces(
-    mut fit: Fit,
-    pixels: &[Pixel],
-    step: f64,
-    progress: &Progress,
-) -> Result<Fit> {
+fn with_level_faces(mut fit: Fit, pixels: &[Pixel], step: f64, progress: &Progress) -> Result<Fit> {
     for _ in 0..2 {
         let seen: Vec<usize> = faces(&fit.state)
             .iter()

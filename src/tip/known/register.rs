@@ -1,10 +1,10 @@
 //! Where the characterizer lies in the scan: position, rotation, base. Good enough for the fit to
 //! take over.
 
+use super::Formula;
 use super::fit::{Pixel, cost};
 use super::shape::Shape;
 use super::state::{Place, State};
-use super::Formula;
 use crate::heightmap::HeightMap;
 use ndarray::{Array2, ArrayView2};
 
@@ -29,6 +29,7 @@ pub(super) fn register(
         round(&mut state, scan, noise)?;
     }
     first_tip(&mut state, scan, pixels);
+    neighbours(&mut state, pixels);
     Ok(state)
 }
 
@@ -45,7 +46,10 @@ fn sample(pixels: &[Pixel], most: usize) -> Vec<Pixel> {
 
 fn quantile(sorted: &[f64], part: f64) -> f64 {
     let last = sorted.len().saturating_sub(1);
-    sorted.get((part * last as f64) as usize).copied().unwrap_or(0.0)
+    sorted
+        .get((part * last as f64) as usize)
+        .copied()
+        .unwrap_or(0.0)
 }
 
 /// Mean over 3 x 3 pixels, voids left out.
@@ -65,12 +69,7 @@ fn smooth(z: ArrayView2<'_, f32>) -> Array2<f64> {
     })
 }
 
-fn straight(
-    state: &mut State,
-    scan: &HeightMap,
-    pixels: &[Pixel],
-    noise: f64,
-) -> Result<(), Lost> {
+fn straight(state: &mut State, scan: &HeightMap, pixels: &[Pixel], noise: f64) -> Result<(), Lost> {
     let few = sample(pixels, 4 * ENOUGH);
     let mut heights: Vec<f64> = few.iter().map(|p| p.z).collect();
     heights.sort_by(f64::total_cmp);
@@ -134,7 +133,10 @@ fn straight(
     };
     if shown > 0.9 * nothing {
         return Err(Lost(
-            format!("No {} of the certified shape was found in the scan.", state.shape.name()),
+            format!(
+                "No {} of the certified shape was found in the scan.",
+                state.shape.name()
+            ),
             "Check width, height and pitch, and that the scan shows the characterizer.",
         ));
     }
@@ -189,6 +191,31 @@ fn direction(scan: &HeightMap, signed: bool) -> Option<f64> {
     Some(axis.to_degrees() + if turned { 180.0 } else { 0.0 })
 }
 
+/// Bound of residuals while the tip is rough, nm: no single edge decides.
+fn rough(state: &State) -> f64 {
+    let top = state
+        .places
+        .iter()
+        .map(|p| p.top)
+        .fold(state.height, f64::max);
+    (0.02 * top).max(1e-6)
+}
+
+/// Adds a ridge off the scan at either end where its flank shows at the scan's border.
+fn neighbours(state: &mut State, pixels: &[Pixel]) {
+    if state.pitch.is_none() {
+        return;
+    }
+    let bound = rough(state);
+    for (end, step) in [(0, -1), (1, 1)] {
+        let without = cost(state, pixels, bound);
+        state.ridges[end] += step;
+        if cost(state, pixels, bound) >= without {
+            state.ridges[end] -= step;
+        }
+    }
+}
+
 /// Which ridges really stand: drops those at the ends whose place is empty or off the scan.
 fn standing(state: &mut State, pixels: &[Pixel]) {
     let Some(pitch) = state.pitch else { return };
@@ -210,12 +237,7 @@ fn standing(state: &mut State, pixels: &[Pixel]) {
         .map(|(number, _)| *number)
         .collect();
     if let (Some(&first), Some(&last)) = (up.first(), up.last()) {
-        // A ridge just off the scan may still reach into it.
-        let off = |number: i64| !heights.contains_key(&number);
-        state.ridges = [
-            first - i64::from(off(first - 1)),
-            last + i64::from(off(last + 1)),
-        ];
+        state.ridges = [first, last];
     }
 }
 
@@ -298,7 +320,9 @@ fn first_tip(state: &mut State, scan: &HeightMap, pixels: &[Pixel]) {
         let near = |p: &&Pixel| {
             let reach = |t: &Place| 2.0 * state.corner.radius + 0.7 * t.top;
             let places = &state.places;
-            places.iter().any(|t| (p.x - t.x).hypot(p.y - t.y) < reach(t))
+            places
+                .iter()
+                .any(|t| (p.x - t.x).hypot(p.y - t.y) < reach(t))
         };
         let near: Vec<Pixel> = pixels.iter().filter(near).copied().collect();
         sample(&near, 2 * ENOUGH)
@@ -312,9 +336,7 @@ fn first_tip(state: &mut State, scan: &HeightMap, pixels: &[Pixel]) {
         Formula::Paraboloid => &[20.0],
         _ => &[6.0, 11.0, 16.0, 22.0, 30.0, 42.0],
     };
-    // Bounded at a tenth of the features' height, so that no single edge decides.
-    let top = state.places.iter().map(|p| p.top).fold(state.height, f64::max);
-    let bound = (0.02 * top).max(1e-6);
+    let bound = rough(state);
     let mut best = (f64::INFINITY, state.radius, state.faces);
     for radius in radii {
         for angle in angles {

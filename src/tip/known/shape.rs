@@ -161,11 +161,10 @@ impl Shape {
     /// Errors of kind `Setting` with the offending value.
     pub fn checked(self) -> Result<Self> {
         let fail = |what: String, remedy: &str| {
-            Err(Error::new(
-                ErrorKind::Setting,
-                format!("known {}: {what}", self.name()),
+            Err(
+                Error::new(ErrorKind::Setting, format!("known {}: {what}", self.name()))
+                    .remedy(remedy),
             )
-            .remedy(remedy))
         };
         for (quantity, c) in self.certified() {
             let (name, unit) = (quantity.name(), quantity.unit());
@@ -201,8 +200,7 @@ impl Shape {
         } = self
         {
             let run = height.map_or(0.0, |h| h.value / wall_angle.value.to_radians().tan());
-            let tangent =
-                corner_radius.value * (wall_angle.value / 2.0).to_radians().tan();
+            let tangent = corner_radius.value * (wall_angle.value / 2.0).to_radians().tan();
             let flat = width.value - run - 2.0 * tangent;
             if flat < 0.0 {
                 return fail(

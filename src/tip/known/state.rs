@@ -1,8 +1,8 @@
 //! Everything the image of a characterizer depends on: tip, certified values, pose.
 
+use super::Formula;
 use super::image::{Corner, faces_on_cap, section_slope};
 use super::shape::{Quantity, Shape};
-use super::Formula;
 
 /// Place and height of one sphere or spike.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -206,7 +206,10 @@ impl State {
         let angle = angle.max(90.0 - self.corner.wall).to_radians();
         let round = self.corner.radius + self.radius;
         let beyond = match self.formula {
-            Formula::Paraboloid => (2.0 * round * top.max(0.0)).sqrt() + top.max(0.0) * (90.0 - self.corner.wall).to_radians().tan().max(0.0),
+            Formula::Paraboloid => {
+                (2.0 * round * top.max(0.0)).sqrt()
+                    + top.max(0.0) * (90.0 - self.corner.wall).to_radians().tan().max(0.0)
+            }
             _ => top.max(0.0) * angle.tan(),
         };
         // Between two faces of a pyramid its edge reaches sqrt 2 farther.
