@@ -309,13 +309,12 @@ fn gauge_5() -> Result<Sample> {
         ..Settings::new(200, 320, Pitch::square(0.8))
     };
     let lines = Lines::new(41.3, 128.0, 2, 70.3, 45.0).walls(90.0, 3.1);
-    let dimensions = vec![one("height of ridge 1", "step-height", "step height", 45.0)];
     Ok(Sample {
         name: "gauge-5",
         scene: Scene::new().with(lines),
         tip: SLENDER,
         settings,
-        dimensions,
+        dimensions: Vec::new(),
         features: Vec::new(),
     })
 }

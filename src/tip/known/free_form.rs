@@ -77,7 +77,8 @@ pub(super) fn stack(state: &State, pixels: &[Pixel], px: f64) -> Vec<Cell> {
         cell.residual += residual;
         cell.square += residual * residual;
         cell.count += 1.0;
-        cell.edge |= above > 0.03 * top && above < 0.99 * top;
+        // Not the foot, where base and flank compete for the contact.
+        cell.edge |= above > 0.1 * top && above < 0.99 * top;
     }
     let mean = |c: Cell| Cell {
         x: c.x / c.count,
