@@ -293,6 +293,32 @@ fn tip_check() -> Result<Sample> {
     })
 }
 
+/// Gauge 5: certified ridges, scanned with the tip of stamp 22. The true width and corner radius
+/// differ from the certified 70 nm and 3 nm within their uncertainties.
+fn gauge_5() -> Result<Sample> {
+    let settings = Settings {
+        support_nm: 64.0,
+        distortion: Distortion {
+            noise_nm: 0.2,
+            tilt: [0.003, -0.005],
+            drift_nm: 0.8,
+            row_jitter_nm: 0.03,
+            quantum_nm: QUANTUM_NM,
+        },
+        seed: 5005,
+        ..Settings::new(200, 320, Pitch::square(0.8))
+    };
+    let lines = Lines::new(41.3, 128.0, 2, 70.3, 45.0).walls(90.0, 3.1);
+    Ok(Sample {
+        name: "gauge-5",
+        scene: Scene::new().with(lines),
+        tip: SLENDER,
+        settings,
+        dimensions: Vec::new(),
+        features: Vec::new(),
+    })
+}
+
 /// Filler particles on a flat.
 fn filler() -> Result<Sample> {
     let settings = Settings {
@@ -491,6 +517,7 @@ fn main() -> Result<()> {
         stamp_14()?,
         stamp_22()?,
         tip_check()?,
+        gauge_5()?,
         filler()?,
         shim()?,
         etched_floor()?,

@@ -326,6 +326,49 @@ fn the_tip_command_prints_the_tip_object() {
 }
 
 #[test]
+fn the_tip_command_takes_a_known_shape_from_a_file() {
+    let folder = folder();
+    let known = folder.path().join("gauge.toml");
+    let text = "model = \"sphere-cone\"\nuse = \"free-form\"\nshape = \"ridges\"\nwidth = \"70 nm\"\n\
+                u-width = \"0.4 nm\"\nheight = \"45 nm\"\npitch = \"128 nm\"\ncorner-radius = \"3 nm\"\n\
+                u-corner-radius = \"0.15 nm\"\n";
+    std::fs::write(&known, text).unwrap();
+    let run = |known: &Path| {
+        truewidth()
+            .args(["tip", "--json", "--quiet", "--support", "40 nm", "--out"])
+            .arg(folder.path().join("tip.npy"))
+            .arg("--known")
+            .arg(known)
+            .arg(samples().join("gauge-5.tiff"))
+            .output()
+            .unwrap()
+    };
+    let output = run(&known);
+    let said = String::from_utf8_lossy(&output.stderr).into_owned();
+    assert!(output.status.success(), "{said}");
+    let object: Value = serde_json::from_slice(&output.stdout).unwrap();
+    assert_eq!(object["from"], "known-shape");
+    assert_eq!(object["known"]["use"], "free-form");
+    let fitted = &object["known"]["model_fit"]["apex_radius_nm"];
+    let (low, high) = (
+        fitted["low"].as_f64().unwrap(),
+        fitted["high"].as_f64().unwrap(),
+    );
+    assert!(low < 8.0 && 8.0 < high, "{fitted}");
+    let grid: Array2<f32> = read_npy(folder.path().join("tip.npy")).unwrap();
+    assert_eq!(grid[[grid.nrows() / 2, grid.ncols() / 2]], 0.0);
+
+    std::fs::write(&known, "shape = \"ridges\"\n").unwrap();
+    let output = run(&known);
+    assert_eq!(output.status.code(), Some(2));
+    let said = String::from_utf8_lossy(&output.stderr).into_owned();
+    assert!(
+        said.contains("without width") && said.contains("gauge.toml"),
+        "{said}"
+    );
+}
+
+#[test]
 fn without_a_display_the_demo_runs_headless_and_says_so() {
     let folder = folder();
     truewidth()

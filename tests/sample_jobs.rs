@@ -45,7 +45,8 @@ fn true_value(truth: &toml::Table, line: &Dimension) -> Option<f64> {
 /// Every line of `name` that has a truth, with it. Prints the errors: `--nocapture` shows them.
 fn lines_with_truth(name: &str) -> Vec<(Dimension, f64)> {
     let outcome = run(name);
-    let truth = truth(name);
+    // A second job on a scan shares its truth.
+    let truth = truth(name.strip_suffix("-gauge").unwrap_or(name));
     let lines: Vec<_> = outcome
         .dimensions
         .unwrap()
@@ -151,5 +152,38 @@ fn a_rough_floor_gives_its_texture() {
             "{} {scanned}",
             line.quantity
         );
+    }
+}
+
+#[test]
+fn the_tip_of_the_gauge_is_the_true_one_within_its_interval() {
+    let tip = run("gauge-5").tip.unwrap();
+    let truth = truth("gauge-5");
+    let radius = tip.read_out.apex_radius.unwrap();
+    let half_angle = tip.read_out.half_angle.clone().unwrap();
+    let radius_error = radius.value - truth["tip"]["radius_nm"].as_float().unwrap();
+    let angle_error = half_angle.value - truth["tip"]["half_angle_deg"].as_float().unwrap();
+    assert!(radius_error.abs() < 0.03 * 8.0 && radius_error.abs() < 2.0 * radius.u);
+    assert!(angle_error.abs() < 0.5 && angle_error.abs() < 2.0 * half_angle.u);
+    assert!(tip.identified && tip.band.is_some());
+    let json = truewidth::record::tip_json(&tip);
+    for way in ["model_fit", "free_form"] {
+        let radius = json["known"][way]["apex_radius_nm"]["value"]
+            .as_f64()
+            .unwrap();
+        assert!((radius - 8.0).abs() < 0.8, "{way} {radius}");
+    }
+    let corner = &json["known"]["certified"][4];
+    assert_eq!(corner["name"], "corner-radius");
+    assert!((corner["radius_change_nm"].as_f64().unwrap() + 0.15).abs() < 0.02);
+}
+
+#[test]
+fn a_tip_from_a_separate_scan_of_another_pitch_corrects_the_lines() {
+    for (line, truth) in holds("stamp-22-gauge") {
+        if line.kind == Kind::LineWidth && line.status == Some(Status::Touched) {
+            assert!((line.as_scanned.unwrap().value - truth).abs() > 8.0);
+            assert!((line.corrected.unwrap().value.unwrap() - truth).abs() < 1.0);
+        }
     }
 }

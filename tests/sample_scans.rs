@@ -8,10 +8,11 @@ use truewidth::morphology;
 use truewidth::progress::Progress;
 use truewidth::tip::model::Model;
 
-const NAMES: [&str; 6] = [
+const NAMES: [&str; 7] = [
     "stamp-14",
     "stamp-22",
     "tip-check",
+    "gauge-5",
     "filler",
     "shim",
     "etched-floor",

@@ -96,7 +96,7 @@ pub enum Command {
         #[arg(value_name = "OUT")]
         output: PathBuf,
     },
-    /// Estimate the tip blindly from a scan.
+    /// Estimate the tip from a scan: blindly, or with --known from a certified shape.
     Tip {
         /// The scan; levelled before the estimate.
         scan: PathBuf,
@@ -109,6 +109,10 @@ pub enum Command {
         /// Noise threshold: "auto" or a length.
         #[arg(long, value_name = "auto|LENGTH", default_value = "auto")]
         threshold: Threshold,
+        /// The certified shape that the scan shows: a file with the keys of the job's [tip] known,
+        /// and model and use where wanted.
+        #[arg(long, value_name = "FILE.toml", conflicts_with = "threshold")]
+        known: Option<PathBuf>,
         /// Print the tip object of result.json.
         #[arg(long)]
         json: bool,

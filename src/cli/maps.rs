@@ -5,7 +5,7 @@ use super::show::Show;
 use crate::error::{Error, ErrorKind, Result};
 use crate::files::{self, OpenOptions};
 use crate::heightmap::HeightMap;
-use crate::job::{self, Job, Stages, Threshold, TipFrom};
+use crate::job::{self, Job, Stages, Threshold, TipFrom, TipSpec};
 use crate::leveling;
 use crate::morphology;
 use crate::progress::Progress;
@@ -135,20 +135,35 @@ pub fn convert(input: &Path, output: &Path, common: &Common, show: &Show) -> Res
     Ok(())
 }
 
+/// How `truewidth tip` goes about it.
+pub struct TipOptions<'a> {
+    /// Full width of the tip grid.
+    pub support: Option<Length>,
+    /// Noise threshold of the blind estimate.
+    pub threshold: Threshold,
+    /// File that states the known shape; blind without.
+    pub known: Option<&'a Path>,
+}
+
 /// `truewidth tip`
 pub fn tip(
     scan: &Path,
     out: &Path,
-    support: Option<Length>,
-    threshold: Threshold,
+    how: &TipOptions<'_>,
     json: bool,
     common: &Common,
     show: &Show,
 ) -> Result<()> {
     let mut job: Job = super::run::open_job(scan, common)?;
-    job.file.tip.from = TipFrom::Blind;
-    job.file.tip.support = support;
-    job.file.tip.threshold = Some(threshold);
+    job.file.tip = match how.known {
+        Some(path) => TipSpec::from_known_file(path)?,
+        None => TipSpec {
+            from: TipFrom::Blind,
+            threshold: Some(how.threshold),
+            ..TipSpec::default()
+        },
+    };
+    job.file.tip.support = how.support;
     job.file.dimensions.clear();
     let name = scan
         .file_name()

@@ -60,9 +60,15 @@ fn headless(command: &Command, common: &Common, show: &Show) -> Result<u8> {
             out,
             support,
             threshold,
+            known,
             json,
         } => {
-            maps::tip(scan, out, *support, *threshold, *json, common, show)?;
+            let how = maps::TipOptions {
+                support: *support,
+                threshold: *threshold,
+                known: known.as_deref(),
+            };
+            maps::tip(scan, out, &how, *json, common, show)?;
         }
         Command::Compare(args) => tips::compare(args, common, show)?,
         Command::Reach(args) => tips::reach(args, common, show)?,

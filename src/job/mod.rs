@@ -3,6 +3,7 @@
 
 mod demo;
 mod ghost;
+mod known;
 mod spec;
 mod stages;
 #[cfg(test)]
@@ -12,6 +13,7 @@ mod worker;
 
 pub use demo::{data_folder, demo};
 pub use ghost::{GhostTip, ghost_tip};
+pub use known::{KnownShape, KnownSpec, Way};
 pub use spec::{
     Job, JobFile, LevelMethod, LevelSpec, ScanSpec, Threshold, TipFrom, TipShape, TipSpec,
 };

@@ -1,5 +1,6 @@
 //! The job file: all that was done, in a form that reproduces it.
 
+use super::known::{KnownSpec, Way};
 use crate::dimensions::{Calibration, Request};
 use crate::error::{Error, ErrorKind, Result};
 use crate::files;
@@ -189,6 +190,19 @@ pub struct TipSpec {
     /// Standard uncertainty of the given tip's surface, for a model or a file.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub uncertainty: Option<Length>,
+    /// Scan that shows the tip, relative to the job file, for a blind tip or a known shape; absent =
+    /// the job's own scan.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub scan: Option<PathBuf>,
+    /// Formula fitted to the scan of a known shape.
+    #[serde(default, rename = "model", skip_serializing_if = "Option::is_none")]
+    pub fitted: Option<TipShape>,
+    /// Which way supplies the tip from a known shape.
+    #[serde(default, rename = "use", skip_serializing_if = "Option::is_none")]
+    pub way: Option<Way>,
+    /// The certified shape, for a known shape.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub known: Option<KnownSpec>,
 }
 
 impl JobFile {
@@ -359,6 +373,23 @@ impl TipSpec {
         })
     }
 
+    /// The certified shape. An error of kind `Setting` where none is given.
+    pub fn known_spec(&self) -> Result<&KnownSpec> {
+        self.known.as_ref().ok_or_else(|| {
+            Error::new(
+                ErrorKind::Setting,
+                "[tip] from = \"known-shape\" without known",
+            )
+            .remedy("Add known = { shape = \"ridges\", width = \"100 nm\" }, as certified")
+        })
+    }
+
+    /// The separate scan that shows the tip, where the source uses one.
+    pub fn own_scan(&self) -> Option<&Path> {
+        let uses = matches!(self.from, TipFrom::Blind | TipFrom::KnownShape);
+        self.scan.as_deref().filter(|_| uses)
+    }
+
     /// The threshold that the user stated; `None` = from the noise.
     pub fn fixed_threshold_nm(&self) -> Option<f64> {
         match self.threshold {
@@ -370,11 +401,7 @@ impl TipSpec {
     fn validate(&self) -> Result<()> {
         self.model()?;
         if self.from == TipFrom::KnownShape {
-            return Err(Error::new(
-                ErrorKind::Unsupported,
-                "[tip] from = \"known-shape\" is not in this version",
-            )
-            .remedy("Use from = \"blind\" on a scan of sharp features, \"model\" or \"file\""));
+            self.known_spec()?.to_shape()?;
         }
         if self.from == TipFrom::File {
             self.given_file()?;
@@ -452,6 +479,9 @@ impl Job {
         file.scan.file = relative_to(&self.folder.join(&file.scan.file), &folder);
         if let Some(tip) = &file.tip.file {
             file.tip.file = Some(relative_to(&self.folder.join(tip), &folder));
+        }
+        if let Some(scan) = &file.tip.scan {
+            file.tip.scan = Some(relative_to(&self.folder.join(scan), &folder));
         }
         let text = file.to_toml()?;
         files::write_atomically(path, text.as_bytes())?;

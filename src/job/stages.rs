@@ -1,5 +1,6 @@
 //! The ordered stages, each computed anew only when a setting or an earlier stage changed.
 
+use super::known::{Way, tip_from_known};
 use super::spec::{Job, JobFile, LevelSpec, ScanSpec, TipFrom, TipSpec};
 use crate::dimensions::{self, Calibration, Corrected, Dimension, Input, Request};
 use crate::error::{Error, ErrorKind, Result};
@@ -9,11 +10,12 @@ use crate::leveling::{self, Leveled};
 use crate::morphology::{self, certainty};
 use crate::progress::Progress;
 use crate::tip::blind::{self, Estimate};
+use crate::tip::known::Known;
 use crate::tip::read_out::{ReadOut, read_out};
 use crate::tip::{Band, Tip};
 use ndarray::Array2;
 use std::panic::{AssertUnwindSafe, catch_unwind};
-use std::path::PathBuf;
+use std::path::{Path, PathBuf};
 use std::sync::Arc;
 
 /// The tip stage's result.
@@ -35,10 +37,12 @@ pub struct TipResult {
     pub exercised_depth_nm: Option<f64>,
     /// Standard uncertainty of its heights, nm.
     pub height_u_nm: f64,
-    /// SHA-256 of the tip file, if from a file.
+    /// SHA-256 of the tip file or of the separate scan that showed the tip, if from one.
     pub sha256: Option<String>,
     /// Findings and what to do, plain sentences.
     pub diagnosis: Vec<String>,
+    /// Both results from a known shape and which of them `tip` is, if from one.
+    pub known: Option<Box<(Known, Way)>>,
 }
 
 /// The surface stage's result.
@@ -138,7 +142,7 @@ pub type TipOrReason = std::result::Result<Arc<TipResult>, String>;
 /// The file, its sidecar, and what the job says of them.
 type ScanKey = (FileStamp, FileStamp, ScanSpec);
 type LevelKey = (Same<HeightMap>, LevelSpec);
-type TipKey = (Same<Leveled>, TipSpec, Option<FileStamp>);
+type TipKey = (Same<Leveled>, TipSpec, LevelSpec, Vec<FileStamp>);
 type SurfaceKey = (Same<Leveled>, Same<TipResult>);
 type DimensionsKey = (
     Same<Leveled>,
@@ -296,8 +300,14 @@ impl Stages {
         progress.check()?;
         progress.say("finding the tip");
         let spec = &job.file.tip;
-        let file = spec.file.as_ref().map(|f| stamp(job.folder.join(f)));
-        let key = (Same(Arc::clone(level)), spec.clone(), file);
+        let mut files: Vec<PathBuf> = spec.file.iter().map(|f| job.folder.join(f)).collect();
+        if let Some(scan) = spec.own_scan() {
+            let scan = job.folder.join(scan);
+            files.extend([files::sidecar_path(&scan), scan]);
+        }
+        let files = files.into_iter().map(stamp).collect();
+        let leveling = job.file.level.clone();
+        let key = (Same(Arc::clone(level)), spec.clone(), leveling, files);
         self.tip.get(key, || find_tip(job, level, progress))
     }
 }
@@ -313,6 +323,19 @@ fn default_support_nm(map: &HeightMap) -> f64 {
 fn find_tip(job: &Job, level: &Leveled, progress: &Progress) -> Result<TipOrReason> {
     let spec = &job.file.tip;
     let scan = &level.map;
+    let own = match spec.own_scan() {
+        Some(path) => Some(tip_scan(job, path, progress)?),
+        None => None,
+    };
+    let shown = own.as_ref().unwrap_or(level);
+    let sha256 = own.as_ref().and_then(|o| o.map.provenance().sha256.clone());
+    if spec.from == TipFrom::KnownShape {
+        let support = spec
+            .support
+            .map_or_else(|| default_support_nm(scan), |l| l.nm());
+        let found = tip_from_known(spec, shown, support, scan.pitch(), progress)?;
+        return Ok(found.map(|tip| Arc::new(TipResult { sha256, ..tip })));
+    }
     if spec.from == TipFrom::Blind {
         let settings = blind::Settings {
             support_nm: spec.support.map(|l| l.nm()),
@@ -320,8 +343,12 @@ fn find_tip(job: &Job, level: &Leveled, progress: &Progress) -> Result<TipOrReas
             feature_radius_nm: spec.feature_radius.map(|l| l.nm()),
             ..blind::Settings::default()
         };
-        return match blind::estimate(scan, level.noise_nm, &settings, progress) {
-            Ok(estimate) => Ok(Ok(Arc::new(from_estimate(estimate, spec)))),
+        same_pitch(shown, scan, spec)?;
+        return match blind::estimate(&shown.map, shown.noise_nm, &settings, progress) {
+            Ok(estimate) => Ok(Ok(Arc::new(TipResult {
+                sha256,
+                ..from_estimate(estimate, spec)
+            }))),
             Err(e) if e.kind() == ErrorKind::Data => Ok(Err(e.to_string())),
             Err(e) => Err(e),
         };
@@ -368,9 +395,40 @@ impl TipResult {
             // The corners of a grid lie deeper than its flanks reach all round.
             read_out: read_out(&tip, tip.enclosed_depth_nm(), height_u_nm),
             estimate: None,
+            known: None,
             tip,
         }
     }
+}
+
+/// The separate scan that shows the tip, levelled as the job says but on no region of the job's
+/// own scan. Its scale comes from the file or its sidecar.
+fn tip_scan(job: &Job, path: &Path, progress: &Progress) -> Result<Leveled> {
+    let path = job.folder.join(path);
+    let map = files::open(&path, &files::OpenOptions::default()).map_err(|e| e.at(&path))?;
+    let settings = LevelSpec {
+        regions: Vec::new(),
+        ..job.file.level.clone()
+    }
+    .settings()?;
+    leveling::level(&map, &settings, progress).map_err(|e| e.at(&path))
+}
+
+/// A blind tip comes on the grid of the scan that shows it: that must be the grid it corrects.
+fn same_pitch(shown: &Leveled, scan: &HeightMap, spec: &TipSpec) -> Result<()> {
+    let (own, wanted) = (shown.map.pitch(), scan.pitch());
+    if own.agrees_with(wanted) {
+        return Ok(());
+    }
+    let name = spec.own_scan().unwrap_or(Path::new("")).display();
+    Err(Error::new(
+        ErrorKind::Setting,
+        format!(
+            "[tip] scan = \"{name}\" has a pitch of {} nm x {} nm, the job's scan {} nm x {} nm",
+            own.x, own.y, wanted.x, wanted.y
+        ),
+    )
+    .remedy("Take both scans with one pixel pitch, or the tip from a known shape"))
 }
 
 /// Opens a tip file for use with `scan`; gives its SHA-256 too. A tip without a pitch of its own
@@ -420,6 +478,7 @@ fn from_estimate(estimate: Estimate, spec: &TipSpec) -> TipResult {
         sha256: None,
         diagnosis,
         read_out: estimate.read_out.clone(),
+        known: None,
         estimate: Some(estimate),
     }
 }
@@ -448,10 +507,9 @@ fn reconstruct(level: &Leveled, found: &TipResult, progress: &Progress) -> Resul
         .max(rounding)
         .max(1e-4);
     // A given tip's uncertainty is of its whole size, not of the course of its flank.
-    let flank_u = if found.from == TipFrom::Blind {
-        found.height_u_nm
-    } else {
-        0.0
+    let flank_u = match found.from {
+        TipFrom::Blind | TipFrom::KnownShape => found.height_u_nm,
+        TipFrom::Model | TipFrom::File => 0.0,
     };
     let certainty = morphology::certainty_map(
         eroded.view(),

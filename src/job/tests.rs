@@ -6,7 +6,9 @@ use crate::error::ErrorKind;
 use crate::files;
 use crate::heightmap::{HeightMap, Pitch};
 use crate::progress::Progress;
+use crate::tip::model::Model;
 use crate::units::Length;
+use crate::virtual_scan::{self, Feature, Lines};
 use std::path::Path;
 use std::sync::Arc;
 use std::time::Duration;
@@ -60,6 +62,7 @@ fn a_bad_entry_is_named() {
         ("at = [0.1, 0.5, 0.9]", "at = [1.5]", "1.5"),
         ("from = \"blind\"", "from = \"model\"", "radius"),
         ("from = \"blind\"", "from = \"file\"", "file"),
+        ("from = \"blind\"", "from = \"known-shape\"", "known"),
         (
             "height-unit = \"nm\"",
             "height-unit = \"furlong\"",
@@ -77,11 +80,6 @@ fn a_bad_entry_is_named() {
         assert_eq!(error.kind(), ErrorKind::Setting, "{bad}");
         assert!(error.to_string().contains(named), "{bad}: {error}");
     }
-    let known = CONTRACT.replace("from = \"blind\"", "from = \"known-shape\"");
-    assert_eq!(
-        JobFile::from_toml(&known).unwrap_err().kind(),
-        ErrorKind::Unsupported
-    );
 }
 
 /// A ridge of 20 nm under a sphere-cone, on disk, with a job that measures it.
@@ -221,4 +219,54 @@ fn the_ghost_tip_stands_on_the_top_edge_of_a_wall() {
     assert_eq!(ghost.apex_height_nm, 20.0);
     assert!(ghost.contacts.contains(&(24, 45)));
     assert_eq!(ghost_tip(&outcome, 500, 0), None);
+}
+
+#[test]
+fn a_tip_from_a_separate_scan_is_on_the_jobs_grid_and_made_anew_when_that_scan_changes() {
+    let folder = tempfile::tempdir().unwrap();
+    let mut job = ridge(folder.path());
+    job.file.dimensions.clear();
+    let lines = Lines::new(64.2, 200.0, 1, 60.0, 20.0);
+    let write = |radius: f64| {
+        let half_angle = 15.0;
+        let model = Model::SphereCone { radius, half_angle };
+        let settings = virtual_scan::Settings {
+            support_nm: 60.0,
+            ..virtual_scan::Settings::new(40, 128, Pitch::square(1.0))
+        };
+        let made = virtual_scan::scan(
+            |x, y| lines.height(x, y),
+            |x, y| model.height(x, y),
+            &settings,
+            &Progress::new(),
+        );
+        files::write(&folder.path().join("gauge.tiff"), &made.unwrap().scan).unwrap();
+    };
+    write(8.0);
+    job.file.tip = toml::from_str(
+        "from = \"known-shape\"\nscan = \"gauge.tiff\"\n\
+         known = { shape = \"ridges\", width = \"60 nm\", height = \"20 nm\" }",
+    )
+    .unwrap();
+    let mut stages = Stages::default();
+    let radius = |stages: &mut Stages, job: &Job| {
+        let tip = stages.tip(job, &Progress::new()).unwrap();
+        let tip = (*tip).clone().unwrap();
+        assert!(tip.tip.pitch().agrees_with(Pitch::square(2.0)));
+        assert!(tip.sha256.is_some());
+        let found = tip.read_out.apex_radius;
+        found.unwrap_or_else(|| panic!("{:?}", tip.diagnosis)).value
+    };
+    let first = radius(&mut stages, &job);
+    assert!((first - 8.0).abs() < 0.3, "{first}");
+    write(6.0);
+    let second = radius(&mut stages, &job);
+    assert!((second - 6.0).abs() < 0.3, "{second}");
+    // A blind tip is on the grid of its own scan: another pitch is refused.
+    job.file.tip.from = TipFrom::Blind;
+    let error = stages.tip(&job, &Progress::new()).unwrap_err();
+    assert_eq!(error.kind(), ErrorKind::Setting);
+    assert!(error.to_string().contains("gauge.tiff"), "{error}");
+    let text = job.file.to_toml().unwrap();
+    assert_eq!(JobFile::from_toml(&text).unwrap(), job.file);
 }

@@ -6,6 +6,7 @@
 //! `null`; NaN and infinities never appear.
 
 use super::format::tame;
+use super::known::KnownPart;
 use crate::dimensions::{Dimension, Kind, Status};
 use crate::heightmap::HeightMap;
 use crate::job::{
@@ -92,6 +93,9 @@ pub struct TipPart {
     probe_shape: Option<ShapePart>,
     contact_area: Vec<AreaPart>,
     diagnosis: Vec<String>,
+    /// Both ways side by side, for a tip from a known shape.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    known: Option<KnownPart>,
 }
 
 /// Full widths of the projected profile, `[distance from the apex, width]` in nm.
@@ -300,11 +304,8 @@ impl TipPart {
             Some(tip) => Self::of_tip(tip),
             None => Self::missing(spec.from, &outcome.warnings),
         };
-        part.file = spec
-            .file
-            .as_deref()
-            .filter(|_| spec.from == TipFrom::File)
-            .map(path_text);
+        let file = spec.file.as_deref().filter(|_| spec.from == TipFrom::File);
+        part.file = file.or(spec.own_scan()).map(path_text);
         part
     }
 
@@ -313,7 +314,7 @@ impl TipPart {
         let estimate = tip.estimate.as_ref();
         let figures = shape_figures(tip);
         let mut diagnosis = tip.diagnosis.clone();
-        if estimate.is_none() {
+        if estimate.is_none() && tip.known.is_none() {
             diagnosis.push(
                 "The tip was given, not estimated: it has no threshold and no exercised depth."
                     .to_owned(),
@@ -365,6 +366,7 @@ impl TipPart {
             probe_shape: shape_part(&figures),
             contact_area: figures.areas.iter().map(area_part).collect(),
             diagnosis,
+            known: KnownPart::of(tip),
         }
     }
 
@@ -394,6 +396,7 @@ impl TipPart {
             probe_shape: None,
             contact_area: Vec::new(),
             diagnosis,
+            known: None,
         }
     }
 }

@@ -38,6 +38,7 @@ pub mod colour;
 mod curves;
 mod format;
 mod json;
+mod known;
 mod maps;
 mod raster;
 mod report;

@@ -1,6 +1,7 @@
 //! report.html: one file, no reference outside it, no script; well-formed as XML.
 
 use super::format::{about, decimals_of, fixed, percent, plain};
+use super::known;
 use super::maps::{height_maps, reduction_note, reliability_map};
 use super::results::{budgets, greatest_change, results};
 use super::sections::{Section, surface_section, tip_figure};
@@ -429,6 +430,8 @@ fn tip_facts(tip: &TipResult) -> Vec<(&'static str, String)> {
         }
     }
     rows.extend(tip_shape::facts(tip));
+    let both_ways = known::rows(tip).into_iter();
+    rows.extend(both_ways.map(|(name, text)| (name, escape(&minus(&text)))));
     rows.push((
         "Exercised depth",
         match tip.exercised_depth_nm {
@@ -490,7 +493,12 @@ fn cautions(html: &mut String, job: &Job, outcome: &Outcome) {
              wide; the interval allows for it as far as the budget says."
                 .to_owned(),
         ),
-        Some(TipFrom::Model | TipFrom::File | TipFrom::KnownShape) => items.push(
+        Some(TipFrom::KnownShape) => items.push(
+            "The tip comes from a scan of a shape taken as certified: errors of the certificate \
+             beyond its stated uncertainties are errors of the tip. A tip wears between scans."
+                .to_owned(),
+        ),
+        Some(TipFrom::Model | TipFrom::File) => items.push(
             "The tip was given. Nothing in this record proves that it is the tip that scanned; a tip \
              wears."
                 .to_owned(),

@@ -1,6 +1,7 @@
 //! Results as text for a terminal.
 
 use super::format::{Line, about, numbered_flags, numbers, percent, plain, tame, with_u};
+use super::known;
 use crate::job::{Job, Outcome, TipFrom, TipResult};
 use std::fmt::Write;
 
@@ -182,9 +183,11 @@ pub fn tip(tip: &TipResult) -> String {
     if let Some(estimate) = &tip.estimate {
         rows.push(("threshold", about(estimate.threshold_nm, "nm")));
     }
+    let both_ways = known::rows(tip);
+    rows.extend(both_ways.iter().map(|(name, text)| (*name, text.clone())));
     let mut text = String::new();
     for (name, value) in rows {
-        let _ = writeln!(text, "{name:9}  {value}");
+        let _ = writeln!(text, "{:9}  {value}", name.to_lowercase());
     }
     for finding in &tip.diagnosis {
         let _ = writeln!(text, "- {}", tame(finding));

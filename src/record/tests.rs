@@ -95,6 +95,7 @@ fn tip() -> TipResult {
         exercised_depth_nm: Some(20.0),
         height_u_nm: 0.2,
         sha256: None,
+        known: None,
         diagnosis: vec!["A finding <b>. Do this.".into()],
     }
 }

@@ -7,6 +7,7 @@
 pub mod area;
 pub mod blind;
 pub mod compare;
+pub mod known;
 pub mod model;
 pub mod outline;
 pub mod probe_shape;

@@ -159,6 +159,7 @@ fn tip_result(tip: crate::tip::Tip) -> TipResult {
         exercised_depth_nm: Some(29.0),
         height_u_nm: 0.3,
         sha256: None,
+        known: None,
         diagnosis: Vec::new(),
     }
 }
