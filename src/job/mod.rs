@@ -3,16 +3,19 @@
 
 mod demo;
 mod ghost;
+mod monte_carlo;
 mod spec;
 mod stages;
 #[cfg(test)]
 mod tests;
 mod worker;
 
+pub use crate::morphology::Reliability;
 pub use demo::{data_folder, demo};
 pub use ghost::{GhostTip, ghost_tip};
 pub use spec::{
-    Job, JobFile, LevelMethod, LevelSpec, ScanSpec, Threshold, TipFrom, TipShape, TipSpec,
+    Job, JobFile, LevelMethod, LevelSpec, MonteCarloSpec, ScanSpec, Threshold, TipFrom, TipShape,
+    TipSpec,
 };
-pub use stages::{Outcome, Reliability, Stages, SurfaceResult, TipOrReason, TipResult, open_tip};
+pub use stages::{Outcome, Stages, SurfaceResult, TipOrReason, TipResult, open_tip};
 pub use worker::Worker;

@@ -3,10 +3,12 @@
 //! Every trial draws from its own stream of the seed (ChaCha8; the stream's number is the trial's),
 //! so that the same seed gives the same bytes for any number of threads.
 
+use super::{Component, Distribution};
 use crate::error::{Error, ErrorKind, Result};
 use crate::progress::Progress;
-use rand::SeedableRng;
+use rand::{Rng, SeedableRng};
 use rand_chacha::ChaCha8Rng;
+use rand_distr::{StandardNormal, StudentT};
 use rayon::prelude::*;
 use std::sync::atomic::{AtomicUsize, Ordering};
 
@@ -240,11 +242,29 @@ impl Draws {
     }
 }
 
+impl Component {
+    /// One draw of the contribution to the result, about 0: the input's distribution (JCGM
+    /// 101:2008, 6.4) times the sensitivity. Normal with degrees of freedom: Student's t. A bound
+    /// on one side: from 0 to `sqrt 3 u`, all places equally likely.
+    pub fn draw(&self, random: &mut ChaCha8Rng) -> f64 {
+        let unit = match self.distribution {
+            Distribution::Normal => match self.degrees_of_freedom.map(StudentT::new) {
+                Some(Ok(student)) => random.sample(student),
+                _ => random.sample(StandardNormal),
+            },
+            Distribution::Rectangular => 3f64.sqrt() * (2.0 * random.random::<f64>() - 1.0),
+            Distribution::Triangular => {
+                6f64.sqrt() * (random.random::<f64>() - random.random::<f64>())
+            }
+            Distribution::OneSided => 3f64.sqrt() * random.random::<f64>(),
+        };
+        unit * self.u * self.sensitivity
+    }
+}
+
 #[cfg(test)]
 mod tests {
     use super::*;
-    use rand::Rng;
-    use rand_distr::StandardNormal;
 
     fn normal(settings: &Settings) -> Propagated {
         let trial = |random: &mut ChaCha8Rng, out: &mut [f64]| {
@@ -337,6 +357,32 @@ mod tests {
         assert!(rough.trials >= 20_000 && rough.trials < 2_000_000);
         let never = normal(&adaptive(4, 30_000));
         assert_eq!((never.converged, never.trials), (Some(false), 30_000));
+    }
+
+    /// Every distribution has its component's standard uncertainty, a bound its root mean square.
+    #[test]
+    fn components_are_drawn_with_their_uncertainty() {
+        for (distribution, freedom) in [
+            (Distribution::Normal, None),
+            (Distribution::Rectangular, None),
+            (Distribution::Triangular, None),
+            (Distribution::OneSided, None),
+        ] {
+            let component = Component {
+                source: String::new(),
+                u: 0.5,
+                distribution,
+                sensitivity: -3.0,
+                degrees_of_freedom: freedom,
+            };
+            let trial = |random: &mut ChaCha8Rng, out: &mut [f64]| {
+                out[0] = component.draw(random).powi(2);
+                Ok(())
+            };
+            let all = propagate(&FIXED, 1, trial, &Progress::new()).unwrap();
+            let rms = all.outputs[0].mean().sqrt();
+            assert!((rms / 1.5 - 1.0).abs() < 0.03, "{distribution:?}: {rms}");
+        }
     }
 
     #[test]
