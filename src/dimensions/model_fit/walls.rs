@@ -180,6 +180,8 @@ struct Fitter<'a> {
     form: Form,
     data: &'a Data,
     tip: Silhouette,
+    /// Pixel pitch across, nm.
+    pixel: f64,
 }
 
 impl Fitter<'_> {
@@ -229,13 +231,20 @@ impl Fitter<'_> {
 
     /// The fit with parameter `i` held at `value`.
     fn held(&self, from: &Solved, i: usize, value: f64) -> Option<Solved> {
+        self.all_held(from, &[(i, value)])
+    }
+
+    /// The fit with several parameters held.
+    fn all_held(&self, from: &Solved, held: &[(usize, f64)]) -> Option<Solved> {
         let mut start = from.all;
-        start[i] = value;
-        let free: Vec<usize> = from.free.iter().copied().filter(|&k| k != i).collect();
+        held.iter().for_each(|&(i, value)| start[i] = value);
+        let loose = |k: &usize| held.iter().all(|h| h.0 != *k);
+        let free: Vec<usize> = from.free.iter().copied().filter(loose).collect();
         self.solve(&start, &free)
     }
 
-    /// The fit, corner radii added where they make it better than by chance.
+    /// The fit, corner radii added where they make it better than by chance and are larger than two
+    /// pixels: smaller ones are not told from the course of the tip between its cells.
     fn best(&self, start: &Parameters, radius: f64) -> Option<Solved> {
         let mut free = self.form.free();
         let mut best = self.solve(start, &free)?;
@@ -244,7 +253,12 @@ impl Fitter<'_> {
             tried[corner] = first;
             free.push(corner);
             match self.solve(&tried, &free) {
-                Some(s) if best.squares - s.squares > COMPATIBLE * best.variance() => best = s,
+                Some(s)
+                    if best.squares - s.squares > COMPATIBLE * best.variance()
+                        && s.all[corner] > 2.0 * self.pixel =>
+                {
+                    best = s;
+                }
                 _ => {
                     free.pop();
                 }
@@ -340,6 +354,7 @@ pub(super) fn fit(
         form,
         data: &data,
         tip: tip.clone(),
+        pixel: frame.pitch,
     };
     if let Some(first) = rough.solve(&start, &form.free()) {
         let section = rough.section(&first.all);
@@ -349,6 +364,7 @@ pub(super) fn fit(
         form,
         data: &data,
         tip,
+        pixel: frame.pitch,
     };
     let radius = corner_start(corrected, frame.axis);
     let Some(best) = fitter.best(&start, radius) else {
@@ -369,6 +385,7 @@ pub(super) fn fit(
                 form,
                 data: &data,
                 tip: Silhouette::of(tip, frame.axis, Between::Curved),
+                pixel: frame.pitch,
             };
             Some(with.solve(&best.all, &best.free)?.all)
         })
@@ -377,6 +394,7 @@ pub(super) fn fit(
         form,
         data: &data,
         tip: straight,
+        pixel: frame.pitch,
     };
     let report = Report {
         straight: straight.solve(&best.all, &best.free).map(|s| s.all),
@@ -687,6 +705,7 @@ impl Hidden {
                 None,
             ));
         }
+        let (mut steepest, mut least_steep) = (Vec::new(), Vec::new());
         for &run in fitter.form.runs() {
             // Near the flank the course of the tip between its cells decides more than the wall.
             let side = usize::from(run == RUN[1]);
@@ -694,11 +713,11 @@ impl Hidden {
             let steep = best.all[run] <= 1.1 * flank * best.all[HEIGHT];
             let fits = |s: &Solved| steep || s.squares <= limit;
             let upright = fitter.held(best, run, 0.0).filter(fits);
-            if let Some(upright) = upright {
+            if upright.is_some() {
                 let step = (0.05 * best.all[HEIGHT]).max(0.2);
                 let flattest = fitter.largest(best, run, step);
-                hidden.ends.push(upright.all);
-                hidden.ends.extend(flattest.as_ref().map(|s| s.all));
+                steepest.push((run, 0.0));
+                least_steep.extend(flattest.as_ref().map(|s| (run, s.all[run])));
                 hidden.reasons.push((
                     run,
                     "a vertical wall gives the same scan: the wall is as steep as the tip's flank \
@@ -714,8 +733,17 @@ impl Hidden {
                 ));
             }
         }
+        // All hidden walls at once: what they leave open adds up.
+        if !steepest.is_empty() {
+            let ends = [&steepest, &least_steep].map(|held| fitter.all_held(best, held));
+            hidden.ends.extend(ends.iter().flatten().map(|s| s.all));
+        }
         for (corner, reason) in [
-            (UPPER, "a sharp upper corner gives the same scan"),
+            (
+                UPPER,
+                "a sharp upper corner gives the same scan, or one that differs by less than two pixels \
+                 of radius",
+            ),
             (
                 LOWER,
                 "a sharp lower corner gives the same scan: the tip is blunter than it",
@@ -876,7 +904,13 @@ impl Report<'_> {
                 .iter()
                 .find_map(|&run| self.hidden.reason(run).map(|r| r.1.clone()));
             let bounds = fitted.high.zip(fitted.low);
-            let wide = bounds.is_some_and(|(h, l)| h - l > 4.0 * fitted.u.unwrap_or(0.0));
+            let widths = || {
+                let ends = self.hidden.ends.iter();
+                ends.map(|p| self.form.width(p, fraction))
+            };
+            let most = widths().fold(f64::NEG_INFINITY, f64::max);
+            let least = widths().fold(f64::INFINITY, f64::min);
+            let wide = bounds.is_some_and(|(high, low)| most - least > (high - low) / 2.0);
             // Near the corner that was touched the hidden slope hardly matters.
             if !wide {
                 fitted.value = bounds.map(|(h, l)| (h + l) / 2.0);
