@@ -9,7 +9,10 @@
 //! Sources: fitting a scanned model by least squares, common practice; covariance: JCGM 100:2008,
 //! H.3 and 5.2.2; confidence limits by the profile of the sum of squares: common practice.
 
+mod average;
+mod form;
 mod profile;
+mod report;
 mod sphere;
 #[cfg(test)]
 mod tests;

@@ -362,7 +362,7 @@ mod tests {
         };
         let (curved, straight) = (worst(Between::Curved), worst(Between::Straight));
         assert!(
-            curved < 0.1 && straight > 2.0 * curved,
+            curved < 0.12 && straight > 1.5 * curved,
             "{curved} {straight}"
         );
     }
