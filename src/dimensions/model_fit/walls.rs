@@ -127,15 +127,10 @@ impl Fitter<'_> {
         let fits = |value: f64| self.held(best, i, value).filter(|s| s.squares <= limit);
         let mut low = best.clone();
         let (mut at, mut reach) = (best.all[i], step);
-        loop {
-            match fits(at + reach) {
-                Some(s) => {
-                    at += reach;
-                    low = s;
-                    reach *= 2.0;
-                }
-                None => break,
-            }
+        while let Some(s) = fits(at + reach) {
+            at += reach;
+            low = s;
+            reach *= 2.0;
             if reach > 64.0 * step {
                 // It fits however large it is.
                 return None;
