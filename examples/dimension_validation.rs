@@ -5,11 +5,14 @@
 //!
 //! Prints a table: error as scanned, error corrected (mean and root mean square), share of results
 //! called touched, share of intervals low..high that hold the truth, median width of the interval.
-//! `--speed` times 64 lines instead. With `--short` it takes few scans and ends with status 1 when a figure is far off.
+//! `--model-fit` tells how well the model fit holds instead: mean and root mean square of its error,
+//! coverage and median width of its interval, share of values that it does not determine, share of
+//! contradictions with the corrected value. `--speed` times 64 lines instead. With `--short` it takes few scans and ends with status 1 when a figure is far off.
 
 use std::process::ExitCode;
 use truewidth::dimensions::{
     Calibration, Corrected, Dimension, Find, Input, Kind, Request, Status, find, measure,
+    second_opinion,
 };
 use truewidth::heightmap::{HeightMap, Pitch, Region};
 use truewidth::progress::Progress;
@@ -176,7 +179,7 @@ fn scene(
 }
 
 /// Scans, levels, corrects and measures; the result line and the truth.
-fn one(case: &Case, seed: u64) -> Result<(Vec<Dimension>, f64)> {
+fn one(case: &Case, seed: u64, model_fit: bool) -> Result<(Vec<Dimension>, f64)> {
     let progress = Progress::new();
     let mut random = Random(seed);
     let (surface, [rows, columns], truth) = scene(case, &mut random, seed)?;
@@ -235,7 +238,10 @@ fn one(case: &Case, seed: u64) -> Result<(Vec<Dimension>, f64)> {
             contains_feature_radius: false,
         }),
     };
-    let lines = measure(&input, &truth.request, &progress)?;
+    let mut lines = measure(&input, &truth.request, &progress)?;
+    if model_fit {
+        second_opinion(&input, &truth.request, None, &mut lines, &progress)?;
+    }
     let lines = match case.kind {
         Scene::ParticleHeight => pick(lines, "height"),
         Scene::ParticleDiameter => pick(lines, "diameter"),
@@ -284,6 +290,63 @@ impl Tally {
             self.widths.push(high - low);
             self.covered += usize::from((low..=high).contains(&truth));
         }
+    }
+}
+
+/// What the model fits gave for one row of the table.
+#[derive(Default)]
+struct FitTally {
+    errors: Vec<f64>,
+    widths: Vec<f64>,
+    misfits: Vec<f64>,
+    covered: usize,
+    open: usize,
+    contradicted: usize,
+    lost: Vec<String>,
+}
+
+impl FitTally {
+    fn add(&mut self, line: Option<&Dimension>, truth: f64) {
+        let fit = line.and_then(|l| l.evidence.model_fit.as_ref());
+        let Some(value) = fit.and_then(|f| f.value.as_ref()) else {
+            self.lost.extend(fit.and_then(|f| f.reason.clone()));
+            return;
+        };
+        self.errors.extend(value.value.map(|v| v - truth));
+        self.open += usize::from(value.value.is_none());
+        self.misfits.extend(fit.and_then(|f| f.misfit));
+        self.contradicted += usize::from(fit.is_some_and(|f| f.agrees == Some(false)));
+        let (low, high) = (
+            value.low.unwrap_or(f64::NEG_INFINITY),
+            value.high.unwrap_or(f64::INFINITY),
+        );
+        self.widths.push(high - low);
+        self.covered += usize::from((low..=high).contains(&truth));
+    }
+
+    fn print(&self, case: &Case) {
+        let all = self.widths.len();
+        let share = |n: usize| 100.0 * n as f64 / all.max(1) as f64;
+        println!(
+            "| {} | {} nm, {} deg | {} deg | {} nm | {all} | {:+.3} | {:.3} | {:.0} % | {:.2} | {:.0} % | {:.0} % | {:.2} |{}",
+            case.name,
+            case.tip.0,
+            case.tip.1,
+            case.wall_deg,
+            case.noise_nm,
+            mean(&self.errors),
+            rms(&self.errors),
+            share(self.covered),
+            median(&self.widths),
+            share(self.open),
+            share(self.contradicted),
+            median(&self.misfits),
+            if self.lost.is_empty() {
+                String::new()
+            } else {
+                format!(" lost {}: {}", self.lost.len(), self.lost[0])
+            }
+        );
     }
 }
 
@@ -421,6 +484,13 @@ fn speed() -> Result<()> {
     Ok(())
 }
 
+fn heading() {
+    println!(
+        "| measurand | tip R, half-angle | wall | noise | n | scanned | corrected | rms | touched | coverage | interval |"
+    );
+    println!("|---|---|---|---|---|---|---|---|---|---|---|");
+}
+
 fn main() -> ExitCode {
     let arguments: Vec<String> = std::env::args().skip(1).collect();
     let number = |name: &str| {
@@ -432,10 +502,15 @@ fn main() -> ExitCode {
     let first = number("--seed").unwrap_or(1);
     let only = number("--only");
     let verbose = arguments.iter().any(|a| a == "--verbose");
-    println!(
-        "| measurand | tip R, half-angle | wall | noise | n | scanned | corrected | rms | touched | coverage | interval |"
-    );
-    println!("|---|---|---|---|---|---|---|---|---|---|---|");
+    let model_fit = arguments.iter().any(|a| a == "--model-fit");
+    if model_fit {
+        println!(
+            "| measurand | tip R, half-angle | wall | noise | n | error | rms | coverage | interval | not determined | contradicts | misfit |"
+        );
+        println!("|---|---|---|---|---|---|---|---|---|---|---|---|");
+    } else {
+        heading();
+    }
     let mut failed = false;
     if arguments.iter().any(|a| a == "--speed") {
         return match speed() {
@@ -451,12 +526,14 @@ fn main() -> ExitCode {
             continue;
         }
         let mut tally = Tally::default();
+        let mut fits = FitTally::default();
         for i in 0..count {
-            match one(case, 1000 * first + 7919 * index as u64 + i) {
+            match one(case, 1000 * first + 7919 * index as u64 + i, model_fit) {
                 Ok((lines, truth)) => {
                     if verbose {
                         eprintln!("truth {truth:.3}: {lines:#?}");
                     }
+                    fits.add(lines.first(), truth);
                     tally.add(lines.first(), truth);
                 }
                 Err(error) => {
@@ -464,6 +541,10 @@ fn main() -> ExitCode {
                     failed = true;
                 }
             }
+        }
+        if model_fit {
+            fits.print(case);
+            continue;
         }
         let share = |n: usize, of: usize| 100.0 * n as f64 / of.max(1) as f64;
         let coverage = share(tally.covered, tally.intervals);

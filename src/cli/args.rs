@@ -78,6 +78,9 @@ pub enum Command {
         /// Jobs run at the same time.
         #[arg(long, value_name = "N", default_value_t = 1, value_parser = clap::value_parser!(u16).range(1..))]
         workers: u16,
+        /// Draw the whole chain N times (100 or more) for a second interval beside each budget's.
+        #[arg(long, value_name = "N")]
+        monte_carlo: Option<usize>,
     },
     /// Say what a file holds: format, size, pitch, unit, height range, voids, noise, SHA-256.
     Inspect {

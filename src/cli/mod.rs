@@ -46,8 +46,13 @@ pub fn execute(cli: &Cli) -> ExitCode {
 
 fn headless(command: &Command, common: &Common, show: &Show) -> Result<u8> {
     match command {
-        Command::Run { jobs, out, workers } => {
-            let failed = run::run_all(jobs, out, *workers, common, show)?;
+        Command::Run {
+            jobs,
+            out,
+            workers,
+            monte_carlo,
+        } => {
+            let failed = run::run_all(jobs, out, *workers, *monte_carlo, common, show)?;
             if failed > 0 {
                 show.note(&format!("{failed} of {} jobs failed", jobs.len()));
                 return Ok(INPUT_FAILED);

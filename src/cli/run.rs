@@ -3,7 +3,7 @@
 use super::args::Common;
 use super::show::Show;
 use crate::error::{Error, ErrorKind, Result};
-use crate::job::{Job, Stages};
+use crate::job::{Job, MonteCarloSpec, Stages};
 use crate::progress::Progress;
 use crate::record;
 use crate::units::Length;
@@ -13,13 +13,15 @@ use std::path::{Path, PathBuf};
 use std::sync::Mutex;
 use std::sync::atomic::{AtomicUsize, Ordering};
 
-/// Runs all `jobs`, `workers` at a time; returns how many failed.
+/// Runs all `jobs`, `workers` at a time, with so many Monte Carlo trials where they are asked for;
+/// returns how many failed.
 ///
 /// Errors of kind `Setting`, before anything runs, when two jobs would write to the same folder.
 pub fn run_all(
     jobs: &[PathBuf],
     out: &Path,
     workers: u16,
+    monte_carlo: Option<usize>,
     common: &Common,
     show: &Show,
 ) -> Result<usize> {
@@ -38,7 +40,13 @@ pub fn run_all(
                     };
                     let name = path.file_name().unwrap_or_default().to_string_lossy();
                     let result = show.during(&name, |progress| {
-                        run_job(&open_job(path, common)?, folder, progress)
+                        let mut job = open_job(path, common)?;
+                        if let Some(trials) = monte_carlo {
+                            let stated = job.file.monte_carlo;
+                            let spec = stated.unwrap_or(MonteCarloSpec::new(trials));
+                            job.file.monte_carlo = Some(MonteCarloSpec { trials, ..spec });
+                        }
+                        run_job(&job, folder, progress)
                     });
                     let text = match result {
                         Ok(table) => table,

@@ -1,8 +1,10 @@
 //! Dimensions, as scanned and corrected. One small file per kind of measurand.
 
 mod erosion;
+mod evidence;
 mod find;
 mod line_width;
+mod model_fit;
 mod particle;
 mod pitch;
 mod sections;
@@ -14,7 +16,9 @@ mod tests;
 mod texture;
 mod wall;
 
+pub use evidence::{Evidence, MonteCarlo};
 pub use find::{Find, find};
+pub use model_fit::{Fitted, ModelFit, second_opinion};
 
 use crate::error::Result;
 use crate::heightmap::{HeightMap, Region};
@@ -179,6 +183,8 @@ pub struct Dimension {
     pub flags: Vec<String>,
     /// The budget of the corrected value (of the as-scanned one where there is no other).
     pub budget: Vec<Component>,
+    /// Second opinions and reliability, added after the measurement.
+    pub evidence: Evidence,
     /// What it assumes and the published source, one line.
     pub assumptions: &'static str,
     /// Where it was taken, for drawing: segments `[x1, y1, x2, y2]` in nm on the map.
@@ -221,6 +227,7 @@ fn answer(
         status: None,
         flags: Vec::new(),
         budget: Vec::new(),
+        evidence: Evidence::default(),
         assumptions,
         marks: Vec::new(),
     }

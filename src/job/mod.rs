@@ -4,6 +4,7 @@
 mod demo;
 mod ghost;
 mod known;
+mod monte_carlo;
 mod spec;
 mod stages;
 #[cfg(test)]
@@ -11,12 +12,14 @@ mod tests;
 mod tips;
 mod worker;
 
+pub use crate::morphology::Reliability;
 pub use demo::{data_folder, demo};
 pub use ghost::{GhostTip, ghost_tip};
 pub use known::{KnownShape, KnownSpec, Way};
 pub use spec::{
-    Job, JobFile, LevelMethod, LevelSpec, ScanSpec, Threshold, TipFrom, TipShape, TipSpec,
+    Job, JobFile, LevelMethod, LevelSpec, MonteCarloSpec, ScanSpec, Threshold, TipFrom, TipShape,
+    TipSpec,
 };
-pub use stages::{Outcome, Reliability, Stages, SurfaceResult, TipOrReason, TipResult, open_tip};
+pub use stages::{Outcome, Stages, SurfaceResult, TipOrReason, TipResult, open_tip};
 pub use tips::{ShapeFigures, compare_tips, open_any_tip, plan, shape_figures};
 pub use worker::Worker;

@@ -18,6 +18,9 @@ pub struct JobFile {
     /// Title for the report; may be empty.
     #[serde(default)]
     pub title: String,
+    /// Whether a model is fitted beside each dimension as a second opinion.
+    #[serde(default = "yes", skip_serializing_if = "is_yes")]
+    pub model_fit: bool,
     /// The scan.
     pub scan: ScanSpec,
     /// How to level it.
@@ -29,9 +32,56 @@ pub struct JobFile {
     /// Relative standard uncertainties of the axes; absent = not stated (flagged in the results).
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub calibration: Option<Calibration>,
+    /// Draws of the whole chain; absent = none are made.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub monte_carlo: Option<MonteCarloSpec>,
     /// What to measure.
     #[serde(default, rename = "dimension", skip_serializing_if = "Vec::is_empty")]
     pub dimensions: Vec<Request>,
+}
+
+fn yes() -> bool {
+    true
+}
+
+fn is_yes(value: &bool) -> bool {
+    *value
+}
+
+/// `[monte-carlo]`
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case", deny_unknown_fields)]
+pub struct MonteCarloSpec {
+    /// How often the chain is drawn, 100 to 1000000.
+    pub trials: usize,
+    /// Seed of all draws (default 1).
+    #[serde(default = "first_seed")]
+    pub seed: u64,
+}
+
+fn first_seed() -> u64 {
+    1
+}
+
+impl MonteCarloSpec {
+    /// So many trials with the default seed.
+    pub fn new(trials: usize) -> Self {
+        Self {
+            trials,
+            seed: first_seed(),
+        }
+    }
+
+    fn validate(&self) -> Result<()> {
+        if (100..=1_000_000).contains(&self.trials) {
+            return Ok(());
+        }
+        Err(Error::new(
+            ErrorKind::Setting,
+            format!("[monte-carlo] trials = {}", self.trials),
+        )
+        .remedy("Give from 100 trials (a rough interval) to 1000000"))
+    }
 }
 
 /// `[scan]`
@@ -210,6 +260,7 @@ impl JobFile {
     pub fn on_scan(file: impl Into<PathBuf>) -> Self {
         Self {
             title: String::new(),
+            model_fit: true,
             scan: ScanSpec {
                 file: file.into(),
                 ..ScanSpec::default()
@@ -217,6 +268,7 @@ impl JobFile {
             level: LevelSpec::default(),
             tip: TipSpec::default(),
             calibration: None,
+            monte_carlo: None,
             dimensions: Vec::new(),
         }
     }
@@ -248,6 +300,9 @@ impl JobFile {
         self.scan.open_options()?;
         self.level.settings()?;
         self.tip.validate()?;
+        if let Some(monte_carlo) = &self.monte_carlo {
+            monte_carlo.validate()?;
+        }
         if let Some(calibration) = self.calibration {
             for (axis, u) in [
                 ("x", calibration.x),

@@ -1,19 +1,20 @@
 //! The ordered stages, each computed anew only when a setting or an earlier stage changed.
 
 use super::known::{Way, tip_from_known};
-use super::spec::{Job, JobFile, LevelSpec, ScanSpec, TipFrom, TipSpec};
+use super::monte_carlo;
+use super::spec::{Job, JobFile, LevelSpec, MonteCarloSpec, ScanSpec, TipFrom, TipSpec};
 use crate::dimensions::{self, Calibration, Corrected, Dimension, Input, Request};
 use crate::error::{Error, ErrorKind, Result};
 use crate::files;
 use crate::heightmap::HeightMap;
 use crate::leveling::{self, Leveled};
-use crate::morphology::{self, certainty};
+use crate::morphology::{self, Reliability};
 use crate::progress::Progress;
 use crate::tip::blind::{self, Estimate};
 use crate::tip::known::Known;
 use crate::tip::read_out::{ReadOut, read_out};
 use crate::tip::{Band, Tip};
-use ndarray::Array2;
+use ndarray::{Array2, s};
 use std::panic::{AssertUnwindSafe, catch_unwind};
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
@@ -54,7 +55,7 @@ pub struct SurfaceResult {
     pub upper: Option<HeightMap>,
     /// Reconstruction with the blunter tip of the band.
     pub lower: Option<HeightMap>,
-    /// Certainty, see [`certainty`].
+    /// Certainty, see [`morphology::certainty`].
     pub certainty: Array2<u8>,
     /// Pixels that lean on the edge of the scan or on voids.
     pub edge_leaning: Array2<bool>,
@@ -62,17 +63,6 @@ pub struct SurfaceResult {
     pub tolerance_nm: f64,
     /// Fractions of the non-void pixels.
     pub reliability: Reliability,
-}
-
-/// Fractions of the non-void surface pixels.
-#[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
-pub struct Reliability {
-    /// Touched for certain.
-    pub touched: f64,
-    /// Contacts only together with others.
-    pub bounded: f64,
-    /// Never a contact.
-    pub never: f64,
 }
 
 /// What the stages have given so far; cheap to clone.
@@ -149,7 +139,10 @@ type DimensionsKey = (
     Option<Same<SurfaceResult>>,
     Option<Calibration>,
     Vec<Request>,
+    bool,
 );
+/// Beside the dimensions, which hang on all before them, what the draws themselves need.
+type MonteCarloKey = (Same<Vec<Dimension>>, LevelSpec, MonteCarloSpec);
 
 /// Runs jobs and keeps what each stage gave for the next run.
 #[derive(Debug, Default)]
@@ -159,6 +152,7 @@ pub struct Stages {
     tip: Kept<TipKey, TipOrReason>,
     surface: Kept<SurfaceKey, SurfaceResult>,
     dimensions: Kept<DimensionsKey, Vec<Dimension>>,
+    monte_carlo: Kept<MonteCarloKey, Vec<Dimension>>,
 }
 
 impl Stages {
@@ -240,12 +234,23 @@ impl Stages {
             outcome.surface.clone().map(Same),
             spec.calibration,
             spec.dimensions.clone(),
+            spec.model_fit,
         );
-        let part = progress.part(0.9, 1.0);
-        outcome.dimensions = Some(
-            self.dimensions
-                .get(key, || measure(&level, &outcome, spec, &part))?,
-        );
+        let until = if spec.monte_carlo.is_some() { 0.92 } else { 1.0 };
+        let part = progress.part(0.9, until);
+        let measured = self
+            .dimensions
+            .get(key, || measure(&level, &outcome, spec, &part))?;
+        outcome.dimensions = Some(Arc::clone(&measured));
+        if let Some(drawn) = spec.monte_carlo {
+            watch(&outcome);
+            progress.say("drawing the whole chain");
+            let key = (Same(Arc::clone(&measured)), spec.level.clone(), drawn);
+            let part = progress.part(until, 1.0);
+            outcome.dimensions = Some(self.monte_carlo.get(key, || {
+                monte_carlo::draw(&level, &outcome, spec, &drawn, &measured, &part)
+            })?);
+        }
         if spec.calibration.is_none() && !spec.dimensions.is_empty() {
             outcome.warnings.push(
                 "No calibration uncertainty was stated for the axes, so none is in the budgets. \
@@ -534,13 +539,7 @@ fn reconstruct(level: &Leveled, found: &TipResult, progress: &Progress) -> Resul
         ),
         None => (None, None),
     };
-    let count = |value: u8| certainty.iter().filter(|&&c| c == value).count() as f64;
-    let all = (certainty.len() as f64 - count(certainty::VOID)).max(1.0);
-    let reliability = Reliability {
-        touched: count(certainty::TOUCHED) / all,
-        bounded: count(certainty::BOUNDED) / all,
-        never: count(certainty::NEVER) / all,
-    };
+    let reliability = Reliability::of(certainty.view());
     Ok(SurfaceResult {
         surface: level
             .map
@@ -554,13 +553,8 @@ fn reconstruct(level: &Leveled, found: &TipResult, progress: &Progress) -> Resul
     })
 }
 
-fn measure(
-    level: &Leveled,
-    outcome: &Outcome,
-    spec: &JobFile,
-    progress: &Progress,
-) -> Result<Vec<Dimension>> {
-    let requests = &spec.dimensions;
+/// What the measurands may look at.
+pub(super) fn input<'a>(level: &'a Leveled, outcome: &'a Outcome, spec: &JobFile) -> Input<'a> {
     let corrected = match (&outcome.tip, &outcome.surface) {
         (Some(tip), Some(surface)) => Some(Corrected {
             tip: &tip.tip,
@@ -578,20 +572,57 @@ fn measure(
         }),
         _ => None,
     };
-    let input = Input {
+    Input {
         scan: &level.map,
         noise_nm: level.noise_nm,
         calibration: spec.calibration.unwrap_or_default(),
         corrected,
-    };
+    }
+}
+
+/// Measures one request, errors with its name.
+pub(super) fn measure_one(
+    input: &Input,
+    request: &Request,
+    progress: &Progress,
+) -> Result<Vec<Dimension>> {
+    dimensions::measure(input, request, progress)
+        .map_err(|e| e.context(format!("dimension \"{}\"", request.name)))
+}
+
+fn measure(
+    level: &Leveled,
+    outcome: &Outcome,
+    spec: &JobFile,
+    progress: &Progress,
+) -> Result<Vec<Dimension>> {
+    let requests = &spec.dimensions;
+    let input = input(level, outcome, spec);
+    let band = outcome.tip.as_ref().and_then(|tip| tip.band.as_ref());
     let mut lines = Vec::new();
     for (i, request) in requests.iter().enumerate() {
         progress.check()?;
         let n = requests.len() as f32;
         let part = progress.part(i as f32 / n, (i + 1) as f32 / n);
-        let measured = dimensions::measure(&input, request, &part)
-            .map_err(|e| e.context(format!("dimension \"{}\"", request.name)))?;
+        let mut measured = measure_one(&input, request, &part)?;
+        if let Some(corrected) = &input.corrected {
+            let reliability = reliability(&input, corrected, request)?;
+            for line in &mut measured {
+                line.evidence.reliability = Some(reliability);
+            }
+        }
+        if spec.model_fit {
+            dimensions::second_opinion(&input, request, band, &mut measured, &part)?;
+        }
         lines.extend(measured);
     }
     Ok(lines)
+}
+
+/// What the tip touched of the request's region.
+fn reliability(input: &Input, corrected: &Corrected, request: &Request) -> Result<Reliability> {
+    let whole = request.region.unwrap_or_else(|| input.scan.whole());
+    let p = whole.pixels(input.scan)?;
+    let part = s![p.row..p.row + p.rows, p.column..p.column + p.columns];
+    Ok(Reliability::of(corrected.certainty.slice(part)))
 }

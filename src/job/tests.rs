@@ -270,3 +270,67 @@ fn a_tip_from_a_separate_scan_is_on_the_jobs_grid_and_made_anew_when_that_scan_c
     let text = job.file.to_toml().unwrap();
     assert_eq!(JobFile::from_toml(&text).unwrap(), job.file);
 }
+
+/// The ridge with white noise: what the chain draws of a step height is what its budget says.
+#[test]
+fn draws_of_the_whole_chain_agree_with_the_budget_and_repeat() {
+    use rand::{Rng, SeedableRng};
+    let folder = tempfile::tempdir().unwrap();
+    let mut job = ridge(folder.path());
+    let mut random = rand_chacha::ChaCha8Rng::seed_from_u64(4);
+    let map = HeightMap::from_fn(48, 96, Pitch::square(2.0), |x, _| {
+        let noise: f64 = random.sample(rand_distr::StandardNormal);
+        let ridge = if (60.0..130.0).contains(&x) {
+            20.0
+        } else {
+            0.0
+        };
+        ridge + 0.2 * noise
+    });
+    files::write(&folder.path().join("ridge.tiff"), &map.unwrap()).unwrap();
+    job.file.tip.uncertainty = Some(Length::from_nm(0.3));
+    job.file.monte_carlo = Some(MonteCarloSpec::new(200));
+    let outcome = run(&mut Stages::default(), &job);
+    let dimensions = outcome.dimensions.unwrap();
+    let drawn = dimensions[0].evidence.monte_carlo.clone().unwrap();
+    assert_eq!((drawn.trials, drawn.count), (200, 200));
+    assert!(drawn.low < 20.0 && 20.0 < drawn.high, "{drawn:?}");
+    // Both intervals are a few hundredths of a nanometre wide about the same value.
+    let budget = dimensions[0].corrected.unwrap();
+    for (ends, other) in [(drawn.low, budget.low), (drawn.high, budget.high)] {
+        assert!((ends - other.unwrap()).abs() < 0.05, "{drawn:?} {budget:?}");
+    }
+    assert!(drawn.agrees.is_some() && (0.003..0.1).contains(&drawn.u));
+    let again = run(&mut Stages::default(), &job).dimensions.unwrap();
+    assert_eq!(again[0].evidence.monte_carlo, Some(drawn.clone()));
+    job.file.monte_carlo = Some(MonteCarloSpec {
+        trials: 200,
+        seed: 2,
+    });
+    let other = run(&mut Stages::default(), &job).dimensions.unwrap();
+    assert_ne!(other[0].evidence.monte_carlo, Some(drawn));
+    let reliability = dimensions[0].evidence.reliability.unwrap();
+    let whole = reliability.touched + reliability.bounded + reliability.never;
+    assert!((whole - 1.0).abs() < 1e-9);
+}
+
+#[test]
+fn monte_carlo_and_model_fit_in_the_job_file() {
+    let text = CONTRACT.replace(
+        "[level]",
+        "[monte-carlo]\ntrials = 400\nseed = 9\n\n[level]",
+    );
+    let text = text.replace("[scan]", "model-fit = false\n\n[scan]");
+    let job = JobFile::from_toml(&text).unwrap();
+    assert_eq!(
+        job.monte_carlo,
+        Some(MonteCarloSpec {
+            trials: 400,
+            seed: 9
+        })
+    );
+    assert!(!job.model_fit && JobFile::from_toml(CONTRACT).unwrap().model_fit);
+    assert_eq!(JobFile::from_toml(&job.to_toml().unwrap()).unwrap(), job);
+    let few = JobFile::from_toml(&text.replace("400", "4")).unwrap_err();
+    assert!(few.to_string().contains("trials = 4"), "{few}");
+}

@@ -253,5 +253,6 @@ impl Polynomial {
     }
 }
 
+pub(crate) mod nonlinear;
 #[cfg(test)]
 mod tests;

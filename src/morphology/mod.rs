@@ -205,6 +205,30 @@ pub mod certainty {
     pub const VOID: u8 = 255;
 }
 
+/// Fractions of the non-void surface pixels.
+#[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
+pub struct Reliability {
+    /// Touched for certain.
+    pub touched: f64,
+    /// Contacts only together with others.
+    pub bounded: f64,
+    /// Never a contact.
+    pub never: f64,
+}
+
+impl Reliability {
+    /// Of a [`certainty_map`] or a part of it; all 0 where every pixel is void.
+    pub fn of(certainty: ArrayView2<u8>) -> Self {
+        let count = |value: u8| certainty.iter().filter(|&&c| c == value).count() as f64;
+        let all = (certainty.len() as f64 - count(certainty::VOID)).max(1.0);
+        Self {
+            touched: count(certainty::TOUCHED) / all,
+            bounded: count(certainty::BOUNDED) / all,
+            never: count(certainty::NEVER) / all,
+        }
+    }
+}
+
 /// Which surface pixels the tip touched. `surface` is the erosion of `scan` by `tip`.
 ///
 /// A scan pixel `x` can touch the surface pixels `x + u` with

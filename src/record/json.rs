@@ -7,7 +7,7 @@
 
 use super::format::tame;
 use super::known::KnownPart;
-use crate::dimensions::{Dimension, Kind, Status};
+use crate::dimensions::{Dimension, Fitted, Kind, ModelFit, MonteCarlo, Status};
 use crate::heightmap::HeightMap;
 use crate::job::{
     Job, Outcome, Reliability, ShapeFigures, SurfaceResult, TipFrom, TipResult, shape_figures,
@@ -155,6 +155,9 @@ struct DimensionPart {
     as_scanned: Option<ScannedPart>,
     corrected: Option<CorrectedPart>,
     status: Option<Status>,
+    reliability: Option<Reliability>,
+    model_fit: Option<ModelFit>,
+    monte_carlo: Option<MonteCarlo>,
     flags: Vec<String>,
     budget: Vec<ComponentPart>,
     assumptions: String,
@@ -241,7 +244,7 @@ impl ResultFile {
             level: outcome.level.as_deref().map(|level| level_part(job, level)),
             tip: TipPart::of(job, outcome),
             surface: outcome.surface.as_deref().map(surface_part),
-            reliability: outcome.surface.as_deref().and_then(reliability),
+            reliability: outcome.surface.as_deref().map(|s| rounded(s.reliability)),
             dimensions: outcome
                 .dimensions
                 .iter()
@@ -434,12 +437,47 @@ fn surface_part(surface: &SurfaceResult) -> SurfacePart {
     }
 }
 
-fn reliability(surface: &SurfaceResult) -> Option<Reliability> {
-    let r = surface.reliability;
-    Some(Reliability {
-        touched: number(r.touched)?,
-        bounded: number(r.bounded)?,
-        never: number(r.never)?,
+fn rounded(r: Reliability) -> Reliability {
+    // Fractions are finite.
+    let round = |x: f64| number(x).unwrap_or(0.0);
+    Reliability {
+        touched: round(r.touched),
+        bounded: round(r.bounded),
+        never: round(r.never),
+    }
+}
+
+fn fitted_part(fitted: &Fitted) -> Fitted {
+    let place = |x: Option<f64>| x.and_then(|x| measured(x, fitted.u));
+    Fitted {
+        value: place(fitted.value),
+        u: fitted.u.and_then(number),
+        low: place(fitted.low),
+        high: place(fitted.high),
+        ..fitted.clone()
+    }
+}
+
+fn model_fit_part(fit: &ModelFit) -> ModelFit {
+    ModelFit {
+        value: fit.value.as_ref().map(fitted_part),
+        parameters: fit.parameters.iter().map(fitted_part).collect(),
+        misfit: fit.misfit.and_then(number),
+        ..fit.clone()
+    }
+}
+
+fn monte_carlo_part(drawn: &MonteCarlo) -> Option<MonteCarlo> {
+    let place = |x: f64| measured(x, Some(drawn.u));
+    Some(MonteCarlo {
+        mean: place(drawn.mean)?,
+        u: number(drawn.u)?,
+        low: place(drawn.low)?,
+        high: place(drawn.high)?,
+        shortest_low: place(drawn.shortest_low)?,
+        shortest_high: place(drawn.shortest_high)?,
+        tolerance: number(drawn.tolerance)?,
+        ..drawn.clone()
     })
 }
 
@@ -465,6 +503,13 @@ fn dimension_part(dimension: &Dimension) -> DimensionPart {
             high: c.high.and_then(|x| measured(x, c.u)),
         }),
         status: dimension.status,
+        reliability: dimension.evidence.reliability.map(rounded),
+        model_fit: dimension.evidence.model_fit.as_ref().map(model_fit_part),
+        monte_carlo: dimension
+            .evidence
+            .monte_carlo
+            .as_ref()
+            .and_then(monte_carlo_part),
         flags: dimension.flags.clone(),
         budget: dimension
             .budget

@@ -3,7 +3,7 @@
 use super::format::{about, decimals_of, fixed, percent, plain};
 use super::known;
 use super::maps::{height_maps, reduction_note, reliability_map};
-use super::results::{budgets, greatest_change, results};
+use super::results::{budgets, evidence, greatest_change, results};
 use super::sections::{Section, surface_section, tip_figure};
 use super::svg::{escape, minus};
 use super::table::{angle_words, origin, radius_words};
@@ -34,6 +34,7 @@ pub fn page(job: &Job, outcome: &Outcome, time: &str) -> Result<String> {
     );
     summary(&mut html, outcome);
     results(&mut html, outcome);
+    evidence(&mut html, outcome);
     inputs(&mut html, job, outcome);
     steps(&mut html, job, outcome);
     figures(&mut html, job, outcome)?;

@@ -6,7 +6,7 @@ use super::format::{
 };
 use super::report::{dimensions, list};
 use super::svg::{escape, minus};
-use crate::dimensions::Dimension;
+use crate::dimensions::{Dimension, Fitted};
 use crate::job::Outcome;
 use crate::uncertainty::{Component, Distribution};
 use std::fmt::Write;
@@ -96,6 +96,148 @@ pub fn results(html: &mut String, outcome: &Outcome) {
     html.push_str("<h3>What the figures assume</h3>\n");
     list(html, "ul", assumptions(all));
     html.push_str("</section>\n");
+}
+
+/// Second opinions and what the tip touched of each dimension's region: one table.
+pub fn evidence(html: &mut String, outcome: &Outcome) {
+    let any = |d: &Dimension| {
+        let e = &d.evidence;
+        e.model_fit.is_some() || e.monte_carlo.is_some() || e.reliability.is_some()
+    };
+    if !dimensions(outcome).any(any) {
+        return;
+    }
+    html.push_str(
+        "<section>\n<h2>Second opinions and reliability</h2>\n<table>\n<thead><tr>\
+         <th scope=\"col\">Dimension</th><th scope=\"col\" class=\"n\">Model fit</th>\
+         <th scope=\"col\" class=\"n\">Monte Carlo, 95 %</th>\
+         <th scope=\"col\" class=\"n\"><abbr title=\"of the region's pixels\">Touched, bounded, \
+         never</abbr></th></tr></thead>\n<tbody>\n",
+    );
+    for dimension in dimensions(outcome).filter(|d| any(d)) {
+        let line = Line::of(dimension);
+        let _ = writeln!(
+            html,
+            "<tr><th scope=\"row\">{}<br /><span class=\"quiet\">{}</span></th>\
+             <td class=\"n\">{}</td><td class=\"n\">{}</td><td class=\"n\">{}</td></tr>",
+            escape(&line.name),
+            escape(&line.quantity),
+            model_fit_cell(dimension),
+            monte_carlo_cell(dimension),
+            dimension.evidence.reliability.map_or_else(
+                || "–".to_owned(),
+                |r| format!(
+                    "{}, {}, {}",
+                    percent(r.touched),
+                    percent(r.bounded),
+                    percent(r.never)
+                )
+            ),
+        );
+    }
+    html.push_str(
+        "</tbody>\n</table>\n<p class=\"quiet\">Model fit: a feature of the form named, scanned by \
+         the tip and fitted to the levelled scan by least squares. Monte Carlo: noise, levelling, tip, \
+         reconstruction and dimension drawn together (JCGM 101:2008), one-sided effects of the tip \
+         added as in the budget. Both share the scan and the tip with the corrected value.</p>\n",
+    );
+    let parameters = fitted_parameters(outcome);
+    if !parameters.is_empty() {
+        html.push_str("<h3>What the model fits determine</h3>\n");
+        list(html, "ul", parameters);
+    }
+    html.push_str("</section>\n");
+}
+
+/// "59.1 nm, u = 0.2 nm", or its bounds, or why it has none.
+fn fitted_words(fitted: &Fitted) -> String {
+    let bounds = match (fitted.low, fitted.high) {
+        (Some(low), Some(high)) => {
+            format!(
+                "{} to {}",
+                about(low, fitted.unit),
+                about(high, fitted.unit)
+            )
+        }
+        (Some(low), None) => format!("at least {}", about(low, fitted.unit)),
+        (None, Some(high)) => format!("at most {}", about(high, fitted.unit)),
+        (None, None) => "–".to_owned(),
+    };
+    match (fitted.value, &fitted.not_determined) {
+        (Some(value), _) => {
+            let (value, u) = with_u(value, fitted.u.unwrap_or(f64::NAN), fitted.unit);
+            format!("{value}, u = {u}")
+        }
+        (None, Some(reason)) => format!("not determined ({reason}); {bounds}"),
+        (None, None) => bounds,
+    }
+}
+
+fn model_fit_cell(dimension: &Dimension) -> String {
+    let Some(fit) = &dimension.evidence.model_fit else {
+        return "–".to_owned();
+    };
+    let Some(value) = &fit.value else {
+        let reason = fit.reason.as_deref().unwrap_or("–");
+        return format!("<span class=\"quiet\">{}</span>", escape(reason));
+    };
+    let verdict = match fit.agrees {
+        Some(true) => "agrees",
+        Some(false) => "contradicts",
+        None => "not comparable",
+    };
+    format!(
+        "{}<br /><span class=\"quiet\">{verdict}</span>",
+        escape(&minus(&fitted_words(value)))
+    )
+}
+
+fn monte_carlo_cell(dimension: &Dimension) -> String {
+    let Some(drawn) = &dimension.evidence.monte_carlo else {
+        return "–".to_owned();
+    };
+    let (low, u) = with_u(drawn.low, drawn.u, dimension.unit);
+    let high = with_u(drawn.high, drawn.u, dimension.unit).0;
+    let verdict = match drawn.agrees {
+        Some(true) => "agrees with the budget",
+        Some(false) => "differs from the budget",
+        None => "no interval to compare with",
+    };
+    format!(
+        "{} to {}<br /><span class=\"quiet\">u = {}; {} trials; {verdict}</span>",
+        escape(&minus(&low)),
+        escape(&minus(&high)),
+        escape(&u),
+        drawn.count
+    )
+}
+
+/// The other figures of each fit, those of one form on one feature once.
+fn fitted_parameters(outcome: &Outcome) -> Vec<String> {
+    let mut items: Vec<String> = Vec::new();
+    for dimension in dimensions(outcome) {
+        let Some(fit) = &dimension.evidence.model_fit else {
+            continue;
+        };
+        if fit.parameters.is_empty() {
+            continue;
+        }
+        let figures: Vec<String> = fit
+            .parameters
+            .iter()
+            .map(|p| format!("{} {}", p.name, fitted_words(p)))
+            .collect();
+        let item = format!(
+            "<strong>{}</strong> ({}): {}",
+            escape(&Line::of(dimension).name),
+            escape(fit.model),
+            escape(&minus(&figures.join("; ")))
+        );
+        if !items.contains(&item) {
+            items.push(item);
+        }
+    }
+    items
 }
 
 /// Each kind's assumptions and source once, with the quantities they stand for.

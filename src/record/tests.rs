@@ -137,6 +137,7 @@ fn dimension(value: f64, u: f64) -> Dimension {
                 degrees_of_freedom: Some(12.0),
             },
         ],
+        evidence: Default::default(),
         assumptions: "vertical walls & more",
         marks: vec![[20.0, 60.0, 40.0, 60.0], [f64::NAN, 0.0, 1.0, 1.0]],
     }

@@ -115,6 +115,15 @@ impl Tip {
         })
     }
 
+    /// The tip with all its surface but the apex `by` nm higher (blunter) or lower (sharper), never
+    /// above the apex. Errors as [`Tip::new`].
+    pub fn moved(&self, by: f64) -> Result<Self> {
+        let mut shape = self.shape.mapv(|p| (p + by as f32).min(0.0));
+        let (rows, columns) = shape.dim();
+        shape[[rows / 2, columns / 2]] = 0.0;
+        Self::new(shape, self.pitch)
+    }
+
     /// Greatest depth below the apex of a cell inside the tip, nm.
     pub fn depth_nm(&self) -> f64 {
         let lowest = self

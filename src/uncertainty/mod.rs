@@ -1,10 +1,15 @@
 //! Budget, propagation, coverage. Knows nothing of what is measured.
-//! Source: JCGM 100:2008.
+//! Sources: JCGM 100:2008, JCGM 101:2008.
 
 mod budget;
+mod joint;
+pub mod monte_carlo;
+#[cfg(test)]
+mod outside;
 mod sample;
 
 pub use budget::{Budget, Combined, coverage_factor};
+pub use joint::Joint;
 pub use sample::Series;
 
 use serde::Serialize;

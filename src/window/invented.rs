@@ -42,6 +42,7 @@ pub fn dimension(name: &str) -> Dimension {
             sensitivity: 100.4,
             degrees_of_freedom: None,
         }],
+        evidence: Default::default(),
         assumptions: "invented",
         marks: vec![[40.0, 64.0, 80.0, 64.0]],
     }
