@@ -8,22 +8,23 @@ use crate::virtual_scan::{self, Bump, BumpShape, Bumps, Feature, Lines, Settings
 use ndarray::Array2;
 use proptest::prelude::*;
 
-const KINDS: [Kind; 5] = [
+const KINDS: [Kind; 12] = [
     Kind::StepHeight,
     Kind::LineWidth,
     Kind::Pitch,
     Kind::Particle,
     Kind::Texture,
+    Kind::SideWallAngle,
+    Kind::EdgeRoughness,
+    Kind::WidthRoughness,
+    Kind::HoleDepth,
+    Kind::Distance,
+    Kind::Angle,
+    Kind::Lattice,
 ];
 
 fn request(kind: Kind) -> Request {
-    Request {
-        name: "a".to_owned(),
-        kind,
-        region: None,
-        at: Vec::new(),
-        across: None,
-    }
+    Request::new("a", kind)
 }
 
 /// A scan with its correction by the very tip that made it.
@@ -102,6 +103,7 @@ impl Made {
                 y: 0.001,
                 z: 0.001,
             },
+            slope: [0.0; 2],
             corrected: Some(corrected),
         };
         measure(&input, request, &Progress::new()).unwrap()
@@ -337,6 +339,7 @@ fn a_correction_of_another_size_is_refused() {
         scan: &other,
         noise_nm: None,
         calibration: Calibration::default(),
+        slope: [0.0; 2],
         corrected: Some(made.corrected()),
     };
     assert!(measure(&input, &request(Kind::Texture), &Progress::new()).is_err());
@@ -349,6 +352,7 @@ fn a_fraction_out_of_range_is_named() {
         scan: &map,
         noise_nm: None,
         calibration: Calibration::default(),
+        slope: [0.0; 2],
         corrected: None,
     };
     let mut request = request(Kind::LineWidth);
@@ -372,6 +376,7 @@ fn answers(map: &HeightMap) {
                 scan: map,
                 noise_nm: None,
                 calibration: Calibration::default(),
+                slope: [0.0; 2],
                 corrected,
             };
             let lines = measure(&input, &request(kind), &Progress::new()).unwrap();

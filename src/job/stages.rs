@@ -510,6 +510,7 @@ fn measure(
         scan: &level.map,
         noise_nm: level.noise_nm,
         calibration: spec.calibration.unwrap_or_default(),
+        slope: level.slope,
         corrected,
     };
     let mut lines = Vec::new();

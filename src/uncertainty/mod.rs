@@ -5,7 +5,7 @@ mod budget;
 mod sample;
 
 pub use budget::{Budget, Combined, coverage_factor};
-pub use sample::Series;
+pub use sample::{Pooled, Series};
 
 use serde::Serialize;
 
