@@ -70,11 +70,10 @@ struct Path<'a> {
 impl<'a> Path<'a> {
     fn of(input: &Input<'a>, request: &Request) -> Result<Self> {
         let refuse = |what: String, remedy: &str| {
-            Err(Error::new(
-                ErrorKind::Setting,
-                format!("\"{}\": {what}", request.name),
+            Err(
+                Error::new(ErrorKind::Setting, format!("\"{}\": {what}", request.name))
+                    .remedy(remedy),
             )
-            .remedy(remedy))
         };
         let map = input.scan;
         let (from, to) = match (request.from, request.to) {
@@ -169,7 +168,8 @@ impl<'a> Path<'a> {
                 column.iter().filter(|&&c| c == TOUCHED).count() as f64 / column.len() as f64
             }
             None => {
-                let part = at * self.step / (self.to.0 - self.from.0).hypot(self.to.1 - self.from.1);
+                let part =
+                    at * self.step / (self.to.0 - self.from.0).hypot(self.to.1 - self.from.1);
                 let place = |a: f64, b: f64, pitch: f64, count: usize| {
                     (((a + part * (b - a)) / pitch).max(0.0) as usize).min(count - 1)
                 };
@@ -427,17 +427,12 @@ fn slope_of(profile: &Profile, step: f64) -> Option<(f64, f64)> {
     Some((slope, series.standard_error() / spread))
 }
 
-fn angle(
-    input: &Input,
-    request: &Request,
-    path: &Path,
-    scan: &Profile,
-    noise: f64,
-) -> Dimension {
+fn angle(input: &Input, request: &Request, path: &Path, scan: &Profile, noise: f64) -> Dimension {
     let mut line = answer(request, Kind::Angle, "slope angle", "deg", ANGLE);
     let Some((slope, u)) = slope_of(scan, path.step) else {
-        line.flags
-            .push(format!("not measured: fewer than {FEWEST} heights on the profile"));
+        line.flags.push(format!(
+            "not measured: fewer than {FEWEST} heights on the profile"
+        ));
         return line;
     };
     let budget_of = |slope: f64, u: f64, count: usize| {
@@ -516,8 +511,8 @@ mod tests {
 
     #[test]
     fn given_points_on_a_ramp_have_their_distance_and_its_angle() {
-        let map = HeightMap::from_fn(60, 80, Pitch { x: 1.0, y: 2.0 }, |x, y| 0.3 * x - 0.4 * y)
-            .unwrap();
+        let map =
+            HeightMap::from_fn(60, 80, Pitch { x: 1.0, y: 2.0 }, |x, y| 0.3 * x - 0.4 * y).unwrap();
         let request = Request {
             from: point(10.0, 20.0),
             to: point(50.0, 50.0),

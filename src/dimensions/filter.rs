@@ -36,8 +36,16 @@ pub(super) fn mean_surface(heights: ArrayView2<f32>, pitch: Pitch, index: f64) -
             0.0
         }
     });
-    let weighed = smooth(&smooth(&values, Axis(1), index / pitch.x), Axis(0), index / pitch.y);
-    let weights = smooth(&smooth(&known, Axis(1), index / pitch.x), Axis(0), index / pitch.y);
+    let weighed = smooth(
+        &smooth(&values, Axis(1), index / pitch.x),
+        Axis(0),
+        index / pitch.y,
+    );
+    let weights = smooth(
+        &smooth(&known, Axis(1), index / pitch.x),
+        Axis(0),
+        index / pitch.y,
+    );
     let mut out = Array2::from_elem(heights.dim(), f32::NAN);
     Zip::from(&mut out)
         .and(&heights)

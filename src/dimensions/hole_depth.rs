@@ -11,8 +11,8 @@ use super::{CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answ
 use crate::error::Result;
 use crate::heightmap::{Pitch, PixelRegion};
 use crate::progress::Progress;
-use crate::uncertainty::{Budget, Component, Distribution};
-use ndarray::{Array2, ArrayView2};
+use crate::uncertainty::{Budget, Component, Distribution, Series};
+use ndarray::{Array2, ArrayView2, s};
 
 const ASSUMPTIONS: &str = "Densest level of the surrounding plateau less densest level of the \
     floor; the floor counts as reached only where the scan is flat over the middle of the hole, \
@@ -21,6 +21,8 @@ const ASSUMPTIONS: &str = "Densest level of the surrounding plateau less densest
 
 /// Smallest hole, pixels.
 const FEWEST: usize = 12;
+/// Width of the rim that is left out of the plateau, pixels.
+const RIM: usize = 4;
 /// Half the width of the middle of the hole that must be flat, pixels.
 const MIDDLE: f64 = 2.0;
 
@@ -56,6 +58,8 @@ struct Hole {
     /// How much the middle rises over [`MIDDLE`] pixels, nm, and the least that would be seen.
     rise: [f64; 2],
     trench: bool,
+    /// Standard deviation of the plateau's level among the quarters of the region, nm.
+    unevenness: f64,
     /// Holes in the region.
     count: usize,
     cut_off: bool,
@@ -75,16 +79,33 @@ impl Hole {
         let flat = || "the region is flat: no hole in it".to_owned();
         let threshold = statistics::two_class_threshold(&heights).ok_or_else(flat)?;
         let mut above: Vec<f64> = heights.into_iter().filter(|z| *z >= threshold).collect();
-        let plateau = statistics::level(&mut above, noise).ok_or_else(flat)?;
-        let step = (8.0 * noise).max(4.0 * plateau.deviation);
+        let rough = statistics::level(&mut above, noise).ok_or_else(flat)?;
+        let step = (8.0 * noise).max(4.0 * rough.deviation);
+        // Rounded rims are no plateau.
+        let rim = depth_in(view.mapv(|z| f64::from(z) > rough.value - step));
+        let clear = |r: std::ops::Range<usize>, c: std::ops::Range<usize>| {
+            let part = s![r, c];
+            let mut heights: Vec<f64> = view
+                .slice(part.clone())
+                .iter()
+                .zip(rim.slice(part))
+                .filter(|(_, d)| **d > RIM)
+                .map(|(z, _)| f64::from(*z))
+                .collect();
+            statistics::level(&mut heights, noise)
+        };
+        let (rows, columns) = view.dim();
+        let plateau = clear(0..rows, 0..columns).unwrap_or(rough);
+        let quarters: Vec<f64> = [(0..rows / 2), (rows / 2..rows)]
+            .into_iter()
+            .flat_map(|r| [(r.clone(), 0..columns / 2), (r, columns / 2..columns)])
+            .filter_map(|(r, c)| clear(r, c).filter(|l| l.count >= 50))
+            .map(|l| l.value)
+            .collect();
+        let unevenness = Series::of(&quarters).map_or(0.0, |s| s.deviation);
         let upside_down = view.mapv(|z| -z);
         let rise = |top: f64| (6.0 * noise).max(0.15 * (top + plateau.value));
-        let all = segmentation::segments(
-            upside_down.view(),
-            step - plateau.value,
-            FEWEST,
-            rise,
-        );
+        let all = segmentation::segments(upside_down.view(), step - plateau.value, FEWEST, rise);
         let depth_at = |s: &Segment| plateau.value - f64::from(view[s.peak]);
         let deepest = all.iter().map(depth_at).fold(0.0, f64::max);
         if deepest < (10.0 * noise).max(1e-9) {
@@ -103,7 +124,15 @@ impl Hole {
             .iter()
             .min_by(|a, b| centre(a).total_cmp(&centre(b)))
             .ok_or_else(flat)?;
-        Self::of(view, central, plateau, noise, holes.len())
+        // Against the plateau in the hole's own rows, where it is: drift runs from row to row.
+        let places = || central.pixels.iter().map(|p| p[0]);
+        let (top, bottom) = (places().min().unwrap_or(0), places().max().unwrap_or(0));
+        let plateau = clear(top..bottom + 1, 0..columns)
+            .filter(|l| l.count >= 100)
+            .unwrap_or(plateau);
+        let mut hole = Self::of(view, central, plateau, noise, holes.len())?;
+        hole.unevenness = unevenness;
+        Ok(hole)
     }
 
     fn of(
@@ -133,8 +162,11 @@ impl Hole {
         let wide = flat.widest > MIDDLE;
         let reached = wide && rise <= seen;
         let floor = if reached {
+            // The inner half, clear of the fillet that the tip leaves at the wall's foot.
+            let clear = (flat.widest - MIDDLE).min(0.5 * flat.widest);
             let mut heights: Vec<f64> = inner
                 .iter()
+                .filter(|i| i.1 > clear)
                 .map(|(place, _)| f64::from(view[*place]))
                 .collect();
             statistics::level(&mut heights, noise).ok_or("the hole is void")?
@@ -151,6 +183,7 @@ impl Hole {
             reached,
             rise: [rise, seen],
             trench,
+            unevenness: 0.0,
             count,
             cut_off: segment.at_border && !trench,
             segment: segment.clone(),
@@ -176,13 +209,24 @@ impl Hole {
 /// Pixels of the hole below `half`, each with its distance in pixels (chessboard) from what is
 /// not; the region's border does not count as such.
 fn inwards(view: ArrayView2<f32>, segment: &Segment, half: f64) -> Vec<([usize; 2], f64)> {
-    let mut distance = Array2::from_elem(view.dim(), 0usize);
+    let mut inside = Array2::from_elem(view.dim(), false);
     for &place in &segment.pixels {
-        if f64::from(view[place]) < half {
-            distance[place] = usize::MAX / 2;
-        }
+        inside[place] = f64::from(view[place]) < half;
     }
-    let (rows, columns) = view.dim();
+    let distance = depth_in(inside);
+    let widest = view.nrows().max(view.ncols());
+    segment
+        .pixels
+        .iter()
+        .filter(|p| distance[**p] > 0)
+        .map(|p| (*p, distance[*p].min(widest) as f64))
+        .collect()
+}
+
+/// Distance in pixels (chessboard) of what is `inside` from the nearest that is not, 0 there.
+fn depth_in(inside: Array2<bool>) -> Array2<usize> {
+    let mut distance = inside.mapv(|inside| if inside { usize::MAX / 2 } else { 0 });
+    let (rows, columns) = inside.dim();
     // Two passes of the chessboard distance (Rosenfeld and Pfaltz, J. ACM 13, 471 (1966), from
     // memory); outside the region nothing is nearer.
     let relax = |distance: &mut Array2<usize>, r: usize, c: usize, steps: [(isize, isize); 4]| {
@@ -207,12 +251,7 @@ fn inwards(view: ArrayView2<f32>, segment: &Segment, half: f64) -> Vec<([usize; 
             relax(&mut distance, r, c, [(1, 1), (1, 0), (1, -1), (0, 1)]);
         }
     }
-    segment
-        .pixels
-        .iter()
-        .filter(|p| distance[**p] > 0)
-        .map(|p| (*p, distance[*p].min(rows.max(columns)) as f64))
-        .collect()
+    distance
 }
 
 /// How the heights rise away from the middle of the hole.
@@ -228,13 +267,9 @@ struct Flat {
 
 /// The pixels within [`MIDDLE`] of the innermost, and the straight line through their heights over
 /// the distance from it.
-fn middle_of(
-    view: ArrayView2<f32>,
-    inner: &[([usize; 2], f64)],
-) -> (Vec<[usize; 2]>, Flat) {
+fn middle_of(view: ArrayView2<f32>, inner: &[([usize; 2], f64)]) -> (Vec<[usize; 2]>, Flat) {
     let widest = inner.iter().map(|i| i.1).fold(0.0, f64::max);
-    let middle: Vec<&([usize; 2], f64)> =
-        inner.iter().filter(|i| i.1 >= widest - MIDDLE).collect();
+    let middle: Vec<&([usize; 2], f64)> = inner.iter().filter(|i| i.1 >= widest - MIDDLE).collect();
     let out: Vec<f64> = middle.iter().map(|i| widest - i.1).collect();
     let heights: Vec<f64> = middle.iter().map(|i| f64::from(view[i.0])).collect();
     let centre = statistics::mean(&heights);
@@ -284,6 +319,13 @@ fn budget_of(hole: &Hole, calibration: f64, noise: f64) -> Budget {
             degrees_of_freedom: None,
         });
     }
+    // The plateau where the hole is lies within what it does from quarter to quarter.
+    budget.push(
+        "unevenness of the plateau (waviness, drift)",
+        hole.unevenness,
+        Distribution::Normal,
+        1.0,
+    );
     // A floor that falls or rises within what cannot be seen of it.
     if hole.reached {
         budget.push(

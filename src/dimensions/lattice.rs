@@ -2,7 +2,7 @@
 //!
 //! The two shortest independent wave vectors that stand out of the windowed Fourier transform are
 //! refined by the phase of their component in tiles of the region: a plane through the phases gives
-//! the rest of the wave vector, its scatter the uncertainty.
+//! the rest of the wave vector, its scatter the uncertainty. Offsets of whole rows are kept out.
 
 use super::sections::{self, region_pixels};
 use super::{CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer};
@@ -24,6 +24,8 @@ const COARSE: usize = 512;
 const TILES: std::ops::RangeInclusive<usize> = 2..=8;
 /// Power of a component that stands out, as a share of the strongest.
 const STANDS_OUT: f64 = 0.03;
+/// The same of one that is used only to keep clear of row offsets.
+const WEAKEST: f64 = 0.001;
 
 type Vector = [f64; 2];
 
@@ -55,10 +57,7 @@ pub(super) fn measure(
             return Ok(lines.into());
         }
     };
-    let corner = [
-        pixels.column as f64 * pitch.x,
-        pixels.row as f64 * pitch.y,
-    ];
+    let corner = [pixels.column as f64 * pitch.x, pixels.row as f64 * pitch.y];
     let middle = [
         corner[0] + 0.5 * pixels.columns as f64 * pitch.x,
         corner[1] + 0.5 * pixels.rows as f64 * pitch.y,
@@ -207,22 +206,23 @@ impl Lattice {
             Err(reason) => return Ok(Err(reason)),
         };
         progress.check()?;
-        let extent = [
-            view.ncols() as f64 * pitch.x,
-            view.nrows() as f64 * pitch.y,
-        ];
+        let extent = [view.ncols() as f64 * pitch.x, view.nrows() as f64 * pitch.y];
         let shorter = length(first).min(length(second));
         // A tile holds four periods or more, so that the components do not leak into each other.
         let tiles = extent.map(|e| ((e * shorter / 4.0) as usize).min(*TILES.end()));
         if tiles.iter().any(|t| t < TILES.start()) {
-            return Ok(Err("the region holds fewer than eight cells along a side".to_owned()));
+            return Ok(Err(
+                "the region holds fewer than eight cells along a side".to_owned()
+            ));
         }
         let refined = [first, second].map(|wave| {
             let once = refine(&values, pitch, tiles, wave)?;
             refine(&values, pitch, tiles, once.wave)
         });
         let [Some(one), Some(two)] = refined else {
-            return Ok(Err("the phases of the tiles do not fit a lattice".to_owned()));
+            return Ok(Err(
+                "the phases of the tiles do not fit a lattice".to_owned()
+            ));
         };
         let mut lattice = Self {
             waves: [one.wave[0], one.wave[1], two.wave[0], two.wave[1]],
@@ -301,7 +301,9 @@ fn peaks(values: &Array2<f64>, pitch: Pitch) -> std::result::Result<[Vector; 2],
     // Periods of four points and more: frequencies 0..=n/4 along x, -n/4..=n/4 along y.
     let (across, up) = (columns / 4, rows / 4);
     let turn = |n: usize| -> Vec<(f64, f64)> {
-        (0..n).map(|i| (TAU * i as f64 / n as f64).sin_cos()).collect()
+        (0..n)
+            .map(|i| (TAU * i as f64 / n as f64).sin_cos())
+            .collect()
     };
     let (turn_x, turn_y) = (turn(columns), turn(rows));
     let mut along = Array2::from_elem((rows, across + 1), (0.0, 0.0));
@@ -335,7 +337,11 @@ fn peaks(values: &Array2<f64>, pitch: Pitch) -> std::result::Result<[Vector; 2],
             }
             // What a tilt or a bow leaves about zero is no lattice.
             let far = l.abs_diff(up).max(k);
-            power[[l, k]] = if far < 3 { 0.0 } else { sum.0 * sum.0 + sum.1 * sum.1 };
+            power[[l, k]] = if far < 3 {
+                0.0
+            } else {
+                sum.0 * sum.0 + sum.1 * sum.1
+            };
         }
     }
     let strongest = power.iter().copied().fold(0.0, f64::max);
@@ -348,6 +354,7 @@ fn peaks(values: &Array2<f64>, pitch: Pitch) -> std::result::Result<[Vector; 2],
         1.0 / (rows as f64 * pitch.y * block[0] as f64),
     ];
     let mut found: Vec<Vector> = Vec::new();
+    let mut all: Vec<(f64, Vector)> = Vec::new();
     for ((l, k), &p) in power.indexed_iter() {
         let top = |dl: isize, dk: isize| {
             let (l, k) = (l.checked_add_signed(dl), k.checked_add_signed(dk));
@@ -359,10 +366,15 @@ fn peaks(values: &Array2<f64>, pitch: Pitch) -> std::result::Result<[Vector; 2],
         let highest = (-2..=2).all(|dl| (-2..=2).all(|dk| top(dl, dk)));
         // A component at kx = 0 shows twice, at +ky and -ky.
         let twice = k == 0 && l < up;
-        if p >= STANDS_OUT * strongest && p > 100.0 * typical && highest && !twice {
-            found.push([k as f64 * step[0], (l as f64 - up as f64) * step[1]]);
+        if p >= WEAKEST * strongest && p > 100.0 * typical && highest && !twice {
+            let wave = [k as f64 * step[0], (l as f64 - up as f64) * step[1]];
+            all.push((p, wave));
+            if p >= STANDS_OUT * strongest {
+                found.push(wave);
+            }
         }
     }
+    all.sort_by(|a, b| b.0.total_cmp(&a.0));
     found.sort_by(|a, b| length(*a).total_cmp(&length(*b)));
     let none = || "no two-dimensional lattice stands out".to_owned();
     let first = *found.first().ok_or_else(none)?;
@@ -373,7 +385,27 @@ fn peaks(values: &Array2<f64>, pitch: Pitch) -> std::result::Result<[Vector; 2],
     let second = *found.iter().find(independent).ok_or_else(|| {
         "the features repeat in one direction only: a grating, which kind pitch measures".to_owned()
     })?;
-    Ok([first, second])
+    Ok(clear_of_rows([first, second], &all, 3.0 * step[0]))
+}
+
+/// Offsets of whole rows, the scanner's or the levelling's, lie along the y axis of the transform
+/// and pull at components near it. Where another wave vector spans the same cell with `pair` the
+/// near one (`|kx| < near`) gives way to it. `all` holds power and wave vector, strongest first.
+fn clear_of_rows(mut pair: [Vector; 2], all: &[(f64, Vector)], near: f64) -> [Vector; 2] {
+    let cross = |p: Vector, q: Vector| (p[0] * q[1] - p[1] * q[0]).abs();
+    let cell = cross(pair[0], pair[1]);
+    for i in 0..2 {
+        let other = pair[1 - i];
+        if pair[i][0].abs() >= near || other[0].abs() < near {
+            continue;
+        }
+        let same_cell =
+            |k: &Vector| k[0].abs() >= near && (cross(other, *k) / cell - 1.0).abs() < 0.1;
+        if let Some((_, k)) = all.iter().find(|(_, k)| same_cell(k)) {
+            pair[i] = *k;
+        }
+    }
+    pair
 }
 
 /// Means over blocks of rows by columns.
@@ -397,12 +429,7 @@ struct Refined {
 
 /// The plane through the phases of `wave`'s component in the tiles. `None` where it cannot be
 /// fitted.
-fn refine(
-    values: &Array2<f64>,
-    pitch: Pitch,
-    tiles: [usize; 2],
-    wave: Vector,
-) -> Option<Refined> {
+fn refine(values: &Array2<f64>, pitch: Pitch, tiles: [usize; 2], wave: Vector) -> Option<Refined> {
     let (rows, columns) = values.dim();
     let at = |index: f64, pitch: f64| (index + 0.5) * pitch;
     let mut phases = Vec::new();
@@ -440,7 +467,11 @@ fn refine(
     }
     // Neighbouring tiles differ by less than half a turn: unwrap along the rows of tiles.
     for n in 1..phases.len() {
-        let before = if n % tiles[0] == 0 { n - tiles[0] } else { n - 1 };
+        let before = if n % tiles[0] == 0 {
+            n - tiles[0]
+        } else {
+            n - 1
+        };
         let apart = phases[n].1 - phases[before].1;
         phases[n].1 -= apart.round();
     }
@@ -453,13 +484,13 @@ fn refine(
     .ok()?;
     let variance = fit.residual_sum / (fit.degrees_of_freedom.max(1)) as f64;
     let covariance = |i: usize, j: usize| variance * fit.inverse_normal[(i, j)];
-    let u = [covariance(1, 1).max(0.0).sqrt(), covariance(2, 2).max(0.0).sqrt()];
+    let u = [
+        covariance(1, 1).max(0.0).sqrt(),
+        covariance(2, 2).max(0.0).sqrt(),
+    ];
     let product = u[0] * u[1];
     Some(Refined {
-        wave: [
-            wave[0] + fit.coefficients[1],
-            wave[1] + fit.coefficients[2],
-        ],
+        wave: [wave[0] + fit.coefficients[1], wave[1] + fit.coefficients[2]],
         u,
         correlation: if product > 0.0 {
             covariance(1, 2) / product

@@ -77,7 +77,12 @@ pub(super) fn measure(
         .collect())
 }
 
-pub(super) fn common_flags(input: &Input, frame: &Frame, layout: &Layout, scan: &Trace) -> Vec<String> {
+pub(super) fn common_flags(
+    input: &Input,
+    frame: &Frame,
+    layout: &Layout,
+    scan: &Trace,
+) -> Vec<String> {
     let mut flags = Vec::new();
     if layout.edges.len() > 2 {
         flags.push(format!(
@@ -381,7 +386,13 @@ fn explain(line: &mut Dimension, holds: &[Hold; 2], surface: &Trace) {
 }
 
 /// Flags edges that lean on the rim of the scan or that the tip never touched.
-pub(super) fn lean(line: &mut Dimension, frame: &Frame, surface: &Trace, given: &Corrected, i: usize) {
+pub(super) fn lean(
+    line: &mut Dimension,
+    frame: &Frame,
+    surface: &Trace,
+    given: &Corrected,
+    i: usize,
+) {
     let leaning = frame.of_array(given.edge_leaning);
     let certainty = frame.of_array(given.certainty);
     let (mut total, mut leans, mut never) = (0usize, 0usize, 0usize);

@@ -8,9 +8,7 @@
 use super::line_width::common_flags;
 use super::statistics;
 use super::trace::{Feature, Trace};
-use super::{
-    Axis, CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer,
-};
+use super::{Axis, CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer};
 use crate::error::Result;
 use crate::progress::Progress;
 use crate::uncertainty::{Budget, Component, Distribution, Series, coverage_factor};
@@ -463,8 +461,8 @@ mod tests {
     fn the_width_of_independent_edges_is_rougher_by_root_two() {
         let (a, b) = (series(0.9, 0.0, 40_000, 7), series(0.9, 0.0, 40_000, 8));
         let widths: Vec<f64> = a.iter().zip(&b).map(|(a, b)| a + b).collect();
-        let ratio = Rough::of(&widths, 0.0).unwrap().variance()
-            / Rough::of(&a, 0.0).unwrap().variance();
+        let ratio =
+            Rough::of(&widths, 0.0).unwrap().variance() / Rough::of(&a, 0.0).unwrap().variance();
         assert!((ratio - 2.0).abs() < 0.2, "{ratio}");
     }
 

@@ -1,11 +1,11 @@
 //! Side-wall angle: the slope of each wall of a ridge or a trench between two height fractions.
 
 use super::line_width::common_flags;
+use super::statistics;
 use super::trace::{Correction, Feature, Trace};
 use super::{
     Axis, Calibration, CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer,
 };
-use super::statistics;
 use crate::error::{Error, ErrorKind, Result};
 use crate::progress::Progress;
 use crate::uncertainty::{Budget, Component, Distribution, Series};

@@ -120,7 +120,11 @@ mod tests {
     #[test]
     fn two_levels_in_pieces_and_none_in_a_flat() {
         let map = Array2::from_shape_fn((40, 40), |(r, c)| {
-            if (r / 7 + c / 5) % 2 == 0 { 3.5f32 } else { 1.25 }
+            if (r / 7 + c / 5) % 2 == 0 {
+                3.5f32
+            } else {
+                1.25
+            }
         });
         let [low, high] = levels(map.view(), 0.0).unwrap();
         assert_eq!((low.value, high.value), (1.25, 3.5));

@@ -1,13 +1,14 @@
 //! Areal texture parameters of a region, ISO 25178-2: of the surface as levelled (F-operator), or
 //! of the scale-limited one where an S-filter or an L-filter is asked for.
 
-use super::sections::{self, region_pixels};
 use super::filter;
+use super::sections::{self, region_pixels};
 use super::{Calibration, CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer};
 use crate::error::Result;
 use crate::heightmap::{HeightMap, Pitch, PixelRegion};
 use crate::morphology::certainty::NEVER;
 use crate::progress::Progress;
+use crate::tip::Tip;
 use crate::uncertainty::{Budget, Distribution};
 use ndarray::{Array2, ArrayView2, s};
 
@@ -135,6 +136,7 @@ pub(super) fn measure(
     };
     progress.check()?;
     let doubt = Doubt {
+        grid: input.corrected.map_or(0.0, |c| grid_rise(c.tip)),
         noise,
         count: (view.len() - voids) as f64,
         pitch,
@@ -177,7 +179,7 @@ pub(super) fn measure(
                 let bounds = doubt.bounds(name, &texture);
                 let value = texture.lines()[i].2;
                 correct(&mut line, value, bounds, never, leaning, identified);
-                if let Some(budget) = doubt.budget(name, &texture) {
+                if let Some(budget) = doubt.corrected_budget(name, &texture) {
                     line.budget = budget.into_components();
                 }
             }
@@ -233,7 +235,8 @@ impl Filters {
 
     fn flags(&self, map: &HeightMap, pixels: PixelRegion) -> Vec<String> {
         let mut flags = Vec::new();
-        let shorter = (pixels.columns as f64 * map.pitch().x).min(pixels.rows as f64 * map.pitch().y);
+        let shorter =
+            (pixels.columns as f64 * map.pitch().x).min(pixels.rows as f64 * map.pitch().y);
         for (name, index) in [("S", self.s), ("L", self.l)] {
             let Some(index) = index else { continue };
             flags.push(format!("{name}-filter: Gaussian, nesting index {index} nm"));
@@ -254,6 +257,9 @@ impl Filters {
 
 /// What noise and calibration do to the parameters.
 struct Doubt {
+    /// How far the reconstruction may stand above the surface because the tip's contact falls
+    /// between its cells, nm.
+    grid: f64,
     /// White noise left by the filters, nm.
     noise: f64,
     /// Heights.
@@ -288,7 +294,10 @@ impl Doubt {
             // Differences of neighbours have twice the variance: half its square is the area.
             "Sdr" => {
                 let lift = gradient * (1.0 / self.pitch.x.powi(2) + 1.0 / self.pitch.y.powi(2));
-                texture.sdr.is_finite().then_some([lift.min(texture.sdr), 0.0])
+                texture
+                    .sdr
+                    .is_finite()
+                    .then_some([lift.min(texture.sdr), 0.0])
             }
             _ => None,
         }
@@ -305,7 +314,12 @@ impl Doubt {
             // Slopes enter in squares.
             let lateral = self.calibration.x.max(self.calibration.y);
             budget.push("z calibration", z, Distribution::Normal, 2.0 * value);
-            budget.push("axis calibration", lateral, Distribution::Normal, 2.0 * value);
+            budget.push(
+                "axis calibration",
+                lateral,
+                Distribution::Normal,
+                2.0 * value,
+            );
         } else {
             budget.push("z calibration", z, Distribution::Normal, value);
         }
@@ -323,14 +337,39 @@ impl Doubt {
         Some(budget)
     }
 
+    /// The same for the reconstruction.
+    fn corrected_budget(&self, name: &str, texture: &Texture) -> Option<Budget> {
+        let mut budget = self.budget(name, texture)?;
+        if name != "Sdr" {
+            let u = self.grid / 3f64.sqrt();
+            let source = "pixel grid in the reconstruction";
+            budget.push(source, u, Distribution::Rectangular, 1.0);
+        }
+        Some(budget)
+    }
+
     /// The 95 % interval of a parameter of the reconstruction where all of it was touched. How
     /// much of the scan's noise is in the reconstruction is not known: none to all of it.
     fn bounds(&self, name: &str, texture: &Texture) -> Option<[f64; 2]> {
         let value = texture.lines().into_iter().find(|l| l.0 == name)?.2;
         let [lift, sink] = self.room(name, texture)?;
-        let (low, high) = self.budget(name, texture)?.interval(value, lift, sink, 0.95);
+        let budget = self.corrected_budget(name, texture)?;
+        let (low, high) = budget.interval(value, lift, sink, 0.95);
         Some([low.max(0.0), high])
     }
+}
+
+/// Height of the tip's surface a pixel from its apex over four: a parabola's greatest rise above its
+/// samples between two of them.
+fn grid_rise(tip: &Tip) -> f64 {
+    let shape = tip.shape();
+    let (r, c) = (shape.nrows() / 2, shape.ncols() / 2);
+    [(r + 1, c), (r, c + 1)]
+        .into_iter()
+        .filter_map(|place| shape.get(place))
+        .map(|&p| -f64::from(p) / 4.0)
+        .filter(|rise| rise.is_finite())
+        .fold(0.0, f64::max)
 }
 
 /// Share of pixels never touched above which the reconstruction is smoother than the surface.

@@ -35,11 +35,7 @@ impl<'a> Feature<'a> {
         Ok(Self::of(input, frame, fractions))
     }
 
-    fn of(
-        input: &Input<'a>,
-        frame: Frame,
-        fractions: &[f64],
-    ) -> std::result::Result<Self, String> {
+    fn of(input: &Input<'a>, frame: Frame, fractions: &[f64]) -> std::result::Result<Self, String> {
         let layout = Layout::find(frame.of(input.scan), frame.noise)?;
         let first = layout
             .central_pair()
@@ -221,20 +217,29 @@ impl Trace {
     pub fn repeatability(&self, i: usize, series: &Series) -> (f64, Option<f64>) {
         let own = (series.standard_error(), series.degrees_of_freedom());
         let edges = &self.edges[i];
+        let less = |slope: f64| {
+            let parts = [0, 1].map(|k| {
+                let off: Vec<f64> = edges[k]
+                    .iter()
+                    .enumerate()
+                    .map(|(section, at)| (at - slope * section as f64) * self.pitch * self.cosine)
+                    .collect();
+                statistics::clipped(&off, 5.0)
+            });
+            Pooled::of(&parts)
+        };
         let slope = slope_over_sections(edges);
-        let straight = [0, 1].map(|k| {
-            let off: Vec<f64> = edges[k]
-                .iter()
-                .enumerate()
-                .map(|(section, at)| (at - slope * section as f64) * self.pitch * self.cosine)
-                .collect();
-            statistics::clipped(&off, 4.0)
-        });
-        let (Some(both), Some(widths)) = (
-            Pooled::of(&straight),
-            Pooled::of(&[statistics::clipped(&self.widths(i), 4.0)]),
-        ) else {
+        let (Some(straight), Some(widths)) = (less(slope), Pooled::of(&[self.widths(i)])) else {
             return own;
+        };
+        // A line that runs askew is straightened; a slope that its roughness may well have is
+        // part of the roughness.
+        let span = slope.abs() * edges[0].len() as f64 * self.pitch;
+        let usual = (12.0 * straight.variance / straight.effective()).sqrt();
+        let both = if span < 3.0 * usual {
+            less(0.0).unwrap_or(straight)
+        } else {
+            straight
         };
         // Correlation of the two edges' outward movements, against what chance gives it.
         let together = widths.variance / (2.0 * both.variance) - 1.0;
@@ -372,4 +377,3 @@ impl Plateaus {
             .sqrt()
     }
 }
-

@@ -206,7 +206,9 @@ mod tests {
                 (0..48)
                     .map(|i| {
                         (0..112)
-                            .map(|j| white[i + j] * (-2.0 * ((j as f64 - 56.0) / 15.0).powi(2)).exp())
+                            .map(|j| {
+                                white[i + j] * (-2.0 * ((j as f64 - 56.0) / 15.0).powi(2)).exp()
+                            })
                             .sum()
                     })
                     .collect::<Vec<f64>>()
