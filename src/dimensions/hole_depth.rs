@@ -86,7 +86,7 @@ impl Hole {
         let clear = |r: std::ops::Range<usize>, c: std::ops::Range<usize>| {
             let part = s![r, c];
             let mut heights: Vec<f64> = view
-                .slice(part.clone())
+                .slice(part)
                 .iter()
                 .zip(rim.slice(part))
                 .filter(|(_, d)| **d > RIM)
@@ -119,7 +119,7 @@ impl Hole {
             let (rows, columns) = view.dim();
             (mean(0) - (rows as f64 - 1.0) / 2.0).hypot(mean(1) - (columns as f64 - 1.0) / 2.0)
         };
-        let holes: Vec<&Segment> = all.iter().filter(|s| depth_at(s) > 0.5 * deepest).collect();
+        let holes: Vec<&Segment> = all.iter().filter(|s| depth_at(s) > 0.1 * deepest).collect();
         let central = holes
             .iter()
             .min_by(|a, b| centre(a).total_cmp(&centre(b)))

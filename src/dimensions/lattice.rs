@@ -268,9 +268,8 @@ impl Lattice {
         if a[0].abs() / length(a) < b[0].abs() / length(b) {
             self.combination.swap(0, 1);
         }
-        let vectors = self.vectors(&self.waves);
-        for i in 0..2 {
-            if vectors[i][i] < 0.0 {
+        for (i, vector) in self.vectors(&self.waves).into_iter().enumerate() {
+            if vector[i] < 0.0 {
                 self.combination[i] = self.combination[i].map(|c| -c);
             }
         }

@@ -261,7 +261,9 @@ fn budget_of(rough: &Rough, calibration: f64, resolution: f64) -> Budget {
         Distribution::Normal,
         sensitivity,
     );
-    budget.push("pixel", resolution, Distribution::Rectangular, sensitivity);
+    // Adds in squares: linear in it only where it is small.
+    let pixel = (s * s + resolution).sqrt() - s;
+    budget.push("pixel", pixel, Distribution::Rectangular, 3.0);
     budget
 }
 
@@ -343,9 +345,12 @@ fn fill(
         let budget = budget_of(&rough, calibration[0], resolution);
         let all = budget.combined(0.95);
         let value = 3.0 * rough.variance().sqrt();
-        // The chi-square ends hold the sampling; what is fully common is put outside.
-        let outside = coverage_factor(0.95, None)
-            * (calibration[0] * value).hypot(1.5 * resolution / (value / 3.0));
+        // The chi-square ends hold the sampling; what the pixels add to the variance and the
+        // calibration are put outside.
+        let k = coverage_factor(0.95, None);
+        let outside = k * calibration[0] * value;
+        let low = (low * low - k * resolution).max(0.0).sqrt();
+        let high = (high * high + k * resolution).sqrt();
         line.corrected = Some(CorrectedValue {
             value: touched.then_some(value),
             u: touched.then_some(all.u),
