@@ -19,7 +19,8 @@ use truewidth::progress::Progress;
 use truewidth::tip::Tip;
 use truewidth::tip::model::Model;
 use truewidth::virtual_scan::{
-    self, Bump, BumpShape, Bumps, Distortion, EdgeRoughness, Feature, Lines, Settings, Step,
+    self, Bump, BumpShape, Bumps, CorrelatedMap, Distortion, EdgeRoughness, Feature, Lines,
+    Settings, Step,
 };
 use truewidth::{Result, leveling, morphology};
 
@@ -49,6 +50,15 @@ enum Scene {
     Pitch,
     ParticleHeight,
     ParticleDiameter,
+    WallAngle,
+    EdgeRoughness,
+    WidthRoughness,
+    TrenchDepth,
+    NarrowTrenchDepth,
+    PitDepth,
+    LatticeVector,
+    LatticeAngle,
+    Sq,
 }
 
 /// A small generator of numbers in 0..1 (splitmix64), so that the example needs nothing else.
@@ -71,15 +81,13 @@ const HEIGHT: f64 = 50.0;
 
 fn request(kind: Kind, region: Option<Region>, at: f64) -> Request {
     Request {
-        name: String::new(),
-        kind,
         region,
         at: if kind == Kind::LineWidth {
             vec![at]
         } else {
             Vec::new()
         },
-        across: None,
+        ..Request::new("", kind)
     }
 }
 
@@ -166,6 +174,86 @@ fn scene(
                 },
             )
         }
+        Scene::WallAngle => {
+            let lines = Lines::new(random.between(95.0, 105.0), 400.0, 1, width, HEIGHT)
+                .walls(case.wall_deg, 0.0);
+            let request = request(Kind::SideWallAngle, None, 0.5);
+            let value = case.wall_deg;
+            (Box::new(lines), [rows, 200], Truth { request, value })
+        }
+        Scene::EdgeRoughness | Scene::WidthRoughness => {
+            let roughness = EdgeRoughness {
+                sigma_nm: 1.0,
+                length_nm: 15.0,
+                seed,
+            };
+            let lines = Lines::new(random.between(85.0, 95.0), 400.0, 1, width, HEIGHT)
+                .walls(case.wall_deg, 0.0)
+                .rough(roughness, -100.0, 600.0)?;
+            // Of the line at large.
+            let (kind, value) = if case.kind == Scene::EdgeRoughness {
+                (Kind::EdgeRoughness, 3.0)
+            } else {
+                (Kind::WidthRoughness, 3.0 * 2f64.sqrt())
+            };
+            let request = request(kind, None, 0.5);
+            (Box::new(lines), [400, 180], Truth { request, value })
+        }
+        Scene::TrenchDepth | Scene::NarrowTrenchDepth => {
+            let gap = if case.kind == Scene::TrenchDepth {
+                random.between(50.0, 70.0)
+            } else {
+                random.between(18.0, 30.0)
+            };
+            let height = random.between(30.0, 50.0);
+            let pitch = 100.0 + gap;
+            let lines = Lines::new(random.between(28.0, 38.0), pitch, 2, 100.0, height)
+                .walls(case.wall_deg, 0.0);
+            let request = request(Kind::HoleDepth, None, 0.5);
+            let value = height;
+            (Box::new(lines), [rows, 220], Truth { request, value })
+        }
+        Scene::PitDepth => {
+            let height = random.between(10.0, 40.0);
+            let radius = random.between(25.0, 35.0);
+            let centre = [random.between(58.0, 70.0), random.between(58.0, 70.0)];
+            let slope = case.wall_deg.to_radians().tan();
+            let pit = move |x: f64, y: f64| {
+                let out = (x - centre[0]).hypot(y - centre[1]) - radius;
+                (height / 2.0 + slope * out).clamp(0.0, height)
+            };
+            let request = request(Kind::HoleDepth, None, 0.5);
+            let value = height;
+            (Box::new(pit), [128, 128], Truth { request, value })
+        }
+        Scene::LatticeVector | Scene::LatticeAngle => {
+            let a = [random.between(38.0, 44.0), random.between(-1.0, 1.0)];
+            let b = [random.between(-1.0, 1.0), random.between(38.0, 44.0)];
+            let determinant = a[0] * b[1] - a[1] * b[0];
+            let bumps = move |x: f64, y: f64| {
+                let m = (b[1] * x - b[0] * y) / determinant;
+                let n = (a[0] * y - a[1] * x) / determinant;
+                let (m, n) = (m - m.round(), n - n.round());
+                let off = (m * a[0] + n * b[0]).hypot(m * a[1] + n * b[1]);
+                (3.0 * (15.0 - off)).clamp(0.0, 15.0)
+            };
+            let length = |v: [f64; 2]| v[0].hypot(v[1]);
+            let value = if case.kind == Scene::LatticeVector {
+                length(a)
+            } else {
+                let cosine = (a[0] * b[0] + a[1] * b[1]) / (length(a) * length(b));
+                cosine.acos().to_degrees()
+            };
+            let request = request(Kind::Lattice, None, 0.5);
+            (Box::new(bumps), [400, 400], Truth { request, value })
+        }
+        Scene::Sq => {
+            let map = CorrelatedMap::new(3.0, 30.0, [-80.0, -80.0], [280.0, 280.0], seed)?;
+            let value = true_sq(&map, 200);
+            let request = request(Kind::Texture, None, 0.5);
+            let surface = move |x: f64, y: f64| map.at(x, y);
+            (Box::new(surface), [200, 200], Truth { request, value })
+        }
         Scene::ParticleHeight | Scene::ParticleDiameter => {
             let radius = random.between(case.tip.0 / 2.0, 2.0 * case.tip.0);
             let at = [random.between(58.0, 70.0), random.between(58.0, 70.0)];
@@ -176,6 +264,29 @@ fn scene(
             (Box::new(bumps), [128, 128], Truth { request, value })
         }
     })
+}
+
+/// Root mean square height over `size` by `size` nm about the least-squares plane, on a grid four
+/// times finer than the pixel.
+fn true_sq(map: &CorrelatedMap, size: usize) -> f64 {
+    let n = 4 * size;
+    let at = |i: usize| (i as f64 + 0.5) / 4.0;
+    let half = size as f64 / 2.0;
+    let (mut sum, mut squares, mut by_x, mut by_y, mut spread) = (0.0, 0.0, 0.0, 0.0, 0.0);
+    for r in 0..n {
+        for c in 0..n {
+            let (x, y) = (at(c), at(r));
+            let z = map.at(x, y);
+            sum += z;
+            squares += z * z;
+            by_x += (x - half) * z;
+            by_y += (y - half) * z;
+            spread += (x - half).powi(2);
+        }
+    }
+    let count = (n * n) as f64;
+    let plane = (by_x * by_x + by_y * by_y) / spread;
+    ((squares - sum * sum / count - plane) / count).sqrt()
 }
 
 /// Scans, levels, corrects and measures; the result line and the truth.
@@ -189,12 +300,20 @@ fn one(case: &Case, seed: u64, model_fit: bool) -> Result<(Vec<Dimension>, f64)>
     let support =
         2.0 * truewidth::tip::model::sphere_cone_half_width(radius, half_angle, HEIGHT + 5.0);
     let tip: Tip = model.sample(support, pitch)?;
+    let tilt = [random.between(-0.01, 0.01), random.between(-0.01, 0.01)];
+    // The virtual tilt shears: along the tilted plane the lines are further apart.
+    let value = match case.kind {
+        Scene::Pitch | Scene::LatticeVector => truth.value * tilt[0].hypot(1.0),
+        Scene::LatticeAngle => truth.value - (tilt[0] * tilt[1]).to_degrees(),
+        _ => truth.value,
+    };
     let settings = Settings {
         support_nm: support,
         distortion: Distortion {
             noise_nm: case.noise_nm,
-            tilt: [random.between(-0.01, 0.01), random.between(-0.01, 0.01)],
-            drift_nm: 0.5,
+            tilt,
+            // A drift is a texture of its own.
+            drift_nm: if case.kind == Scene::Sq { 0.0 } else { 0.5 },
             ..Distortion::default()
         },
         seed: seed ^ 0x5eed,
@@ -206,17 +325,27 @@ fn one(case: &Case, seed: u64, model_fit: bool) -> Result<(Vec<Dimension>, f64)>
         &settings,
         &progress,
     )?;
-    let leveled = leveling::level(&made.scan, &leveling::Settings::default(), &progress)?;
+    let mut level = leveling::Settings::default();
+    if case.kind == Scene::Sq {
+        level.method = leveling::Method::Plane;
+    }
+    let leveled = leveling::level(&made.scan, &level, &progress)?;
     let noise = leveled.noise_nm.unwrap_or(0.0);
     let scan = &leveled.map;
     let heights = morphology::erode(scan.heights(), tip.shape(), &progress)?;
     let surface: HeightMap = scan.with_heights(heights, "corrected");
+    // As a job does: what noise lets an apex blur is one contact.
+    let spread = if case.kind == Scene::Sq {
+        [2 * ((6.0 * radius * noise).sqrt() as usize).max(1); 2]
+    } else {
+        [0, 0]
+    };
     let certainty = morphology::certainty_map(
         surface.heights(),
         scan.heights(),
         tip.shape(),
         (3.0 * noise) as f32,
-        [0, 0],
+        spread,
         &progress,
     )?;
     let leaning =
@@ -225,6 +354,7 @@ fn one(case: &Case, seed: u64, model_fit: bool) -> Result<(Vec<Dimension>, f64)>
         scan,
         noise_nm: leveled.noise_nm,
         calibration: Calibration::default(),
+        slope: leveled.slope,
         corrected: Some(Corrected {
             tip: &tip,
             surface: &surface,
@@ -245,9 +375,11 @@ fn one(case: &Case, seed: u64, model_fit: bool) -> Result<(Vec<Dimension>, f64)>
     let lines = match case.kind {
         Scene::ParticleHeight => pick(lines, "height"),
         Scene::ParticleDiameter => pick(lines, "diameter"),
+        Scene::LatticeAngle => pick(lines, "angle"),
+        Scene::Sq => pick(lines, "Sq"),
         _ => lines,
     };
-    Ok((lines, truth.value))
+    Ok((lines, value))
 }
 
 fn pick(lines: Vec<Dimension>, quantity: &str) -> Vec<Dimension> {
@@ -285,10 +417,15 @@ impl Tally {
         };
         self.corrected.extend(c.value.map(|v| v - truth));
         self.touched += usize::from(line.status == Some(Status::Touched));
-        if let (Some(low), Some(high)) = (c.low, c.high) {
+        // A bound on one side has no width, but it holds the truth or does not.
+        if c.low.is_some() || c.high.is_some() {
             self.intervals += 1;
+            let held =
+                c.low.is_none_or(|low| low <= truth) && c.high.is_none_or(|high| truth <= high);
+            self.covered += usize::from(held);
+        }
+        if let (Some(low), Some(high)) = (c.low, c.high) {
             self.widths.push(high - low);
-            self.covered += usize::from((low..=high).contains(&truth));
         }
     }
 }
@@ -433,6 +570,31 @@ fn cases() -> Vec<Case> {
         0.5,
     );
     add("pitch", slim, 80.0, 0.2, Scene::Pitch, 0.5);
+    add("side-wall angle", slim, 70.0, 0.3, Scene::WallAngle, 0.5);
+    add("side-wall angle", slim, 78.0, 0.3, Scene::WallAngle, 0.5);
+    add("side-wall angle", slim, 86.0, 0.3, Scene::WallAngle, 0.5);
+    add("side-wall angle", stout, 65.0, 0.3, Scene::WallAngle, 0.5);
+    add("side-wall angle", stout, 85.0, 0.3, Scene::WallAngle, 0.5);
+    let rough = Scene::EdgeRoughness;
+    add("edge roughness", slim, 75.0, 0.2, rough, 0.5);
+    let rough = Scene::WidthRoughness;
+    add("width roughness", slim, 75.0, 0.2, rough, 0.5);
+    add("width roughness", stout, 88.0, 0.2, rough, 0.5);
+    add("depth, trench", slim, 80.0, 0.2, Scene::TrenchDepth, 0.5);
+    let narrow = Scene::NarrowTrenchDepth;
+    add("depth, narrow trench", stout, 90.0, 0.2, narrow, 0.5);
+    add("depth, pit", slim, 80.0, 0.2, Scene::PitDepth, 0.5);
+    add("lattice vector", slim, 80.0, 0.2, Scene::LatticeVector, 0.5);
+    add(
+        "lattice angle, deg",
+        slim,
+        80.0,
+        0.2,
+        Scene::LatticeAngle,
+        0.5,
+    );
+    add("texture, Sq", slim, 0.0, 0.2, Scene::Sq, 0.5);
+    add("texture, Sq", stout, 0.0, 0.2, Scene::Sq, 0.5);
     cases
 }
 
@@ -456,6 +618,7 @@ fn speed() -> Result<()> {
         scan: &scan,
         noise_nm: Some(0.15),
         calibration: Calibration::default(),
+        slope: [0.0; 2],
         corrected: Some(Corrected {
             tip: &tip,
             surface: &scan,

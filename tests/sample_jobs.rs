@@ -26,6 +26,10 @@ fn truth(name: &str) -> toml::Table {
 fn true_value(truth: &toml::Table, line: &Dimension) -> Option<f64> {
     let kind = serde_json::to_value(line.kind).unwrap();
     let several = matches!(line.kind, Kind::Particle | Kind::Texture);
+    // The first line of a pitch is its result; the other methods stand beside it.
+    if line.kind == Kind::Pitch && line.quantity != "pitch" {
+        return None;
+    }
     let entry = truth["dimension"].as_array().unwrap().iter().find(|d| {
         d["name"].as_str() == Some(&line.name)
             && d["kind"].as_str() == kind.as_str()

@@ -40,6 +40,7 @@ pub fn find(
         scan,
         noise_nm,
         calibration: Calibration::default(),
+        slope: [0.0; 2],
         corrected: None,
     };
     if what == Find::Particles {
@@ -101,11 +102,9 @@ pub fn find(
 
 fn request(name: String, kind: Kind, region: Option<Region>, across: Option<Axis>) -> Request {
     Request {
-        name,
-        kind,
         region,
-        at: Vec::new(),
         across,
+        ..Request::new(name, kind)
     }
 }
 

@@ -2,25 +2,21 @@
 //! height above the lower plateau, the plateaus taken locally from both sides.
 
 use super::erosion;
-use super::sections::{self, Frame, Layout};
-use super::statistics::{self, Level};
-use super::wall::{self, Hold, Outline, Wall};
+use super::sections::{Frame, Layout};
+use super::trace::{Correction, Feature, Trace};
+use super::wall::{self, Hold};
 use super::{
     Axis, Corrected, CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer,
 };
 use crate::error::{Error, ErrorKind, Result};
-use crate::heightmap::HeightMap;
 use crate::morphology::certainty::NEVER;
 use crate::progress::Progress;
 use crate::uncertainty::{Budget, Component, Distribution, Series};
-use ndarray::ArrayView2;
 
 const ASSUMPTIONS: &str = "Height fractions between local plateaus (densest level within the \
     feature and to both sides); edges by linear interpolation, section by section; no undercut. \
     Threshold width: common practice; contact: J. S. Villarrubia, J. Res. NIST 102, 425 (1997)";
 
-/// Sections used for the mean course of a wall; the widths use all.
-const CURVE_SECTIONS: usize = 200;
 /// Measures the width at each height fraction asked for, one line each.
 ///
 /// Where the region holds several features the most central one is measured, and flagged. Errors
@@ -42,41 +38,28 @@ pub(super) fn measure(
         )
         .remedy("Give fractions from 0.02 (near the foot) to 0.98 (near the top)"));
     }
-    let frame = Frame::new(input, request)?;
     let empty = |f: f64| Dimension {
         at: Some(f),
         ..answer(request, Kind::LineWidth, "line width", "nm", ASSUMPTIONS)
     };
-    let refuse = |reason: &str| {
-        let line = |f: &f64| Dimension {
-            flags: vec![reason.to_owned()],
-            ..empty(*f)
-        };
-        Ok(fractions.iter().map(line).collect())
+    let feature = match Feature::find(input, request, &fractions)? {
+        Ok(feature) => feature,
+        Err(reason) => {
+            let line = |f: &f64| Dimension {
+                flags: vec![format!("not measured: {reason}")],
+                ..empty(*f)
+            };
+            return Ok(fractions.iter().map(line).collect());
+        }
     };
-    let layout = match Layout::find(frame.of(input.scan), frame.noise) {
-        Ok(layout) => layout,
-        Err(reason) => return refuse(&format!("not measured: {reason}")),
-    };
-    let Some(first) = layout.central_pair() else {
-        return refuse("not measured: the region holds one edge only, a width needs two");
-    };
-    let Some(scan) = Trace::take(input.scan, &frame, &layout, first, &fractions) else {
-        return refuse("not measured: the two edges cannot be followed through the region");
-    };
+    let Feature {
+        frame,
+        layout,
+        scan,
+        correction,
+    } = &feature;
     progress.check()?;
-    let correction = input.corrected.and_then(|c| {
-        let trace = |map: &HeightMap| Trace::take(map, &frame, &layout, first, &fractions);
-        Some(Correction {
-            surface: trace(c.surface)?,
-            upper: c.surface_upper.and_then(trace),
-            lower: c.surface_lower.and_then(trace),
-            outlines: outlines(&c, frame.axis, scan.ridge),
-            given: c,
-        })
-    });
-    progress.check()?;
-    let common = common_flags(input, &frame, &layout, &scan);
+    let common = common_flags(input, frame, layout, scan);
     Ok((0..fractions.len())
         .map(|i| {
             let mut line = empty(fractions[i]);
@@ -87,273 +70,19 @@ pub(super) fn measure(
             }
             .to_owned();
             line.flags.clone_from(&common);
-            line.marks = scan.marks(&frame, i);
-            fill(&mut line, input, &frame, &scan, correction.as_ref(), i);
+            line.marks = scan.marks(frame, i);
+            fill(&mut line, input, frame, scan, correction.as_ref(), i);
             line
         })
         .collect())
 }
 
-/// Everything taken from the corrected maps.
-struct Correction<'a> {
-    surface: Trace,
-    upper: Option<Trace>,
-    lower: Option<Trace>,
-    /// Tip outlines that meet the left and the right wall.
-    outlines: [Outline; 2],
-    given: Corrected<'a>,
-}
-
-fn outlines(corrected: &Corrected, axis: Axis, ridge: bool) -> [Outline; 2] {
-    // The left wall of a ridge falls to the left; that of a trench to the right.
-    [!ridge, ridge].map(|positive| Outline::of(corrected.tip, axis, positive))
-}
-
-/// One map's two edges, section by section.
-struct Trace {
-    ridge: bool,
-    /// Step between the plateaus, nm.
-    height: f64,
-    /// Heights of the lower and the upper plateau, nm.
-    levels: [f64; 2],
-    /// Standard uncertainty of a threshold's height, nm.
-    level_u: f64,
-    /// Heights of the plateaus left and right of the feature differ by this much, nm.
-    imbalance: f64,
-    /// Cosine of the angle between the line's normal and the cross-sections.
-    cosine: f64,
-    /// `[fraction][section]`: left and right edge, pixels.
-    edges: Vec<[Vec<f64>; 2]>,
-    /// Mean course of the left and the right wall.
-    walls: [Wall; 2],
-    pitch: f64,
-}
-
-impl Trace {
-    fn take(
-        map: &HeightMap,
-        frame: &Frame,
-        layout: &Layout,
-        first: usize,
-        fractions: &[f64],
-    ) -> Option<Self> {
-        let sections = frame.of(map);
-        let ridge = layout.edges[first].rising;
-        let reach = [layout.reach(first), layout.reach(first + 1)];
-        let middle_of = |level: f64| {
-            [0, 1].map(|k| sections::follow(sections, layout.edges[first + k], reach[k], level))
-        };
-        let rough = middle_of(layout.low.value + 0.5 * layout.height());
-        let plateaus = Plateaus::of(sections, &rough, reach, frame.noise)?;
-        let (low, high) = plateaus.low_high(ridge);
-        let height = high.value - low.value;
-        if height.is_nan() || height <= 0.0 {
-            return None;
-        }
-        let middle = middle_of(low.value + 0.5 * height);
-        let tangent = slope_over_sections(&middle) * frame.pitch / frame.spacing;
-        let cosine = 1.0 / tangent.hypot(1.0);
-        let crossing = |f: f64, section: usize, k: usize| {
-            let at = middle[k][section];
-            let rising = layout.edges[first + k].rising;
-            let window = (at - reach[k].0, at + reach[k].1);
-            let level = low.value + f * height;
-            let row = sections.row(section);
-            if at.is_nan() {
-                return f64::NAN;
-            }
-            sections::crossing_from(row, level, rising, at, f >= 0.5, window, frame.noise)
-                .unwrap_or(f64::NAN)
-        };
-        let count = sections.nrows();
-        let edges: Vec<[Vec<f64>; 2]> = fractions
-            .iter()
-            .map(|&f| [0, 1].map(|k| (0..count).map(|i| crossing(f, i, k)).collect()))
-            .collect();
-        if edges
-            .iter()
-            .all(|pair| pair[0].iter().zip(&pair[1]).all(|(a, b)| (a - b).is_nan()))
-        {
-            return None;
-        }
-        let every = count.div_ceil(CURVE_SECTIONS);
-        let walls = [0, 1].map(|k| {
-            let outward = if layout.edges[first + k].rising {
-                -1.0
-            } else {
-                1.0
-            };
-            let grid: Vec<f64> = (1..50).map(|i| f64::from(i) * 0.02).collect();
-            let mut u = Vec::with_capacity(grid.len());
-            let outwards = grid
-                .iter()
-                .map(|&f| {
-                    // Relative to the middle, so that edge roughness cancels.
-                    let off: Vec<f64> = (0..count)
-                        .step_by(every)
-                        .map(|i| crossing(f, i, k) - middle[k][i])
-                        .collect();
-                    let kept = statistics::clipped(&off, 4.0);
-                    let n = kept.iter().filter(|v| v.is_finite()).count();
-                    let scatter = statistics::robust_deviation(&kept).unwrap_or(0.0);
-                    u.push(scatter / (n.max(1) as f64).sqrt() * frame.pitch);
-                    if 2 * n < off.len() {
-                        return f64::NAN;
-                    }
-                    outward * statistics::mean(&kept) * frame.pitch * cosine
-                })
-                .collect();
-            Wall {
-                fractions: grid,
-                outwards,
-                height,
-                u,
-                noise: frame.noise,
-            }
-        });
-        Some(Self {
-            ridge,
-            height,
-            levels: [low.value, high.value],
-            level_u: plateaus.u(ridge),
-            imbalance: plateaus.imbalance(),
-            cosine,
-            edges,
-            walls,
-            pitch: frame.pitch,
-        })
-    }
-
-    /// Widths at one fraction, section by section, nm; outliers beyond four robust deviations and
-    /// sections without both edges are NaN.
-    fn widths(&self, i: usize) -> Vec<f64> {
-        let [left, right] = &self.edges[i];
-        let widths: Vec<f64> = left
-            .iter()
-            .zip(right)
-            .map(|(a, b)| (b - a) * self.pitch * self.cosine)
-            .collect();
-        statistics::clipped(&widths, 4.0)
-    }
-
-    /// Mean width at one fraction, nm.
-    fn width(&self, i: usize) -> Option<Series> {
-        Series::of(&self.widths(i))
-    }
-
-    fn marks(&self, frame: &Frame, i: usize) -> Vec<[f64; 4]> {
-        let [left, right] = &self.edges[i];
-        let sections: Vec<f64> = (0..left.len()).map(|s| s as f64).collect();
-        let last = sections.len() as f64 - 1.0;
-        let fit = |edge: &[f64]| {
-            statistics::line(&sections, edge).unwrap_or((0.0, statistics::mean(edge)))
-        };
-        let (a, b) = (fit(left), fit(right));
-        let at = |line: (f64, f64), s: f64| line.1 + line.0 * s;
-        let marks = [
-            frame.segment((0.0, at(a, 0.0)), (last, at(a, last))),
-            frame.segment((0.0, at(b, 0.0)), (last, at(b, last))),
-            frame.segment(
-                (last / 2.0, at(a, last / 2.0)),
-                (last / 2.0, at(b, last / 2.0)),
-            ),
-        ];
-        marks
-            .into_iter()
-            .filter(|m| m.iter().all(|v| v.is_finite()))
-            .collect()
-    }
-}
-
-/// Slope of the line's middle over the sections, pixels per section.
-fn slope_over_sections(middle: &[Vec<f64>; 2]) -> f64 {
-    let centre: Vec<f64> = middle[0]
-        .iter()
-        .zip(&middle[1])
-        .map(|(a, b)| (a + b) / 2.0)
-        .collect();
-    let sections: Vec<f64> = (0..centre.len()).map(|s| s as f64).collect();
-    // Two or three sections tell no angle.
-    if centre.iter().filter(|c| c.is_finite()).count() < 8 {
-        return 0.0;
-    }
-    statistics::line(&sections, &centre).map_or(0.0, |l| l.0)
-}
-
-/// The plateaus a feature's height refers to.
-struct Plateaus {
-    centre: Level,
-    left: Option<Level>,
-    right: Option<Level>,
-}
-
-impl Plateaus {
-    fn of(
-        sections: ArrayView2<f32>,
-        middle: &[Vec<f64>; 2],
-        reach: [(f64, f64); 2],
-        noise: f64,
-    ) -> Option<Self> {
-        let every = (sections.len() / 60_000).max(1);
-        let collect = |zone: &dyn Fn(f64, f64) -> (f64, f64)| {
-            let mut heights = Vec::new();
-            for i in (0..sections.nrows()).step_by(every) {
-                let (from, to) = zone(middle[0][i], middle[1][i]);
-                // NaN makes both casts 0 and the range empty.
-                let from = from.ceil().max(0.0) as usize;
-                let to = ((to + 1.0).floor().max(0.0) as usize).min(sections.ncols());
-                heights.extend((from..to).map(|c| f64::from(sections[[i, c]])));
-            }
-            statistics::level(&mut heights, noise)
-        };
-        // A quarter of each zone is left to the wall; the densest level forgives the rest.
-        let centre = collect(&|a, b| (a + 0.25 * (b - a), b - 0.25 * (b - a)))?;
-        let left = collect(&|a, _| (a - reach[0].0, a - 0.25 * reach[0].0));
-        let right = collect(&|_, b| (b + 0.25 * reach[1].1, b + reach[1].1));
-        (left.is_some() || right.is_some()).then_some(Self {
-            centre,
-            left,
-            right,
-        })
-    }
-
-    fn sides(&self) -> Vec<Level> {
-        self.left.iter().chain(&self.right).copied().collect()
-    }
-
-    fn low_high(&self, ridge: bool) -> (Level, Level) {
-        let sides = self.sides();
-        let n = sides.len() as f64;
-        let outer = Level {
-            value: sides.iter().map(|l| l.value).sum::<f64>() / n,
-            deviation: sides.iter().map(|l| l.deviation).fold(0.0, f64::max),
-            count: sides.iter().map(|l| l.count).sum(),
-        };
-        if ridge {
-            (outer, self.centre)
-        } else {
-            (self.centre, outer)
-        }
-    }
-
-    fn imbalance(&self) -> f64 {
-        match (self.left, self.right) {
-            (Some(a), Some(b)) => (a.value - b.value).abs(),
-            _ => 0.0,
-        }
-    }
-
-    /// Standard uncertainty of a threshold between the plateaus, nm: their means (a hundredth of
-    /// the pixels taken as independent) and half their imbalance as a rectangular bound.
-    fn u(&self, ridge: bool) -> f64 {
-        let (low, high) = self.low_high(ridge);
-        let mean = |l: Level| l.deviation / (l.count as f64 / 100.0).max(1.0).sqrt();
-        (0.25 * mean(low).powi(2) + 0.25 * mean(high).powi(2) + self.imbalance().powi(2) / 12.0)
-            .sqrt()
-    }
-}
-
-fn common_flags(input: &Input, frame: &Frame, layout: &Layout, scan: &Trace) -> Vec<String> {
+pub(super) fn common_flags(
+    input: &Input,
+    frame: &Frame,
+    layout: &Layout,
+    scan: &Trace,
+) -> Vec<String> {
     let mut flags = Vec::new();
     if layout.edges.len() > 2 {
         flags.push(format!(
@@ -398,20 +127,7 @@ fn budget_of(trace: &Trace, i: usize, series: &Series, calibration: f64, fractio
         Distribution::Normal,
         series.mean,
     );
-    // One pixel's worth where the wall is a jump; interpolation over a wall of several pixels
-    // leaves the square of that less, never below a fortieth of a pixel; edges that wander over
-    // the grid average it out. Chosen on virtual scans (examples/dimension_validation.rs).
-    let pixel = |k: usize| {
-        let span = trace.walls[k].slope(fraction) * 0.25 * trace.height / trace.pitch;
-        let span = if span.is_finite() { span.max(1.0) } else { 1.0 };
-        let wander = statistics::robust_deviation(&trace.edges[i][k]).unwrap_or(0.0);
-        let average = if wander > 0.3 {
-            series.effective.sqrt()
-        } else {
-            1.0
-        };
-        (trace.pitch / 12f64.sqrt() / (span * span)).max(trace.pitch / 40.0) / average
-    };
+    let pixel = |k: usize| trace.pixel_u(i, k, fraction, series.effective);
     budget.push(
         "pixel, both edges",
         pixel(0).hypot(pixel(1)),
@@ -419,12 +135,13 @@ fn budget_of(trace: &Trace, i: usize, series: &Series, calibration: f64, fractio
         1.0,
     );
     budget.push("plateau levels", trace.level_u, Distribution::Normal, slope);
+    let (u, degrees_of_freedom) = trace.repeatability(i, series);
     budget.add(Component {
         source: "repeatability along the line (noise, edge roughness)".to_owned(),
-        u: series.standard_error(),
+        u,
         distribution: Distribution::Normal,
         sensitivity: 1.0,
-        degrees_of_freedom: series.degrees_of_freedom(),
+        degrees_of_freedom,
     });
     budget
 }
@@ -669,7 +386,13 @@ fn explain(line: &mut Dimension, holds: &[Hold; 2], surface: &Trace) {
 }
 
 /// Flags edges that lean on the rim of the scan or that the tip never touched.
-fn lean(line: &mut Dimension, frame: &Frame, surface: &Trace, given: &Corrected, i: usize) {
+pub(super) fn lean(
+    line: &mut Dimension,
+    frame: &Frame,
+    surface: &Trace,
+    given: &Corrected,
+    i: usize,
+) {
     let leaning = frame.of_array(given.edge_leaning);
     let certainty = frame.of_array(given.certainty);
     let (mut total, mut leans, mut never) = (0usize, 0usize, 0usize);

@@ -1,30 +1,39 @@
 //! Dimensions, as scanned and corrected. One small file per kind of measurand.
 
+mod distance;
 mod erosion;
 mod evidence;
+mod filter;
 mod find;
+mod hole_depth;
+mod lattice;
 mod line_width;
 mod model_fit;
 mod particle;
 mod pitch;
+mod roughness;
 mod sections;
 mod segmentation;
+mod side_wall;
 mod statistics;
 mod step_height;
+mod step_histogram;
 #[cfg(test)]
 mod tests;
 mod texture;
+mod trace;
 mod wall;
 
 pub use evidence::{Evidence, MonteCarlo};
 pub use find::{Find, find};
 pub use model_fit::{Fitted, ModelFit, second_opinion};
 
-use crate::error::Result;
+use crate::error::{Error, ErrorKind, Result};
 use crate::heightmap::{HeightMap, Region};
 use crate::progress::Progress;
 use crate::tip::Tip;
 use crate::uncertainty::Component;
+use crate::units::Length;
 use ndarray::ArrayView2;
 use serde::{Deserialize, Serialize};
 
@@ -42,6 +51,30 @@ pub enum Kind {
     Particle,
     /// Areal texture parameters (ISO 25178-2).
     Texture,
+    /// Angle of the walls of a ridge or a trench.
+    SideWallAngle,
+    /// Roughness of the edges of a ridge or a trench.
+    EdgeRoughness,
+    /// Roughness of the width of a ridge or a trench.
+    WidthRoughness,
+    /// Depth of a pit or a trench below the plateau around it.
+    HoleDepth,
+    /// Lateral distance and height difference of two points.
+    Distance,
+    /// Slope angle of the profile between two points.
+    Angle,
+    /// Vectors of a two-dimensional lattice and the angle between them.
+    Lattice,
+}
+
+impl Kind {
+    /// Whether height fractions ([`Request::at`]) mean something for it.
+    pub fn has_fractions(self) -> bool {
+        matches!(
+            self,
+            Self::LineWidth | Self::SideWallAngle | Self::EdgeRoughness | Self::WidthRoughness
+        )
+    }
 }
 
 /// Which way a line or step is crossed.
@@ -65,12 +98,98 @@ pub struct Request {
     /// Where; the whole scan when absent.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub region: Option<Region>,
-    /// Height fractions (0 bottom, 1 top), line width only; absent = 0.5.
+    /// Height fractions (0 bottom, 1 top): one width or roughness each, absent = 0.5; for a side
+    /// wall the two between which its angle is taken, absent = 0.3 and 0.8.
     #[serde(default, skip_serializing_if = "Vec::is_empty")]
     pub at: Vec<f64>,
     /// Which way it is crossed; found from the data when absent.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub across: Option<Axis>,
+    /// First point `[x, y]` of a distance or an angle.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub from: Option<[Length; 2]>,
+    /// Second point `[x, y]` of a distance or an angle.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub to: Option<[Length; 2]>,
+    /// How far from each point its edge is looked for along the profile; absent = the points
+    /// themselves.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub search: Option<Length>,
+    /// Nesting index of the S-filter of a texture (what is shorter is taken off).
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub s_filter: Option<Length>,
+    /// Nesting index of the L-filter of a texture (what is longer is taken off).
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub l_filter: Option<Length>,
+    /// How a step height is taken; absent = by zones beside the edges.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub method: Option<StepMethod>,
+}
+
+impl Request {
+    /// A request with everything left to the program.
+    pub fn new(name: impl Into<String>, kind: Kind) -> Self {
+        Self {
+            name: name.into(),
+            kind,
+            region: None,
+            at: Vec::new(),
+            across: None,
+            from: None,
+            to: None,
+            search: None,
+            s_filter: None,
+            l_filter: None,
+            method: None,
+        }
+    }
+
+    /// Checks what the types cannot. Errors of kind `Setting`.
+    pub fn validate(&self) -> Result<()> {
+        let bad = |what: String, remedy: &str| {
+            Err(Error::new(
+                ErrorKind::Setting,
+                format!("dimension \"{}\": {what}", self.name),
+            )
+            .remedy(remedy))
+        };
+        if let Some(f) = self.at.iter().find(|f| !(**f > 0.0 && **f < 1.0)) {
+            return bad(
+                format!("height fraction {f}"),
+                "Give fractions between 0 (bottom) and 1 (top), for example 0.5",
+            );
+        }
+        for (key, length) in [
+            ("search", self.search),
+            ("s-filter", self.s_filter),
+            ("l-filter", self.l_filter),
+        ] {
+            if let Some(length) = length
+                && !(length.nm() > 0.0)
+            {
+                return bad(format!("{key} = \"{length}\""), "Give a positive length");
+            }
+        }
+        if let (Some(s), Some(l)) = (self.s_filter, self.l_filter)
+            && s.nm() >= l.nm()
+        {
+            return bad(
+                format!("s-filter = \"{s}\" is not below l-filter = \"{l}\""),
+                "Give the S-filter the shorter nesting index",
+            );
+        }
+        Ok(())
+    }
+}
+
+/// How a step height is taken.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum StepMethod {
+    /// Zones beside the edges: ISO 5436-1 type A1 for a ridge or a trench, two regions for an edge.
+    Zones,
+    /// Distance of the two densest levels of the whole region.
+    Histogram,
 }
 
 /// Relative standard uncertainties of the axes.
@@ -119,6 +238,9 @@ pub struct Input<'a> {
     pub noise_nm: Option<f64>,
     /// Relative standard uncertainties of the axes.
     pub calibration: Calibration,
+    /// Slope along x and y that levelling took off, nm per nm: lengths of a period are taken along
+    /// the tilted plane.
+    pub slope: [f64; 2],
     /// The correction, where there is one.
     pub corrected: Option<Corrected<'a>>,
 }
@@ -200,11 +322,19 @@ pub fn measure(input: &Input, request: &Request, progress: &Progress) -> Result<
     progress.check()?;
     sections::check_sizes(input)?;
     match request.kind {
+        Kind::StepHeight if request.method == Some(StepMethod::Histogram) => {
+            step_histogram::measure(input, request, progress)
+        }
         Kind::StepHeight => step_height::measure(input, request, progress),
         Kind::LineWidth => line_width::measure(input, request, progress),
         Kind::Pitch => pitch::measure(input, request, progress),
         Kind::Texture => texture::measure(input, request, progress),
         Kind::Particle => particle::measure(input, request, progress),
+        Kind::SideWallAngle => side_wall::measure(input, request, progress),
+        Kind::EdgeRoughness | Kind::WidthRoughness => roughness::measure(input, request, progress),
+        Kind::HoleDepth => hole_depth::measure(input, request, progress),
+        Kind::Distance | Kind::Angle => distance::measure(input, request, progress),
+        Kind::Lattice => lattice::measure(input, request, progress),
     }
 }
 

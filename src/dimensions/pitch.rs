@@ -1,4 +1,5 @@
-//! Pitch of a grating: centroids of its lines, refined by the phase of its Fourier component.
+//! Pitch of a grating by three methods: its Fourier component, which is the result, the centroids
+//! of its lines and the cross-correlation with one period of itself, shown beside it.
 
 use super::sections::{Frame, Layout};
 use super::statistics;
@@ -10,9 +11,11 @@ use ndarray::ArrayView2;
 use std::f64::consts::TAU;
 
 const ASSUMPTIONS: &str = "Equidistant, identical lines: the tip widens all alike and leaves their \
-    distance. Centroid method and Fourier component across the lines, after ISO 11952 (from memory)";
+    distance. Fourier, centroid and cross-correlation methods across the lines, along the \
+    surface's own plane, after ISO 11952 (from memory)";
 
-/// Measures the pitch: one line.
+/// Measures the pitch: a line for the result, by the Fourier component, and one for each other
+/// method.
 pub(super) fn measure(
     input: &Input,
     request: &Request,
@@ -58,7 +61,18 @@ pub(super) fn measure(
         }
     };
     let cosine = 1.0 / tangent.hypot(1.0);
-    let scale = frame.pitch * cosine;
+    // Along the plane that levelling laid flat: pitch = apparent / cos(tilt).
+    let tilt = match frame.axis {
+        Axis::X => input.slope[0],
+        Axis::Y => input.slope[1],
+    };
+    if tilt.abs() > 3e-3 {
+        line.flags.push(format!(
+            "taken along the plane, tilted by {:.2} degrees across the lines",
+            tilt.abs().atan().to_degrees()
+        ));
+    }
+    let scale = frame.pitch * cosine * tilt.hypot(1.0);
     let value = series.mean * scale;
     let centroid = grating.period * scale;
     if tangent.atan().to_degrees().abs() > 0.5 {
@@ -122,7 +136,125 @@ pub(super) fn measure(
         }
     }
     line.budget = budget.into_components();
-    Ok(vec![line])
+    let mut lines = vec![line];
+    let correlated = by_correlation(&grating);
+    for (quantity, figure) in [
+        (
+            "pitch, centroid method",
+            Some((grating.period, grating.scatter)),
+        ),
+        ("pitch, cross-correlation method", correlated),
+    ] {
+        let mut other = answer(request, Kind::Pitch, quantity, "nm", ASSUMPTIONS);
+        other.marks.clone_from(&lines[0].marks);
+        match figure {
+            Some((period, scatter)) => {
+                let number = grating.lines.len();
+                let u = [scatter * scale, series.standard_error() * scale];
+                beside(&mut other, input, calibration, period * scale, u, number);
+            }
+            None => other.flags.push(
+                "not measured: fewer than three places correlate with the middle period".to_owned(),
+            ),
+        }
+        lines.push(other);
+    }
+    Ok(lines)
+}
+
+/// Fills the line of another method: its value, with the placement of its `number` lines and the
+/// repeatability over the sections.
+fn beside(
+    line: &mut Dimension,
+    input: &Input,
+    calibration: f64,
+    value: f64,
+    [placement, repeatability]: [f64; 2],
+    number: usize,
+) {
+    let mut budget = Budget::new();
+    budget.push("axis calibration", calibration, Distribution::Normal, value);
+    budget.add(Component {
+        source: "placement of the lines".to_owned(),
+        u: placement,
+        distribution: Distribution::Normal,
+        sensitivity: 1.0,
+        degrees_of_freedom: Some((number as f64 - 2.0).max(1.0)),
+    });
+    budget.push(
+        "repeatability over the sections",
+        repeatability,
+        Distribution::Normal,
+        1.0,
+    );
+    let all = budget.combined(0.95);
+    line.as_scanned = Some(Value {
+        value,
+        u: Some(all.u),
+    });
+    if input.corrected.is_some() {
+        line.corrected = Some(CorrectedValue {
+            value: Some(value),
+            u: Some(all.u),
+            expanded: Some(all.expanded),
+            k: Some(all.k),
+            low: Some(value - all.expanded),
+            high: Some(value + all.expanded),
+        });
+        line.status = Some(Status::Touched);
+    }
+    line.budget = budget.into_components();
+}
+
+/// Period and its standard uncertainty, pixels: places where one period from the middle of the
+/// profile correlates best with it, a straight line through them over their number. `None` with
+/// fewer than three places.
+fn by_correlation(grating: &Grating) -> Option<(f64, f64)> {
+    let profile = &grating.profile;
+    let width = grating.period.round() as usize;
+    let last = profile.len().checked_sub(width)?;
+    let start = last / 2;
+    if width < 4 || last < width {
+        return None;
+    }
+    let normalised = |from: usize| -> Vec<f64> {
+        let part = &profile[from..from + width];
+        let mean = statistics::mean(part);
+        let off: Vec<f64> = part.iter().map(|z| z - mean).collect();
+        let size = off.iter().map(|z| z * z).sum::<f64>().sqrt();
+        off.iter().map(|z| z / size.max(1e-300)).collect()
+    };
+    let template = normalised(start);
+    let match_at: Vec<f64> = (0..=last)
+        .map(|from| {
+            let part = normalised(from);
+            part.iter().zip(&template).map(|(a, b)| a * b).sum()
+        })
+        .collect();
+    let mut places = Vec::new();
+    for i in 1..last {
+        let [before, here, after] = [match_at[i - 1], match_at[i], match_at[i + 1]];
+        if here > 0.6 && here >= before && here > after {
+            let bend = 2.0 * here - before - after;
+            places.push(i as f64 + 0.5 * (after - before) / bend);
+        }
+    }
+    // The nearest whole number of periods from the template numbers each place.
+    let number = |at: &f64| ((at - start as f64) / grating.period).round();
+    let numbers: Vec<f64> = places.iter().map(number).collect();
+    let n = places.len();
+    if n < 3 || numbers.windows(2).any(|pair| pair[0] == pair[1]) {
+        return None;
+    }
+    let (period, offset) = statistics::line(&numbers, &places)?;
+    let squares: f64 = numbers
+        .iter()
+        .zip(&places)
+        .map(|(i, x)| (x - offset - period * i).powi(2))
+        .sum();
+    let mean = statistics::mean(&numbers);
+    let spread: f64 = numbers.iter().map(|i| (i - mean).powi(2)).sum();
+    Some((period, (squares / (n as f64 - 2.0) / spread).sqrt()))
 }
 
 /// Whole lines of the central profile.
@@ -133,6 +265,8 @@ struct Grating {
     period: f64,
     /// Standard uncertainty of it from the scatter of the centroids, pixels.
     scatter: f64,
+    /// The central profile.
+    profile: Vec<f64>,
 }
 
 impl Grating {
@@ -163,6 +297,7 @@ impl Grating {
             lines,
             period,
             scatter: variance.sqrt(),
+            profile: layout.profile,
         })
     }
 
@@ -307,15 +442,10 @@ mod tests {
             scan: map,
             noise_nm: Some(0.0),
             calibration: Calibration::default(),
+            slope: [0.0; 2],
             corrected: None,
         };
-        let request = Request {
-            name: "g".to_owned(),
-            kind: Kind::Pitch,
-            region: None,
-            at: Vec::new(),
-            across: None,
-        };
+        let request = Request::new("g", Kind::Pitch);
         measure(&input, &request, &Progress::new())
             .unwrap()
             .remove(0)
@@ -330,6 +460,27 @@ mod tests {
         .unwrap();
         let value = measure_map(&map).as_scanned.unwrap().value;
         assert!((value / 61.7 - 1.0).abs() < 2e-4, "{value}");
+    }
+
+    #[test]
+    fn the_three_methods_agree_on_a_grating() {
+        let map = HeightMap::from_fn(32, 500, Pitch::square(1.0), |x, _| {
+            ((9.0 - ((x - 4.3).rem_euclid(41.3) - 20.65).abs()) * 3.0).clamp(0.0, 15.0)
+        })
+        .unwrap();
+        let input = Input {
+            scan: &map,
+            noise_nm: Some(0.0),
+            calibration: Calibration::default(),
+            slope: [0.0; 2],
+            corrected: None,
+        };
+        let lines = measure(&input, &Request::new("g", Kind::Pitch), &Progress::new()).unwrap();
+        assert_eq!(lines.len(), 3);
+        for line in lines {
+            let value = line.as_scanned.unwrap().value;
+            assert!((value - 41.3).abs() < 0.01, "{}: {value}", line.quantity);
+        }
     }
 
     #[test]

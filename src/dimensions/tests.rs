@@ -8,22 +8,23 @@ use crate::virtual_scan::{self, Bump, BumpShape, Bumps, Feature, Lines, Settings
 use ndarray::Array2;
 use proptest::prelude::*;
 
-const KINDS: [Kind; 5] = [
+const KINDS: [Kind; 12] = [
     Kind::StepHeight,
     Kind::LineWidth,
     Kind::Pitch,
     Kind::Particle,
     Kind::Texture,
+    Kind::SideWallAngle,
+    Kind::EdgeRoughness,
+    Kind::WidthRoughness,
+    Kind::HoleDepth,
+    Kind::Distance,
+    Kind::Angle,
+    Kind::Lattice,
 ];
 
 fn request(kind: Kind) -> Request {
-    Request {
-        name: "a".to_owned(),
-        kind,
-        region: None,
-        at: Vec::new(),
-        across: None,
-    }
+    Request::new("a", kind)
 }
 
 /// A scan with its correction by the very tip that made it.
@@ -102,6 +103,7 @@ impl Made {
                 y: 0.001,
                 z: 0.001,
             },
+            slope: [0.0; 2],
             corrected: Some(corrected),
         };
         measure(&input, request, &Progress::new()).unwrap()
@@ -337,6 +339,7 @@ fn a_correction_of_another_size_is_refused() {
         scan: &other,
         noise_nm: None,
         calibration: Calibration::default(),
+        slope: [0.0; 2],
         corrected: Some(made.corrected()),
     };
     assert!(measure(&input, &request(Kind::Texture), &Progress::new()).is_err());
@@ -349,6 +352,7 @@ fn a_fraction_out_of_range_is_named() {
         scan: &map,
         noise_nm: None,
         calibration: Calibration::default(),
+        slope: [0.0; 2],
         corrected: None,
     };
     let mut request = request(Kind::LineWidth);
@@ -372,6 +376,7 @@ fn answers(map: &HeightMap) {
                 scan: map,
                 noise_nm: None,
                 calibration: Calibration::default(),
+                slope: [0.0; 2],
                 corrected,
             };
             let lines = measure(&input, &request(kind), &Progress::new()).unwrap();
@@ -444,4 +449,154 @@ proptest! {
         }).unwrap();
         answers(&map);
     }
+}
+
+/// Imaged wall half-angle = max(tip's, wall's), computed independently.
+#[test]
+fn a_wall_flatter_than_the_flank_has_its_angle_and_a_steeper_one_a_bound() {
+    let measured = |wall: f64, model: Model| {
+        let lines = Lines::new(90.4, 400.0, 1, 61.7, 50.0).walls(wall, 0.0);
+        let made = Made::new(&lines, model, 24, 180, 0.1);
+        made.measure(made.corrected(), &request(Kind::SideWallAngle))
+    };
+    for line in measured(70.0, SLIM) {
+        let c = line.corrected.unwrap();
+        assert_eq!(line.status, Some(Status::Touched), "{:?}", line.flags);
+        assert!((c.value.unwrap() - 70.0).abs() < 0.2, "{c:?}");
+        assert!(c.low.unwrap() <= 70.0 && 70.0 <= c.high.unwrap(), "{c:?}");
+    }
+    for line in measured(90.0, STOUT) {
+        let c = line.corrected.unwrap();
+        assert_eq!(line.status, Some(Status::Bounded));
+        assert_eq!((c.value, c.high), (None, Some(90.0)));
+        assert!((c.low.unwrap() - 75.0).abs() < 1.0, "{c:?}");
+        assert!((line.as_scanned.unwrap().value - 75.0).abs() < 1.5);
+    }
+}
+
+/// Vertical trench, R = 10, a = 15 degrees: g = 22 is reached to 12.4155, g = 19 to 6.8775
+/// (computed independently); a wide one to its floor.
+#[test]
+fn hole_depths_reached_and_not() {
+    for (gap, reached) in [(22.0, Some(12.4155)), (19.0, Some(6.8775)), (80.0, None)] {
+        let lines = Lines::new(39.0, 100.0 + gap, 2, 100.0, 50.0);
+        let made = Made::new(&lines, STOUT, 24, 220, 0.0);
+        let line = made
+            .measure(made.corrected(), &request(Kind::HoleDepth))
+            .remove(0);
+        let c = line.corrected.unwrap();
+        assert_eq!(line.quantity, "trench depth");
+        match reached {
+            Some(depth) => {
+                assert_eq!(
+                    (c.value, c.high, line.status),
+                    (None, None, Some(Status::Bounded))
+                );
+                let scanned = line.as_scanned.unwrap().value;
+                assert!(
+                    (depth - 2.0..depth + 0.1).contains(&scanned),
+                    "{scanned} {depth}"
+                );
+            }
+            None => {
+                assert_eq!(line.status, Some(Status::Touched), "{:?}", line.flags);
+                assert!((c.value.unwrap() - 50.0).abs() < 0.05, "{c:?}");
+            }
+        }
+    }
+}
+
+#[test]
+fn roughness_of_both_edges_and_of_the_width() {
+    let lines = Lines::new(90.4, 400.0, 1, 61.7, 50.0).walls(75.0, 0.0);
+    let straight = Made::new(&lines, SLIM, 64, 180, 0.1);
+    let made = straight.measure(straight.corrected(), &request(Kind::EdgeRoughness));
+    assert_eq!(made.len(), 4);
+    // A straight edge is no rougher than its noise.
+    let c = made[0].corrected.unwrap();
+    assert!(c.high.unwrap() < 0.5, "{c:?}");
+    let width = straight.measure(straight.corrected(), &request(Kind::WidthRoughness));
+    assert_eq!(width[0].quantity, "width roughness");
+}
+
+/// Sinusoid and parabolic apex with R A k^2 <= 1: erosion recovers it exactly (computed
+/// independently): Sq = A / sqrt 2 over whole waves.
+#[test]
+fn the_texture_of_a_gentle_sinusoid_is_recovered() {
+    let k = std::f64::consts::TAU / 60.0;
+    let wave = move |x: f64, _: f64| 5.0 * (k * x).cos();
+    let made = Made::new(&wave, SLIM, 60, 240, 0.0);
+    let lines = made.measure(made.corrected(), &request(Kind::Texture));
+    let sq = lines.iter().find(|l| l.quantity == "Sq").unwrap();
+    let (expected, scanned) = (5.0 / 2f64.sqrt(), sq.as_scanned.unwrap().value);
+    assert!(scanned < expected - 0.02, "{scanned}");
+    let c = sq.corrected.unwrap();
+    assert!((c.value.unwrap() - expected).abs() < 0.02, "{c:?}");
+}
+
+#[test]
+fn filters_take_their_wavelengths_off() {
+    let k = std::f64::consts::TAU / 20.0;
+    let map = HeightMap::from_fn(200, 400, Pitch::square(1.0), |x, _| {
+        3.0 * (k * x).cos() + 0.05 * x
+    })
+    .unwrap();
+    let input = Input {
+        scan: &map,
+        noise_nm: Some(0.0),
+        calibration: Calibration::default(),
+        slope: [0.0; 2],
+        corrected: None,
+    };
+    let length = |nm: f64| Some(crate::units::Length::from_nm(nm));
+    let sq = |request: &Request| {
+        let lines = measure(&input, request, &Progress::new()).unwrap();
+        let line = lines.iter().find(|l| l.quantity == "Sq").unwrap();
+        line.as_scanned.unwrap().value
+    };
+    let region = Some(crate::heightmap::Region {
+        left: 100.0,
+        top: 50.0,
+        width: 200.0,
+        height: 100.0,
+    });
+    let rough = Request {
+        region,
+        l_filter: length(20.0),
+        ..request(Kind::Texture)
+    };
+    // Half of the wave is taken for form at its own nesting index.
+    assert!(
+        (sq(&rough) - 1.5 / 2f64.sqrt()).abs() < 0.01,
+        "{}",
+        sq(&rough)
+    );
+    let smooth = Request {
+        region,
+        s_filter: length(40.0),
+        l_filter: length(80.0),
+        ..request(Kind::Texture)
+    };
+    assert!(sq(&smooth) < 0.15, "{}", sq(&smooth));
+    let crossed = Request {
+        s_filter: length(80.0),
+        l_filter: length(40.0),
+        ..request(Kind::Texture)
+    };
+    assert!(crossed.validate().is_err());
+}
+
+#[test]
+fn the_histogram_gives_the_step_of_a_grating() {
+    let lines = Lines::new(20.0, 60.0, 4, 30.0, 12.0).walls(80.0, 0.0);
+    let made = Made::new(&lines, SLIM, 40, 240, 0.1);
+    let asked = Request {
+        method: Some(StepMethod::Histogram),
+        ..request(Kind::StepHeight)
+    };
+    let line = made.measure(made.corrected(), &asked).remove(0);
+    assert!(
+        (line.as_scanned.unwrap().value - 12.0).abs() < 0.1,
+        "{line:?}"
+    );
 }

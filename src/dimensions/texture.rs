@@ -1,16 +1,20 @@
-//! Areal texture parameters of a region, ISO 25178-2, unfiltered (S-F surface as levelled).
+//! Areal texture parameters of a region, ISO 25178-2: of the surface as levelled (F-operator), or
+//! of the scale-limited one where an S-filter or an L-filter is asked for.
 
+use super::filter;
 use super::sections::{self, region_pixels};
-use super::{CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer};
+use super::{Calibration, CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer};
 use crate::error::Result;
-use crate::heightmap::Pitch;
+use crate::heightmap::{HeightMap, Pitch, PixelRegion};
 use crate::morphology::certainty::NEVER;
 use crate::progress::Progress;
+use crate::tip::Tip;
 use crate::uncertainty::{Budget, Distribution};
-use ndarray::{ArrayView2, s};
+use ndarray::{Array2, ArrayView2, s};
 
-const ASSUMPTIONS: &str = "Heights about their mean in the region, no areal filter beyond the \
-    levelling. ISO 25178-2 (from memory)";
+const ASSUMPTIONS: &str = "Heights of this region, at this pixel pitch, about their mean, after the \
+    levelling and the filters stated. ISO 25178-2, filters ISO 16610-61 (from memory); noise taken \
+    off in squares: common practice";
 
 /// The parameters in the order of the result lines.
 #[derive(Debug, Clone, Copy, PartialEq, Default)]
@@ -109,10 +113,12 @@ pub(super) fn measure(
     progress: &Progress,
 ) -> Result<Vec<Dimension>> {
     let pixels = region_pixels(input.scan, request)?;
-    let view = sections::cut(input.scan, pixels);
     let pitch = input.scan.pitch();
-    let noise = sections::noise(input, pixels);
-    let mut flags = Vec::new();
+    let filters = Filters::of(request);
+    let view = filters.surface(input.scan, pixels);
+    progress.check()?;
+    let noise = sections::noise(input, pixels) * filters.noise_share(pitch).sqrt();
+    let mut flags = filters.flags(input.scan, pixels);
     let voids = view.iter().filter(|z| z.is_nan()).count();
     if voids > 0 {
         flags.push(format!("{voids} void pixels left out"));
@@ -122,15 +128,22 @@ pub(super) fn measure(
         flags.push(format!("too few pixels: {}", view.len() - voids));
     }
     let empty = |quantity: &str, unit| answer(request, Kind::Texture, quantity, unit, ASSUMPTIONS);
-    let Some(scanned) = Texture::of(view, pitch) else {
+    let Some(scanned) = Texture::of(view.view(), pitch) else {
         let mut line = empty("Sq", "nm");
         line.flags
             .push("not measured: the region is void".to_owned());
         return Ok(vec![line]);
     };
     progress.check()?;
+    let doubt = Doubt {
+        grid: input.corrected.map_or(0.0, |c| grid_rise(c.tip)),
+        noise,
+        count: (view.len() - voids) as f64,
+        pitch,
+        calibration: input.calibration,
+    };
     let corrected = input.corrected.and_then(|c| {
-        let texture = Texture::of(sections::cut(c.surface, pixels), pitch)?;
+        let texture = Texture::of(filters.surface(c.surface, pixels).view(), pitch)?;
         let part = s![
             pixels.row..pixels.row + pixels.rows,
             pixels.column..pixels.column + pixels.columns
@@ -148,7 +161,7 @@ pub(super) fn measure(
         .map(|(i, (name, unit, value))| {
             let mut line = empty(name, unit);
             line.flags.clone_from(&flags);
-            let budget = budget_of(name, &scanned, noise, input.calibration.z);
+            let budget = doubt.budget(name, &scanned);
             let u = budget.as_ref().map(|b| b.combined(0.95).u);
             if value.is_finite() {
                 line.as_scanned = Some(Value { value, u });
@@ -161,39 +174,256 @@ pub(super) fn measure(
                 line.flags
                     .push(format!("no uncertainty is given for {name}"));
             }
-            if let Some((texture, never, leaning, identified)) = corrected {
-                correct(&mut line, texture.lines()[i].2, never, leaning, identified);
-            }
             line.budget = budget.map(Budget::into_components).unwrap_or_default();
+            if let Some((texture, never, leaning, identified)) = corrected {
+                let bounds = doubt.bounds(name, &texture);
+                let value = texture.lines()[i].2;
+                correct(&mut line, value, bounds, never, leaning, identified);
+                if let Some(budget) = doubt.corrected_budget(name, &texture) {
+                    line.budget = budget.into_components();
+                }
+            }
             line
         });
     Ok(lines.collect())
 }
 
-/// The corrected column: the figure of the reconstruction. What the tip never touched is bounded
-/// from above only, which bounds no texture parameter: no interval is claimed.
-fn correct(line: &mut Dimension, value: f64, never: f64, leaning: f64, identified: bool) {
+/// The areal filters asked for.
+struct Filters {
+    s: Option<f64>,
+    l: Option<f64>,
+}
+
+impl Filters {
+    fn of(request: &Request) -> Self {
+        Self {
+            s: request.s_filter.map(|l| l.nm()),
+            l: request.l_filter.map(|l| l.nm()),
+        }
+    }
+
+    /// The region's scale-limited heights. What lies around the region takes part in the filters.
+    fn surface(&self, map: &HeightMap, pixels: PixelRegion) -> Array2<f32> {
+        let Some(widest) = self.s.into_iter().chain(self.l).reduce(f64::max) else {
+            return sections::cut(map, pixels).to_owned();
+        };
+        let pitch = map.pitch();
+        let grown = |start: usize, count: usize, all: usize, pitch: f64| {
+            let by = (widest / pitch).ceil() as usize;
+            let from = start.saturating_sub(by);
+            (from, (start + count + by).min(all) - from)
+        };
+        let (row, rows) = grown(pixels.row, pixels.rows, map.rows(), pitch.y);
+        let (column, columns) = grown(pixels.column, pixels.columns, map.columns(), pitch.x);
+        let around = PixelRegion {
+            row,
+            column,
+            rows,
+            columns,
+        };
+        let wide = filter::scale_limited(sections::cut(map, around), pitch, self.s, self.l);
+        let (r, c) = (pixels.row - row, pixels.column - column);
+        wide.slice(s![r..r + pixels.rows, c..c + pixels.columns])
+            .to_owned()
+    }
+
+    /// Share of white noise's variance that is left.
+    fn noise_share(&self, pitch: Pitch) -> f64 {
+        self.s
+            .map_or(1.0, |index| filter::white_noise_share(pitch, index))
+    }
+
+    fn flags(&self, map: &HeightMap, pixels: PixelRegion) -> Vec<String> {
+        let mut flags = Vec::new();
+        let shorter =
+            (pixels.columns as f64 * map.pitch().x).min(pixels.rows as f64 * map.pitch().y);
+        for (name, index) in [("S", self.s), ("L", self.l)] {
+            let Some(index) = index else { continue };
+            flags.push(format!("{name}-filter: Gaussian, nesting index {index} nm"));
+            if index > shorter / 2.0 {
+                flags.push(format!(
+                    "the {name}-filter's nesting index is more than half of the region"
+                ));
+            }
+        }
+        if let Some(index) = self.s
+            && index < 2.0 * map.pitch().x.max(map.pitch().y)
+        {
+            flags.push("the S-filter's nesting index is less than two pixels".to_owned());
+        }
+        flags
+    }
+}
+
+/// What noise and calibration do to the parameters.
+struct Doubt {
+    /// How far the reconstruction may stand above the surface because the tip's contact falls
+    /// between its cells, nm.
+    grid: f64,
+    /// White noise left by the filters, nm.
+    noise: f64,
+    /// Heights.
+    count: f64,
+    pitch: Pitch,
+    calibration: Calibration,
+}
+
+impl Doubt {
+    /// Highest of `count` normal numbers, in deviations, about (common practice).
+    fn extreme(&self) -> f64 {
+        (2.0 * self.count.max(2.0).ln()).sqrt()
+    }
+
+    /// How far noise may have lifted the parameter, and how far sunk it; `None` for the shape
+    /// parameters, whose error by noise has no sign.
+    fn room(&self, name: &str, texture: &Texture) -> Option<[f64; 2]> {
+        let (noise, gradient) = (self.noise, self.noise * self.noise);
+        match name {
+            // Noise adds in squares.
+            "Sq" | "Sa" => {
+                let value = if name == "Sa" { texture.sa } else { texture.sq };
+                if !(texture.sq > 0.0) {
+                    return None;
+                }
+                let rest = (texture.sq.powi(2) - noise.powi(2)).max(0.0).sqrt();
+                Some([(texture.sq - rest) * value / texture.sq, 0.0])
+            }
+            // A peak of the surface stands in the noise that it happens to have.
+            "Sp" | "Sv" => Some([self.extreme() * noise, 2.0 * noise]),
+            "Sz" => Some([2.0 * self.extreme() * noise, 3.0 * noise]),
+            // Differences of neighbours have twice the variance: half its square is the area.
+            "Sdr" => {
+                let lift = gradient * (1.0 / self.pitch.x.powi(2) + 1.0 / self.pitch.y.powi(2));
+                texture
+                    .sdr
+                    .is_finite()
+                    .then_some([lift.min(texture.sdr), 0.0])
+            }
+            _ => None,
+        }
+    }
+
+    /// The budget of a parameter: z calibration, that of the lateral axes for the area, and noise
+    /// as a bound.
+    fn budget(&self, name: &str, texture: &Texture) -> Option<Budget> {
+        let [lift, sink] = self.room(name, texture)?;
+        let value = texture.lines().into_iter().find(|l| l.0 == name)?.2;
+        let mut budget = Budget::new();
+        let z = self.calibration.z;
+        if name == "Sdr" {
+            // Slopes enter in squares.
+            let lateral = self.calibration.x.max(self.calibration.y);
+            budget.push("z calibration", z, Distribution::Normal, 2.0 * value);
+            budget.push(
+                "axis calibration",
+                lateral,
+                Distribution::Normal,
+                2.0 * value,
+            );
+        } else {
+            budget.push("z calibration", z, Distribution::Normal, value);
+        }
+        budget.push_one_sided("noise lifts the value", lift);
+        if sink > 0.0 {
+            budget.push_one_sided("noise sinks the value", sink);
+        }
+        if name == "Sq" || name == "Sa" {
+            // Sampling of the noise's own variance: s^2 sqrt(2 / n) / (2 Sq), and the chance
+            // product of noise and surface: s / sqrt n.
+            let u = self.noise * self.noise / (2.0 * self.count).sqrt() / texture.sq;
+            let u = u.hypot(self.noise / self.count.sqrt());
+            budget.push("scatter of the noise", u, Distribution::Normal, 1.0);
+        }
+        Some(budget)
+    }
+
+    /// The same for the reconstruction.
+    fn corrected_budget(&self, name: &str, texture: &Texture) -> Option<Budget> {
+        let mut budget = self.budget(name, texture)?;
+        if name != "Sdr" {
+            let u = self.grid / 3f64.sqrt();
+            let source = "pixel grid in the reconstruction";
+            budget.push(source, u, Distribution::Rectangular, 1.0);
+        }
+        Some(budget)
+    }
+
+    /// The 95 % interval of a parameter of the reconstruction where all of it was touched. How
+    /// much of the scan's noise is in the reconstruction is not known: none to all of it.
+    fn bounds(&self, name: &str, texture: &Texture) -> Option<[f64; 2]> {
+        let value = texture.lines().into_iter().find(|l| l.0 == name)?.2;
+        let [lift, sink] = self.room(name, texture)?;
+        let budget = self.corrected_budget(name, texture)?;
+        let (low, high) = budget.interval(value, lift, sink, 0.95);
+        Some([low.max(0.0), high])
+    }
+}
+
+/// Height of the tip's surface a pixel from its apex over four: a parabola's greatest rise above its
+/// samples between two of them.
+fn grid_rise(tip: &Tip) -> f64 {
+    let shape = tip.shape();
+    let (r, c) = (shape.nrows() / 2, shape.ncols() / 2);
+    [(r + 1, c), (r, c + 1)]
+        .into_iter()
+        .filter_map(|place| shape.get(place))
+        .map(|&p| -f64::from(p) / 4.0)
+        .filter(|rise| rise.is_finite())
+        .fold(0.0, f64::max)
+}
+
+/// Share of pixels never touched above which the reconstruction is smoother than the surface.
+const UNTOUCHED: f64 = 0.01;
+
+/// The corrected column: the figure of the reconstruction. It is an upper bound of the surface
+/// that fills what the tip never touched: amplitudes are then lower bounds.
+fn correct(
+    line: &mut Dimension,
+    value: f64,
+    bounds: Option<[f64; 2]>,
+    never: f64,
+    leaning: f64,
+    identified: bool,
+) {
     if !value.is_finite() {
         return;
     }
+    let touched = never <= UNTOUCHED && identified;
+    // The middle of what noise leaves; for extremes and shapes the figure itself.
+    let likely = match (line.quantity.as_str(), bounds) {
+        ("Sq" | "Sa" | "Sdr", Some([low, high])) => 0.5 * (low + high),
+        _ => value,
+    };
+    let half = bounds.map(|[low, high]| 0.5 * (high - low));
     line.corrected = Some(CorrectedValue {
-        value: identified.then_some(value),
-        u: None,
-        expanded: None,
-        k: None,
-        low: None,
-        high: None,
+        value: identified.then_some(likely),
+        u: half.filter(|_| touched).map(|h| h / 1.96),
+        expanded: half.filter(|_| touched),
+        k: half.filter(|_| touched).map(|_| 1.96),
+        low: bounds.map(|b| b[0]).filter(|_| identified),
+        high: bounds.map(|b| b[1]).filter(|_| touched),
     });
-    line.status = Some(Status::Bounded);
+    line.status = Some(if touched {
+        Status::Touched
+    } else {
+        Status::Bounded
+    });
     if !identified {
         line.flags
             .push("the tip is not identified: no corrected value".to_owned());
+    } else if !touched {
+        line.flags.push(format!(
+            "{:.0} % of the region was never touched: the reconstruction is an upper bound of the \
+             surface and smoother than it; amplitudes are bounded from below only",
+            100.0 * never
+        ));
     }
-    line.flags.push(format!(
-        "the reconstruction is an upper bound of the surface and noise sinks it: no interval can \
-         be given; {:.0} % of the region was never touched",
-        100.0 * never
-    ));
+    if bounds.is_none() {
+        line.flags.push(format!(
+            "no interval is given for {}: noise may move it either way",
+            line.quantity
+        ));
+    }
     if leaning > 0.0 {
         line.flags.push(format!(
             "{:.0} % of the region leans on the edge of the scan or on voids",
@@ -202,29 +432,9 @@ fn correct(line: &mut Dimension, value: f64, never: f64, leaning: f64, identifie
     }
 }
 
-/// Calibration and noise of the height parameters; `None` for extremes, shape parameters and area,
-/// whose error by noise is not a small symmetric one.
-fn budget_of(name: &str, texture: &Texture, noise: f64, calibration: f64) -> Option<Budget> {
-    let value = match name {
-        "Sa" => texture.sa,
-        "Sq" => texture.sq,
-        _ => return None,
-    };
-    if texture.sq.is_nan() || texture.sq <= 0.0 {
-        return None;
-    }
-    let mut budget = Budget::new();
-    budget.push("z calibration", calibration, Distribution::Normal, value);
-    // Noise adds in squares: it lifts Sq by s^2 / (2 Sq), a bound on one side.
-    let lift = texture.sq - (texture.sq.powi(2) - noise.powi(2)).max(0.0).sqrt();
-    budget.push_one_sided("noise lifts the value", lift * value / texture.sq);
-    Some(budget)
-}
-
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::heightmap::HeightMap;
     use std::f64::consts::{PI, SQRT_2};
 
     fn wave(amplitude: f64, f: impl Fn(f64, f64) -> f64) -> Texture {

@@ -193,6 +193,7 @@ impl<'a> Chain<'a> {
             scan,
             noise_nm,
             calibration: self.input.calibration,
+            slope: self.input.slope,
             corrected: Some(corrected),
         };
         let mut lines = Vec::new();

@@ -319,13 +319,7 @@ impl JobFile {
             }
         }
         for request in &self.dimensions {
-            if let Some(bad) = request.at.iter().find(|f| !(**f > 0.0 && **f < 1.0)) {
-                return Err(Error::new(
-                    ErrorKind::Setting,
-                    format!("dimension \"{}\": height fraction {bad}", request.name),
-                )
-                .remedy("Give fractions between 0 (bottom) and 1 (top), for example 0.5"));
-            }
+            request.validate()?;
         }
         Ok(())
     }

@@ -236,7 +236,11 @@ impl Stages {
             spec.dimensions.clone(),
             spec.model_fit,
         );
-        let until = if spec.monte_carlo.is_some() { 0.92 } else { 1.0 };
+        let until = if spec.monte_carlo.is_some() {
+            0.92
+        } else {
+            1.0
+        };
         let part = progress.part(0.9, until);
         let measured = self
             .dimensions
@@ -576,6 +580,7 @@ pub(super) fn input<'a>(level: &'a Leveled, outcome: &'a Outcome, spec: &JobFile
         scan: &level.map,
         noise_nm: level.noise_nm,
         calibration: spec.calibration.unwrap_or_default(),
+        slope: level.slope,
         corrected,
     }
 }

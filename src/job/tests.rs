@@ -97,11 +97,8 @@ fn ridge(folder: &Path) -> Job {
     job.file.tip.radius = Some(Length::from_nm(8.0));
     job.file.tip.half_angle = Some(15.0);
     job.file.dimensions.push(Request {
-        name: "ridge".to_owned(),
-        kind: Kind::StepHeight,
-        region: None,
-        at: Vec::new(),
         across: Some(Axis::X),
+        ..Request::new("ridge", Kind::StepHeight)
     });
     job
 }

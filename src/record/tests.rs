@@ -22,8 +22,6 @@ fn job() -> Job {
     let mut job = Job::on_scan(Path::new("folder/stamp & <14>.tiff"));
     job.file.title = NASTY.to_owned();
     job.file.dimensions.push(Request {
-        name: NASTY.to_owned(),
-        kind: Kind::LineWidth,
         region: Some(Region {
             left: 10.0,
             top: 10.0,
@@ -32,6 +30,7 @@ fn job() -> Job {
         }),
         at: vec![0.5],
         across: Some(Axis::X),
+        ..Request::new(NASTY, Kind::LineWidth)
     });
     job.path = Some("folder/stamp.toml".into());
     job.sha256 = Some("ab".repeat(32));

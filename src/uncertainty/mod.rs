@@ -10,7 +10,7 @@ mod sample;
 
 pub use budget::{Budget, Combined, coverage_factor};
 pub use joint::Joint;
-pub use sample::Series;
+pub use sample::{Pooled, Series};
 
 use serde::Serialize;
 

@@ -89,6 +89,17 @@ fn how_to_place(kind: Kind) -> &'static str {
         Kind::Pitch => "Drag over as many periods of the grating as there are.",
         Kind::Particle => "Drag over the particles and the flat around them.",
         Kind::Texture => "Drag over the area whose texture counts.",
+        Kind::SideWallAngle => {
+            "Drag over one ridge or trench and some of what lies on either side."
+        }
+        Kind::EdgeRoughness | Kind::WidthRoughness => {
+            "Drag along one ridge or trench, as long a piece of it as there is."
+        }
+        Kind::HoleDepth => "Drag over one pit or trench and the plateau around it.",
+        Kind::Distance | Kind::Angle => {
+            "Drag from the one point to the other: left to right through the region's middle."
+        }
+        Kind::Lattice => "Drag over as many cells of the lattice as there are.",
     }
 }
 
@@ -102,7 +113,7 @@ fn request_ui(ui: &mut Ui, panel: &Panel, i: usize, request: &Request, out: &mut
     let kinds = PLACEABLE.map(|k| (k, kind_name(k), ""));
     if let Some(kind) = choice_row(ui, "Kind", "", request.kind, &kinds) {
         changed.kind = kind;
-        if kind != Kind::LineWidth {
+        if !kind.has_fractions() {
             changed.at.clear();
         }
     }
@@ -120,7 +131,7 @@ fn request_ui(ui: &mut Ui, panel: &Panel, i: usize, request: &Request, out: &mut
     ) {
         changed.across = axis;
     }
-    if request.kind == Kind::LineWidth {
+    if request.kind.has_fractions() {
         let text = fractions_text(&request.at);
         let help = "Height fractions between the lower plateau (0) and the upper one (1), by custom 0.1, 0.5 and 0.9";
         if let Some(at) = parsed_row(ui, "At fractions", help, &text, "0.5", parse_fractions) {

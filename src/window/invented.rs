@@ -52,8 +52,6 @@ pub fn dimension(name: &str) -> Dimension {
 pub fn job() -> Job {
     let mut file = JobFile::on_scan("invented.tiff");
     file.dimensions.push(Request {
-        name: "line 1".to_owned(),
-        kind: Kind::LineWidth,
         region: Some(Region {
             left: 20.0,
             top: 0.0,
@@ -61,7 +59,7 @@ pub fn job() -> Job {
             height: 128.0,
         }),
         at: vec![0.5],
-        across: None,
+        ..Request::new("line 1", Kind::LineWidth)
     });
     Job {
         file,

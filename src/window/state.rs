@@ -165,12 +165,19 @@ pub enum Tool {
 }
 
 /// Kinds that can be placed by dragging.
-pub const PLACEABLE: [Kind; 5] = [
+pub const PLACEABLE: [Kind; 12] = [
     Kind::StepHeight,
     Kind::LineWidth,
     Kind::Pitch,
     Kind::Particle,
     Kind::Texture,
+    Kind::SideWallAngle,
+    Kind::EdgeRoughness,
+    Kind::WidthRoughness,
+    Kind::HoleDepth,
+    Kind::Distance,
+    Kind::Angle,
+    Kind::Lattice,
 ];
 
 /// What people call a kind.
@@ -181,6 +188,13 @@ pub fn kind_name(kind: Kind) -> &'static str {
         Kind::Pitch => "Pitch",
         Kind::Particle => "Particles",
         Kind::Texture => "Texture",
+        Kind::SideWallAngle => "Side-wall angle",
+        Kind::EdgeRoughness => "Edge roughness",
+        Kind::WidthRoughness => "Width roughness",
+        Kind::HoleDepth => "Hole depth",
+        Kind::Distance => "Distance",
+        Kind::Angle => "Angle",
+        Kind::Lattice => "Lattice",
     }
 }
 
@@ -285,6 +299,13 @@ pub fn new_name(requests: &[Request], kind: Kind) -> String {
         Kind::Pitch => "pitch",
         Kind::Particle => "particles",
         Kind::Texture => "texture",
+        Kind::SideWallAngle => "wall",
+        Kind::EdgeRoughness => "edge roughness",
+        Kind::WidthRoughness => "width roughness",
+        Kind::HoleDepth => "hole",
+        Kind::Distance => "distance",
+        Kind::Angle => "angle",
+        Kind::Lattice => "lattice",
     };
     (1..)
         .map(|i| format!("{base} {i}"))
@@ -325,13 +346,7 @@ mod tests {
 
     #[test]
     fn names_are_new_and_lines_find_their_request() {
-        let request = |name: &str, kind| Request {
-            name: name.to_owned(),
-            kind,
-            region: None,
-            at: Vec::new(),
-            across: None,
-        };
+        let request = |name: &str, kind| Request::new(name, kind);
         let requests = [
             request("line 1", Kind::LineWidth),
             request("line 12", Kind::LineWidth),

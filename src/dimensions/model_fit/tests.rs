@@ -47,6 +47,7 @@ fn fitted(
         scan: &level.map,
         noise_nm: level.noise_nm,
         calibration: Calibration::default(),
+        slope: level.slope,
         corrected: Some(Corrected {
             tip: &tip,
             surface: &surface,
@@ -60,13 +61,7 @@ fn fitted(
             contains_feature_radius: false,
         }),
     };
-    let request = Request {
-        name: "it".to_owned(),
-        kind,
-        region: None,
-        at: Vec::new(),
-        across: None,
-    };
+    let request = Request::new("it", kind);
     let mut lines = measure(&input, &request, &progress).unwrap();
     doctor(&mut lines);
     second_opinion(&input, &request, None, &mut lines, &progress).unwrap();

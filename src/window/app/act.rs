@@ -68,15 +68,13 @@ impl App {
         let count = opened.history.now().dimensions.len();
         self.change(|job| {
             let request = Request {
-                name: new_name(&job.dimensions, kind),
-                kind,
                 region: Some(region),
                 at: if kind == Kind::LineWidth {
                     vec![0.5]
                 } else {
                     Vec::new()
                 },
-                across: None,
+                ..Request::new(new_name(&job.dimensions, kind), kind)
             };
             job.dimensions.push(request);
         });
