@@ -88,13 +88,13 @@ fn the_image_is_the_dilation_of_the_shape() {
             corner_radius: Certified::exact(0.0),
         };
         let mut s = state(step, tip);
-        (s.turn, s.across) = (-12.0, 2.2);
+        (s.turn, s.across) = (180.0, 2.2);
         let edge = Step {
             at_nm: 2.2,
             height_nm: 20.0,
             wall_angle_deg: 80.0,
         };
-        cases.push(("step", s, Box::new(turned(edge, -12.0, side)), 0.06));
+        cases.push(("step", s, Box::new(turned(edge, 180.0, side)), 0.06));
         let at = [side / 2.0 + 1.3, side / 2.0 - 2.6];
         let sphere = Shape::Sphere {
             diameter: Certified::exact(16.0),
