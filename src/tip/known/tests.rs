@@ -100,7 +100,7 @@ fn the_image_is_the_dilation_of_the_shape() {
             diameter: Certified::exact(16.0),
         };
         let feature = round(BumpShape::Sphere { radius: 8.0 }, at);
-        cases.push(("sphere", placed(state(sphere, tip), 16.0), feature, 0.02));
+        cases.push(("sphere", placed(state(sphere, tip), 16.0), feature, 0.06));
         let spike = Shape::Spike {
             radius: Certified::exact(3.0),
             half_angle: Certified::exact(22.0),
@@ -113,7 +113,7 @@ fn the_image_is_the_dilation_of_the_shape() {
             },
             at,
         );
-        cases.push(("spike", placed(state(spike, tip), 20.0), feature, 0.02));
+        cases.push(("spike", placed(state(spike, tip), 20.0), feature, 0.06));
         for (name, s, feature, tolerance) in cases {
             let settings = virtual_scan::Settings {
                 support_nm: 96.0,
