@@ -49,8 +49,17 @@ impl Progress {
         }
     }
 
+    /// A handle that only answers a cancel: for one of several things done at once.
+    #[must_use]
+    pub fn silent(&self) -> Self {
+        self.part(0.0, 0.0)
+    }
+
     /// Reports the fraction done, 0..=1 of this handle's part.
     pub fn report(&self, fraction: f32) {
+        if self.span == 0.0 {
+            return;
+        }
         let whole = (self.from + fraction.clamp(0.0, 1.0) * self.span).clamp(0.0, 1.0);
         self.shared
             .fraction

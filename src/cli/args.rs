@@ -81,6 +81,9 @@ pub enum Command {
         /// Draw the whole chain N times (100 or more) for a second interval beside each budget's.
         #[arg(long, value_name = "N")]
         monte_carlo: Option<usize>,
+        /// Fit a model of each feature to the scan as a second opinion.
+        #[arg(long)]
+        model_fit: bool,
     },
     /// Say what a file holds: format, size, pitch, unit, height range, voids, noise, SHA-256.
     Inspect {

@@ -51,8 +51,13 @@ fn headless(command: &Command, common: &Common, show: &Show) -> Result<u8> {
             out,
             workers,
             monte_carlo,
+            model_fit,
         } => {
-            let failed = run::run_all(jobs, out, *workers, *monte_carlo, common, show)?;
+            let opinions = run::Opinions {
+                monte_carlo: *monte_carlo,
+                model_fit: *model_fit,
+            };
+            let failed = run::run_all(jobs, out, *workers, opinions, common, show)?;
             if failed > 0 {
                 show.note(&format!("{failed} of {} jobs failed", jobs.len()));
                 return Ok(INPUT_FAILED);

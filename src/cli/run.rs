@@ -13,15 +13,23 @@ use std::path::{Path, PathBuf};
 use std::sync::Mutex;
 use std::sync::atomic::{AtomicUsize, Ordering};
 
-/// Runs all `jobs`, `workers` at a time, with so many Monte Carlo trials where they are asked for;
-/// returns how many failed.
+/// Second opinions asked for on the command line, beside those of the jobs.
+#[derive(Debug, Clone, Copy, Default)]
+pub struct Opinions {
+    /// Monte Carlo trials.
+    pub monte_carlo: Option<usize>,
+    /// Whether models are fitted.
+    pub model_fit: bool,
+}
+
+/// Runs all `jobs`, `workers` at a time; returns how many failed.
 ///
 /// Errors of kind `Setting`, before anything runs, when two jobs would write to the same folder.
 pub fn run_all(
     jobs: &[PathBuf],
     out: &Path,
     workers: u16,
-    monte_carlo: Option<usize>,
+    opinions: Opinions,
     common: &Common,
     show: &Show,
 ) -> Result<usize> {
@@ -41,7 +49,8 @@ pub fn run_all(
                     let name = path.file_name().unwrap_or_default().to_string_lossy();
                     let result = show.during(&name, |progress| {
                         let mut job = open_job(path, common)?;
-                        if let Some(trials) = monte_carlo {
+                        job.file.model_fit |= opinions.model_fit;
+                        if let Some(trials) = opinions.monte_carlo {
                             let stated = job.file.monte_carlo;
                             let spec = stated.unwrap_or(MonteCarloSpec::new(trials));
                             job.file.monte_carlo = Some(MonteCarloSpec { trials, ..spec });

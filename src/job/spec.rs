@@ -11,7 +11,7 @@ use crate::units::{Length, nanometres_per};
 use serde::{Deserialize, Serialize};
 use std::path::{Path, PathBuf};
 
-/// A job file (TOML). See `interface.md` of the project's contract and the README for an example.
+/// A job file (TOML); the README has an example.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
 #[serde(rename_all = "kebab-case", deny_unknown_fields)]
 pub struct JobFile {
@@ -19,7 +19,7 @@ pub struct JobFile {
     #[serde(default)]
     pub title: String,
     /// Whether a model is fitted beside each dimension as a second opinion.
-    #[serde(default = "yes", skip_serializing_if = "is_yes")]
+    #[serde(default, skip_serializing_if = "std::ops::Not::not")]
     pub model_fit: bool,
     /// The scan.
     pub scan: ScanSpec,
@@ -38,14 +38,6 @@ pub struct JobFile {
     /// What to measure.
     #[serde(default, rename = "dimension", skip_serializing_if = "Vec::is_empty")]
     pub dimensions: Vec<Request>,
-}
-
-fn yes() -> bool {
-    true
-}
-
-fn is_yes(value: &bool) -> bool {
-    *value
 }
 
 /// `[monte-carlo]`
@@ -260,7 +252,7 @@ impl JobFile {
     pub fn on_scan(file: impl Into<PathBuf>) -> Self {
         Self {
             title: String::new(),
-            model_fit: true,
+            model_fit: false,
             scan: ScanSpec {
                 file: file.into(),
                 ..ScanSpec::default()

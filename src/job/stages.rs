@@ -15,9 +15,11 @@ use crate::tip::known::Known;
 use crate::tip::read_out::{ReadOut, read_out};
 use crate::tip::{Band, Tip};
 use ndarray::{Array2, s};
+use rayon::prelude::*;
 use std::panic::{AssertUnwindSafe, catch_unwind};
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
+use std::sync::atomic::{AtomicUsize, Ordering};
 
 /// The tip stage's result.
 #[derive(Debug, Clone)]
@@ -604,24 +606,29 @@ fn measure(
     let requests = &spec.dimensions;
     let input = input(level, outcome, spec);
     let band = outcome.tip.as_ref().and_then(|tip| tip.band.as_ref());
-    let mut lines = Vec::new();
-    for (i, request) in requests.iter().enumerate() {
-        progress.check()?;
-        let n = requests.len() as f32;
-        let part = progress.part(i as f32 / n, (i + 1) as f32 / n);
-        let mut measured = measure_one(&input, request, &part)?;
-        if let Some(corrected) = &input.corrected {
-            let reliability = reliability(&input, corrected, request)?;
-            for line in &mut measured {
-                line.evidence.reliability = Some(reliability);
+    let done = AtomicUsize::new(0);
+    let lines: Vec<Vec<Dimension>> = requests
+        .par_iter()
+        .map(|request| {
+            progress.check()?;
+            // Several go on at once: the progress is how many are done.
+            let quiet = progress.silent();
+            let mut measured = measure_one(&input, request, &quiet)?;
+            if let Some(corrected) = &input.corrected {
+                let reliability = reliability(&input, corrected, request)?;
+                for line in &mut measured {
+                    line.evidence.reliability = Some(reliability);
+                }
             }
-        }
-        if spec.model_fit {
-            dimensions::second_opinion(&input, request, band, &mut measured, &part)?;
-        }
-        lines.extend(measured);
-    }
-    Ok(lines)
+            if spec.model_fit {
+                dimensions::second_opinion(&input, request, band, &mut measured, &quiet)?;
+            }
+            let done = done.fetch_add(1, Ordering::Relaxed) + 1;
+            progress.report(done as f32 / requests.len() as f32);
+            Ok(measured)
+        })
+        .collect::<Result<_>>()?;
+    Ok(lines.into_iter().flatten().collect())
 }
 
 /// What the tip touched of the request's region.

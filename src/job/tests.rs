@@ -317,7 +317,7 @@ fn monte_carlo_and_model_fit_in_the_job_file() {
         "[level]",
         "[monte-carlo]\ntrials = 400\nseed = 9\n\n[level]",
     );
-    let text = text.replace("[scan]", "model-fit = false\n\n[scan]");
+    let text = text.replace("[scan]", "model-fit = true\n\n[scan]");
     let job = JobFile::from_toml(&text).unwrap();
     assert_eq!(
         job.monte_carlo,
@@ -326,7 +326,7 @@ fn monte_carlo_and_model_fit_in_the_job_file() {
             seed: 9
         })
     );
-    assert!(!job.model_fit && JobFile::from_toml(CONTRACT).unwrap().model_fit);
+    assert!(job.model_fit && !JobFile::from_toml(CONTRACT).unwrap().model_fit);
     assert_eq!(JobFile::from_toml(&job.to_toml().unwrap()).unwrap(), job);
     let few = JobFile::from_toml(&text.replace("400", "4")).unwrap_err();
     assert!(few.to_string().contains("trials = 4"), "{few}");

@@ -18,8 +18,9 @@ impl Data {
     /// Adds to each doubt what the tip's grid leaves open there: the difference between the scans
     /// by the curved and by the straight tip. A flank that is straight makes the curve err by it.
     pub(super) fn doubt_grid(&mut self, curved: &Section, tips: [&Silhouette; 2]) {
+        let scanned = tips.map(|tip| curved.scanned_by(tip));
         for (u, &x) in self.u.iter_mut().zip(&self.x) {
-            let [a, b] = tips.map(|tip| curved.scanned_at(x, tip));
+            let [a, b] = [scanned[0].at(x), scanned[1].at(x)];
             if (a - b).is_finite() {
                 *u = u.hypot(a - b);
             }

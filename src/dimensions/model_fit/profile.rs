@@ -13,6 +13,10 @@ use crate::tip::Tip;
 pub(super) struct Silhouette {
     x: Vec<f64>,
     z: Vec<f64>,
+    /// The highest of the vertices from each on, away from the apex.
+    outer: Vec<f64>,
+    /// The first vertex in or after each of equal stretches between the ends.
+    first_in: Vec<usize>,
 }
 
 /// How the silhouette runs between the tip's cells.
@@ -77,7 +81,49 @@ impl Silhouette {
             points = curved(&points);
         }
         let (x, z) = points.into_iter().unzip();
-        Self { x, z }
+        Self::new(x, z)
+    }
+
+    fn new(x: Vec<f64>, z: Vec<f64>) -> Self {
+        let mut outer = z.clone();
+        let apex = x.partition_point(|&v| v < 0.0);
+        for i in 1..apex {
+            outer[i] = outer[i].max(outer[i - 1]);
+        }
+        for i in (apex + 1..z.len()).rev() {
+            outer[i - 1] = outer[i - 1].max(outer[i]);
+        }
+        let stretches = 2 * x.len();
+        let (from, to) = (x.first().copied(), x.last().copied());
+        let width = from
+            .zip(to)
+            .map_or(0.0, |(a, b)| (b - a) / stretches as f64);
+        let first_in = (0..stretches)
+            .map(|k| x.partition_point(|&v| v < x[0] + k as f64 * width))
+            .collect();
+        Self {
+            x,
+            z,
+            outer,
+            first_in,
+        }
+    }
+
+    /// The first vertex at `offset` or after it.
+    fn first_from(&self, offset: f64) -> usize {
+        let (Some(&start), Some(&end)) = (self.x.first(), self.x.last()) else {
+            return 0;
+        };
+        let stretch = (offset - start) / (end - start) * self.first_in.len() as f64;
+        // Rounding may put it into the next stretch: begin one before.
+        let stretch = (stretch as usize)
+            .saturating_sub(1)
+            .min(self.first_in.len() - 1);
+        let mut i = self.first_in[stretch];
+        while self.x.get(i).is_some_and(|&x| x < offset) {
+            i += 1;
+        }
+        i
     }
 
     /// How far it reaches to the wider side, nm.
@@ -119,14 +165,18 @@ impl Silhouette {
 
     /// Height at `offset`, `-inf` outside.
     fn at(&self, offset: f64) -> f64 {
-        let after = self.x.partition_point(|&v| v <= offset);
-        if after == 0 {
+        let after = self.first_from(offset);
+        let Some(&xb) = self.x.get(after) else {
             return f64::NEG_INFINITY;
+        };
+        if xb == offset {
+            return self.z[after];
         }
-        let (xa, za) = (self.x[after - 1], self.z[after - 1]);
-        match self.x.get(after) {
-            Some(xb) => za + (self.z[after] - za) * (offset - xa) / (xb - xa),
-            None if xa == offset => za,
+        match after.checked_sub(1) {
+            Some(before) => {
+                let (xa, za) = (self.x[before], self.z[before]);
+                za + (self.z[after] - za) * (offset - xa) / (xb - xa)
+            }
             None => f64::NEG_INFINITY,
         }
     }
@@ -181,18 +231,12 @@ fn curved(points: &[(f64, f64)]) -> Vec<(f64, f64)> {
 pub(super) struct Section {
     x: Vec<f64>,
     z: Vec<f64>,
-    top: f64,
 }
 
 impl Section {
     /// Adds a vertex; one before the last is moved to the last's position.
     pub fn push(&mut self, x: f64, z: f64) {
         let x = self.x.last().map_or(x, |&last| x.max(last));
-        self.top = if self.x.is_empty() {
-            z
-        } else {
-            self.top.max(z)
-        };
         self.x.push(x);
         self.z.push(z);
     }
@@ -215,30 +259,75 @@ impl Section {
         za + (zb - za) * (x - xa) / (xb - xa)
     }
 
+    /// Its scan by `tip`.
+    pub fn scanned_by<'a>(&'a self, tip: &'a Silhouette) -> Scanned<'a> {
+        let mut highest_first: Vec<usize> = (0..self.x.len()).collect();
+        highest_first.sort_by(|&a, &b| self.z[b].total_cmp(&self.z[a]));
+        Scanned {
+            section: self,
+            tip,
+            reach: tip.reach(),
+            highest_first,
+        }
+    }
+}
+
+/// A cross-section, scanned by a tip.
+pub(super) struct Scanned<'a> {
+    section: &'a Section,
+    tip: &'a Silhouette,
+    reach: f64,
+    highest_first: Vec<usize>,
+}
+
+impl Scanned<'_> {
     /// What the tip records at `x`: `max over u of S(x + u) + p(u)`.
-    pub fn scanned_at(&self, x: f64, tip: &Silhouette) -> f64 {
-        let reach = tip.reach();
-        let first = self.x.partition_point(|&v| v < x - reach);
-        let last = self.x.partition_point(|&v| v <= x + reach);
+    pub fn at(&self, x: f64) -> f64 {
+        let (section, tip) = (self.section, self.tip);
+        let first = section.x.partition_point(|&v| v < x - self.reach);
+        let last = section.x.partition_point(|&v| v <= x + self.reach);
+        // Straight within the tip's reach, it is level but for the tilt left in the scan.
+        let mut best = section.at(x);
         if first == last {
-            // Straight within the tip's reach, and level but for the tilt left in the scan.
-            return self.at(x);
+            return best;
         }
-        let mut best = f64::NEG_INFINITY;
-        for v in first..last {
-            best = best.max(self.z[v] + tip.at(self.x[v] - x));
+        // No part of the tip is higher than its apex: what is no higher than the best so far cannot
+        // lift it.
+        for &v in &self.highest_first {
+            if section.z[v] <= best {
+                break;
+            }
+            if (first..last).contains(&v) {
+                best = best.max(section.z[v] + tip.at(section.x[v] - x));
+            }
         }
-        let mut after = first;
-        for (&u, &p) in tip.x.iter().zip(&tip.z) {
-            let at = x + u;
-            // Even the highest point would not be met there.
-            if p + self.top <= best {
+        for after in first..=last {
+            let ends = [after.saturating_sub(1), after.min(section.x.len() - 1)];
+            let [from, to] = ends.map(|v| section.x[v] - x);
+            let top = section.z[ends[0]].max(section.z[ends[1]]);
+            if top <= best {
                 continue;
             }
-            while after < self.x.len() && self.x[after] <= at {
-                after += 1;
+            // Beyond its ends the section goes on level.
+            let start = if after == 0 { 0 } else { tip.first_from(from) };
+            let beyond = after == section.x.len();
+            // The highest of the tip over this piece, and over all beyond it.
+            let nearest = match (from >= 0.0 && after > 0, to <= 0.0 && !beyond) {
+                (true, _) => tip.outer.get(start).copied(),
+                (_, true) => tip.first_from(to).checked_sub(1).map(|i| tip.outer[i]),
+                _ => Some(0.0),
+            };
+            if !nearest.is_some_and(|p| p + top > best) {
+                continue;
             }
-            best = best.max(self.between(after, at) + p);
+            for (&u, &p) in tip.x[start..].iter().zip(&tip.z[start..]) {
+                if u > to && !beyond {
+                    break;
+                }
+                if p + top > best {
+                    best = best.max(section.between(after, x + u) + p);
+                }
+            }
         }
         best
     }
@@ -377,12 +466,13 @@ mod tests {
         let tip = tip(10.0, 15.0, 0.25);
         for depth in [5.0, 25.0, 45.0] {
             let x = 50.0 + sphere_cone_half_width(10.0, 15.0, depth);
-            let z = line.scanned_at(x, &tip);
+            let line = line.scanned_by(&tip);
+            let z = line.at(x);
             assert!((z - (50.0 - depth)).abs() < 0.02, "{depth}: {z}");
-            assert!((line.scanned_at(-x, &tip) - z).abs() < 1e-9);
+            assert!((line.at(-x) - z).abs() < 1e-9);
         }
-        assert_eq!(line.scanned_at(0.0, &tip), 50.0);
-        assert_eq!(line.scanned_at(200.0, &tip), 0.0);
+        assert_eq!(line.scanned_by(&tip).at(0.0), 50.0);
+        assert_eq!(line.scanned_by(&tip).at(200.0), 0.0);
     }
 
     /// The dilation against the plain maximum over a fine grid, for a tip without symmetry.
@@ -399,17 +489,17 @@ mod tests {
         ] {
             section.push(x, z);
         }
-        let tip = Silhouette {
-            x: vec![-4.5, -3.0, -1.5, 0.0, 1.5, 3.0],
-            z: vec![-9.0, -4.0, -2.5, 0.0, -0.3, -6.0],
-        };
+        let tip = Silhouette::new(
+            vec![-4.5, -3.0, -1.5, 0.0, 1.5, 3.0],
+            vec![-9.0, -4.0, -2.5, 0.0, -0.3, -6.0],
+        );
         for i in 0..90 {
             let x = -5.0 + 0.437 * f64::from(i);
             let plain = (0..=9000)
                 .map(|k| -4.5 + 0.001 * f64::from(k))
                 .map(|u| section.at(x + u) + tip.at(u))
                 .fold(f64::NEG_INFINITY, f64::max);
-            let exact = section.scanned_at(x, &tip);
+            let exact = section.scanned_by(&tip).at(x);
             assert!(
                 (exact - plain).abs() < 0.01 && exact >= plain - 1e-9,
                 "{x}: {exact} {plain}"

@@ -12,6 +12,7 @@ use crate::leveling::least_squares::nonlinear;
 use crate::progress::Progress;
 use crate::tip::Tip;
 use crate::uncertainty::coverage_factor;
+use rayon::prelude::*;
 
 const NAME: &str = "sphere on a flat";
 
@@ -20,6 +21,9 @@ const AZIMUTHS: usize = 16;
 
 /// Most particles that are fitted.
 const FITTED: usize = 50;
+
+/// Pixels about a particle that are fitted.
+const ENOUGH: usize = 800;
 
 /// Straight pieces of the quarter circle.
 const PIECES: usize = 32;
@@ -38,28 +42,31 @@ pub(super) fn fit(
     progress: &Progress,
 ) -> Result<()> {
     // Both lines of a particle carry the same cross as their mark.
-    let mut held: Option<([f64; 4], std::result::Result<Particle, String>)> = None;
-    let mut fitted = 0;
-    for line in lines.iter_mut().filter(|l| l.corrected.is_some()) {
-        progress.check()?;
-        let [across, _] = line.marks[..] else {
-            continue;
-        };
-        let found = match &held {
-            Some((mark, found)) if *mark == across => found,
-            _ => {
-                fitted += 1;
-                if fitted > FITTED {
-                    break;
-                }
-                let found = particle(input, corrected, doubtful, across);
-                &held.insert((across, found)).1
-            }
-        };
-        line.evidence.model_fit = Some(match found {
-            Ok(particle) => particle.opinion(input, &line.quantity),
-            Err(reason) => ModelFit::none(NAME, reason.clone()),
-        });
+    let mut crosses: Vec<[f64; 4]> = Vec::new();
+    for line in lines.iter().filter(|l| l.corrected.is_some()) {
+        if let [across, _] = line.marks[..]
+            && crosses.last() != Some(&across)
+        {
+            crosses.push(across);
+        }
+    }
+    crosses.truncate(FITTED);
+    let fitted: Vec<_> = crosses
+        .par_iter()
+        .map(|&across| {
+            progress.check()?;
+            Ok((across, particle(input, corrected, doubtful, across)))
+        })
+        .collect::<Result<_>>()?;
+    let fitted_lines = lines.iter_mut().filter(|l| l.corrected.is_some());
+    for line in fitted_lines {
+        let found = fitted.iter().find(|f| line.marks.first() == Some(&f.0));
+        if let (Some((_, found)), 2) = (found, line.marks.len()) {
+            line.evidence.model_fit = Some(match found {
+                Ok(particle) => particle.opinion(input, &line.quantity),
+                Err(reason) => ModelFit::none(NAME, reason.clone()),
+            });
+        }
     }
     Ok(())
 }
@@ -138,6 +145,9 @@ fn particle(
     let tip = cuts(corrected.tip, Between::Curved);
     let around = image_radius(radius, &tip) + 4.0 * input.scan.pitch().x.max(input.scan.pitch().y);
     let pixels = pixels(input, centre, around);
+    // More would tell no more: calibration and tip decide the doubt, not the noise.
+    let every = pixels.len().div_ceil(ENOUGH).max(1);
+    let pixels: Vec<Pixel> = pixels.into_iter().step_by(every).collect();
     if pixels.len() < 40 {
         return Err(format!("only {} pixels about the particle", pixels.len()));
     }
@@ -155,11 +165,12 @@ fn particle(
             let radius = fixed.unwrap_or_else(|| p[4].abs());
             let (outer, height, place) = (p[0], p[1], [p[2], p[3]]);
             let sphere = outline(outer, height, radius);
+            let scanned: Vec<_> = tip.iter().map(|tip| sphere.scanned_by(tip)).collect();
             for (r, pixel) in r.iter_mut().zip(&pixels) {
                 let (dx, dy) = (pixel.x - place[0], pixel.y - place[1]);
                 let turn = dy.atan2(dx).rem_euclid(std::f64::consts::TAU) / std::f64::consts::TAU;
                 let azimuth = (turn * AZIMUTHS as f64).round() as usize % AZIMUTHS;
-                *r = (sphere.scanned_at(dx.hypot(dy), &tip[azimuth]) - pixel.z) / noise;
+                *r = (scanned[azimuth].at(dx.hypot(dy)) - pixel.z) / noise;
             }
         };
         // The radius comes last, so that it can be left out.
@@ -219,8 +230,9 @@ fn image_radius(radius: f64, tip: &[Silhouette]) -> f64 {
     let sphere = outline(0.0, 2.0 * radius, radius);
     let reach = tip.iter().map(Silhouette::reach).fold(0.0, f64::max);
     let step = radius / 16.0;
+    let scanned = sphere.scanned_by(&tip[0]);
     let mut at = radius;
-    while at < radius + reach && sphere.scanned_at(at, &tip[0]) > 0.02 * radius {
+    while at < radius + reach && scanned.at(at) > 0.02 * radius {
         at += step;
     }
     at
@@ -284,7 +296,7 @@ mod tests {
             let cut = Silhouette::cut(&tip, azimuth, 22.5, Between::Curved);
             for d in [0.0f64, 3.0, 7.0, 10.0] {
                 let truth = r - radius + ((radius + r).powi(2) - d * d).sqrt();
-                let z = sphere.scanned_at(d, &cut);
+                let z = sphere.scanned_by(&cut).at(d);
                 assert!((z - truth).abs() < 0.03, "{azimuth} {d}: {z} {truth}");
             }
         }

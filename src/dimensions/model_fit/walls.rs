@@ -56,8 +56,9 @@ impl Fitter<'_> {
         };
         let residuals = |p: &[f64], r: &mut [f64]| {
             let section = self.section(&full(p));
+            let scanned = section.scanned_by(&self.tip);
             for (i, r) in r.iter_mut().enumerate() {
-                *r = (section.scanned_at(data.x[i], &self.tip) - data.z[i]) / data.u[i];
+                *r = (scanned.at(data.x[i]) - data.z[i]) / data.u[i];
             }
         };
         let scale: Vec<f64> = free

@@ -59,7 +59,7 @@ pub(crate) fn fit(
         residuals,
     };
     let (problem, report) = LevenbergMarquardt::new()
-        .with_tol(1e-12)
+        .with_tol(1e-9)
         .with_patience(60)
         .minimize(problem);
     use levenberg_marquardt::TerminationReason as Reason;
