@@ -325,6 +325,31 @@ fn the_tip_command_prints_the_tip_object() {
     assert_eq!(grid[[grid.nrows() / 2, grid.ncols() / 2]], 0.0);
 }
 
+/// What the expert's options do: the spikes' own radius comes off; the published iteration without
+/// smoothing reads another tip.
+#[test]
+fn the_tip_command_takes_the_experts_options() {
+    let folder = folder();
+    let radius = |options: &[&str]| {
+        let output = truewidth()
+            .args(["tip", "--json", "--quiet", "--out"])
+            .arg(folder.path().join("tip.npy"))
+            .arg(samples().join("tip-check.tiff"))
+            .args(options)
+            .output()
+            .unwrap();
+        let error = String::from_utf8_lossy(&output.stderr).into_owned();
+        assert!(output.status.success(), "{error}");
+        let object: Value = serde_json::from_slice(&output.stdout).unwrap();
+        object["apex_radius_nm"]["value"].as_f64()
+    };
+    let own = radius(&[]).unwrap();
+    let without = radius(&["--feature-radius", "1.5nm"]).unwrap();
+    assert!((own - without - 1.5).abs() < 0.3, "{own} {without}");
+    assert_ne!(radius(&["--textbook"]), Some(own));
+    assert_ne!(radius(&["--smoothing", "2 nm"]), Some(own));
+}
+
 #[test]
 fn the_tip_command_takes_a_known_shape_from_a_file() {
     let folder = folder();

@@ -115,6 +115,15 @@ pub enum Command {
         /// Noise threshold: "auto" or a length.
         #[arg(long, value_name = "auto|LENGTH", default_value = "auto")]
         threshold: Threshold,
+        /// Smoothing before the blind estimate, standard deviation [default: matched to the noise].
+        #[arg(long, value_name = "LENGTH", conflicts_with = "known")]
+        smoothing: Option<Length>,
+        /// Apex radius of the scan's sharpest feature, where it is known: it is taken off.
+        #[arg(long, value_name = "LENGTH", conflicts_with = "known")]
+        feature_radius: Option<Length>,
+        /// The published iteration with a threshold, without smoothing, for comparison.
+        #[arg(long, conflicts_with = "known")]
+        textbook: bool,
         /// The certified shape that the scan shows: a file with the keys of the job's [tip] known,
         /// and model and use where wanted.
         #[arg(long, value_name = "FILE.toml", conflicts_with = "threshold")]

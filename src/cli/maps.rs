@@ -11,6 +11,7 @@ use crate::morphology;
 use crate::progress::Progress;
 use crate::record;
 use crate::tip::Tip;
+use crate::tip::blind::Method;
 use crate::units::Length;
 use std::path::Path;
 
@@ -141,6 +142,12 @@ pub struct TipOptions<'a> {
     pub support: Option<Length>,
     /// Noise threshold of the blind estimate.
     pub threshold: Threshold,
+    /// Smoothing before the blind estimate.
+    pub smoothing: Option<Length>,
+    /// Apex radius of the sharpest feature, where known.
+    pub feature_radius: Option<Length>,
+    /// Whether the published iteration is wanted.
+    pub textbook: bool,
     /// File that states the known shape; blind without.
     pub known: Option<&'a Path>,
 }
@@ -160,6 +167,9 @@ pub fn tip(
         None => TipSpec {
             from: TipFrom::Blind,
             threshold: Some(how.threshold),
+            smoothing: how.smoothing,
+            feature_radius: how.feature_radius,
+            method: how.textbook.then_some(Method::Textbook),
             ..TipSpec::default()
         },
     };

@@ -70,12 +70,18 @@ fn headless(command: &Command, common: &Common, show: &Show) -> Result<u8> {
             out,
             support,
             threshold,
+            smoothing,
+            feature_radius,
+            textbook,
             known,
             json,
         } => {
             let how = maps::TipOptions {
                 support: *support,
                 threshold: *threshold,
+                smoothing: *smoothing,
+                feature_radius: *feature_radius,
+                textbook: *textbook,
                 known: known.as_deref(),
             };
             maps::tip(scan, out, &how, *json, common, show)?;

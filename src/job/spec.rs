@@ -6,6 +6,7 @@ use crate::error::{Error, ErrorKind, Result};
 use crate::files;
 use crate::heightmap::{Pitch, Region};
 use crate::leveling;
+use crate::tip::blind;
 use crate::tip::model::Model;
 use crate::units::{Length, nanometres_per};
 use serde::{Deserialize, Serialize};
@@ -211,6 +212,12 @@ pub struct TipSpec {
     /// Noise threshold of the blind estimate.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub threshold: Option<Threshold>,
+    /// Smoothing before the blind estimate (standard deviation); absent = matched to the noise.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub smoothing: Option<Length>,
+    /// How the blind estimate goes about it; absent = the program's own way.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub method: Option<blind::Method>,
     /// Apex radius of the sharpest feature, for the blind estimate, where the user knows it.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub feature_radius: Option<Length>,
@@ -451,6 +458,7 @@ impl TipSpec {
             ("support", self.support),
             ("radius", self.radius),
             ("feature-radius", self.feature_radius),
+            ("smoothing", self.smoothing),
             ("uncertainty", self.uncertainty),
         ] {
             if let Some(length) = length

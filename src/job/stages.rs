@@ -351,8 +351,12 @@ fn find_tip(job: &Job, level: &Leveled, progress: &Progress) -> Result<TipOrReas
         let settings = blind::Settings {
             support_nm: spec.support.map(|l| l.nm()),
             threshold_nm: spec.fixed_threshold_nm(),
+            smoothing_px: spec.smoothing.map(|l| {
+                let pitch = shown.map.pitch();
+                l.nm() / (pitch.x * pitch.y).sqrt()
+            }),
+            method: spec.method.unwrap_or_default(),
             feature_radius_nm: spec.feature_radius.map(|l| l.nm()),
-            ..blind::Settings::default()
         };
         same_pitch(shown, scan, spec)?;
         return match blind::estimate(&shown.map, shown.noise_nm, &settings, progress) {

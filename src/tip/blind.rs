@@ -18,9 +18,11 @@ use crate::error::{Error, ErrorKind, Result};
 use crate::heightmap::HeightMap;
 use crate::progress::Progress;
 use ndarray::Array2;
+use serde::{Deserialize, Serialize};
 
 /// How the estimate goes about it.
-#[derive(Debug, Clone, Copy, PartialEq, Default)]
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
 pub enum Method {
     /// The program's own choice.
     #[default]
