@@ -47,8 +47,10 @@ pub(super) fn certainty_map(
         rule,
     };
     let mut marks = Array2::from_elem(surface.dim(), NEVER);
-    let shared = search.mark_sole(&mut marks, &progress.part(0.0, 0.6))?;
-    search.mark_shared(&mut marks, &shared, &progress.part(0.6, 1.0))?;
+    let mut field = Field::default();
+    let sole = &progress.part(0.0, 0.6);
+    let shared = search.mark_sole(&mut field, &mut marks, sole)?;
+    search.mark_shared(&mut field, &mut marks, &shared, &progress.part(0.6, 1.0))?;
     let same_contact = search.same_contact(&marks);
     ndarray::Zip::from(&mut marks)
         .and(surface)
@@ -76,8 +78,14 @@ struct Search<'s> {
 
 impl<'s> Search<'s> {
     /// Marks the contacts of scan pixels that have only one: `TOUCHED`. The contacts of the others.
-    fn mark_sole(&self, marks: &mut Array2<u8>, progress: &Progress) -> Result<Vec<Band<'s>>> {
-        let (mut field, mut shared) = (Field::default(), Vec::new());
+    /// `field` holds the last part afterwards.
+    fn mark_sole(
+        &self,
+        field: &mut Field,
+        marks: &mut Array2<u8>,
+        progress: &Progress,
+    ) -> Result<Vec<Band<'s>>> {
+        let mut shared = Vec::new();
         let parts = self.parts();
         let steps = Steps::new(progress, &parts);
         for part in parts {
@@ -87,14 +95,15 @@ impl<'s> Search<'s> {
                 Order::Max,
                 progress,
             )?;
+            let field = &*field;
             let strips = strips(marks);
             let mut bands = self.bands(part);
             bands.par_iter_mut().try_for_each(|band| {
-                let mut left = Marks::new(&field, self.tip, band);
+                let mut left = Marks::new(field, self.tip, band);
                 for row in 0..band.tile_rows() {
                     self.engine.arch.dispatch(SoleRow {
                         search: self,
-                        field: &field,
+                        field,
                         band,
                         marks: &mut left,
                         row,
@@ -114,29 +123,34 @@ impl<'s> Search<'s> {
     /// `BOUNDED`.
     fn mark_shared(
         &self,
+        field: &mut Field,
         marks: &mut Array2<u8>,
         shared: &[Band],
         progress: &Progress,
     ) -> Result<()> {
-        let mut field = Field::default();
+        let parts = shared.chunk_by(|a, b| a.part == b.part).count();
         for bands in shared.chunk_by(|a, b| a.part == b.part) {
             let part = &bands[0].part;
             progress.report(part.rows.start as f32 / self.surface.nrows() as f32);
             if bands.iter().all(|band| band.contacts.is_empty()) {
                 continue;
             }
-            field.load(
-                self.engine.arch,
-                part.seen(self.surface),
-                Order::Max,
-                progress,
-            )?;
-            let touched = padded(&field, part.seen(marks.view()));
+            // A single part is the one that is held already.
+            if parts > 1 {
+                field.load(
+                    self.engine.arch,
+                    part.seen(self.surface),
+                    Order::Max,
+                    progress,
+                )?;
+            }
+            let field = &*field;
+            let touched = padded(field, part.seen(marks.view()));
             let strips = strips(marks);
             bands.par_iter().try_for_each(|band| {
-                let mut left = Marks::new(&field, self.tip, band);
+                let mut left = Marks::new(field, self.tip, band);
                 self.engine.arch.dispatch(SharedBand {
-                    field: &field,
+                    field,
                     band,
                     touched: &touched,
                     marks: &mut left,
