@@ -14,7 +14,7 @@ GOLDEN = pathlib.Path(__file__).resolve().parent / "golden"
 ALPHA = np.sqrt(np.log(2) / np.pi)
 
 
-def main():
+def made():
     random = np.random.default_rng(61)
     surface = random.normal(0, 3, (40, 60)) + 5
     surface[random.random(surface.shape) < 0.05] = np.nan
@@ -27,8 +27,12 @@ def main():
     )
     mean = smooth(np.where(known, surface, 0)) / smooth(known)
     mean[~known] = np.nan
-    np.save(GOLDEN / "filter-map.npy", surface)
-    np.save(GOLDEN / "filter-mean.npy", mean.astype(np.float32))
+    return {"filter-map": surface, "filter-mean": mean.astype(np.float32)}
+
+
+def main():
+    for name, values in made().items():
+        np.save(GOLDEN / f"{name}.npy", values)
 
 
 if __name__ == "__main__":

@@ -19,6 +19,8 @@ mod statistics;
 mod step_height;
 mod step_histogram;
 #[cfg(test)]
+mod closed_forms;
+#[cfg(test)]
 mod tests;
 mod texture;
 mod trace;

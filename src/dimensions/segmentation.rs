@@ -169,6 +169,43 @@ mod tests {
         })
     }
 
+    /// Labels, areas and equivalent diameters against scikit-image's watershed and regionprops
+    /// (tests/python_golden.py).
+    #[test]
+    fn it_agrees_with_scikit_image() {
+        let path = |name: &str| {
+            std::path::Path::new(env!("CARGO_MANIFEST_DIR"))
+                .join(format!("tests/golden/{name}.npy"))
+        };
+        let map: Array2<f32> = ndarray_npy::read_npy(path("segments-map")).unwrap();
+        let labels: Array2<i32> = ndarray_npy::read_npy(path("segments-labels")).unwrap();
+        let regions: Array2<f64> = ndarray_npy::read_npy(path("segments-regions")).unwrap();
+        let found = segments(map.view(), 1.0, 12, |top| 0.15 * top);
+        assert_eq!(found.len(), regions.nrows());
+        let mut seen = std::collections::BTreeSet::new();
+        let mut elsewhere = 0;
+        for segment in &found {
+            let label = labels[segment.peak];
+            assert!(seen.insert(label), "two segments in {label}");
+            let other = |p: &&[usize; 2]| labels[**p] != label;
+            let strays = segment.pixels.iter().filter(other).count();
+            let area = regions[[label as usize - 1, 1]];
+            let diameter = regions[[label as usize - 1, 2]];
+            let ours = segment.pixels.len() as f64;
+            if segment.touching {
+                // Which side takes a pixel of the watershed itself is a matter of order.
+                elsewhere += strays;
+                assert!((ours - area).abs() <= 3.0, "{label}: {ours}, {area}");
+            } else {
+                assert_eq!((strays, ours), (0, area), "{label}");
+            }
+            let equivalent = (4.0 * ours / std::f64::consts::PI).sqrt();
+            assert!((equivalent - diameter).abs() < 0.01 * diameter, "{label}");
+        }
+        assert!(elsewhere <= 8, "{elsewhere} pixels");
+        assert_eq!(found.iter().filter(|s| s.touching).count(), 7);
+    }
+
     #[test]
     fn apart_touching_and_at_the_border() {
         let map = bumps(

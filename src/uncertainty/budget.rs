@@ -145,6 +145,20 @@ pub fn coverage_factor(coverage: f64, degrees_of_freedom: Option<f64>) -> f64 {
 mod tests {
     use super::*;
 
+    /// Student's t and the normal distribution by scipy.stats (tests/python_golden.py).
+    #[test]
+    fn coverage_factors_agree_with_scipy() {
+        let path =
+            std::path::Path::new(env!("CARGO_MANIFEST_DIR")).join("tests/golden/coverage.npy");
+        let table: ndarray::Array2<f64> = ndarray_npy::read_npy(path).unwrap();
+        assert_eq!(table.dim(), (54, 3));
+        for row in table.rows() {
+            let freedom = row[1].is_finite().then_some(row[1]);
+            let k = coverage_factor(row[0], freedom);
+            assert!((k / row[2] - 1.0).abs() < 2e-5, "{row}: {k}");
+        }
+    }
+
     fn component(u: f64, c: f64, freedom: Option<f64>) -> Component {
         Component {
             source: String::new(),

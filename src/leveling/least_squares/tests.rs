@@ -314,3 +314,30 @@ proptest! {
         prop_assert!((a.residual_sum - b.residual_sum).abs() < 1e-9);
     }
 }
+
+/// A plane and a bivariate cubic by numpy.linalg.lstsq (tests/python_golden.py).
+#[test]
+fn planes_and_cubics_agree_with_numpy() {
+    let read = |name: &str| -> ndarray::Array2<f64> {
+        let path = std::path::Path::new(env!("CARGO_MANIFEST_DIR"));
+        ndarray_npy::read_npy(path.join(format!("tests/golden/lstsq-{name}.npy"))).unwrap()
+    };
+    let (rows, expected) = (read("rows"), read("coefficients"));
+    let heights = rows.column(10).to_vec();
+    let terms: [&[usize]; 2] = [&[0, 1, 4], &[0, 1, 2, 3, 4, 5, 6, 7, 8, 9]];
+    for (number, terms) in terms.iter().enumerate() {
+        let fitted = fit(terms.len(), &heights, None, |i, row| {
+            for (entry, &term) in row.iter_mut().zip(*terms) {
+                *entry = rows[[i, term]];
+            }
+        })
+        .unwrap();
+        for (c, &term) in fitted.coefficients.iter().zip(*terms) {
+            let theirs = expected[[number, term]];
+            assert!(
+                (c - theirs).abs() < 1e-10 * theirs.abs().max(1.0),
+                "{c} {theirs}"
+            );
+        }
+    }
+}
