@@ -134,7 +134,11 @@ pub fn run(count: u64, first: u64, trials: Option<usize>, verbose: bool) -> Resu
     );
     println!(
         "|---|---|---|---|---|---|---|---|---|---|{}",
-        if trials.is_some() { "---|---|---|---|" } else { "" }
+        if trials.is_some() {
+            "---|---|---|---|"
+        } else {
+            ""
+        }
     );
     let mut row = 0;
     for wall_deg in [75.0, 80.0] {

@@ -15,8 +15,8 @@
 //! drawn from the budget of the base. One-sided bounds are added outside, as in the budget.
 
 use super::spec::{JobFile, MonteCarloSpec};
-use super::stages::{Outcome, TipResult, input, measure_one};
-use crate::dimensions::{Corrected, Dimension, Input, Kind, MonteCarlo};
+use super::stages::{Outcome, TipResult, input, measure_one, scanner};
+use crate::dimensions::{Corrected, Dimension, Input, Kind, MonteCarlo, Scanner};
 use crate::error::Result;
 use crate::heightmap::HeightMap;
 use crate::leveling::{self, Leveled};
@@ -49,7 +49,7 @@ pub(super) fn draw(
     let (Some(corrected), Some(tip)) = (given.corrected, outcome.tip.as_deref()) else {
         return Ok(lines);
     };
-    let chain = Chain::new(level, &given, corrected, tip, spec)?;
+    let chain = Chain::new(level, &given, scanner(outcome), corrected, tip, spec)?;
     let base = chain.measure(
         &chain.base,
         Some(chain.left_noise),
@@ -130,6 +130,7 @@ pub(super) fn draw(
 
 struct Chain<'a> {
     input: &'a Input<'a>,
+    scanner: Scanner,
     corrected: Corrected<'a>,
     tip: &'a TipResult,
     spec: &'a JobFile,
@@ -148,6 +149,7 @@ impl<'a> Chain<'a> {
     fn new(
         level: &Leveled,
         input: &'a Input<'a>,
+        scanner: Scanner,
         corrected: Corrected<'a>,
         tip: &'a TipResult,
         spec: &'a JobFile,
@@ -177,6 +179,7 @@ impl<'a> Chain<'a> {
             noise: (noise * noise - left_noise * left_noise).max(0.0).sqrt(),
             leveling: spec.level.settings()?,
             input,
+            scanner,
             corrected,
             tip,
             spec,
@@ -198,7 +201,12 @@ impl<'a> Chain<'a> {
         };
         let mut lines = Vec::new();
         for request in &self.spec.dimensions {
-            lines.extend(measure_one(&input, request, &Progress::new())?);
+            lines.extend(measure_one(
+                &input,
+                &self.scanner,
+                request,
+                &Progress::new(),
+            )?);
         }
         Ok(lines)
     }
@@ -221,14 +229,19 @@ impl<'a> Chain<'a> {
         }
     }
 
-    fn trial(&self, random: &mut ChaCha8Rng) -> Result<Vec<Dimension>> {
-        // Reports of the single steps would run over each other: those of the trials count.
-        let quiet = Progress::new();
-        let noisy = self.tilted.heights().mapv(|z| {
+    /// One drawn scan, not levelled yet.
+    fn noisy(&self, random: &mut ChaCha8Rng) -> HeightMap {
+        let heights = self.tilted.heights().mapv(|z| {
             let n: f64 = random.sample(StandardNormal);
             z + (self.noise * n) as f32
         });
-        let noisy = self.tilted.with_heights(noisy, "noise drawn");
+        self.tilted.with_heights(heights, "noise drawn")
+    }
+
+    fn trial(&self, random: &mut ChaCha8Rng) -> Result<Vec<Dimension>> {
+        // Reports of the single steps would run over each other: those of the trials count.
+        let quiet = Progress::new();
+        let noisy = self.noisy(random);
         let level = leveling::level(&noisy, &self.leveling, &quiet)?;
         let tip = drawn_tip(self.tip, random.sample(StandardNormal))?;
         let heights = morphology::erode(level.map.heights(), tip.shape(), &quiet)?;
@@ -316,4 +329,58 @@ fn redrawn(known: &Dimension, random: &mut ChaCha8Rng) -> f64 {
         .filter(|c| c.distribution != Distribution::OneSided && !c.source.contains("tip"))
         .map(|c| c.draw(random))
         .sum()
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::dimensions::Request;
+    use crate::heightmap::Pitch;
+    use crate::job::{Job, Stages, TipFrom};
+    use crate::units::Length;
+    use rand::SeedableRng;
+
+    /// What the opening keeps of the scan's noise is not drawn twice.
+    #[test]
+    fn drawn_scans_are_as_noisy_as_the_scan() {
+        let folder = tempfile::tempdir().unwrap();
+        let path = folder.path().join("line.tiff");
+        for (seed, noise) in [(1, 0.1), (2, 0.3), (3, 0.8)] {
+            let mut random = ChaCha8Rng::seed_from_u64(seed);
+            let map = HeightMap::from_fn(96, 128, Pitch::square(1.0), |x, _| {
+                let n: f64 = random.sample(StandardNormal);
+                (20.0 + 4.0 * (25.0 - (x - 64.0).abs())).clamp(0.0, 40.0) + noise * n
+            });
+            crate::files::write(&path, &map.unwrap()).unwrap();
+            let mut job = Job::on_scan(&path);
+            job.file.tip.from = TipFrom::Model;
+            job.file.tip.radius = Some(Length::from_nm(8.0));
+            job.file.tip.half_angle = Some(10.0);
+            job.file
+                .dimensions
+                .push(Request::new("line", Kind::LineWidth));
+            let outcome = Stages::default()
+                .run(&job, &Progress::new(), &mut |_| {})
+                .unwrap();
+            let level = outcome.level.clone().unwrap();
+            let given = input(&level, &outcome, &job.file);
+            let tip = outcome.tip.as_deref().unwrap();
+            let corrected = given.corrected.unwrap();
+            let chain = Chain::new(
+                &level,
+                &given,
+                Scanner::default(),
+                corrected,
+                tip,
+                &job.file,
+            )
+            .unwrap();
+            assert!(chain.left_noise < level.noise_nm.unwrap());
+            for _ in 0..3 {
+                let drawn = leveling::noise(&chain.noisy(&mut random)).unwrap();
+                let ratio = drawn / level.noise_nm.unwrap();
+                assert!((0.9..1.1).contains(&ratio), "{noise}: {ratio}");
+            }
+        }
+    }
 }
