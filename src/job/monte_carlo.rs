@@ -26,7 +26,7 @@ use crate::tip::Tip;
 use crate::uncertainty::monte_carlo::{Settings, Trials, numerical_tolerance, propagate};
 use crate::uncertainty::{Budget, Distribution};
 use ndarray::{Array2, Zip};
-use rand::Rng;
+use rand::{Rng, SeedableRng};
 use rand_chacha::ChaCha8Rng;
 use rand_distr::StandardNormal;
 
@@ -174,9 +174,9 @@ impl<'a> Chain<'a> {
         });
         Ok(Self {
             tilted: base.with_heights(tilted, "tilted"),
+            noise: missing_noise(&base, noise),
             base,
             left_noise,
-            noise: (noise * noise - left_noise * left_noise).max(0.0).sqrt(),
             leveling: spec.level.settings()?,
             input,
             scanner,
@@ -231,11 +231,7 @@ impl<'a> Chain<'a> {
 
     /// One drawn scan, not levelled yet.
     fn noisy(&self, random: &mut ChaCha8Rng) -> HeightMap {
-        let heights = self.tilted.heights().mapv(|z| {
-            let n: f64 = random.sample(StandardNormal);
-            z + (self.noise * n) as f32
-        });
-        self.tilted.with_heights(heights, "noise drawn")
+        with_noise(&self.tilted, self.noise, random)
     }
 
     fn trial(&self, random: &mut ChaCha8Rng) -> Result<Vec<Dimension>> {
@@ -248,6 +244,31 @@ impl<'a> Chain<'a> {
         let surface = level.map.with_heights(heights, "eroded");
         self.measure(&level.map, level.noise_nm, self.with(&tip, &surface))
     }
+}
+
+/// White noise to add to `base` so that it is seen to have that of the scan, nm.
+///
+/// What the opening kept is not normal, so that the two do not just add in squares as they are
+/// seen: a first guess by squares is corrected by what a noisy base is seen to have.
+fn missing_noise(base: &HeightMap, scan_noise: f64) -> f64 {
+    let lacks = |seen: f64| scan_noise * scan_noise - seen * seen;
+    let left = leveling::noise(base).unwrap_or(0.0);
+    let mut variance = lacks(left).max(0.0);
+    for _ in 0..4 {
+        let mut random = ChaCha8Rng::seed_from_u64(0);
+        let noisy = with_noise(base, variance.sqrt(), &mut random);
+        let seen = leveling::noise(&noisy).unwrap_or(0.0);
+        variance = (variance + lacks(seen)).max(0.0);
+    }
+    variance.sqrt()
+}
+
+fn with_noise(map: &HeightMap, noise: f64, random: &mut ChaCha8Rng) -> HeightMap {
+    let heights = map.heights().mapv(|z| {
+        let n: f64 = random.sample(StandardNormal);
+        z + (noise * n) as f32
+    });
+    map.with_heights(heights, "noise drawn")
 }
 
 /// A tip `deviations` standard uncertainties to the blunter side: within the band, whose ends are
@@ -338,7 +359,6 @@ mod tests {
     use crate::heightmap::Pitch;
     use crate::job::{Job, Stages, TipFrom};
     use crate::units::Length;
-    use rand::SeedableRng;
 
     /// What the opening keeps of the scan's noise is not drawn twice.
     #[test]

@@ -393,7 +393,11 @@ fn a_retrace_and_a_second_scan_enter_lengths_and_heights() {
     // 3.3 nm in the time of 160 nm; 0.5 nm in that of 160 rows of 120 nm, there and back.
     let length = |i: usize| after[i].corrected.unwrap().value.unwrap();
     near(line(1, "drift"), 3.3 / 160.0 * length(1) / root3, 0.02);
-    near(line(0, "drift"), 0.5 / 320.0 * length(0) / 120.0 / root3, 5e-5);
+    near(
+        line(0, "drift"),
+        0.5 / 320.0 * length(0) / 120.0 / root3,
+        5e-5,
+    );
     // A top 0.2 nm higher on a third of the map: half its standard deviation about the mean.
     assert!(
         (0.01..0.07).contains(&line(2, hysteresis)),
