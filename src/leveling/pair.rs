@@ -221,8 +221,8 @@ impl Sums {
         }
         // A height offset between the two is no shift.
         let mean = sums.difference[0] / sums.n.max(1.0);
-        for k in 0..2 {
-            sums.pull[k] -= gradient[k] * mean;
+        for (pull, gradient) in sums.pull.iter_mut().zip(gradient) {
+            *pull -= gradient * mean;
         }
         sums
     }
