@@ -12,6 +12,7 @@ mod model_fit;
 mod particle;
 mod pitch;
 mod roughness;
+mod scanner;
 mod sections;
 mod segmentation;
 mod side_wall;
@@ -29,6 +30,7 @@ mod wall;
 pub use evidence::{Evidence, MonteCarlo};
 pub use find::{Find, find};
 pub use model_fit::{Fitted, ModelFit, second_opinion};
+pub use scanner::Scanner;
 
 use crate::error::{Error, ErrorKind, Result};
 use crate::heightmap::{HeightMap, Region};

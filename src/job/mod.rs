@@ -5,6 +5,7 @@ mod demo;
 mod ghost;
 mod known;
 mod monte_carlo;
+mod pairs;
 mod spec;
 mod stages;
 #[cfg(test)]
@@ -16,6 +17,7 @@ pub use crate::morphology::Reliability;
 pub use demo::{data_folder, demo};
 pub use ghost::{GhostTip, ghost_tip};
 pub use known::{KnownShape, KnownSpec, Way};
+pub use pairs::{Further, Pairs};
 pub use spec::{
     Job, JobFile, LevelMethod, LevelSpec, MonteCarloSpec, ScanSpec, Threshold, TipFrom, TipShape,
     TipSpec,

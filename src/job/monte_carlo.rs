@@ -15,8 +15,8 @@
 //! drawn from the budget of the base. One-sided bounds are added outside, as in the budget.
 
 use super::spec::{JobFile, MonteCarloSpec};
-use super::stages::{Outcome, TipResult, input, measure_one};
-use crate::dimensions::{Corrected, Dimension, Input, Kind, MonteCarlo};
+use super::stages::{Outcome, TipResult, input, measure_one, scanner};
+use crate::dimensions::{Corrected, Dimension, Input, Kind, MonteCarlo, Scanner};
 use crate::error::Result;
 use crate::heightmap::HeightMap;
 use crate::leveling::{self, Leveled};
@@ -26,7 +26,7 @@ use crate::tip::Tip;
 use crate::uncertainty::monte_carlo::{Settings, Trials, numerical_tolerance, propagate};
 use crate::uncertainty::{Budget, Distribution};
 use ndarray::{Array2, Zip};
-use rand::Rng;
+use rand::{Rng, SeedableRng};
 use rand_chacha::ChaCha8Rng;
 use rand_distr::StandardNormal;
 
@@ -49,7 +49,7 @@ pub(super) fn draw(
     let (Some(corrected), Some(tip)) = (given.corrected, outcome.tip.as_deref()) else {
         return Ok(lines);
     };
-    let chain = Chain::new(level, &given, corrected, tip, spec)?;
+    let chain = Chain::new(level, &given, scanner(outcome), corrected, tip, spec)?;
     let base = chain.measure(
         &chain.base,
         Some(chain.left_noise),
@@ -130,6 +130,7 @@ pub(super) fn draw(
 
 struct Chain<'a> {
     input: &'a Input<'a>,
+    scanner: Scanner,
     corrected: Corrected<'a>,
     tip: &'a TipResult,
     spec: &'a JobFile,
@@ -148,6 +149,7 @@ impl<'a> Chain<'a> {
     fn new(
         level: &Leveled,
         input: &'a Input<'a>,
+        scanner: Scanner,
         corrected: Corrected<'a>,
         tip: &'a TipResult,
         spec: &'a JobFile,
@@ -172,11 +174,12 @@ impl<'a> Chain<'a> {
         });
         Ok(Self {
             tilted: base.with_heights(tilted, "tilted"),
+            noise: missing_noise(&base, noise),
             base,
             left_noise,
-            noise: (noise * noise - left_noise * left_noise).max(0.0).sqrt(),
             leveling: spec.level.settings()?,
             input,
+            scanner,
             corrected,
             tip,
             spec,
@@ -198,7 +201,12 @@ impl<'a> Chain<'a> {
         };
         let mut lines = Vec::new();
         for request in &self.spec.dimensions {
-            lines.extend(measure_one(&input, request, &Progress::new())?);
+            lines.extend(measure_one(
+                &input,
+                &self.scanner,
+                request,
+                &Progress::new(),
+            )?);
         }
         Ok(lines)
     }
@@ -221,20 +229,46 @@ impl<'a> Chain<'a> {
         }
     }
 
+    /// One drawn scan, not levelled yet.
+    fn noisy(&self, random: &mut ChaCha8Rng) -> HeightMap {
+        with_noise(&self.tilted, self.noise, random)
+    }
+
     fn trial(&self, random: &mut ChaCha8Rng) -> Result<Vec<Dimension>> {
         // Reports of the single steps would run over each other: those of the trials count.
         let quiet = Progress::new();
-        let noisy = self.tilted.heights().mapv(|z| {
-            let n: f64 = random.sample(StandardNormal);
-            z + (self.noise * n) as f32
-        });
-        let noisy = self.tilted.with_heights(noisy, "noise drawn");
+        let noisy = self.noisy(random);
         let level = leveling::level(&noisy, &self.leveling, &quiet)?;
         let tip = drawn_tip(self.tip, random.sample(StandardNormal))?;
         let heights = morphology::erode(level.map.heights(), tip.shape(), &quiet)?;
         let surface = level.map.with_heights(heights, "eroded");
         self.measure(&level.map, level.noise_nm, self.with(&tip, &surface))
     }
+}
+
+/// White noise to add to `base` so that it is seen to have that of the scan, nm.
+///
+/// What the opening kept is not normal, so that the two do not just add in squares as they are
+/// seen: a first guess by squares is corrected by what a noisy base is seen to have.
+fn missing_noise(base: &HeightMap, scan_noise: f64) -> f64 {
+    let lacks = |seen: f64| scan_noise * scan_noise - seen * seen;
+    let left = leveling::noise(base).unwrap_or(0.0);
+    let mut variance = lacks(left).max(0.0);
+    for _ in 0..4 {
+        let mut random = ChaCha8Rng::seed_from_u64(0);
+        let noisy = with_noise(base, variance.sqrt(), &mut random);
+        let seen = leveling::noise(&noisy).unwrap_or(0.0);
+        variance = (variance + lacks(seen)).max(0.0);
+    }
+    variance.sqrt()
+}
+
+fn with_noise(map: &HeightMap, noise: f64, random: &mut ChaCha8Rng) -> HeightMap {
+    let heights = map.heights().mapv(|z| {
+        let n: f64 = random.sample(StandardNormal);
+        z + (noise * n) as f32
+    });
+    map.with_heights(heights, "noise drawn")
 }
 
 /// A tip `deviations` standard uncertainties to the blunter side: within the band, whose ends are
@@ -316,4 +350,57 @@ fn redrawn(known: &Dimension, random: &mut ChaCha8Rng) -> f64 {
         .filter(|c| c.distribution != Distribution::OneSided && !c.source.contains("tip"))
         .map(|c| c.draw(random))
         .sum()
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::dimensions::Request;
+    use crate::heightmap::Pitch;
+    use crate::job::{Job, Stages, TipFrom};
+    use crate::units::Length;
+
+    /// What the opening keeps of the scan's noise is not drawn twice.
+    #[test]
+    fn drawn_scans_are_as_noisy_as_the_scan() {
+        let folder = tempfile::tempdir().unwrap();
+        let path = folder.path().join("line.tiff");
+        for (seed, noise) in [(1, 0.1), (2, 0.3), (3, 0.8)] {
+            let mut random = ChaCha8Rng::seed_from_u64(seed);
+            let map = HeightMap::from_fn(96, 128, Pitch::square(1.0), |x, _| {
+                let n: f64 = random.sample(StandardNormal);
+                (20.0 + 4.0 * (25.0 - (x - 64.0).abs())).clamp(0.0, 40.0) + noise * n
+            });
+            crate::files::write(&path, &map.unwrap()).unwrap();
+            let mut job = Job::on_scan(&path);
+            job.file.tip.from = TipFrom::Model;
+            job.file.tip.radius = Some(Length::from_nm(8.0));
+            job.file.tip.half_angle = Some(10.0);
+            job.file
+                .dimensions
+                .push(Request::new("line", Kind::LineWidth));
+            let outcome = Stages::default()
+                .run(&job, &Progress::new(), &mut |_| {})
+                .unwrap();
+            let level = outcome.level.clone().unwrap();
+            let given = input(&level, &outcome, &job.file);
+            let tip = outcome.tip.as_deref().unwrap();
+            let corrected = given.corrected.unwrap();
+            let chain = Chain::new(
+                &level,
+                &given,
+                Scanner::default(),
+                corrected,
+                tip,
+                &job.file,
+            )
+            .unwrap();
+            assert!(chain.left_noise < level.noise_nm.unwrap());
+            for _ in 0..3 {
+                let drawn = leveling::noise(&chain.noisy(&mut random)).unwrap();
+                let ratio = drawn / level.noise_nm.unwrap();
+                assert!((0.9..1.1).contains(&ratio), "{noise}: {ratio}");
+            }
+        }
+    }
 }

@@ -92,6 +92,12 @@ pub struct ScanSpec {
     /// Which map of a file that holds several, counted from 0.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub map: Option<usize>,
+    /// Retrace of the same lines, relative to the job file: tells the hysteresis.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub retrace: Option<PathBuf>,
+    /// Scan of the same place taken straight after, relative to the job file: tells the drift.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub second: Option<PathBuf>,
 }
 
 /// `[level] method`
@@ -526,6 +532,12 @@ impl Job {
         let folder = path.parent().unwrap_or(Path::new("")).to_owned();
         let mut file = self.file.clone();
         file.scan.file = relative_to(&self.folder.join(&file.scan.file), &folder);
+        for further in [&mut file.scan.retrace, &mut file.scan.second]
+            .into_iter()
+            .flatten()
+        {
+            *further = relative_to(&self.folder.join(&*further), &folder);
+        }
         if let Some(tip) = &file.tip.file {
             file.tip.file = Some(relative_to(&self.folder.join(tip), &folder));
         }

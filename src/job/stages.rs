@@ -2,8 +2,9 @@
 
 use super::known::{Way, tip_from_known};
 use super::monte_carlo;
+use super::pairs::{Pairs, pairs};
 use super::spec::{Job, JobFile, LevelSpec, MonteCarloSpec, ScanSpec, TipFrom, TipSpec};
-use crate::dimensions::{self, Calibration, Corrected, Dimension, Input, Request};
+use crate::dimensions::{self, Calibration, Corrected, Dimension, Input, Request, Scanner};
 use crate::error::{Error, ErrorKind, Result};
 use crate::files;
 use crate::heightmap::HeightMap;
@@ -74,6 +75,8 @@ pub struct Outcome {
     pub scan: Option<Arc<HeightMap>>,
     /// The levelled scan.
     pub level: Option<Arc<Leveled>>,
+    /// What further scans of the same place showed; `None` where the job gives none.
+    pub pairs: Option<Arc<Pairs>>,
     /// The tip; `None` while under way, or where none could be had (then a warning says why).
     pub tip: Option<Arc<TipResult>>,
     /// The surface.
@@ -134,11 +137,13 @@ pub type TipOrReason = std::result::Result<Arc<TipResult>, String>;
 /// The file, its sidecar, and what the job says of them.
 type ScanKey = (FileStamp, FileStamp, ScanSpec);
 type LevelKey = (Same<HeightMap>, LevelSpec);
+type PairsKey = (Same<Leveled>, ScanSpec, LevelSpec, Vec<FileStamp>);
 type TipKey = (Same<Leveled>, TipSpec, LevelSpec, Vec<FileStamp>);
 type SurfaceKey = (Same<Leveled>, Same<TipResult>);
 type DimensionsKey = (
     Same<Leveled>,
     Option<Same<SurfaceResult>>,
+    Option<Same<Pairs>>,
     Option<Calibration>,
     Vec<Request>,
     bool,
@@ -151,6 +156,7 @@ type MonteCarloKey = (Same<Vec<Dimension>>, LevelSpec, MonteCarloSpec);
 pub struct Stages {
     scan: Kept<ScanKey, HeightMap>,
     level: Kept<LevelKey, Leveled>,
+    pairs: Kept<PairsKey, Pairs>,
     tip: Kept<TipKey, TipOrReason>,
     surface: Kept<SurfaceKey, SurfaceResult>,
     dimensions: Kept<DimensionsKey, Vec<Dimension>>,
@@ -198,6 +204,10 @@ impl Stages {
         let level = self.level(job, &scan, &progress.part(0.05, 0.1))?;
         outcome.warnings.extend(level.warnings.iter().cloned());
         outcome.level = Some(Arc::clone(&level));
+        outcome.pairs = self.pairs_of(job, &level, &progress.part(0.1, 0.12))?;
+        if let Some(pairs) = &outcome.pairs {
+            outcome.warnings.extend(pairs.warnings.iter().cloned());
+        }
         watch(&outcome);
 
         let tip = self.tip_of(job, &level, &progress.part(0.1, 0.7))?;
@@ -234,6 +244,7 @@ impl Stages {
         let key = (
             Same(Arc::clone(&level)),
             outcome.surface.clone().map(Same),
+            outcome.pairs.clone().map(Same),
             spec.calibration,
             spec.dimensions.clone(),
             spec.model_fit,
@@ -280,7 +291,7 @@ impl Stages {
     fn scan(&mut self, job: &Job, progress: &Progress) -> Result<Arc<HeightMap>> {
         progress.check()?;
         progress.say("opening the scan");
-        let spec = &job.file.scan;
+        let spec = job.file.scan.alone();
         let path = job.scan_path();
         let sidecar = files::sidecar_path(&path);
         let key = (stamp(path.clone()), stamp(sidecar), spec.clone());
@@ -300,6 +311,33 @@ impl Stages {
         self.level.get((Same(Arc::clone(scan)), spec.clone()), || {
             leveling::level(scan, &spec.settings()?, progress)
         })
+    }
+
+    fn pairs_of(
+        &mut self,
+        job: &Job,
+        level: &Arc<Leveled>,
+        progress: &Progress,
+    ) -> Result<Option<Arc<Pairs>>> {
+        progress.check()?;
+        let spec = &job.file.scan;
+        let files = spec.further().flat_map(|f| {
+            let path = job.folder.join(f);
+            [files::sidecar_path(&path), path]
+        });
+        let files: Vec<FileStamp> = files.map(stamp).collect();
+        if files.is_empty() {
+            return Ok(None);
+        }
+        progress.say("comparing with the further scans");
+        let key = (
+            Same(Arc::clone(level)),
+            spec.clone(),
+            job.file.level.clone(),
+            files,
+        );
+        let found = self.pairs.get(key, || pairs(job, level, progress))?;
+        Ok(Some(found))
     }
 
     fn tip_of(
@@ -591,14 +629,28 @@ pub(super) fn input<'a>(level: &'a Leveled, outcome: &'a Outcome, spec: &JobFile
     }
 }
 
-/// Measures one request, errors with its name.
+/// Measures one request with what is known of the scanner, errors with its name.
 pub(super) fn measure_one(
     input: &Input,
+    scanner: &Scanner,
     request: &Request,
     progress: &Progress,
 ) -> Result<Vec<Dimension>> {
-    dimensions::measure(input, request, progress)
-        .map_err(|e| e.context(format!("dimension \"{}\"", request.name)))
+    let mut lines = dimensions::measure(input, request, progress)
+        .map_err(|e| e.context(format!("dimension \"{}\"", request.name)))?;
+    for line in &mut lines {
+        scanner.enter(input.scan, request, line);
+    }
+    Ok(lines)
+}
+
+/// What further scans tell of the scanner.
+pub(super) fn scanner(outcome: &Outcome) -> Scanner {
+    outcome
+        .pairs
+        .as_deref()
+        .map(Pairs::scanner)
+        .unwrap_or_default()
 }
 
 fn measure(
@@ -609,6 +661,7 @@ fn measure(
 ) -> Result<Vec<Dimension>> {
     let requests = &spec.dimensions;
     let input = input(level, outcome, spec);
+    let scanner = scanner(outcome);
     let band = outcome.tip.as_ref().and_then(|tip| tip.band.as_ref());
     let done = AtomicUsize::new(0);
     let lines: Vec<Vec<Dimension>> = requests
@@ -617,7 +670,7 @@ fn measure(
             progress.check()?;
             // Several go on at once: the progress is how many are done.
             let quiet = progress.silent();
-            let mut measured = measure_one(&input, request, &quiet)?;
+            let mut measured = measure_one(&input, &scanner, request, &quiet)?;
             if let Some(corrected) = &input.corrected {
                 let reliability = reliability(&input, corrected, request)?;
                 for line in &mut measured {

@@ -4,7 +4,7 @@ use super::*;
 use crate::dimensions::{Axis, Kind, Request};
 use crate::error::ErrorKind;
 use crate::files;
-use crate::heightmap::{HeightMap, Pitch};
+use crate::heightmap::{HeightMap, Pitch, Region};
 use crate::progress::Progress;
 use crate::tip::model::Model;
 use crate::units::Length;
@@ -330,4 +330,129 @@ fn monte_carlo_and_model_fit_in_the_job_file() {
     assert_eq!(JobFile::from_toml(&job.to_toml().unwrap()).unwrap(), job);
     let few = JobFile::from_toml(&text.replace("400", "4")).unwrap_err();
     assert!(few.to_string().contains("trials = 4"), "{few}");
+}
+
+/// A block of 60 nm by 80 nm with walls of 4 nm, shifted, with white noise; on disk.
+fn write_block(path: &Path, [dx, dy]: [f64; 2], taller: f64, seed: u64) {
+    use rand::{Rng, SeedableRng};
+    let mut random = rand_chacha::ChaCha8Rng::seed_from_u64(seed);
+    let within = |v: f64, half: f64| ((half - v.abs()) / 4.0 + 0.5).clamp(0.0, 1.0);
+    let map = HeightMap::from_fn(160, 120, Pitch::square(1.0), |x, y| {
+        let noise: f64 = random.sample(rand_distr::StandardNormal);
+        (20.0 + taller) * within(x - 60.0 - dx, 30.0) * within(y - 80.0 - dy, 40.0) + 0.1 * noise
+    });
+    files::write(path, &map.unwrap()).unwrap();
+}
+
+#[test]
+fn a_retrace_and_a_second_scan_enter_lengths_and_heights() {
+    let folder = tempfile::tempdir().unwrap();
+    let at = |name: &str| folder.path().join(name);
+    write_block(&at("trace.tiff"), [0.0, 0.0], 0.0, 1);
+    write_block(&at("retrace.tiff"), [1.2, 0.0], 0.2, 2);
+    write_block(&at("later.tiff"), [0.5, -3.3], 0.0, 3);
+    let mut job = Job::on_scan(&at("trace.tiff"));
+    job.file.tip =
+        toml::from_str("from = \"model\"\nradius = \"3 nm\"\nhalf-angle = 8\nsupport = \"15 nm\"")
+            .unwrap();
+    let width = |name: &str, region: [f64; 4], across| Request {
+        region: Some(Region::from(region.map(Length::from_nm))),
+        across: Some(across),
+        ..Request::new(name, Kind::LineWidth)
+    };
+    job.file.dimensions = vec![
+        width("across", [5.0, 60.0, 110.0, 40.0], Axis::X),
+        width("along", [40.0, 10.0, 40.0, 140.0], Axis::Y),
+        Request {
+            kind: Kind::StepHeight,
+            ..width("height", [5.0, 60.0, 110.0, 40.0], Axis::X)
+        },
+    ];
+    let mut stages = Stages::default();
+    let alone = run(&mut stages, &job);
+    assert!(alone.pairs.is_none());
+    job.file.scan.retrace = Some("retrace.tiff".into());
+    job.file.scan.second = Some("later.tiff".into());
+    let outcome = run(&mut stages, &job);
+    // The scan itself is not opened or levelled anew for it.
+    let levels = [&alone, &outcome].map(|o| o.level.clone().unwrap());
+    assert!(Arc::ptr_eq(&levels[0], &levels[1]));
+    let (before, after) = (
+        alone.dimensions.unwrap(),
+        outcome.dimensions.clone().unwrap(),
+    );
+    let line = |i: usize, source: &str| {
+        let of = after[i].budget.iter().filter(|c| c.source == source);
+        of.map(|c| c.u * c.sensitivity).sum::<f64>()
+    };
+    let root3 = 3f64.sqrt();
+    let hysteresis = "hysteresis (trace-retrace)";
+    let near = |is: f64, wanted: f64, by: f64| assert!((is - wanted).abs() < by, "{is} {wanted}");
+    near(line(0, hysteresis), 0.6 / root3, 0.02);
+    near(line(1, hysteresis), 0.0, 1e-12);
+    // 3.3 nm in the time of 160 nm; 0.5 nm in that of 160 rows of 120 nm, there and back.
+    let length = |i: usize| after[i].corrected.unwrap().value.unwrap();
+    near(line(1, "drift"), 3.3 / 160.0 * length(1) / root3, 0.02);
+    near(
+        line(0, "drift"),
+        0.5 / 320.0 * length(0) / 120.0 / root3,
+        5e-5,
+    );
+    // A top 0.2 nm higher on a third of the map: half its standard deviation about the mean.
+    assert!(
+        (0.01..0.07).contains(&line(2, hysteresis)),
+        "{}",
+        line(2, hysteresis)
+    );
+    for (a, b) in before.iter().zip(after.iter()) {
+        let (a, b) = (a.corrected.unwrap(), b.corrected.unwrap());
+        assert_eq!(a.value, b.value);
+        assert!(b.low < a.low && b.high > a.high && b.u > a.u, "{a:?} {b:?}");
+    }
+    let json = crate::record::result_json(&job, &outcome);
+    near(
+        json["scan"]["retrace"]["shift_nm"][0].as_f64().unwrap(),
+        1.2,
+        0.05,
+    );
+    near(
+        json["scan"]["second"]["shift_nm"][1].as_f64().unwrap(),
+        -3.3,
+        0.1,
+    );
+    assert_eq!(json["scan"]["second"]["file"], "later.tiff");
+    // The paths go with a saved job.
+    std::fs::create_dir(at("jobs")).unwrap();
+    job.save(&at("jobs").join("block.toml")).unwrap();
+    let back = Job::open(&at("jobs").join("block.toml")).unwrap();
+    let again = run(&mut Stages::default(), &back);
+    assert_eq!(
+        again.pairs.unwrap().scanner(),
+        outcome.pairs.unwrap().scanner()
+    );
+}
+
+#[test]
+fn a_further_scan_of_another_size_is_refused_and_of_another_place_told() {
+    let folder = tempfile::tempdir().unwrap();
+    let at = |name: &str| folder.path().join(name);
+    write_block(&at("trace.tiff"), [0.0, 0.0], 0.0, 1);
+    write_block(&at("flat.tiff"), [0.0, 0.0], -20.0, 2);
+    let small = HeightMap::from_fn(40, 40, Pitch::square(1.0), |x, _| x);
+    files::write(&at("small.tiff"), &small.unwrap()).unwrap();
+    let mut job = Job::on_scan(&at("trace.tiff"));
+    job.file.scan.retrace = Some("small.tiff".into());
+    let error = Stages::default()
+        .run(&job, &Progress::new(), &mut |_| {})
+        .unwrap_err();
+    assert_eq!(error.kind(), ErrorKind::Setting);
+    assert!(error.to_string().contains("40 x 40"), "{error}");
+    job.file.scan.retrace = Some("flat.tiff".into());
+    let outcome = run(&mut Stages::default(), &job);
+    assert!(
+        outcome.warnings.iter().any(|w| w.contains("flat.tiff")),
+        "{:?}",
+        outcome.warnings
+    );
+    assert_eq!(outcome.pairs.unwrap().scanner(), Default::default());
 }

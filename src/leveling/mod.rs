@@ -11,6 +11,7 @@ mod base;
 pub(crate) mod least_squares;
 mod model;
 mod noise;
+pub mod pair;
 mod robust;
 mod rows;
 mod surface;

@@ -10,7 +10,8 @@ use super::known::KnownPart;
 use crate::dimensions::{Dimension, Fitted, Kind, ModelFit, MonteCarlo, Status};
 use crate::heightmap::HeightMap;
 use crate::job::{
-    Job, Outcome, Reliability, ShapeFigures, SurfaceResult, TipFrom, TipResult, shape_figures,
+    Further, Job, Outcome, Reliability, ShapeFigures, SurfaceResult, TipFrom, TipResult,
+    shape_figures,
 };
 use crate::leveling::Leveled;
 use crate::tip::area::ContactArea;
@@ -58,6 +59,33 @@ struct ScanPart {
     voids: Option<usize>,
     range_nm: Option<[f64; 2]>,
     steps: Vec<String>,
+    /// Retrace of the same lines.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    retrace: Option<FurtherPart>,
+    /// Scan of the same place, straight after.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    second: Option<FurtherPart>,
+}
+
+/// A further scan, registered on the scan; `null` what it does not show.
+#[derive(Debug, Serialize)]
+struct FurtherPart {
+    file: String,
+    sha256: Option<String>,
+    shift_nm: [Option<f64>; 2],
+    height_difference_nm: Option<f64>,
+}
+
+impl FurtherPart {
+    fn of(further: &Further) -> Self {
+        let pair = further.pair;
+        Self {
+            file: path_text(&further.file),
+            sha256: further.sha256.clone(),
+            shift_nm: pair.map_or([None; 2], |p| p.shift_nm.map(|s| s.and_then(number))),
+            height_difference_nm: pair.and_then(|p| number(p.height_nm)),
+        }
+    }
 }
 
 #[derive(Debug, Serialize)]
@@ -260,6 +288,7 @@ fn scan_part(job: &Job, outcome: &Outcome) -> ScanPart {
     let scan = outcome.scan.as_deref();
     let history = outcome.level.as_deref().map(|level| &level.map).or(scan);
     let range = scan.and_then(HeightMap::range);
+    let pairs = outcome.pairs.as_deref();
     ScanPart {
         file: path_text(&job.file.scan.file),
         sha256: scan.and_then(|s| s.provenance().sha256.clone()),
@@ -280,6 +309,8 @@ fn scan_part(job: &Job, outcome: &Outcome) -> ScanPart {
         range_nm: range
             .and_then(|(low, high)| Some([number(f64::from(low))?, number(f64::from(high))?])),
         steps: history.map_or_else(Vec::new, |m| m.provenance().steps.clone()),
+        retrace: pairs.and_then(|p| p.retrace.as_ref()).map(FurtherPart::of),
+        second: pairs.and_then(|p| p.second.as_ref()).map(FurtherPart::of),
     }
 }
 

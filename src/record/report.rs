@@ -11,7 +11,8 @@ use super::tip_shape;
 use crate::dimensions::{Dimension, Status};
 use crate::error::Result;
 use crate::heightmap::HeightMap;
-use crate::job::{Job, Outcome, TipFrom, TipResult};
+use crate::job::{Further, Job, Outcome, Pairs, TipFrom, TipResult};
+use crate::leveling::pair::Pair;
 use std::fmt::Write;
 
 /// The page; `time` is the time stamp it carries.
@@ -186,6 +187,7 @@ fn inputs(html: &mut String, job: &Job, outcome: &Outcome) {
             rows.push(("Rows that jump", level.row_jumps.len().to_string()));
         }
     }
+    rows.extend(scanner_facts(outcome));
     rows.push((
         "Calibration",
         match job.file.calibration {
@@ -201,6 +203,43 @@ fn inputs(html: &mut String, job: &Job, outcome: &Outcome) {
     ));
     facts(html, &rows);
     html.push_str("</section>\n");
+}
+
+/// What further scans told of the scanner, or that there are none.
+fn scanner_facts(outcome: &Outcome) -> Vec<(&'static str, String)> {
+    let further = |which: fn(&Pairs) -> Option<&Further>| outcome.pairs.as_deref().and_then(which);
+    let told = |further: Option<&Further>, key: &str, of: &dyn Fn(&Pair) -> String| match further {
+        None => format!("<strong>not stated</strong>: no [scan] {key}, none of it in the results"),
+        Some(f) => {
+            let figures = match &f.pair {
+                Some(pair) => of(pair),
+                None => "does not show the same as the scan".to_owned(),
+            };
+            format!(
+                "{figures}<br />{}",
+                hash(&f.file.to_string_lossy(), f.sha256.as_deref())
+            )
+        }
+    };
+    let shift = |s: Option<f64>| s.map_or("not told".to_owned(), |s| about(s, "nm"));
+    vec![
+        (
+            "Trace and retrace",
+            told(further(|p| p.retrace.as_ref()), "retrace", &|p| {
+                format!(
+                    "shift along x {}, height difference {}",
+                    shift(p.shift_nm[0]),
+                    about(p.height_nm, "nm")
+                )
+            }),
+        ),
+        (
+            "Drift in the time of a scan",
+            told(further(|p| p.second.as_ref()), "second", &|p| {
+                format!("x {}, y {}", shift(p.shift_nm[0]), shift(p.shift_nm[1]))
+            }),
+        ),
+    ]
 }
 
 fn scan_facts(scan: &HeightMap) -> Vec<(&'static str, String)> {

@@ -182,6 +182,7 @@ fn outcome() -> Outcome {
     Outcome {
         scan: Some(Arc::new(scan())),
         level: Some(Arc::new(level)),
+        pairs: None,
         tip: Some(Arc::new(tip())),
         surface: Some(Arc::new(surface)),
         dimensions: Some(Arc::new(vec![dimension(100.4, 1.1), dimension(-3.0, 0.2)])),

@@ -123,6 +123,7 @@ pub fn outcome() -> Outcome {
             warnings: Vec::new(),
         })),
         scan: Some(Arc::new(scan)),
+        pairs: None,
         tip: Some(Arc::new(tip_result(tip))),
         surface: Some(Arc::new(surface)),
         dimensions: Some(Arc::new(vec![dimension("line 1")])),

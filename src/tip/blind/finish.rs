@@ -7,10 +7,10 @@ use crate::error::Result;
 use crate::heightmap::{HeightMap, Pitch};
 use crate::morphology;
 use crate::progress::Progress;
-use crate::tip::model::Model;
 use crate::tip::read_out::{Quadric, ReadOut, read_out, rough_radius};
 use crate::tip::{Band, Tip};
 use ndarray::Array2;
+use std::f64::consts::{FRAC_PI_2, TAU};
 
 /// Share of the tip cells above a depth that must have been seen for the depth to count.
 const SEEN: f64 = 0.8;
@@ -446,16 +446,16 @@ fn band(
 
 /// Takes a feature of apex radius `radius` out of the identified shape (erosion by its cap).
 fn without_feature(tip: &Tip, radius: f64) -> Result<Tip> {
-    let shape = eroded_by_cap(tip, radius)?;
+    let shape = eroded_by_cap(tip, radius);
     raised(shape, None, tip.pitch())
 }
 
 /// The same out of tip and band, all three by the tip's own change of height, so that the band
 /// still encloses it.
 fn all_without_feature(tip: &Tip, band: &Band, radius: f64) -> Result<(Tip, Band)> {
-    let shape = eroded_by_cap(tip, radius)?;
+    let shape = eroded_by_cap(tip, radius);
     let apex = shape[(shape.nrows() / 2, shape.ncols() / 2)];
-    let side = |side: &Tip| raised(eroded_by_cap(side, radius)?, Some(apex), tip.pitch());
+    let side = |side: &Tip| raised(eroded_by_cap(side, radius), Some(apex), tip.pitch());
     let band = Band {
         sharper: side(&band.sharper)?,
         blunter: side(&band.blunter)?,
@@ -463,25 +463,47 @@ fn all_without_feature(tip: &Tip, band: &Band, radius: f64) -> Result<(Tip, Band
     Ok((raised(shape, Some(apex), tip.pitch())?, band))
 }
 
-/// Stands for what is outside a tip, which is infinitely deep; nm.
-const OUTSIDE: f32 = -1e6;
+/// Slopes and azimuths at which the cap is looked at: they miss less than 0.01 of its radius.
+const CAP_SLOPES: u32 = 8;
+const CAP_AZIMUTHS: u32 = 32;
 
-fn eroded_by_cap(tip: &Tip, radius: f64) -> Result<Array2<f32>> {
+/// Erosion by a half sphere. Its radius is about a pixel, and a steep flank moves by several of its
+/// own heights from cell to cell: so the tip is taken between its cells, at places even over the
+/// sphere's slopes. (On the cells themselves a flank would move by whole pixels.)
+fn eroded_by_cap(tip: &Tip, radius: f64) -> Array2<f32> {
+    let cap: Vec<[f64; 3]> = (0..=CAP_SLOPES)
+        .flat_map(|i| {
+            let slope = f64::from(i) / f64::from(CAP_SLOPES) * FRAC_PI_2;
+            let azimuths = if i == 0 { 1 } else { CAP_AZIMUTHS };
+            (0..azimuths).map(move |k| {
+                let azimuth = f64::from(k) / f64::from(CAP_AZIMUTHS) * TAU;
+                let off = radius * slope.sin();
+                let depth = radius * (1.0 - slope.cos());
+                [off * azimuth.cos(), off * azimuth.sin(), depth]
+            })
+        })
+        .collect();
     let pitch = tip.pitch();
-    let half_angle = 15.0;
-    let cap = Model::SphereCone { radius, half_angle }.sample(2.0 * radius + pitch.x, pitch)?;
-    let deep = tip.shape().mapv(|p| p.max(OUTSIDE));
-    morphology::erode(deep.view(), cap.shape(), &Progress::new())
+    let mut shape = tip.shape().to_owned();
+    let [rows, columns] = [shape.nrows() / 2, shape.ncols() / 2];
+    ndarray::Zip::indexed(&mut shape).par_for_each(|(r, c), p| {
+        let x = (c as f64 - columns as f64) * pitch.x;
+        let y = (r as f64 - rows as f64) * pitch.y;
+        let depth = cap
+            .iter()
+            .map(|&[dx, dy, depth]| tip.depth_at(x - dx, y - dy) - depth)
+            // `max` passes over the NaN beyond the grid.
+            .fold(f64::NEG_INFINITY, f64::max);
+        *p = -depth as f32;
+    });
+    shape
 }
 
 /// A shape brought to its apex: lowered by `apex`, or by the height of its own centre.
 fn raised(mut shape: Array2<f32>, apex: Option<f32>, pitch: Pitch) -> Result<Tip> {
     let centre = (shape.nrows() / 2, shape.ncols() / 2);
     let apex = apex.unwrap_or(shape[centre]);
-    shape.mapv_inplace(|p| match p {
-        p if p < 0.5 * OUTSIDE => f32::NEG_INFINITY,
-        p => (p - apex).min(0.0),
-    });
+    shape.mapv_inplace(|p| (p - apex).min(0.0));
     shape[centre] = 0.0;
     Tip::new(shape, pitch)
 }

@@ -7,7 +7,11 @@
 //! called touched, share of intervals low..high that hold the truth, median width of the interval.
 //! `--model-fit` tells how well the model fit holds instead: mean and root mean square of its error,
 //! coverage and median width of its interval, share of values that it does not determine, share of
-//! contradictions with the corrected value. `--speed` times 64 lines instead. With `--short` it takes few scans and ends with status 1 when a figure is far off.
+//! contradictions with the corrected value. `--blind` tells how well widths hold with a tip from a
+//! separate scan of spikes, `--blind --trials N` also how drawn intervals compare with the budget's.
+//! `--speed` times 64 lines instead. With `--short` it takes few scans and ends with status 1 when a figure is far off.
+
+mod blind;
 
 use std::process::ExitCode;
 use truewidth::dimensions::{
@@ -654,6 +658,16 @@ fn heading() {
     println!("|---|---|---|---|---|---|---|---|---|---|---|");
 }
 
+fn done(result: Result<()>) -> ExitCode {
+    match result {
+        Ok(()) => ExitCode::SUCCESS,
+        Err(error) => {
+            eprintln!("{error}");
+            ExitCode::FAILURE
+        }
+    }
+}
+
 fn main() -> ExitCode {
     let arguments: Vec<String> = std::env::args().skip(1).collect();
     let number = |name: &str| {
@@ -666,6 +680,10 @@ fn main() -> ExitCode {
     let only = number("--only");
     let verbose = arguments.iter().any(|a| a == "--verbose");
     let model_fit = arguments.iter().any(|a| a == "--model-fit");
+    if arguments.iter().any(|a| a == "--blind") {
+        let trials = number("--trials").and_then(|n| usize::try_from(n).ok());
+        return done(blind::run(count, first, trials, verbose));
+    }
     if model_fit {
         println!(
             "| measurand | tip R, half-angle | wall | noise | n | error | rms | coverage | interval | not determined | contradicts | misfit |"
@@ -676,13 +694,7 @@ fn main() -> ExitCode {
     }
     let mut failed = false;
     if arguments.iter().any(|a| a == "--speed") {
-        return match speed() {
-            Ok(()) => ExitCode::SUCCESS,
-            Err(error) => {
-                eprintln!("{error}");
-                ExitCode::FAILURE
-            }
-        };
+        return done(speed());
     }
     for (index, case) in cases().iter().enumerate() {
         if only.is_some_and(|o| o != index as u64) {
