@@ -10,6 +10,7 @@ mod lattice;
 mod line_width;
 mod model_fit;
 mod particle;
+mod particle_histogram;
 mod pitch;
 mod roughness;
 mod sections;
@@ -27,6 +28,7 @@ mod wall;
 pub use evidence::{Evidence, MonteCarlo};
 pub use find::{Find, find};
 pub use model_fit::{Fitted, ModelFit, second_opinion};
+pub use particle_histogram::{ParticleHistogram, particle_histograms};
 
 use crate::error::{Error, ErrorKind, Result};
 use crate::heightmap::{HeightMap, Region};

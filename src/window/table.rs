@@ -5,8 +5,10 @@ use super::command::Command;
 use super::fields::{caution, fact, heading, remark};
 use super::format;
 use super::marks::{Mark, mark_ui};
+use super::particle_bars::bars_ui;
+use super::second_opinions::evidence_ui;
 use super::state::request_of;
-use crate::dimensions::{Dimension, Request, Status};
+use crate::dimensions::{Dimension, Kind, Request, Status, particle_histograms};
 use crate::uncertainty::{Component, Distribution};
 use eframe::egui::{Align, Layout, RichText, ScrollArea, Ui};
 use egui_extras::{Column, TableBuilder};
@@ -78,7 +80,9 @@ pub fn results_ui(ui: &mut Ui, results: &Results, out: &mut Vec<Command>) {
                 ScrollArea::vertical()
                     .id_salt("particulars")
                     .auto_shrink(false)
-                    .show(ui, |ui| particulars(ui, line));
+                    .show(ui, |ui| {
+                        particulars(ui, line, |ui| particles_ui(ui, line, lines, results));
+                    });
             });
         }
     });
@@ -188,8 +192,23 @@ fn status_ui(ui: &mut Ui, line: &Dimension) {
     }
 }
 
-/// Everything about one line.
-fn particulars(ui: &mut Ui, line: &Dimension) {
+/// Heights and diameters of all particles of the line's request.
+fn particles_ui(ui: &mut Ui, line: &Dimension, lines: &[Dimension], results: &Results) {
+    if line.kind != Kind::Particle {
+        return;
+    }
+    let of = |l: &Dimension| request_of(results.requests, l);
+    let own = of(line);
+    let mine = lines.iter().filter(|l| of(l) == own);
+    let histograms = particle_histograms(mine);
+    if !histograms.is_empty() {
+        heading(ui, "All particles listed");
+        bars_ui(ui, &histograms);
+    }
+}
+
+/// Everything about one line; `between` comes before budget and assumptions.
+fn particulars(ui: &mut Ui, line: &Dimension, between: impl FnOnce(&mut Ui)) {
     heading(ui, &format!("{}: {}", line.name, quantity(line)));
     remark(ui, meaning(line));
     for flag in &line.flags {
@@ -205,6 +224,8 @@ fn particulars(ui: &mut Ui, line: &Dimension) {
         );
         fact(ui, "k", format::significant(k, 3));
     }
+    evidence_ui(ui, line);
+    between(ui);
     if !line.budget.is_empty() {
         heading(ui, "Budget");
         for c in &line.budget {

@@ -8,6 +8,7 @@ use super::later::Later;
 use super::legend;
 use super::map_marks;
 use super::marks::{Sample, grid, reach, samples_ui, title_ui, x_axis, y_axis};
+use super::reach_view::{ReachView, reach_ui};
 use super::state::ColourSpan;
 use super::tip_evidence::{EvidenceView, evidence_ui};
 use super::tip_shape_view::{ShapeView, shape_ui};
@@ -101,6 +102,8 @@ pub enum Sheet {
     Shape,
     /// Where the scan showed the tip.
     Evidence,
+    /// What the tip reaches of a planned feature.
+    Reach,
 }
 
 /// State of the tip's view.
@@ -113,6 +116,7 @@ pub struct TipView {
     second: Option<(MapRef, [TipCurves; 2])>,
     shape: ShapeView,
     evidence: EvidenceView,
+    reach: ReachView,
 }
 
 /// What the view shows.
@@ -173,6 +177,7 @@ pub fn tip_ui(ui: &mut Ui, on: &OnTip, view: &mut TipView) {
         (Sheet::Evidence, Some(level)) => {
             evidence_ui(ui, plots, found, level, &mut view.evidence);
         }
+        (Sheet::Reach, _) => reach_ui(ui, plots, found, &mut view.reach),
         _ => profiles_ui(ui, plots, found, view),
     }
 }
@@ -191,6 +196,11 @@ fn sheets_ui(ui: &mut Ui, row: Rect, sheet: &mut Sheet) {
                 Sheet::Evidence,
                 "Evidence",
                 "Where on the scan the tip was seen",
+            ),
+            (
+                Sheet::Reach,
+                "Reach",
+                "What the tip reaches of a planned trench, ridge, grating or particle",
             ),
         ] {
             let label = ui.selectable_label(*sheet == which, name);
