@@ -184,6 +184,17 @@ impl Request {
     }
 }
 
+/// Index of the request a result line answers: names are the request's, with what was found
+/// appended where one request gives several.
+pub fn request_of(requests: &[Request], line: &Dimension) -> Option<usize> {
+    requests
+        .iter()
+        .enumerate()
+        .filter(|(_, r)| r.kind == line.kind && line.name.starts_with(&r.name))
+        .max_by_key(|(_, r)| r.name.len())
+        .map(|(i, _)| i)
+}
+
 /// How a step height is taken.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
 #[serde(rename_all = "kebab-case")]

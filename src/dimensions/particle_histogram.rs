@@ -35,12 +35,10 @@ impl ParticleHistogram {
 /// None of a quantity with fewer than three values. Bins are 1, 2 or 5 times a power of ten wide,
 /// not below Freedman and Diaconis' 2 IQR n^(-1/3) (Z. Wahrscheinlichkeitstheorie 57, 453 (1981),
 /// from memory), nor below the mean standard uncertainty: finer bins would show noise.
-pub fn particle_histograms<'a>(
-    lines: impl Iterator<Item = &'a Dimension> + Clone,
-) -> Vec<ParticleHistogram> {
+pub fn particle_histograms(lines: &[&Dimension]) -> Vec<ParticleHistogram> {
     let of = |quantity: &str| {
         let single = lines
-            .clone()
+            .iter()
             .filter(|l| l.kind == Kind::Particle && l.quantity == quantity);
         let scanned: Vec<f64> = single
             .clone()
@@ -126,6 +124,10 @@ mod tests {
     use super::super::{CorrectedValue, Request, Value, answer};
     use super::*;
 
+    fn histograms_of(lines: &[Dimension]) -> Vec<ParticleHistogram> {
+        particle_histograms(&lines.iter().collect::<Vec<_>>())
+    }
+
     fn line(quantity: &str, scanned: f64, corrected: Option<f64>, u: f64) -> Dimension {
         let request = Request::new("particles", Kind::Particle);
         let mut line = answer(&request, Kind::Particle, quantity, "nm", "");
@@ -153,7 +155,7 @@ mod tests {
             lines.push(line("height", h, Some(h), 0.1));
             lines.push(line("diameter", h + 8.0, (i > 0).then_some(h), 0.1));
         }
-        let all = particle_histograms(lines.iter());
+        let all = histograms_of(&lines);
         assert_eq!(all.len(), 2);
         // 2 IQR n^(-1/3) = 2 * 5 / 2.714 = 3.7, so bins of 5 nm: [10, 15) and [15, 20).
         assert_eq!((all[0].from, all[0].step), (10.0, 5.0));
@@ -169,12 +171,12 @@ mod tests {
         let lines: Vec<Dimension> = (0..9)
             .map(|i| line("height", 10.0 + 0.01 * f64::from(i), None, 0.4))
             .collect();
-        assert_eq!(particle_histograms(lines.iter())[0].step, 0.5);
-        assert!(particle_histograms(lines[..2].iter()).is_empty());
+        assert_eq!(histograms_of(&lines)[0].step, 0.5);
+        assert!(histograms_of(&lines[..2]).is_empty());
         let same: Vec<Dimension> = (0..4)
             .map(|_| line("height", 7.0, Some(7.0), 0.0))
             .collect();
-        let found = particle_histograms(same.iter());
+        let found = histograms_of(&same);
         assert_eq!(found[0].corrected.iter().sum::<usize>(), 4);
     }
 }

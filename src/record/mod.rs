@@ -40,6 +40,7 @@ mod format;
 mod json;
 mod known;
 mod maps;
+mod particles;
 mod raster;
 mod report;
 mod results;
@@ -51,7 +52,7 @@ mod tests;
 mod tip_shape;
 mod tips;
 
-use crate::dimensions::{Fitted, ModelFit, MonteCarlo};
+use crate::dimensions::{Fitted, ModelFit, MonteCarlo, ParticleHistogram};
 use crate::error::{Error, Result};
 use crate::files;
 use crate::job::{Job, Outcome, TipResult};
@@ -182,6 +183,11 @@ pub fn fit_verdict(fit: &ModelFit) -> &'static str {
 /// Whether the draws agree with the budget, in a few words.
 pub fn drawn_verdict(drawn: &MonteCarlo) -> &'static str {
     results::drawn_verdict(drawn)
+}
+
+/// A histogram for those who do not see it.
+pub fn histogram_words(histogram: &ParticleHistogram) -> String {
+    particles::words(histogram)
 }
 
 /// The tip's read-outs and diagnosis as text for a terminal.

@@ -73,24 +73,7 @@ fn plot_ui(ui: &mut Ui, rect: Rect, histogram: &ParticleHistogram) {
             });
             plot.bar_chart(BarChart::new("as scanned", hollow.collect()).allow_hover(false));
         });
-    response
-        .response
-        .widget_info(|| WidgetInfo::labeled(Role::Image, true, in_words(histogram)));
-}
-
-/// The histogram for those who do not see it.
-pub fn in_words(histogram: &ParticleHistogram) -> String {
-    let bins = (0..histogram.corrected.len()).map(|i| {
-        let [low, _, high] = histogram.bin(i);
-        format!(
-            "{} to {} {}: {} as scanned, {} corrected",
-            super::format::significant(low, 4),
-            super::format::significant(high, 4),
-            histogram.unit,
-            histogram.as_scanned[i],
-            histogram.corrected[i]
-        )
+    response.response.widget_info(|| {
+        WidgetInfo::labeled(Role::Image, true, crate::record::histogram_words(histogram))
     });
-    let bins: Vec<String> = bins.collect();
-    format!("Histogram of {}s. {}", histogram.quantity, bins.join("; "))
 }

@@ -199,8 +199,8 @@ fn particles_ui(ui: &mut Ui, line: &Dimension, lines: &[Dimension], results: &Re
     }
     let of = |l: &Dimension| request_of(results.requests, l);
     let own = of(line);
-    let mine = lines.iter().filter(|l| of(l) == own);
-    let histograms = particle_histograms(mine);
+    let mine: Vec<&Dimension> = lines.iter().filter(|l| of(l) == own).collect();
+    let histograms = particle_histograms(&mine);
     if !histograms.is_empty() {
         heading(ui, "All particles listed");
         bars_ui(ui, &histograms);

@@ -14,7 +14,7 @@ use super::tip_evidence::{EvidenceView, evidence_ui};
 use super::tip_shape_view::{ShapeView, shape_ui};
 use super::view::View;
 use crate::heightmap::Profile;
-use crate::job::TipResult;
+use crate::job::{TipResult, Way};
 use crate::leveling::Leveled;
 use crate::tip::Tip;
 use eframe::egui::accesskit::Role;
@@ -37,6 +37,8 @@ pub struct TipCurves {
     pub band: (Vec<f64>, Vec<f64>, Vec<f64>),
     /// The fitted sphere, to its fit depth.
     pub sphere: Vec<[f64; 2]>,
+    /// The tip that the other way gives, for one from a known shape.
+    pub other_way: Vec<[f64; 2]>,
 }
 
 impl TipCurves {
@@ -78,6 +80,13 @@ pub fn tip_curves(found: &TipResult, azimuth_deg: f64) -> TipCurves {
                 curves.band.2.push(f64::from(low.max(*high)));
             }
         }
+    }
+    if let Some((known, way)) = found.known.as_deref() {
+        let other = match way {
+            Way::ModelFit => &known.free_form.tip,
+            Way::FreeForm => &known.tip,
+        };
+        curves.other_way = finite(&profile(other));
     }
     if let Some(r) = &found.read_out.apex_radius {
         let depth = r.fit_depth_nm.min(r.value);
@@ -340,6 +349,13 @@ fn profile_ui(
     if second.is_some() {
         samples.push((Sample::Line(1.3), p.text, "second tip"));
     }
+    let other_way = found.known.as_deref().map(|(_, way)| match way {
+        Way::ModelFit => "free form",
+        Way::FreeForm => "model fit",
+    });
+    if let Some(name) = other_way {
+        samples.push((Sample::Line(1.6), p.good, name));
+    }
     if !curves.sphere.is_empty() {
         let name = if second.is_some() {
             "radius"
@@ -362,7 +378,7 @@ fn profile_ui(
     let mut head = Rect::from_min_size(rect.min, vec2(rect.width(), 22.0));
     let unit = unit_for(reach(curves.tip.iter(), 0));
     title_ui(ui, head, name, unit.sign);
-    if second.is_some() {
+    if samples.len() > 4 {
         // One sample more than the line of the title holds; a line of its own needs no room for it.
         head = head.translate(vec2(0.0, 18.0));
         head.min.x -= 80.0;
@@ -421,6 +437,14 @@ fn profile_ui(
                 .width(2.2)
                 .allow_hover(false),
         );
+        if !curves.other_way.is_empty() {
+            plot.line(
+                Line::new("other way", PlotPoints::new(curves.other_way.clone()))
+                    .color(p.good)
+                    .width(1.4)
+                    .allow_hover(false),
+            );
+        }
         if !curves.sphere.is_empty() {
             plot.line(
                 Line::new("apex radius", PlotPoints::new(curves.sphere.clone()))
