@@ -189,16 +189,16 @@ pub fn value_and_u_row<T>(
     let mut taken = [None, None];
     row_labelled(ui, name, help, |ui| {
         ui.horizontal(|ui| {
-            let mut field = |ui: &mut Ui, k: usize, hint: &str| {
+            let mut field = |ui: &mut Ui, k: usize, hint: &str, width: f32| {
                 let shown = refused[k].as_ref().map_or(texts[k], |(text, _)| text);
                 let id = scope.with(("text", name, k));
-                let (response, text) = edit(ui, id, shown, hint, 64.0);
+                let (response, text) = edit(ui, id, shown, hint, width);
                 taken[k] = text;
                 response
             };
-            let value = field(ui, 0, hint);
+            let value = field(ui, 0, hint, 64.0);
             ui.label("±");
-            field(ui, 1, "exact")
+            field(ui, 1, "exact", 74.0)
                 .on_hover_text("Its standard uncertainty")
                 .accessible_name(format!("Standard uncertainty of {}", name.to_lowercase()));
             value

@@ -250,7 +250,7 @@ pub fn both_ways_ui(ui: &mut Ui, found: &TipResult) {
             ui.label("");
             for (way, name, help) in WAYS {
                 let name = if *used == way {
-                    format!("{name} ✔")
+                    format!("{name}, used")
                 } else {
                     name.to_owned()
                 };
@@ -264,11 +264,6 @@ pub fn both_ways_ui(ui: &mut Ui, found: &TipResult) {
                 ui.end_row();
             }
         });
-    let corrects = match used {
-        Way::ModelFit => "The model fit corrects.",
-        Way::FreeForm => "The free form corrects.",
-    };
-    remark(ui, corrects);
     let reasons = known.read_out.reasons.iter();
     for reason in reasons.chain(&known.free_form.read_out.reasons) {
         if !found.diagnosis.contains(reason) {
@@ -336,34 +331,48 @@ fn ways(known: &Known) -> [[String; 3]; 3] {
 }
 
 fn influences_ui(ui: &mut Ui, known: &Known) {
+    let read = &known.read_out;
+    let radius_u = read.apex_radius.map(|r| r.u);
+    let angle_u = read.half_angle.as_ref().map(|a| a.u);
     let doubtful = known.influences.iter().filter(|i| i.certified.u > 0.0);
     for (k, i) in doubtful.enumerate() {
         if k == 0 {
-            heading(ui, "What the certificate does");
+            heading(ui, "One u of the certificate moves");
         }
+        // A hundredth of the read-out's own u is next to nothing.
+        let moved =
+            |by: Option<f64>, u: Option<f64>| by.filter(|b| b.abs() > 0.01 * u.unwrap_or(0.0));
+        let mut moves = Vec::new();
+        if let Some(nm) = moved(i.radius_nm, radius_u) {
+            moves.push(format!("radius {} nm", signed(nm)));
+        }
+        if let Some(deg) = moved(i.half_angle_deg, angle_u) {
+            moves.push(format!("half-angle {}°", signed(deg)));
+        }
+        let text = match (moves.is_empty(), i.radius_nm.or(i.half_angle_deg)) {
+            (false, _) => moves.join("\n"),
+            (true, Some(_)) => "next to nothing".to_owned(),
+            (true, None) => "not determined".to_owned(),
+        };
         let unit = if i.quantity.unit() == "deg" {
             "°"
         } else {
             " nm"
         };
-        let mut moves = Vec::new();
-        if let Some(nm) = i.radius_nm {
-            moves.push(format!("radius {} nm", signed(nm)));
-        }
-        if let Some(deg) = i.half_angle_deg {
-            moves.push(format!("half-angle {}°", signed(deg)));
-        }
-        let name = i.quantity.name();
-        let adjusted = format::with_u(i.adjusted.value, Some(i.adjusted.u));
-        let text = match moves.is_empty() {
-            true => format!("{adjusted}{unit} after the fit"),
-            false => format!("one u of it: {}", moves.join(", ")),
-        };
-        fact(ui, name, text).on_hover_text(format!(
-            "Certified {}{unit}; certificate and scan together {adjusted}{unit}",
+        fact(ui, &spoken(i.quantity.name()), text).on_hover_text(format!(
+            "Certified {}{unit}; certificate and scan together {}{unit}",
             format::with_u(i.certified.value, Some(i.certified.u)),
+            format::with_u(i.adjusted.value, Some(i.adjusted.u))
         ));
     }
+}
+
+/// "corner-radius" as people write it.
+fn spoken(key: &str) -> String {
+    let words = key.replace('-', " ");
+    let mut letters = words.chars();
+    let first = letters.next().map(|c| c.to_uppercase().to_string());
+    first.unwrap_or_default() + letters.as_str()
 }
 
 fn signed(value: f64) -> String {

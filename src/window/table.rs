@@ -66,7 +66,7 @@ pub fn results_ui(ui: &mut Ui, results: &Results, out: &mut Vec<Command>) {
     let chosen = results.line.and_then(|i| lines.get(i));
     let wide = ui.available_width();
     let side = if chosen.is_some() && wide > 760.0 {
-        (0.32 * wide).clamp(300.0, 460.0)
+        (0.32 * wide).clamp(290.0, 460.0)
     } else {
         0.0
     };
@@ -95,16 +95,23 @@ fn table(ui: &mut Ui, lines: &[Dimension], results: &Results, out: &mut Vec<Comm
         ui.label(RichText::new(text).color(p.faint))
             .on_hover_text(help);
     };
+    // Beside the particulars of a line names and quantities give way.
+    let narrow = ui.available_width() < 740.0;
+    let [name, quantity_wide, status_wide] = match narrow {
+        true => [66.0, 98.0, 74.0],
+        false => [116.0, 126.0, 110.0],
+    };
     TableBuilder::new(ui)
+        .id_salt(("results", narrow))
         .striped(true)
         .cell_layout(Layout::left_to_right(Align::Center))
         .auto_shrink(false)
-        .column(Column::initial(116.0).at_least(70.0).clip(true))
-        .column(Column::initial(126.0).at_least(80.0).clip(true))
-        .column(Column::initial(124.0).at_least(90.0))
-        .column(Column::initial(124.0).at_least(90.0))
-        .column(Column::initial(130.0).at_least(90.0))
-        .column(Column::remainder().at_least(110.0).clip(true))
+        .column(Column::initial(name).at_least(60.0).clip(true))
+        .column(Column::initial(quantity_wide).at_least(80.0).clip(true))
+        .column(Column::initial(if narrow { 114.0 } else { 124.0 }).at_least(90.0))
+        .column(Column::initial(if narrow { 112.0 } else { 124.0 }).at_least(90.0))
+        .column(Column::initial(if narrow { 122.0 } else { 130.0 }).at_least(90.0))
+        .column(Column::remainder().at_least(status_wide).clip(true))
         .header(24.0, |mut row| {
             row.col(|ui| {
                 ui.add_space(9.0);

@@ -104,7 +104,7 @@ fn second_opinions_stand_in_the_particulars() {
     for text in [
         "The model fit contradicts the corrected value.",
         "108.20 nm, u = 0.60 nm; contradicts",
-        "107.0 … 109.4 nm",
+        "107.00 … 109.40 nm",
         "not determined (steeper than the tip); at least 74°",
         "97.7 … 103.2 nm; agrees with the budget",
         "100.5 ± 1.2 nm, 998 of 1000 trials",
@@ -247,9 +247,9 @@ fn a_gauge_shows_both_ways_and_its_certificate() {
     window.run_steps(4);
     for text in [
         "Both ways",
-        "Model fit ✔",
+        "Model fit, used",
         "Free form",
-        "What the certificate does",
+        "One u of the certificate moves",
     ] {
         assert!(window.query_by_label(text).is_some(), "{text}");
     }
