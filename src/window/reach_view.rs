@@ -227,7 +227,8 @@ fn wish_ui(ui: &mut Ui, wish: &mut Wish) {
 fn figures_ui(ui: &mut Ui, plan: &Plan) {
     heading(ui, "What this tip does");
     let (rows, notes) = record::reach_rows(plan);
-    for (name, text) in rows {
+    // The first tells the feature, which stands above.
+    for (name, text) in rows.into_iter().skip(1) {
         let mut letters = name.chars();
         let first = letters.next().map(|c| c.to_uppercase().to_string());
         fact(ui, &(first.unwrap_or_default() + letters.as_str()), text);

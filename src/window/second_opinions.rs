@@ -9,15 +9,16 @@ use crate::job::MonteCarloSpec;
 use crate::record;
 use eframe::egui::Ui;
 
-/// Trials that are begun with: enough for two digits of an interval's end.
-const TRIALS: usize = 1000;
+/// Trials that are begun with: some seconds' worth.
+const TRIALS: usize = 200;
 
 const FIT_COSTS: &str = "A line, a trench, a step, a grating or a ball is scanned by the tip and \
-    fitted to the scan by least squares. It changes no value, it only agrees or contradicts. \
-    It takes from a tenth of a second to some seconds for each dimension.";
+    fitted to the scan by least squares. It changes no value: it agrees or contradicts.\n\
+    Costs some seconds for a job, more with many particles. Stop (Esc) ends it.";
 const DRAW_COSTS: &str = "Noise, levelling, tip, reconstruction and dimensions are drawn together, \
-    again and again (JCGM 101). It gives a second interval. Each trial takes about as long as \
-    surface and dimensions take once: 1000 trials, from some seconds to minutes. Stop (Esc) ends it.";
+    again and again (JCGM 101): a second interval beside the budget's.\n\
+    Each trial costs about as much as surface and dimensions do once: 200 trials some seconds, \
+    thousands some minutes. Stop (Esc) ends it.";
 
 /// The two settings of the job.
 pub fn opinions_ui(ui: &mut Ui, panel: &Panel, out: &mut Vec<Command>) {

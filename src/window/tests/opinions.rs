@@ -122,14 +122,14 @@ fn second_opinions_are_settings_that_can_be_undone_and_bad_ones_are_refused() {
     click(&mut window, "Fit a model as a second opinion");
     assert!(job(&window).model_fit);
     click(&mut window, "Monte Carlo of the whole chain");
-    assert_eq!(job(&window).monte_carlo.unwrap().trials, 1000);
+    assert_eq!(job(&window).monte_carlo.unwrap().trials, 200);
     type_into(&mut window, "Trials", "0");
     // Typed behind what stood there.
-    assert_eq!(job(&window).monte_carlo.unwrap().trials, 10_000);
+    assert_eq!(job(&window).monte_carlo.unwrap().trials, 2_000);
     type_into(&mut window, "Trials", "00000");
-    assert_eq!(job(&window).monte_carlo.unwrap().trials, 10_000);
+    assert_eq!(job(&window).monte_carlo.unwrap().trials, 2_000);
     assert!(app(&window).message.as_ref().is_some_and(|m| m.failed));
-    for (fit, trials) in [(true, Some(1000)), (true, None), (false, None)] {
+    for (fit, trials) in [(true, Some(200)), (true, None), (false, None)] {
         window.state_mut().as_mut().unwrap().execute(Command::Undo);
         let job = job(&window);
         assert_eq!(job.model_fit, fit);
