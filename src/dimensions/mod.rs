@@ -1,5 +1,7 @@
 //! Dimensions, as scanned and corrected. One small file per kind of measurand.
 
+#[cfg(test)]
+mod closed_forms;
 mod distance;
 mod erosion;
 mod evidence;
@@ -10,6 +12,7 @@ mod lattice;
 mod line_width;
 mod model_fit;
 mod particle;
+mod particle_histogram;
 mod pitch;
 mod roughness;
 mod scanner;
@@ -20,8 +23,6 @@ mod statistics;
 mod step_height;
 mod step_histogram;
 #[cfg(test)]
-mod closed_forms;
-#[cfg(test)]
 mod tests;
 mod texture;
 mod trace;
@@ -30,6 +31,7 @@ mod wall;
 pub use evidence::{Evidence, MonteCarlo};
 pub use find::{Find, find};
 pub use model_fit::{Fitted, ModelFit, second_opinion};
+pub use particle_histogram::{ParticleHistogram, particle_histograms};
 pub use scanner::Scanner;
 
 use crate::error::{Error, ErrorKind, Result};
@@ -184,6 +186,17 @@ impl Request {
         }
         Ok(())
     }
+}
+
+/// Index of the request a result line answers: names are the request's, with what was found
+/// appended where one request gives several.
+pub fn request_of(requests: &[Request], line: &Dimension) -> Option<usize> {
+    requests
+        .iter()
+        .enumerate()
+        .filter(|(_, r)| r.kind == line.kind && line.name.starts_with(&r.name))
+        .max_by_key(|(_, r)| r.name.len())
+        .map(|(i, _)| i)
 }
 
 /// How a step height is taken.

@@ -25,6 +25,18 @@ pub enum KnownShape {
     Spike,
 }
 
+impl KnownShape {
+    /// Keys of its certified values.
+    pub fn keys(self) -> &'static [&'static str] {
+        match self {
+            Self::Ridges => &["width", "height", "pitch", "wall-angle", "corner-radius"],
+            Self::Step => &["height", "wall-angle", "corner-radius"],
+            Self::Sphere => &["diameter"],
+            Self::Spike => &["radius", "half-angle"],
+        }
+    }
+}
+
 /// `[tip] use`: which of the two ways supplies the tip.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Default, Serialize, Deserialize)]
 #[serde(rename_all = "kebab-case")]
@@ -136,6 +148,45 @@ fn angle(value: Option<f64>, u: Option<f64>) -> Option<Certified> {
 }
 
 impl KnownSpec {
+    /// Of a shape, nothing certified yet.
+    pub fn new(shape: KnownShape) -> Self {
+        Self {
+            shape,
+            width: None,
+            height: None,
+            pitch: None,
+            wall_angle: None,
+            corner_radius: None,
+            diameter: None,
+            radius: None,
+            half_angle: None,
+            u_width: None,
+            u_height: None,
+            u_pitch: None,
+            u_wall_angle: None,
+            u_corner_radius: None,
+            u_diameter: None,
+            u_radius: None,
+            u_half_angle: None,
+        }
+    }
+
+    /// The same values as far as another shape has them.
+    #[must_use]
+    pub fn with_shape(&self, shape: KnownShape) -> Self {
+        let has = |key| shape.keys().contains(&key);
+        let straight = has("height");
+        Self {
+            height: self.height.filter(|_| straight),
+            u_height: self.u_height.filter(|_| straight),
+            wall_angle: self.wall_angle.filter(|_| straight),
+            u_wall_angle: self.u_wall_angle.filter(|_| straight),
+            corner_radius: self.corner_radius.filter(|_| straight),
+            u_corner_radius: self.u_corner_radius.filter(|_| straight),
+            ..Self::new(shape)
+        }
+    }
+
     /// The shape stated. Errors of kind `Setting`: a key missing or of another shape, a value that
     /// cannot be, an uncertainty without its value.
     pub fn to_shape(&self) -> Result<Shape> {
@@ -174,12 +225,7 @@ impl KnownSpec {
                 self.u_half_angle.is_some(),
             ),
         ];
-        let own: &[&str] = match self.shape {
-            KnownShape::Ridges => &["width", "height", "pitch", "wall-angle", "corner-radius"],
-            KnownShape::Step => &["height", "wall-angle", "corner-radius"],
-            KnownShape::Sphere => &["diameter"],
-            KnownShape::Spike => &["radius", "half-angle"],
-        };
+        let own = self.shape.keys();
         for (key, stated, u) in keys {
             if (stated || u) && !own.contains(&key) {
                 return fail(

@@ -197,6 +197,9 @@ impl Stages {
         spec.validate()?;
         let mut outcome = Outcome::default();
 
+        // Second opinions take longer than all before them.
+        let slow = spec.model_fit || spec.monte_carlo.is_some();
+        let (whole, progress) = (progress, &progress.part(0.0, if slow { 0.4 } else { 1.0 }));
         let scan = self.scan(job, progress)?;
         outcome.scan = Some(Arc::clone(&scan));
         watch(&outcome);
@@ -249,12 +252,16 @@ impl Stages {
             spec.dimensions.clone(),
             spec.model_fit,
         );
-        let until = if spec.monte_carlo.is_some() {
-            0.92
-        } else {
-            1.0
+        let (from, until) = match (slow, spec.model_fit, spec.monte_carlo) {
+            (false, ..) => (0.9, 1.0),
+            (true, true, Some(_)) => (0.36, 0.6),
+            (true, false, Some(_)) => (0.36, 0.42),
+            (true, _, None) => (0.36, 1.0),
         };
-        let part = progress.part(0.9, until);
+        if spec.model_fit {
+            progress.say("measuring, and fitting a model");
+        }
+        let part = whole.part(from, until);
         let measured = self
             .dimensions
             .get(key, || measure(&level, &outcome, spec, &part))?;
@@ -263,7 +270,7 @@ impl Stages {
             watch(&outcome);
             progress.say("drawing the whole chain");
             let key = (Same(Arc::clone(&measured)), spec.level.clone(), drawn);
-            let part = progress.part(until, 1.0);
+            let part = whole.part(until, 1.0);
             outcome.dimensions = Some(self.monte_carlo.get(key, || {
                 monte_carlo::draw(&level, &outcome, spec, &drawn, &measured, &part)
             })?);
@@ -275,7 +282,7 @@ impl Stages {
                     .to_owned(),
             );
         }
-        progress.report(1.0);
+        whole.report(1.0);
         watch(&outcome);
         Ok(outcome)
     }

@@ -40,6 +40,7 @@ mod format;
 mod json;
 mod known;
 mod maps;
+mod particles;
 mod raster;
 mod report;
 mod results;
@@ -51,6 +52,7 @@ mod tests;
 mod tip_shape;
 mod tips;
 
+use crate::dimensions::{Fitted, ModelFit, MonteCarlo, ParticleHistogram};
 use crate::error::{Error, Result};
 use crate::files;
 use crate::job::{Job, Outcome, TipResult};
@@ -161,6 +163,31 @@ pub fn reach_json(plan: &Plan) -> serde_json::Value {
 /// What a tip reaches of a planned feature as text for a terminal.
 pub fn reach_text(plan: &Plan) -> String {
     tips::reach_text(plan)
+}
+
+/// The rows (name and figures) of [`reach_text`], and its notes.
+pub fn reach_rows(plan: &Plan) -> (Vec<(String, String)>, Vec<String>) {
+    tips::reach_rows(plan)
+}
+
+/// A figure of a fitted model: "59.1 nm, u = 0.2 nm", or its bounds and why it is not determined.
+pub fn fitted_words(fitted: &Fitted) -> String {
+    results::fitted_words(fitted)
+}
+
+/// Whether a model fit agrees with the corrected value, in a word or two.
+pub fn fit_verdict(fit: &ModelFit) -> &'static str {
+    results::fit_verdict(fit)
+}
+
+/// Whether the draws agree with the budget, in a few words.
+pub fn drawn_verdict(drawn: &MonteCarlo) -> &'static str {
+    results::drawn_verdict(drawn)
+}
+
+/// A histogram for those who do not see it.
+pub fn histogram_words(histogram: &ParticleHistogram) -> String {
+    particles::words(histogram)
 }
 
 /// The tip's read-outs and diagnosis as text for a terminal.

@@ -3,6 +3,7 @@
 use super::format::{about, decimals_of, fixed, percent, plain};
 use super::known;
 use super::maps::{height_maps, reduction_note, reliability_map};
+use super::particles::particle_figures;
 use super::results::{budgets, evidence, greatest_change, results};
 use super::sections::{Section, surface_section, tip_figure};
 use super::svg::{escape, minus};
@@ -39,6 +40,7 @@ pub fn page(job: &Job, outcome: &Outcome, time: &str) -> Result<String> {
     inputs(&mut html, job, outcome);
     steps(&mut html, job, outcome);
     figures(&mut html, job, outcome)?;
+    particles(&mut html, job, outcome);
     tip_section(&mut html, outcome)?;
     budgets(&mut html, outcome);
     settings(&mut html, job);
@@ -345,6 +347,23 @@ fn figure(html: &mut String, drawing: &str, caption: &str) {
         html,
         "<figure>\n{drawing}\n<figcaption>{caption}</figcaption>\n</figure>"
     );
+}
+
+/// Heights and diameters of the particles listed, one figure for each request.
+fn particles(html: &mut String, job: &Job, outcome: &Outcome) {
+    let drawn: Vec<_> = particle_figures(job, outcome).collect();
+    if drawn.is_empty() {
+        return;
+    }
+    html.push_str("<section>\n<h2>Particles</h2>\n");
+    for (name, drawing) in drawn {
+        let caption = format!(
+            "{}: particles listed one by one. Filled: corrected. Dashed: as scanned.",
+            escape(name)
+        );
+        figure(html, &drawing, &caption);
+    }
+    html.push_str("</section>\n");
 }
 
 fn figures(html: &mut String, job: &Job, outcome: &Outcome) -> Result<()> {

@@ -6,7 +6,7 @@ use super::format::{
 };
 use super::report::{dimensions, list};
 use super::svg::{escape, minus};
-use crate::dimensions::{Dimension, Fitted};
+use crate::dimensions::{Dimension, Fitted, ModelFit, MonteCarlo};
 use crate::job::Outcome;
 use crate::uncertainty::{Component, Distribution};
 use std::fmt::Write;
@@ -149,8 +149,8 @@ pub fn evidence(html: &mut String, outcome: &Outcome) {
     html.push_str("</section>\n");
 }
 
-/// "59.1 nm, u = 0.2 nm", or its bounds, or why it has none.
-fn fitted_words(fitted: &Fitted) -> String {
+/// See [`super::fitted_words`].
+pub fn fitted_words(fitted: &Fitted) -> String {
     let bounds = match (fitted.low, fitted.high) {
         (Some(low), Some(high)) => {
             format!(
@@ -181,15 +181,29 @@ fn model_fit_cell(dimension: &Dimension) -> String {
         let reason = fit.reason.as_deref().unwrap_or("–");
         return format!("<span class=\"quiet\">{}</span>", escape(reason));
     };
-    let verdict = match fit.agrees {
+    format!(
+        "{}<br /><span class=\"quiet\">{}</span>",
+        escape(&minus(&fitted_words(value))),
+        fit_verdict(fit)
+    )
+}
+
+/// See [`super::fit_verdict`].
+pub fn fit_verdict(fit: &ModelFit) -> &'static str {
+    match fit.agrees {
         Some(true) => "agrees",
         Some(false) => "contradicts",
         None => "not comparable",
-    };
-    format!(
-        "{}<br /><span class=\"quiet\">{verdict}</span>",
-        escape(&minus(&fitted_words(value)))
-    )
+    }
+}
+
+/// See [`super::drawn_verdict`].
+pub fn drawn_verdict(drawn: &MonteCarlo) -> &'static str {
+    match drawn.agrees {
+        Some(true) => "agrees with the budget",
+        Some(false) => "differs from the budget",
+        None => "no interval to compare with",
+    }
 }
 
 fn monte_carlo_cell(dimension: &Dimension) -> String {
@@ -198,17 +212,13 @@ fn monte_carlo_cell(dimension: &Dimension) -> String {
     };
     let (low, u) = with_u(drawn.low, drawn.u, dimension.unit);
     let high = with_u(drawn.high, drawn.u, dimension.unit).0;
-    let verdict = match drawn.agrees {
-        Some(true) => "agrees with the budget",
-        Some(false) => "differs from the budget",
-        None => "no interval to compare with",
-    };
     format!(
-        "{} to {}<br /><span class=\"quiet\">u = {}; {} trials; {verdict}</span>",
+        "{} to {}<br /><span class=\"quiet\">u = {}; {} trials; {}</span>",
         escape(&minus(&low)),
         escape(&minus(&high)),
         escape(&u),
-        drawn.count
+        drawn.count,
+        drawn_verdict(drawn)
     )
 }
 

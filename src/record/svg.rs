@@ -114,6 +114,17 @@ impl Axis {
 /// Frame, ticks and labels of a plot whose x runs over `x` and whose y over `y` (drawn upwards
 /// or downwards as its coordinates say).
 pub fn frame(svg: &mut String, x: Axis, y: Axis, x_name: &str, y_name: &str) {
+    let (factor, unit) = axis_unit(y.low.abs().max(y.high.abs()));
+    let name = format!("{y_name} / {unit}");
+    frame_in(svg, x, y, x_name, &name, factor);
+}
+
+/// As [`frame()`], where y counts something.
+pub fn counting_frame(svg: &mut String, x: Axis, y: Axis, x_name: &str, y_name: &str) {
+    frame_in(svg, x, y, x_name, y_name, 1.0);
+}
+
+fn frame_in(svg: &mut String, x: Axis, y: Axis, x_name: &str, y_name: &str, y_factor: f64) {
     let (left, right) = (x.from.min(x.to), x.from.max(x.to));
     let (top, bottom) = (y.from.min(y.to), y.from.max(y.to));
     // Writing to a String cannot fail.
@@ -147,7 +158,7 @@ pub fn frame(svg: &mut String, x: Axis, y: Axis, x_name: &str, y_name: &str) {
         xy(bottom + 29.0),
         escape(x_name)
     );
-    let (factor, unit) = axis_unit(y.low.abs().max(y.high.abs()));
+    let factor = y_factor;
     let (low, high) = (y.low.min(y.high), y.low.max(y.high));
     let marks = ticks(
         low * factor,
@@ -168,7 +179,7 @@ pub fn frame(svg: &mut String, x: Axis, y: Axis, x_name: &str, y_name: &str) {
     let (cx, cy) = (left - 44.0, (top + bottom) / 2.0);
     let _ = write!(
         svg,
-        r#"<text class="mid name" transform="translate({} {}) rotate(-90)">{} / {unit}</text>"#,
+        r#"<text class="mid name" transform="translate({} {}) rotate(-90)">{}</text>"#,
         xy(cx),
         xy(cy),
         escape(y_name)

@@ -212,8 +212,8 @@ pub fn reach_json(plan: &Plan) -> Value {
     })
 }
 
-/// See [`super::reach_text`].
-pub fn reach_text(plan: &Plan) -> String {
+/// See [`super::reach_rows`].
+pub fn reach_rows(plan: &Plan) -> (Vec<(String, String)>, Vec<String>) {
     let reach = &plan.reach;
     // The band's figures in brackets, the sharper tip's first.
     let band = |of: &dyn Fn(&Reach) -> String| match (&plan.sharper, &plan.blunter) {
@@ -277,8 +277,14 @@ pub fn reach_text(plan: &Plan) -> String {
             format!("half-angle {} at the tip's radius", about(a, "deg")),
         ));
     }
-    let rows: Vec<(&str, String)> = rows.iter().map(|(n, v)| (n.as_str(), v.clone())).collect();
     let notes: Vec<String> = [&plan.bluntest.reasons[..], &plan.cautions[..]].concat();
+    (rows, notes)
+}
+
+/// See [`super::reach_text`].
+pub fn reach_text(plan: &Plan) -> String {
+    let (rows, notes) = reach_rows(plan);
+    let rows: Vec<(&str, String)> = rows.iter().map(|(n, v)| (n.as_str(), v.clone())).collect();
     let mut text = String::new();
     lines(&mut text, &rows, &notes);
     text

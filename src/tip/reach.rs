@@ -29,6 +29,8 @@ use ndarray::Array2;
 const FINE: f64 = 160.0;
 /// Most samples of a profile.
 const MOST_SAMPLES: f64 = 24_000.0;
+/// About so many samples of a profile are drawn.
+const DRAWN: usize = 600;
 /// Contacts this many samples apart still follow each other.
 const FOLLOWS: usize = 3;
 
@@ -84,6 +86,9 @@ pub struct Reach {
     pub widths: Vec<WidthAt>,
     /// What is touched.
     pub touched: Touched,
+    /// For drawing: place, height of the feature, height of its image, nm, over the feature and
+    /// about as much beside it.
+    pub profile: Vec<[f64; 3]>,
 }
 
 impl Reach {
@@ -203,7 +208,16 @@ pub fn reach(probe: &Probe, feature: &Feature, at: &[f64]) -> Result<Reach> {
             imaged_nm: profile.width(&image, low + at * imaged_nm, feature.is_hollow()),
         })
         .collect();
+    let shown = profile.within(match feature {
+        Feature::Grating { pitch, .. } => 1.5 * pitch,
+        _ => 2.0 * half + 0.5 * feature.wall().map_or(0.0, |w| w.1) + 0.25 * height,
+    });
     Ok(Reach {
+        profile: shown
+            .clone()
+            .step_by((shown.len() / DRAWN).max(1))
+            .map(|i| [profile.place(i), profile.surface[i], image[i]])
+            .collect(),
         height_nm: height,
         imaged_nm,
         widths,

@@ -402,6 +402,7 @@ impl App {
             BrowseFor::Save => self.execute(Command::SaveAs(path)),
             BrowseFor::Record => self.record_folder = Some(path),
             BrowseFor::Tip => self.change(|job| job.tip.file = Some(path)),
+            BrowseFor::TipScan => self.change(|job| job.tip.scan = Some(path)),
             BrowseFor::Second => self.execute(Command::LayOver(Some((path, None)))),
         }
     }
@@ -418,6 +419,7 @@ impl App {
             let mut now = opened.history.now().clone();
             now.scan.file.clone_from(&job.file.scan.file);
             now.tip.file.clone_from(&job.file.tip.file);
+            now.tip.scan.clone_from(&job.file.tip.scan);
             opened.history.mark_saved(job.file);
             opened.history.edit(now, false);
         }

@@ -134,6 +134,9 @@ impl Chores {
             let chosen = match purpose {
                 BrowseFor::Open => dialog.set_title("Open a scan or a job").pick_file(),
                 BrowseFor::Tip => dialog.set_title("Choose the tip's file").pick_file(),
+                BrowseFor::TipScan => dialog
+                    .set_title("Choose the scan that shows the tip")
+                    .pick_file(),
                 BrowseFor::Second => dialog.set_title("Choose a second tip").pick_file(),
                 BrowseFor::Save => dialog
                     .set_title("Save the job")

@@ -97,6 +97,8 @@ pub enum BrowseFor {
     Save,
     /// The tip's file.
     Tip,
+    /// The separate scan that shows the tip.
+    TipScan,
     /// The file of a second tip.
     Second,
     /// Folder of the record.

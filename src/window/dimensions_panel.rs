@@ -3,6 +3,7 @@
 use super::command::Command;
 use super::fields::{choice_row, heading, length_row, parsed_row, remark, text_row};
 use super::panels::{Panel, cautions, request_title};
+use super::second_opinions::opinions_ui;
 use super::state::{PLACEABLE, Tool, kind_name};
 use crate::dimensions::{Axis, Find, Kind, Request};
 use crate::heightmap::Region;
@@ -61,6 +62,7 @@ pub fn dimensions_ui(
         heading(ui, "The chosen one");
         ui.push_id(("request", i), |ui| request_ui(ui, panel, i, request, out));
     }
+    opinions_ui(ui, panel, out);
     cautions(ui, panel);
 }
 

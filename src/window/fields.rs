@@ -79,26 +79,34 @@ pub fn text_row(ui: &mut Ui, name: &str, help: &str, value: &str, hint: &str) ->
     let mut taken = None;
     row_labelled(ui, name, help, |ui| {
         let id = ui.scope_id().with(("text", name));
-        let mut draft = ui
-            .data(|d| d.get_temp::<String>(id))
-            .unwrap_or_else(|| value.to_owned());
         let width = ui.available_width().min(190.0);
-        let response = TextEdit::singleline(&mut draft)
-            .id(id.with("edit"))
-            .hint_text(hint)
-            .desired_width(width)
-            .ui(ui);
-        if response.has_focus() {
-            ui.data_mut(|d| d.insert_temp(id, draft));
-        } else if response.lost_focus() {
-            ui.data_mut(|d| d.remove::<String>(id));
-            if draft.trim() != value {
-                taken = Some(draft.trim().to_owned());
-            }
-        }
+        let (response, text) = edit(ui, id, value, hint, width);
+        taken = text;
         response
     });
     taken
+}
+
+/// The field itself.
+fn edit(ui: &mut Ui, id: Id, value: &str, hint: &str, width: f32) -> (Response, Option<String>) {
+    let mut taken = None;
+    let mut draft = ui
+        .data(|d| d.get_temp::<String>(id))
+        .unwrap_or_else(|| value.to_owned());
+    let response = TextEdit::singleline(&mut draft)
+        .id(id.with("edit"))
+        .hint_text(hint)
+        .desired_width(width)
+        .ui(ui);
+    if response.has_focus() {
+        ui.data_mut(|d| d.insert_temp(id, draft));
+    } else if response.lost_focus() {
+        ui.data_mut(|d| d.remove::<String>(id));
+        if draft.trim() != value {
+            taken = Some(draft.trim().to_owned());
+        }
+    }
+    (response, taken)
 }
 
 fn row_labelled(ui: &mut Ui, name: &str, help: &str, add: impl FnOnce(&mut Ui) -> Response) {
@@ -127,26 +135,97 @@ pub fn parsed_row<T>(
     parse: impl FnOnce(&str) -> Result<T, String>,
 ) -> Taken<T> {
     let id = ui.scope_id().with(("refused", name));
-    let refused = ui.data(|d| d.get_temp::<(String, String)>(id));
-    let mut taken = None;
+    let refused = ui.data(|d| d.get_temp::<Refused>(id));
     let shown = refused.as_ref().map_or(value, |(text, _)| text);
-    if let Some(text) = text_row(ui, name, help, shown, hint) {
-        ui.data_mut(|d| d.remove::<(String, String)>(id));
-        if text.is_empty() {
-            taken = Some(None);
-        } else {
-            match parse(&text) {
-                Ok(value) => taken = Some(Some(value)),
-                Err(why) => {
-                    ui.data_mut(|d| d.insert_temp(id, (text, why)));
-                }
-            }
-        }
-    } else if let Some((_, why)) = refused {
+    let text = text_row(ui, name, help, shown, hint);
+    if text.is_none() {
+        refused_ui(ui, refused);
+    }
+    text.and_then(|text| understood(ui, id, text, parse))
+}
+
+/// What was typed and why it is refused.
+type Refused = (String, String);
+
+fn refused_ui(ui: &mut Ui, refused: Option<Refused>) {
+    if let Some((_, why)) = refused {
         let p = Palette::of(ui);
         ui.label(RichText::new(why).color(p.bad).size(12.5));
     }
-    taken
+}
+
+/// Parses `text`; what is refused is kept under `id`.
+fn understood<T>(
+    ui: &Ui,
+    id: Id,
+    text: String,
+    parse: impl FnOnce(&str) -> Result<T, String>,
+) -> Taken<T> {
+    ui.data_mut(|d| d.remove::<Refused>(id));
+    if text.is_empty() {
+        return Some(None);
+    }
+    match parse(&text) {
+        Ok(value) => Some(Some(value)),
+        Err(why) => {
+            ui.data_mut(|d| d.insert_temp(id, (text, why)));
+            None
+        }
+    }
+}
+
+/// A value and its standard uncertainty, both understood by `parse`.
+pub fn value_and_u_row<T>(
+    ui: &mut Ui,
+    name: &str,
+    help: &str,
+    texts: [&str; 2],
+    hint: &str,
+    parse: impl Fn(&str) -> Result<T, String>,
+) -> [Taken<T>; 2] {
+    let scope = ui.scope_id();
+    let ids = [0, 1].map(|k: usize| scope.with(("refused", name, k)));
+    let refused = ids.map(|id| ui.data(|d| d.get_temp::<Refused>(id)));
+    let mut taken = [None, None];
+    row_labelled(ui, name, help, |ui| {
+        ui.horizontal(|ui| {
+            let mut field = |ui: &mut Ui, k: usize, hint: &str, width: f32| {
+                let shown = refused[k].as_ref().map_or(texts[k], |(text, _)| text);
+                let id = scope.with(("text", name, k));
+                let (response, text) = edit(ui, id, shown, hint, width);
+                taken[k] = text;
+                response
+            };
+            let value = field(ui, 0, hint, 64.0);
+            ui.label("±");
+            field(ui, 1, "exact", 74.0)
+                .on_hover_text("Its standard uncertainty")
+                .accessible_name(format!("Standard uncertainty of {}", name.to_lowercase()));
+            value
+        })
+        .inner
+    });
+    for (refused, taken) in refused.into_iter().zip(&taken) {
+        if taken.is_none() {
+            refused_ui(ui, refused);
+        }
+    }
+    let [value, u] = taken;
+    [
+        value.and_then(|text| understood(ui, ids[0], text, &parse)),
+        u.and_then(|text| understood(ui, ids[1], text, &parse)),
+    ]
+}
+
+/// A length as people write it.
+pub fn parse_length(text: &str) -> Result<Length, String> {
+    text.parse::<Length>().map_err(|e| e.to_string())
+}
+
+/// A bare number.
+pub fn parse_number(text: &str) -> Result<f64, String> {
+    let number = text.parse::<f64>().ok().filter(|v| v.is_finite());
+    number.ok_or_else(|| format!("\"{text}\" is not a number"))
 }
 
 /// A length with its unit; empty = `hint`.
@@ -158,9 +237,7 @@ pub fn length_row(
     hint: &str,
 ) -> Taken<Length> {
     let text = value.map_or(String::new(), |l| l.to_string());
-    parsed_row(ui, name, help, &text, hint, |text| {
-        text.parse::<Length>().map_err(|e| e.to_string())
-    })
+    parsed_row(ui, name, help, &text, hint, parse_length)
 }
 
 /// A bare number; empty = `hint`.
@@ -172,12 +249,7 @@ pub fn number_row(
     hint: &str,
 ) -> Taken<f64> {
     let text = value.map_or(String::new(), |v| v.to_string());
-    parsed_row(ui, name, help, &text, hint, |text| {
-        text.parse::<f64>()
-            .ok()
-            .filter(|v| v.is_finite())
-            .ok_or_else(|| format!("\"{text}\" is not a number"))
-    })
+    parsed_row(ui, name, help, &text, hint, parse_number)
 }
 
 /// One of several choices; returns the new one where it was changed.

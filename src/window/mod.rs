@@ -18,6 +18,7 @@ mod history;
 mod images;
 #[cfg(test)]
 mod invented;
+mod known_panel;
 mod laid_over;
 mod later;
 mod legend;
@@ -26,7 +27,10 @@ mod map_view;
 mod marks;
 mod open_dialog;
 mod panels;
+mod particle_bars;
+mod reach_view;
 mod record_view;
+mod second_opinions;
 mod section;
 mod settings;
 mod start;

@@ -1,6 +1,7 @@
 //! Plain state of the window: stages, tools, the view on the maps, the section line.
 
 use super::marks::Mark;
+pub use crate::dimensions::request_of;
 use crate::dimensions::{Dimension, Kind, Request};
 use crate::error::Error;
 use crate::heightmap::HeightMap;
@@ -278,17 +279,6 @@ pub enum ColourSpan {
     Full,
     /// All but the outermost half per cent at either end.
     Inner,
-}
-
-/// Index of the request a result line answers: names are the request's, with what was found
-/// appended where one request gives several.
-pub fn request_of(requests: &[Request], line: &Dimension) -> Option<usize> {
-    requests
-        .iter()
-        .enumerate()
-        .filter(|(_, r)| r.kind == line.kind && line.name.starts_with(&r.name))
-        .max_by_key(|(_, r)| r.name.len())
-        .map(|(i, _)| i)
 }
 
 /// A name for a new dimension that no other has.

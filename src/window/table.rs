@@ -5,8 +5,10 @@ use super::command::Command;
 use super::fields::{caution, fact, heading, remark};
 use super::format;
 use super::marks::{Mark, mark_ui};
+use super::particle_bars::bars_ui;
+use super::second_opinions::evidence_ui;
 use super::state::request_of;
-use crate::dimensions::{Dimension, Request, Status};
+use crate::dimensions::{Dimension, Kind, Request, Status, particle_histograms};
 use crate::uncertainty::{Component, Distribution};
 use eframe::egui::{Align, Layout, RichText, ScrollArea, Ui};
 use egui_extras::{Column, TableBuilder};
@@ -64,7 +66,7 @@ pub fn results_ui(ui: &mut Ui, results: &Results, out: &mut Vec<Command>) {
     let chosen = results.line.and_then(|i| lines.get(i));
     let wide = ui.available_width();
     let side = if chosen.is_some() && wide > 760.0 {
-        (0.32 * wide).clamp(300.0, 460.0)
+        (0.32 * wide).clamp(290.0, 460.0)
     } else {
         0.0
     };
@@ -78,7 +80,9 @@ pub fn results_ui(ui: &mut Ui, results: &Results, out: &mut Vec<Command>) {
                 ScrollArea::vertical()
                     .id_salt("particulars")
                     .auto_shrink(false)
-                    .show(ui, |ui| particulars(ui, line));
+                    .show(ui, |ui| {
+                        particulars(ui, line, |ui| particles_ui(ui, line, lines, results));
+                    });
             });
         }
     });
@@ -91,16 +95,23 @@ fn table(ui: &mut Ui, lines: &[Dimension], results: &Results, out: &mut Vec<Comm
         ui.label(RichText::new(text).color(p.faint))
             .on_hover_text(help);
     };
+    // Beside the particulars of a line names and quantities give way.
+    let narrow = ui.available_width() < 740.0;
+    let [name, quantity_wide, status_wide] = match narrow {
+        true => [66.0, 98.0, 74.0],
+        false => [116.0, 126.0, 110.0],
+    };
     TableBuilder::new(ui)
+        .id_salt(("results", narrow))
         .striped(true)
         .cell_layout(Layout::left_to_right(Align::Center))
         .auto_shrink(false)
-        .column(Column::initial(116.0).at_least(70.0).clip(true))
-        .column(Column::initial(126.0).at_least(80.0).clip(true))
-        .column(Column::initial(124.0).at_least(90.0))
-        .column(Column::initial(124.0).at_least(90.0))
-        .column(Column::initial(130.0).at_least(90.0))
-        .column(Column::remainder().at_least(110.0).clip(true))
+        .column(Column::initial(name).at_least(60.0).clip(true))
+        .column(Column::initial(quantity_wide).at_least(80.0).clip(true))
+        .column(Column::initial(if narrow { 114.0 } else { 124.0 }).at_least(90.0))
+        .column(Column::initial(if narrow { 112.0 } else { 124.0 }).at_least(90.0))
+        .column(Column::initial(if narrow { 122.0 } else { 130.0 }).at_least(90.0))
+        .column(Column::remainder().at_least(status_wide).clip(true))
         .header(24.0, |mut row| {
             row.col(|ui| {
                 ui.add_space(9.0);
@@ -188,8 +199,23 @@ fn status_ui(ui: &mut Ui, line: &Dimension) {
     }
 }
 
-/// Everything about one line.
-fn particulars(ui: &mut Ui, line: &Dimension) {
+/// Heights and diameters of all particles of the line's request.
+fn particles_ui(ui: &mut Ui, line: &Dimension, lines: &[Dimension], results: &Results) {
+    if line.kind != Kind::Particle {
+        return;
+    }
+    let of = |l: &Dimension| request_of(results.requests, l);
+    let own = of(line);
+    let mine: Vec<&Dimension> = lines.iter().filter(|l| of(l) == own).collect();
+    let histograms = particle_histograms(&mine);
+    if !histograms.is_empty() {
+        heading(ui, "All particles listed");
+        bars_ui(ui, &histograms);
+    }
+}
+
+/// Everything about one line; `between` comes before budget and assumptions.
+fn particulars(ui: &mut Ui, line: &Dimension, between: impl FnOnce(&mut Ui)) {
     heading(ui, &format!("{}: {}", line.name, quantity(line)));
     remark(ui, meaning(line));
     for flag in &line.flags {
@@ -205,6 +231,8 @@ fn particulars(ui: &mut Ui, line: &Dimension) {
         );
         fact(ui, "k", format::significant(k, 3));
     }
+    evidence_ui(ui, line);
+    between(ui);
     if !line.budget.is_empty() {
         heading(ui, "Budget");
         for c in &line.budget {

@@ -1,5 +1,7 @@
 //! The window driven without a screen: by names and roles, as a screen reader meets it.
 
+mod opinions;
+
 use super::app::{App, Dialog};
 use super::command::Command;
 use super::invented;

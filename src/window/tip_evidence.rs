@@ -26,6 +26,12 @@ pub struct EvidenceView {
 
 /// What is known of the tip's evidence, in words.
 pub fn evidence_words(found: &TipResult) -> String {
+    if let Some((known, _)) = found.known.as_deref() {
+        return format!(
+            "The whole characterizer ({}) showed the tip: no single points.",
+            known.shape.name()
+        );
+    }
     match &found.estimate {
         None => "The tip was given: no place of this scan is its evidence.".to_owned(),
         Some(e) if e.evidence.is_empty() => {

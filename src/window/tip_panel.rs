@@ -3,6 +3,9 @@
 use super::command::{BrowseFor, Command};
 use super::fields::{caution, choice_row, fact, heading, length_row, number_row, remark, text_row};
 use super::format;
+use super::known_panel::{
+    self, begin, both_ways_ui, give_up, is_stating, known_settings, own_scan_setting,
+};
 use super::laid_over::laid_ui;
 use super::panels::Panel;
 use crate::job::{Outcome, Threshold, TipFrom, TipShape, TipSpec};
@@ -10,11 +13,16 @@ use crate::units::Length;
 use eframe::egui::Ui;
 use std::path::PathBuf;
 
-const SOURCES: [(TipFrom, &str, &str); 3] = [
+const SOURCES: [(TipFrom, &str, &str); 4] = [
     (
         TipFrom::Blind,
-        "Blind, this scan",
+        "Blind",
         "The bluntest tip that the scan allows. It holds the bluntness of the sharpest feature too.",
+    ),
+    (
+        TipFrom::KnownShape,
+        "Known shape",
+        "A scan of a characterizer whose shape is certified: ridges, a step, spheres, spikes.",
     ),
     (TipFrom::Model, "Model", "A shape given by its formula."),
     (TipFrom::File, "File", "A tip on the scan's own grid."),
@@ -24,14 +32,18 @@ const SOURCES: [(TipFrom, &str, &str); 3] = [
 pub fn tip_ui(ui: &mut Ui, panel: &Panel, out: &mut Vec<Command>) {
     heading(ui, "Where the tip comes from");
     let tip = &panel.job.tip;
-    if let Some(from) = choice_row(
-        ui,
-        "From",
-        "Where the tip's shape comes from",
-        tip.from,
-        &SOURCES,
-    ) {
-        panel.edit(out, |job| take_source(&mut job.tip, from));
+    let stated = match is_stating(ui, panel) {
+        true => TipFrom::KnownShape,
+        false => tip.from,
+    };
+    let help = "Where the tip's shape comes from";
+    if let Some(from) = choice_row(ui, "From", help, stated, &SOURCES) {
+        give_up(ui);
+        if from == TipFrom::KnownShape {
+            known_panel::state(ui, panel, begin(panel), out);
+        } else if from != tip.from {
+            panel.edit(out, |job| take_source(&mut job.tip, from));
+        }
         if from == TipFrom::File && tip.file.is_none() && panel.browse {
             out.push(Command::Browse(BrowseFor::Tip));
         }
@@ -46,14 +58,22 @@ pub fn tip_ui(ui: &mut Ui, panel: &Panel, out: &mut Vec<Command>) {
     if let Some(support) = support {
         panel.edit(out, |job| job.tip.support = support);
     }
-    match tip.from {
-        TipFrom::Blind | TipFrom::KnownShape => blind_settings(ui, panel, out),
+    match stated {
+        TipFrom::Blind => {
+            blind_settings(ui, panel, out);
+            own_scan_setting(ui, panel, out);
+        }
+        TipFrom::KnownShape => {
+            known_settings(ui, panel, out);
+            own_scan_setting(ui, panel, out);
+        }
         TipFrom::Model => model_settings(ui, panel, out),
         TipFrom::File => file_settings(ui, panel, out),
     }
     if let Some(found) = &panel.outcome.tip {
         heading(ui, "What it is");
         read_out_ui(ui, found);
+        both_ways_ui(ui, found);
     }
     let findings = findings(panel.outcome);
     if !findings.is_empty() {

@@ -8,12 +8,13 @@ use super::later::Later;
 use super::legend;
 use super::map_marks;
 use super::marks::{Sample, grid, reach, samples_ui, title_ui, x_axis, y_axis};
+use super::reach_view::{ReachView, reach_ui};
 use super::state::ColourSpan;
 use super::tip_evidence::{EvidenceView, evidence_ui};
 use super::tip_shape_view::{ShapeView, shape_ui};
 use super::view::View;
 use crate::heightmap::Profile;
-use crate::job::TipResult;
+use crate::job::{TipResult, Way};
 use crate::leveling::Leveled;
 use crate::tip::Tip;
 use eframe::egui::accesskit::Role;
@@ -36,6 +37,8 @@ pub struct TipCurves {
     pub band: (Vec<f64>, Vec<f64>, Vec<f64>),
     /// The fitted sphere, to its fit depth.
     pub sphere: Vec<[f64; 2]>,
+    /// The tip that the other way gives, for one from a known shape.
+    pub other_way: Vec<[f64; 2]>,
 }
 
 impl TipCurves {
@@ -78,6 +81,13 @@ pub fn tip_curves(found: &TipResult, azimuth_deg: f64) -> TipCurves {
             }
         }
     }
+    if let Some((known, way)) = found.known.as_deref() {
+        let other = match way {
+            Way::ModelFit => &known.free_form.tip,
+            Way::FreeForm => &known.tip,
+        };
+        curves.other_way = finite(&profile(other));
+    }
     if let Some(r) = &found.read_out.apex_radius {
         let depth = r.fit_depth_nm.min(r.value);
         let reach = (2.0 * r.value * depth - depth * depth).max(0.0).sqrt();
@@ -101,6 +111,8 @@ pub enum Sheet {
     Shape,
     /// Where the scan showed the tip.
     Evidence,
+    /// What the tip reaches of a planned feature.
+    Reach,
 }
 
 /// State of the tip's view.
@@ -113,6 +125,7 @@ pub struct TipView {
     second: Option<(MapRef, [TipCurves; 2])>,
     shape: ShapeView,
     evidence: EvidenceView,
+    reach: ReachView,
 }
 
 /// What the view shows.
@@ -173,6 +186,7 @@ pub fn tip_ui(ui: &mut Ui, on: &OnTip, view: &mut TipView) {
         (Sheet::Evidence, Some(level)) => {
             evidence_ui(ui, plots, found, level, &mut view.evidence);
         }
+        (Sheet::Reach, _) => reach_ui(ui, plots, found, &mut view.reach),
         _ => profiles_ui(ui, plots, found, view),
     }
 }
@@ -191,6 +205,11 @@ fn sheets_ui(ui: &mut Ui, row: Rect, sheet: &mut Sheet) {
                 Sheet::Evidence,
                 "Evidence",
                 "Where on the scan the tip was seen",
+            ),
+            (
+                Sheet::Reach,
+                "Reach",
+                "What the tip reaches of a planned trench, ridge, grating or particle",
             ),
         ] {
             let label = ui.selectable_label(*sheet == which, name);
@@ -330,6 +349,13 @@ fn profile_ui(
     if second.is_some() {
         samples.push((Sample::Line(1.3), p.text, "second tip"));
     }
+    let other_way = found.known.as_deref().map(|(_, way)| match way {
+        Way::ModelFit => "free form",
+        Way::FreeForm => "model fit",
+    });
+    if let Some(name) = other_way {
+        samples.push((Sample::Line(1.6), p.good, name));
+    }
     if !curves.sphere.is_empty() {
         let name = if second.is_some() {
             "radius"
@@ -352,7 +378,7 @@ fn profile_ui(
     let mut head = Rect::from_min_size(rect.min, vec2(rect.width(), 22.0));
     let unit = unit_for(reach(curves.tip.iter(), 0));
     title_ui(ui, head, name, unit.sign);
-    if second.is_some() {
+    if samples.len() > 4 {
         // One sample more than the line of the title holds; a line of its own needs no room for it.
         head = head.translate(vec2(0.0, 18.0));
         head.min.x -= 80.0;
@@ -411,6 +437,14 @@ fn profile_ui(
                 .width(2.2)
                 .allow_hover(false),
         );
+        if !curves.other_way.is_empty() {
+            plot.line(
+                Line::new("other way", PlotPoints::new(curves.other_way.clone()))
+                    .color(p.good)
+                    .width(1.4)
+                    .allow_hover(false),
+            );
+        }
         if !curves.sphere.is_empty() {
             plot.line(
                 Line::new("apex radius", PlotPoints::new(curves.sphere.clone()))
