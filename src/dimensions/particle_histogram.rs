@@ -1,6 +1,7 @@
 //! Histograms of the particles listed one by one: their heights and diameters.
 
 use super::{Dimension, Kind};
+use std::f64::consts::SQRT_2;
 
 /// Fewer particles make no histogram.
 const FEWEST: usize = 3;
@@ -33,8 +34,8 @@ impl ParticleHistogram {
 
 /// The histograms of the single particles among `lines` (means are left out): heights, diameters.
 /// None of a quantity with fewer than three values. Bins are 1, 2 or 5 times a power of ten wide,
-/// not below Freedman and Diaconis' 2 IQR n^(-1/3) (Z. Wahrscheinlichkeitstheorie 57, 453 (1981),
-/// from memory), nor below the mean standard uncertainty: finer bins would show noise.
+/// about Freedman and Diaconis' 2 IQR n^(-1/3) (Z. Wahrscheinlichkeitstheorie 57, 453 (1981), from
+/// memory), not below the mean standard uncertainty: finer bins would show noise.
 pub fn particle_histograms(lines: &[&Dimension]) -> Vec<ParticleHistogram> {
     let of = |quantity: &str| {
         let single = lines
@@ -70,15 +71,15 @@ fn histogram(
     let (low, high) = all.fold((f64::INFINITY, f64::NEG_INFINITY), |(l, h), v| {
         (l.min(*v), h.max(*v))
     });
-    let wish = spread(scanned)
-        .max(spread(corrected))
-        .max(u)
-        .max((high - low) / MOST_BINS);
-    let step = round_up(if wish > 0.0 {
-        wish
-    } else {
-        high.abs().max(1.0) * 1e-3
-    });
+    let wish = spread(scanned).max(spread(corrected));
+    let least = u.max((high - low) / MOST_BINS);
+    // Rounded to about the nearest; never below what must not be resolved.
+    let step = match (wish > 0.0, least > 0.0) {
+        (true, true) => round_down(wish * SQRT_2).max(round_up(least)),
+        (true, false) => round_down(wish * SQRT_2),
+        (false, true) => round_up(least),
+        (false, false) => round_up(high.abs().max(1.0) * 1e-3),
+    };
     let from = (low / step).floor() * step;
     let bins = ((high - from) / step).floor() as usize + 1;
     let count = |values: &[f64]| {
@@ -107,6 +108,16 @@ fn spread(values: &[f64]) -> f64 {
     sorted.sort_by(f64::total_cmp);
     let at = |q: f64| sorted[(q * (sorted.len() - 1) as f64).round() as usize];
     2.0 * (at(0.75) - at(0.25)) / (values.len() as f64).cbrt()
+}
+
+/// The greatest of 1, 2, 5 x 10^n not above `x`.
+fn round_down(x: f64) -> f64 {
+    let power = 10f64.powf(x.log10().floor());
+    [5.0, 2.0, 1.0]
+        .into_iter()
+        .map(|m| m * power)
+        .find(|s| *s <= x * (1.0 + 1e-9))
+        .unwrap_or(power)
 }
 
 /// The least of 1, 2, 5 x 10^n not below `x`.
@@ -157,13 +168,13 @@ mod tests {
         }
         let all = histograms_of(&lines);
         assert_eq!(all.len(), 2);
-        // 2 IQR n^(-1/3) = 2 * 5 / 2.714 = 3.7, so bins of 5 nm: [10, 15) and [15, 20).
-        assert_eq!((all[0].from, all[0].step), (10.0, 5.0));
-        assert_eq!(all[0].as_scanned, [10, 10]);
-        assert_eq!(all[0].corrected, [10, 10]);
-        assert_eq!(all[1].as_scanned, [0, 4, 10, 6]);
-        assert_eq!(all[1].corrected, [9, 10, 0, 0]);
-        assert_eq!(all[1].bin(1), [15.0, 17.5, 20.0]);
+        // 2 IQR n^(-1/3) = 2 * 4.5 / 2.714 = 3.3, rounded to 2: 5 is further than a factor sqrt(2).
+        assert_eq!((all[0].from, all[0].step), (10.0, 2.0));
+        assert_eq!(all[0].as_scanned, [4; 5]);
+        assert_eq!(all[0].corrected, [4; 5]);
+        assert_eq!(all[1].as_scanned, [0, 0, 0, 0, 4, 4, 4, 4, 4]);
+        assert_eq!(all[1].corrected, [3, 4, 4, 4, 4, 0, 0, 0, 0]);
+        assert_eq!(all[1].bin(1), [12.0, 13.0, 14.0]);
     }
 
     #[test]

@@ -9,7 +9,7 @@ use std::fmt::Write;
 
 const WIDE: f64 = 290.0;
 const HIGH: f64 = 150.0;
-const LEFT: f64 = 46.0;
+const LEFT: f64 = 58.0;
 const TOP: f64 = 34.0;
 
 /// Name of each request for particles and its figure, where there are enough of them.

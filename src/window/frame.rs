@@ -171,6 +171,7 @@ impl App {
                     found: self.shown.tip.as_ref(),
                     why,
                     level: self.shown.level.as_ref(),
+                    own_scan: opened.history.now().tip.own_scan(),
                     second: self.laid.as_ref().map(|l| &l.found),
                 };
                 tip_ui(ui, &on, &mut self.tip_view);

@@ -14,7 +14,8 @@ const TALL: f32 = 150.0;
 /// One plot below the other.
 pub fn bars_ui(ui: &mut Ui, histograms: &[ParticleHistogram]) {
     for histogram in histograms {
-        let size = vec2(ui.available_width(), TALL);
+        // Clear of the scroll bar.
+        let size = vec2(ui.available_width() - 12.0, TALL);
         let (rect, _) = ui.allocate_exact_size(size, Sense::hover());
         plot_ui(ui, rect, histogram);
     }
@@ -61,11 +62,11 @@ fn plot_ui(ui: &mut Ui, rect: Rect, histogram: &ParticleHistogram) {
         .grid_color(p.line)
         .label_formatter(|_| None)
         .show(&mut child, |plot| {
-            plot.bar_chart(
-                BarChart::new("corrected", bars(&histogram.corrected, 0.86))
-                    .color(p.corrected.gamma_multiply(0.55))
-                    .allow_hover(false),
-            );
+            let filled = bars(&histogram.corrected, 0.86).into_iter().map(|bar| {
+                bar.fill(p.corrected.gamma_multiply(0.6))
+                    .stroke(Stroke::NONE)
+            });
+            plot.bar_chart(BarChart::new("corrected", filled.collect()).allow_hover(false));
             // Narrower and hollow: both can be told apart where they stand on one another.
             let hollow = bars(&histogram.as_scanned, 0.62).into_iter().map(|bar| {
                 bar.fill(eframe::egui::Color32::TRANSPARENT)

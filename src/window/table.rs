@@ -66,7 +66,7 @@ pub fn results_ui(ui: &mut Ui, results: &Results, out: &mut Vec<Command>) {
     let chosen = results.line.and_then(|i| lines.get(i));
     let wide = ui.available_width();
     let side = if chosen.is_some() && wide > 760.0 {
-        (0.32 * wide).clamp(290.0, 460.0)
+        (0.265 * wide).clamp(250.0, 460.0)
     } else {
         0.0
     };
@@ -98,7 +98,7 @@ fn table(ui: &mut Ui, lines: &[Dimension], results: &Results, out: &mut Vec<Comm
     // Beside the particulars of a line names and quantities give way.
     let narrow = ui.available_width() < 740.0;
     let [name, quantity_wide, status_wide] = match narrow {
-        true => [66.0, 98.0, 74.0],
+        true => [76.0, 112.0, 88.0],
         false => [116.0, 126.0, 110.0],
     };
     TableBuilder::new(ui)
@@ -109,7 +109,7 @@ fn table(ui: &mut Ui, lines: &[Dimension], results: &Results, out: &mut Vec<Comm
         .column(Column::initial(name).at_least(60.0).clip(true))
         .column(Column::initial(quantity_wide).at_least(80.0).clip(true))
         .column(Column::initial(if narrow { 114.0 } else { 124.0 }).at_least(90.0))
-        .column(Column::initial(if narrow { 112.0 } else { 124.0 }).at_least(90.0))
+        .column(Column::initial(if narrow { 114.0 } else { 124.0 }).at_least(90.0))
         .column(Column::initial(if narrow { 122.0 } else { 130.0 }).at_least(90.0))
         .column(Column::remainder().at_least(status_wide).clip(true))
         .header(24.0, |mut row| {

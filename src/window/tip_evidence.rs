@@ -13,6 +13,7 @@ use crate::leveling::Leveled;
 use eframe::egui::accesskit::Role;
 use eframe::egui::{Color32, Pos2, Rect, Sense, Stroke, StrokeKind, Ui, WidgetInfo, pos2, vec2};
 use std::collections::BTreeSet;
+use std::path::Path;
 use std::sync::Arc;
 
 /// Points of the screen that a mark takes; nearer ones are drawn as one.
@@ -54,12 +55,20 @@ pub fn evidence_words(found: &TipResult) -> String {
 pub fn evidence_ui(
     ui: &mut Ui,
     rect: Rect,
-    found: &TipResult,
+    (found, own_scan): (&TipResult, Option<&Path>),
     level: &Arc<Leveled>,
     view: &mut EvidenceView,
 ) {
     let p = Palette::of(ui);
-    let words = evidence_words(found);
+    // Places on another scan have no business on this map.
+    let words = match own_scan {
+        Some(path) => format!(
+            "{} The scan that showed it is {}.",
+            evidence_words(found),
+            path.display()
+        ),
+        None => evidence_words(found),
+    };
     let head = Rect::from_min_size(rect.min, vec2(rect.width(), 22.0));
     title_ui(ui, head, "Where the tip was seen", "marks: contact points");
     let key = PairKey {
@@ -93,7 +102,8 @@ pub fn evidence_ui(
         legend::scale_ui(ui, scale, pair.left.range, "z");
     }
     let pitch = map.pitch();
-    let evidence = found.estimate.iter().flat_map(|e| &e.evidence);
+    let here = found.estimate.iter().filter(|_| own_scan.is_none());
+    let evidence = here.flat_map(|e| &e.evidence);
     let places = evidence.map(|&(r, c)| {
         let at = ((c as f64 + 0.5) * pitch.x, (r as f64 + 0.5) * pitch.y);
         seen.to_screen(pane, at)

@@ -22,6 +22,7 @@ use eframe::egui::{
     Color32, Rect, Sense, Stroke, StrokeKind, Ui, UiBuilder, WidgetInfo, pos2, vec2,
 };
 use egui_plot::{FilledArea, HLine, Line, LineStyle, Plot, PlotPoints};
+use std::path::Path;
 use std::sync::Arc;
 
 const DEGREES: Unit = Unit {
@@ -136,6 +137,8 @@ pub struct OnTip<'a> {
     pub why: &'a str,
     /// The scan.
     pub level: Option<&'a Arc<Leveled>>,
+    /// The separate scan that showed the tip, if one did.
+    pub own_scan: Option<&'a Path>,
     /// A tip laid over it.
     pub second: Option<&'a Arc<TipResult>>,
 }
@@ -184,7 +187,8 @@ pub fn tip_ui(ui: &mut Ui, on: &OnTip, view: &mut TipView) {
     match (view.sheet, on.level) {
         (Sheet::Shape, _) => shape_ui(ui, plots, found, on.second, &mut view.shape),
         (Sheet::Evidence, Some(level)) => {
-            evidence_ui(ui, plots, found, level, &mut view.evidence);
+            let seen = (found.as_ref(), on.own_scan);
+            evidence_ui(ui, plots, seen, level, &mut view.evidence);
         }
         (Sheet::Reach, _) => reach_ui(ui, plots, found, &mut view.reach),
         _ => profiles_ui(ui, plots, found, view),
