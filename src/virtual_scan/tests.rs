@@ -156,7 +156,7 @@ fn a_needle_shows_a_skew_tip_mirrored() {
     // The needle stands on the centre of pixel [10, 12]; the flat lies far below the tip.
     let (x0, y0) = (12.5, 15.75);
     let needle = |x: f64, y: f64| {
-        if (x - x0).hypot(y - y0) < 1e-6 {
+        if (x - x0).hypot(y - y0) < 1e-3 {
             50.0
         } else {
             -1e3
@@ -197,12 +197,12 @@ fn the_search_finds_what_a_plain_loop_finds() {
             ..Settings::new(7, 9, Pitch { x: 1.5, y: 2.0 })
         };
         let fine = FineSurface::sample(&surface, &settings, &Progress::new()).unwrap();
-        let probe = FineTip::sample(&tip, &settings);
+        let blocks = tip_blocks(&tip, &settings);
         let n = oversampling as f64;
         for row in 0..7 {
             for column in 0..9 {
-                let (block, cell) = fine.contact(&probe.blocks, row, column).unwrap();
-                let [dx, dy] = probe.blocks[block].offset(cell, oversampling, probe.step);
+                let (block, cell) = fine.contact(&blocks, row, column).unwrap();
+                let [dx, dy] = blocks[block].offset(cell, &settings);
                 let (x, y) = ((column as f64 + 0.5) * 1.5, (row as f64 + 0.5) * 2.0);
                 let mut plain = f64::NEG_INFINITY;
                 for i in -40..=40 {
