@@ -99,3 +99,57 @@ pub fn words(histogram: &ParticleHistogram) -> String {
     let bins: Vec<String> = bins.collect();
     format!("Histogram of {}s. {}.", histogram.quantity, bins.join("; "))
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::dimensions::{Dimension, Request, Value};
+    use std::path::Path;
+    use std::sync::Arc;
+
+    fn height(name: String, value: f64) -> Dimension {
+        Dimension {
+            name,
+            kind: Kind::Particle,
+            quantity: "height".to_owned(),
+            at: None,
+            unit: "nm",
+            as_scanned: Some(Value {
+                value,
+                u: Some(0.1),
+            }),
+            corrected: None,
+            status: None,
+            flags: Vec::new(),
+            budget: Vec::new(),
+            evidence: Default::default(),
+            assumptions: "",
+            marks: Vec::new(),
+        }
+    }
+
+    #[test]
+    fn each_request_has_its_own_figure_and_too_few_have_none() {
+        let mut job = Job::on_scan(Path::new("a.tiff"));
+        for name in ["left", "right"] {
+            job.file.dimensions.push(Request::new(name, Kind::Particle));
+        }
+        let left = (0..10).map(|i| height(format!("left {}", i + 1), 20.0 + f64::from(i)));
+        let right = [height("right".to_owned(), 50.0)];
+        let outcome = Outcome {
+            dimensions: Some(Arc::new(left.chain(right).collect())),
+            ..Outcome::default()
+        };
+        let figures: Vec<_> = particle_figures(&job, &outcome).collect();
+        assert_eq!(figures.len(), 1);
+        assert_eq!(figures[0].0, "left");
+        // 2 IQR n^(-1/3) = 2 * 5 / 2.15 = 4.6: bins of 5 nm, [20, 25) and [25, 30).
+        let drawing = &figures[0].1;
+        assert_eq!(drawing.matches("column scanned").count(), 2);
+        assert_eq!(drawing.matches("column corrected").count(), 0);
+        assert!(
+            drawing.contains("20 nm to 25 nm: 5 as scanned, 0 corrected"),
+            "{drawing}"
+        );
+    }
+}

@@ -9,7 +9,7 @@ use eframe::egui::{Rect, Sense, Stroke, Ui, UiBuilder, WidgetInfo, vec2};
 use egui_plot::{Bar, BarChart, Plot};
 
 const COUNT: Unit = Unit { nm: 1.0, sign: "" };
-const TALL: f32 = 150.0;
+const TALL: f32 = 164.0;
 
 /// One plot below the other.
 pub fn bars_ui(ui: &mut Ui, histograms: &[ParticleHistogram]) {
@@ -35,8 +35,9 @@ fn plot_ui(ui: &mut Ui, rect: Rect, histogram: &ParticleHistogram) {
         (Sample::Line(1.6), p.scanned, "as scanned"),
         (Sample::Area, p.corrected, "corrected"),
     ];
-    samples_ui(ui, head, &samples);
-    let area = rect.with_min_y(head.bottom() + 2.0);
+    let below = head.translate(vec2(0.0, 18.0));
+    samples_ui(ui, below, &samples);
+    let area = rect.with_min_y(below.bottom() + 2.0);
     let mut child = ui.new_child(UiBuilder::new().max_rect(area).id_salt(title));
     let bars = |counts: &[usize], part: f64| -> Vec<Bar> {
         let bar = |(i, n): (usize, &usize)| {

@@ -98,7 +98,7 @@ fn table(ui: &mut Ui, lines: &[Dimension], results: &Results, out: &mut Vec<Comm
     // Beside the particulars of a line names and quantities give way.
     let narrow = ui.available_width() < 740.0;
     let [name, quantity_wide, status_wide] = match narrow {
-        true => [76.0, 112.0, 88.0],
+        true => [92.0, 112.0, 72.0],
         false => [116.0, 126.0, 110.0],
     };
     TableBuilder::new(ui)
@@ -162,7 +162,7 @@ fn table(ui: &mut Ui, lines: &[Dimension], results: &Results, out: &mut Vec<Comm
                     }
                     row.col(|ui| {
                         ui.add_space(10.0);
-                        status_ui(ui, line);
+                        status_ui(ui, line, narrow);
                     });
                 });
             }
@@ -183,13 +183,14 @@ pub fn values(line: &Dimension) -> [String; 3] {
     ]
 }
 
-fn status_ui(ui: &mut Ui, line: &Dimension) {
+fn status_ui(ui: &mut Ui, line: &Dimension, narrow: bool) {
     let p = Palette::of(ui);
     let (mark, word) = status(line);
     mark_ui(ui, mark);
     ui.label(RichText::new(word).color(mark.colour(p)))
         .on_hover_text(meaning(line));
-    if !line.flags.is_empty() {
+    // Where there is no room for it the particulars hold the notes.
+    if !line.flags.is_empty() && !narrow {
         let text = match line.flags.len() {
             1 => "1 note".to_owned(),
             n => format!("{n} notes"),
