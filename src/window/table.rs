@@ -97,8 +97,9 @@ fn table(ui: &mut Ui, lines: &[Dimension], results: &Results, out: &mut Vec<Comm
     };
     // Beside the particulars of a line names and quantities give way.
     let narrow = ui.available_width() < 740.0;
+    let status_gap = if narrow { 4.0 } else { 10.0 };
     let [name, quantity_wide, status_wide] = match narrow {
-        true => [92.0, 112.0, 72.0],
+        true => [90.0, 110.0, 72.0],
         false => [116.0, 126.0, 110.0],
     };
     TableBuilder::new(ui)
@@ -137,7 +138,7 @@ fn table(ui: &mut Ui, lines: &[Dimension], results: &Results, out: &mut Vec<Comm
                 });
             }
             row.col(|ui| {
-                ui.add_space(10.0);
+                ui.add_space(status_gap);
                 head(ui, "Status", "");
             });
         })
@@ -161,7 +162,7 @@ fn table(ui: &mut Ui, lines: &[Dimension], results: &Results, out: &mut Vec<Comm
                         });
                     }
                     row.col(|ui| {
-                        ui.add_space(10.0);
+                        ui.add_space(status_gap);
                         status_ui(ui, line, narrow);
                     });
                 });
