@@ -124,7 +124,7 @@ pub enum Command {
         /// The published iteration with a threshold, without smoothing, for comparison.
         #[arg(long, conflicts_with = "known")]
         textbook: bool,
-        /// The certified shape that the scan shows: a file with the keys of the job's [tip] known,
+        /// The certified shape that the scan shows: a file with the keys of a job's known shape,
         /// and model and use where wanted.
         #[arg(long, value_name = "FILE.toml", conflicts_with = "threshold")]
         known: Option<PathBuf>,
