@@ -338,7 +338,8 @@ fn one(case: &Case, seed: u64, model_fit: bool) -> Result<(Vec<Dimension>, f64)>
     let scan = &leveled.map;
     let heights = morphology::erode(scan.heights(), tip.shape(), &progress)?;
     let surface: HeightMap = scan.with_heights(heights, "corrected");
-    // As a job does: what noise lets an apex blur is one contact.
+    // What noise lets an apex blur is one contact; a job says so of every kind, with its own
+    // tolerance.
     let spread = if case.kind == Scene::Sq {
         [2 * ((6.0 * radius * noise).sqrt() as usize).max(1); 2]
     } else {
@@ -359,18 +360,12 @@ fn one(case: &Case, seed: u64, model_fit: bool) -> Result<(Vec<Dimension>, f64)>
         noise_nm: leveled.noise_nm,
         calibration: Calibration::default(),
         slope: leveled.slope,
-        corrected: Some(Corrected {
-            tip: &tip,
-            surface: &surface,
-            surface_upper: None,
-            surface_lower: None,
-            certainty: certainty.view(),
-            edge_leaning: leaning.view(),
-            identified: true,
-            height_u_nm: 0.0,
-            exercised_depth_nm: None,
-            contains_feature_radius: false,
-        }),
+        corrected: Some(Corrected::exact(
+            &tip,
+            &surface,
+            certainty.view(),
+            leaning.view(),
+        )),
     };
     let mut lines = measure(&input, &truth.request, &progress)?;
     if model_fit {
@@ -623,18 +618,12 @@ fn speed() -> Result<()> {
         noise_nm: Some(0.15),
         calibration: Calibration::default(),
         slope: [0.0; 2],
-        corrected: Some(Corrected {
-            tip: &tip,
-            surface: &scan,
-            surface_upper: None,
-            surface_lower: None,
-            certainty: certainty.view(),
-            edge_leaning: leaning.view(),
-            identified: true,
-            height_u_nm: 0.0,
-            exercised_depth_nm: None,
-            contains_feature_radius: false,
-        }),
+        corrected: Some(Corrected::exact(
+            &tip,
+            &scan,
+            certainty.view(),
+            leaning.view(),
+        )),
     };
     let start = std::time::Instant::now();
     let mut requests = find(&scan, Some(0.15), Find::Lines, &progress)?;

@@ -123,18 +123,12 @@ fn measured_depths_of_grooves_reached_and_not() {
             noise_nm: Some(0.0),
             calibration: Calibration::default(),
             slope: [0.0; 2],
-            corrected: Some(Corrected {
-                tip: &tip,
-                surface: &surface,
-                surface_upper: None,
-                surface_lower: None,
-                certainty: certainty.view(),
-                edge_leaning: leaning.view(),
-                identified: true,
-                height_u_nm: 0.0,
-                exercised_depth_nm: None,
-                contains_feature_radius: false,
-            }),
+            corrected: Some(Corrected::exact(
+                &tip,
+                &surface,
+                certainty.view(),
+                leaning.view(),
+            )),
         };
         let lines = measure(&input, &Request::new("groove", Kind::HoleDepth), &progress).unwrap();
         let scanned = lines[0].as_scanned.unwrap().value;

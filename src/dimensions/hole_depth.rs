@@ -379,22 +379,11 @@ fn fill(line: &mut Dimension, input: &Input, hole: &Hole, noise: f64) {
         let low = Some((depth - all.expanded).max(0.0));
         line.corrected = Some(if hole.reached {
             CorrectedValue {
-                value: Some(depth),
-                u: Some(all.u),
-                expanded: Some(all.expanded),
-                k: Some(all.k),
                 low,
-                high: Some(depth + all.expanded),
+                ..CorrectedValue::around(depth, &all)
             }
         } else {
-            CorrectedValue {
-                value: None,
-                u: None,
-                expanded: None,
-                k: None,
-                low,
-                high: None,
-            }
+            CorrectedValue::between(low, None)
         });
         line.status = Some(if hole.reached {
             Status::Touched

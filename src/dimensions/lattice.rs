@@ -5,7 +5,7 @@
 //! the rest of the wave vector, its scatter the uncertainty. Offsets of whole rows are kept out.
 
 use super::sections::{self, region_pixels};
-use super::{CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer};
+use super::{Dimension, Input, Kind, Request, answer, fill_period};
 use crate::error::Result;
 use crate::heightmap::Pitch;
 use crate::leveling::least_squares;
@@ -127,27 +127,7 @@ fn fill(line: &mut Dimension, input: &Input, lattice: &Lattice, which: usize) {
     }
     budget.correlate(index[0], index[1], lattice.correlation[0]);
     budget.correlate(index[2], index[3], lattice.correlation[1]);
-    let all = budget.combined(0.95);
-    line.as_scanned = Some(Value {
-        value,
-        u: Some(all.u),
-    });
-    if let Some(given) = input.corrected {
-        line.corrected = Some(CorrectedValue {
-            value: Some(value),
-            u: Some(all.u),
-            expanded: Some(all.expanded),
-            k: Some(all.k),
-            low: Some(value - all.expanded),
-            high: Some(value + all.expanded),
-        });
-        line.status = Some(Status::Touched);
-        if !given.identified {
-            line.flags
-                .push("the tip is not identified; a lattice does not depend on it".to_owned());
-        }
-    }
-    line.budget = budget.into_components();
+    fill_period(line, input, value, budget, Some("a lattice"));
 }
 
 /// Lengths of `a` and `b` on a plane of the given slopes, nm, the angle between them and 90 less

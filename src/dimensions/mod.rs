@@ -38,7 +38,7 @@ use crate::error::{Error, ErrorKind, Result};
 use crate::heightmap::{HeightMap, Region};
 use crate::progress::Progress;
 use crate::tip::Tip;
-use crate::uncertainty::Component;
+use crate::uncertainty::{Budget, Combined, Component};
 use crate::units::Length;
 use ndarray::ArrayView2;
 use serde::{Deserialize, Serialize};
@@ -246,6 +246,29 @@ pub struct Corrected<'a> {
     pub contains_feature_radius: bool,
 }
 
+impl<'a> Corrected<'a> {
+    /// With a tip that is known exactly and to all its depth.
+    pub fn exact(
+        tip: &'a Tip,
+        surface: &'a HeightMap,
+        certainty: ArrayView2<'a, u8>,
+        edge_leaning: ArrayView2<'a, bool>,
+    ) -> Self {
+        Self {
+            tip,
+            surface,
+            surface_upper: None,
+            surface_lower: None,
+            certainty,
+            edge_leaning,
+            identified: true,
+            height_u_nm: 0.0,
+            exercised_depth_nm: None,
+            contains_feature_radius: false,
+        }
+    }
+}
+
 /// Everything a measurand may look at.
 #[derive(Debug, Clone, Copy)]
 pub struct Input<'a> {
@@ -287,6 +310,58 @@ pub struct CorrectedValue {
     pub low: Option<f64>,
     /// Upper end of the 95 % interval; `None` = no bound.
     pub high: Option<f64>,
+}
+
+/// Fills both columns of what a tip does not change, the period of a pattern. `what` ("a pitch")
+/// is named where the tip is not identified.
+fn fill_period(
+    line: &mut Dimension,
+    input: &Input,
+    value: f64,
+    budget: Budget,
+    what: Option<&str>,
+) {
+    let all = budget.combined(0.95);
+    line.as_scanned = Some(Value {
+        value,
+        u: Some(all.u),
+    });
+    if let Some(given) = input.corrected {
+        line.corrected = Some(CorrectedValue::around(value, &all));
+        line.status = Some(Status::Touched);
+        if let Some(what) = what.filter(|_| !given.identified) {
+            line.flags.push(format!(
+                "the tip is not identified; {what} does not depend on it"
+            ));
+        }
+    }
+    line.budget = budget.into_components();
+}
+
+impl CorrectedValue {
+    /// A value in the middle of its interval.
+    pub fn around(value: f64, all: &Combined) -> Self {
+        Self {
+            value: Some(value),
+            u: Some(all.u),
+            expanded: Some(all.expanded),
+            k: Some(all.k),
+            low: Some(value - all.expanded),
+            high: Some(value + all.expanded),
+        }
+    }
+
+    /// Only bounds; `None` = no bound on that side.
+    pub fn between(low: Option<f64>, high: Option<f64>) -> Self {
+        Self {
+            value: None,
+            u: None,
+            expanded: None,
+            k: None,
+            low,
+            high,
+        }
+    }
 }
 
 /// What the tip did to the points a dimension rests on.

@@ -3,7 +3,7 @@
 
 use super::sections::{Frame, Layout};
 use super::statistics;
-use super::{Axis, CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer};
+use super::{Axis, Dimension, Input, Kind, Request, answer, fill_period};
 use crate::error::Result;
 use crate::progress::Progress;
 use crate::uncertainty::{Budget, Component, Distribution, Series};
@@ -110,32 +110,12 @@ pub(super) fn measure(
         sensitivity: 1.0,
         degrees_of_freedom: Some((grating.lines.len() as f64 - 2.0).max(1.0)),
     });
-    let all = budget.combined(0.95);
-    line.as_scanned = Some(Value {
-        value,
-        u: Some(all.u),
-    });
     if (value - centroid).abs() > 4.0 * placement.max(2e-4 * value) {
         line.flags
             .push(format!("the centroid method gives {centroid:.3} nm"));
     }
     line.marks = grating.marks(&frame);
-    if let Some(given) = input.corrected {
-        line.corrected = Some(CorrectedValue {
-            value: Some(value),
-            u: Some(all.u),
-            expanded: Some(all.expanded),
-            k: Some(all.k),
-            low: Some(value - all.expanded),
-            high: Some(value + all.expanded),
-        });
-        line.status = Some(Status::Touched);
-        if !given.identified {
-            line.flags
-                .push("the tip is not identified; a pitch does not depend on it".to_owned());
-        }
-    }
-    line.budget = budget.into_components();
+    fill_period(&mut line, input, value, budget, Some("a pitch"));
     let mut lines = vec![line];
     let correlated = by_correlation(&grating);
     for (quantity, figure) in [
@@ -187,23 +167,7 @@ fn beside(
         Distribution::Normal,
         1.0,
     );
-    let all = budget.combined(0.95);
-    line.as_scanned = Some(Value {
-        value,
-        u: Some(all.u),
-    });
-    if input.corrected.is_some() {
-        line.corrected = Some(CorrectedValue {
-            value: Some(value),
-            u: Some(all.u),
-            expanded: Some(all.expanded),
-            k: Some(all.k),
-            low: Some(value - all.expanded),
-            high: Some(value + all.expanded),
-        });
-        line.status = Some(Status::Touched);
-    }
-    line.budget = budget.into_components();
+    fill_period(line, input, value, budget, None);
 }
 
 /// Period and its standard uncertainty, pixels: places where one period from the middle of the

@@ -362,14 +362,10 @@ fn fill(
         line.budget = budget.into_components();
     } else {
         line.flags.push(too_noisy(&rough));
-        line.corrected = Some(CorrectedValue {
-            value: None,
-            u: None,
-            expanded: None,
-            k: None,
-            low: Some(0.0),
-            high: rough.upper().filter(|_| touched).map(|s| 3.0 * s),
-        });
+        line.corrected = Some(CorrectedValue::between(
+            Some(0.0),
+            rough.upper().filter(|_| touched).map(|s| 3.0 * s),
+        ));
     }
     let status = Some(if touched && interval.is_some() {
         Status::Touched

@@ -254,12 +254,9 @@ fn correct(
     let touched = !(at_flank || unknown) && given.identified;
     line.corrected = Some(if touched {
         CorrectedValue {
-            value: Some(value),
-            u: Some(all.u),
-            expanded: Some(all.expanded),
-            k: Some(all.k),
             low: Some((value - all.expanded).max(0.0)),
             high: Some((value + all.expanded).min(90.0).max(value)),
+            ..CorrectedValue::around(value, &all)
         }
     } else {
         let seen = value - all.expanded;
@@ -269,14 +266,7 @@ fn correct(
         } else {
             seen
         };
-        CorrectedValue {
-            value: None,
-            u: None,
-            expanded: None,
-            k: None,
-            low: Some(low.clamp(0.0, 90.0)),
-            high: Some(90.0),
-        }
+        CorrectedValue::between(Some(low.clamp(0.0, 90.0)), Some(90.0))
     });
     line.status = Some(if touched {
         Status::Touched

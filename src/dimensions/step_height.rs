@@ -608,28 +608,14 @@ fn correct(
     lean(line, frame, zones, given);
     let all = budget.combined(0.95);
     let value = fit.heights.mean;
-    let mut column = CorrectedValue {
-        value: Some(value),
-        u: Some(all.u),
-        expanded: Some(all.expanded),
-        k: Some(all.k),
-        low: Some(value - all.expanded),
-        high: Some(value + all.expanded),
-    };
+    let mut column = CorrectedValue::around(value, &all);
     line.status = Some(Status::Touched);
     if !given.identified {
         let (a, b) = (
             value.min(scanned.heights.mean),
             value.max(scanned.heights.mean),
         );
-        column = CorrectedValue {
-            value: None,
-            u: None,
-            expanded: None,
-            k: None,
-            low: Some(a - all.expanded),
-            high: Some(b + all.expanded),
-        };
+        column = CorrectedValue::between(Some(a - all.expanded), Some(b + all.expanded));
         line.status = Some(Status::Bounded);
         line.flags.push(
             "the tip is not identified: bounds only; a step between wide plateaus does not              depend on it, see the scanned value"
@@ -694,14 +680,10 @@ fn floor_lost(line: &mut Dimension, input: &Input, frame: &Frame, zones: &Zones)
     });
     if input.corrected.is_some() {
         line.status = Some(Status::Bounded);
-        line.corrected = Some(CorrectedValue {
-            value: None,
-            u: None,
-            expanded: None,
-            k: None,
-            low: Some((series.mean - all.expanded).max(0.0)),
-            high: None,
-        });
+        line.corrected = Some(CorrectedValue::between(
+            Some((series.mean - all.expanded).max(0.0)),
+            None,
+        ));
     }
     line.budget = budget.into_components();
 }

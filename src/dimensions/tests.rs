@@ -80,18 +80,12 @@ impl Made {
     }
 
     fn corrected(&self) -> Corrected<'_> {
-        Corrected {
-            tip: &self.tip,
-            surface: &self.surface,
-            surface_upper: None,
-            surface_lower: None,
-            certainty: self.certainty.view(),
-            edge_leaning: self.leaning.view(),
-            identified: true,
-            height_u_nm: 0.0,
-            exercised_depth_nm: None,
-            contains_feature_radius: false,
-        }
+        Corrected::exact(
+            &self.tip,
+            &self.surface,
+            self.certainty.view(),
+            self.leaning.view(),
+        )
     }
 
     fn measure<'a>(&'a self, corrected: Corrected<'a>, request: &Request) -> Vec<Dimension> {

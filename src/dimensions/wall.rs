@@ -16,6 +16,7 @@
 use super::Axis;
 use super::statistics;
 use crate::tip::Tip;
+use ndarray::ArrayView1;
 
 /// The tip seen along a line: how far it reaches to one side at each height above its apex.
 #[derive(Debug, Clone, PartialEq)]
@@ -26,20 +27,24 @@ pub(super) struct Outline {
     pitch: f64,
 }
 
+/// The tip's highest point along a straight line, at each offset across it: what the line feels.
+/// With the pitch across, nm.
+pub(super) fn tops(tip: &Tip, axis: Axis) -> (Vec<f32>, f64) {
+    let (shape, pitch) = match axis {
+        Axis::X => (tip.shape(), tip.pitch().x),
+        Axis::Y => (tip.shape().reversed_axes(), tip.pitch().y),
+    };
+    let top = |column: ArrayView1<f32>| column.iter().copied().fold(f32::NEG_INFINITY, f32::max);
+    (shape.columns().into_iter().map(top).collect(), pitch)
+}
+
 impl Outline {
     /// The outline that meets a wall whose lower side lies towards larger (`outwards_positive`) or
     /// smaller positions along `axis`. The tip stands on the lower side, hence the wall is met by
     /// the tip's other side.
     pub fn of(tip: &Tip, axis: Axis, outwards_positive: bool) -> Self {
-        let shape = match axis {
-            Axis::X => tip.shape(),
-            Axis::Y => tip.shape().reversed_axes(),
-        };
-        let pitch = match axis {
-            Axis::X => tip.pitch().x,
-            Axis::Y => tip.pitch().y,
-        };
-        let centre = shape.ncols() / 2;
+        let (tops, pitch) = tops(tip, axis);
+        let centre = tops.len() / 2;
         let mut heights = Vec::with_capacity(centre + 1);
         let mut least = 0.0f64;
         for k in 0..=centre {
@@ -48,11 +53,7 @@ impl Outline {
             } else {
                 centre + k
             };
-            let top = shape
-                .column(column)
-                .iter()
-                .copied()
-                .fold(f32::NEG_INFINITY, f32::max);
+            let top = tops[column];
             if !top.is_finite() {
                 break;
             }

@@ -12,10 +12,11 @@ use serde::{Deserialize, Serialize};
 use std::path::Path;
 
 /// `[tip.known] shape`
-#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default, Serialize, Deserialize)]
 #[serde(rename_all = "kebab-case")]
 pub enum KnownShape {
     /// Parallel ridges: `width`, and where known `height`, `pitch`, `wall-angle`, `corner-radius`.
+    #[default]
     Ridges,
     /// One step: where known `height`, `wall-angle`, `corner-radius`.
     Step,
@@ -49,7 +50,7 @@ pub enum Way {
 }
 
 /// `[tip.known]`: certified values, and their standard uncertainties as `u-...`.
-#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[derive(Debug, Clone, PartialEq, Default, Serialize, Deserialize)]
 #[serde(rename_all = "kebab-case", deny_unknown_fields)]
 pub struct KnownSpec {
     /// Which shape.
@@ -152,22 +153,7 @@ impl KnownSpec {
     pub fn new(shape: KnownShape) -> Self {
         Self {
             shape,
-            width: None,
-            height: None,
-            pitch: None,
-            wall_angle: None,
-            corner_radius: None,
-            diameter: None,
-            radius: None,
-            half_angle: None,
-            u_width: None,
-            u_height: None,
-            u_pitch: None,
-            u_wall_angle: None,
-            u_corner_radius: None,
-            u_diameter: None,
-            u_radius: None,
-            u_half_angle: None,
+            ..Self::default()
         }
     }
 

@@ -3,7 +3,7 @@
 use super::format::{about, with_u};
 use super::json::number;
 use crate::job::{TipResult, Way};
-use crate::tip::known::Known;
+use crate::tip::known::{Known, Shape};
 use crate::tip::read_out::ReadOut;
 use serde::Serialize;
 
@@ -199,13 +199,13 @@ pub fn rows(tip: &TipResult) -> Vec<(&'static str, String)> {
 }
 
 fn shape(known: &Known) -> String {
-    let count = match (known.shape.name(), known.features) {
-        ("step", _) => "one step".to_owned(),
-        ("sphere", 1) => "1 sphere".to_owned(),
-        ("spike", 1) => "1 spike".to_owned(),
-        ("sphere", n) => format!("{n} spheres"),
-        ("spike", n) => format!("{n} spikes"),
-        (_, n) => format!("ridges, {n} in view"),
+    let count = match (&known.shape, known.features) {
+        (Shape::Step { .. }, _) => "one step".to_owned(),
+        (Shape::Sphere { .. }, 1) => "1 sphere".to_owned(),
+        (Shape::Spike { .. }, 1) => "1 spike".to_owned(),
+        (Shape::Sphere { .. }, n) => format!("{n} spheres"),
+        (Shape::Spike { .. }, n) => format!("{n} spikes"),
+        (Shape::Ridges { .. }, n) => format!("ridges, {n} in view"),
     };
     match known.rotation_deg {
         Some(turn) => format!("{count}, across at {turn:.2} degrees from +x"),

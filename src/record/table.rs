@@ -186,8 +186,10 @@ pub fn tip(tip: &TipResult) -> String {
     let both_ways = known::rows(tip);
     rows.extend(both_ways.iter().map(|(name, text)| (*name, text.clone())));
     let mut text = String::new();
+    let wide = rows.iter().map(|r| r.0.chars().count()).max();
+    let wide = wide.unwrap_or(0).max(9);
     for (name, value) in rows {
-        let _ = writeln!(text, "{:9}  {value}", name.to_lowercase());
+        let _ = writeln!(text, "{:wide$}  {value}", name.to_lowercase());
     }
     for finding in &tip.diagnosis {
         let _ = writeln!(text, "- {}", tame(finding));

@@ -48,7 +48,7 @@ pub fn table(html: &mut String, tip: &TipResult) {
         "<h3>Probe shape</h3>\n<p class=\"quiet\">Full width of the projected profile and area of \
          contact (of the cross-section, and of the tip's own surface above it) against the distance \
          from the apex. All points are in result.json.</p>\n<table>\n<tr><th>From the apex</th>\
-         <th>Width along x</th><th>Width along y</th><th>Projected area</th><th>Surface</th></tr>\n",
+         <th>Width along x</th><th>Width along y</th><th>Projected area</th><th>Surface area</th></tr>\n",
     );
     let rows = x.points.iter().zip(&y.points).zip(&figures.areas);
     for ((x, y), area) in rows.skip(EVERY - 1).step_by(EVERY) {

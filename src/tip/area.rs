@@ -56,8 +56,13 @@ pub fn contact_area(tip: &Tip, depth_nm: f64, count: usize) -> Vec<ContactArea> 
             for [corner, along, athwart] in [[a, b, c], [d, c, b]] {
                 let slope = ((along - corner) / dx).hypot((athwart - corner) / dy);
                 let stretch = slope.mul_add(slope, 1.0).sqrt();
+                let mut depths = [corner, along, athwart];
+                depths.sort_by(f64::total_cmp);
+                if !depths[2].is_finite() {
+                    continue;
+                }
                 for area in &mut areas {
-                    let part = part_above([corner, along, athwart], area.depth_nm);
+                    let part = part_above(depths, area.depth_nm);
                     if part > 0.0 {
                         let projected = 0.5 * dx * dy * part;
                         area.projected_nm2 += projected;
@@ -71,17 +76,12 @@ pub fn contact_area(tip: &Tip, depth_nm: f64, count: usize) -> Vec<ContactArea> 
     areas
 }
 
-/// Part of a plane triangle with these corner depths that lies above `depth`.
-fn part_above(mut z: [f64; 3], depth: f64) -> f64 {
-    z.sort_by(f64::total_cmp);
-    let [high, middle, low] = z;
-    if !low.is_finite() || depth <= high {
+/// Part of a plane triangle with these finite corner depths, the least first, that lies above
+/// `depth`.
+fn part_above([high, middle, low]: [f64; 3], depth: f64) -> f64 {
+    if depth <= high {
         // A flat triangle at the very depth counts.
-        return if low.is_finite() && low <= depth {
-            1.0
-        } else {
-            0.0
-        };
+        return if low <= depth { 1.0 } else { 0.0 };
     }
     if depth >= low {
         1.0

@@ -5,7 +5,7 @@
 //! the greatest sum of two polylines is at a vertex of one of them, so the dilation is exact and
 //! continuous in the positions of the vertices: no grid stands between the parameters and the fit.
 
-use crate::dimensions::Axis;
+use crate::dimensions::{Axis, wall};
 use crate::tip::Tip;
 
 /// A tip's silhouette: vertices of heights `<= 0`, offsets from the apex increasing.
@@ -31,15 +31,12 @@ pub(super) enum Between {
 impl Silhouette {
     /// The highest point along the line at each offset across it, in pixels along `axis`.
     pub fn of(tip: &Tip, axis: Axis, between: Between) -> Self {
-        let (shape, pitch) = match axis {
-            Axis::X => (tip.shape(), tip.pitch().x),
-            Axis::Y => (tip.shape().reversed_axes(), tip.pitch().y),
-        };
-        let centre = (shape.ncols() / 2) as f64;
-        let cells = shape.columns().into_iter().enumerate().map(|(c, column)| {
-            let top = column.iter().copied().fold(f32::NEG_INFINITY, f32::max);
-            ((c as f64 - centre) * pitch, f64::from(top))
-        });
+        let (tops, pitch) = wall::tops(tip, axis);
+        let centre = (tops.len() / 2) as f64;
+        let cells = tops
+            .iter()
+            .enumerate()
+            .map(|(c, &top)| ((c as f64 - centre) * pitch, f64::from(top)));
         Self::through(cells.collect(), between)
     }
 

@@ -48,18 +48,12 @@ fn fitted(
         noise_nm: level.noise_nm,
         calibration: Calibration::default(),
         slope: level.slope,
-        corrected: Some(Corrected {
-            tip: &tip,
-            surface: &surface,
-            surface_upper: None,
-            surface_lower: None,
-            certainty: certainty.view(),
-            edge_leaning: leaning.view(),
-            identified: true,
-            height_u_nm: 0.0,
-            exercised_depth_nm: None,
-            contains_feature_radius: false,
-        }),
+        corrected: Some(Corrected::exact(
+            &tip,
+            &surface,
+            certainty.view(),
+            leaning.view(),
+        )),
     };
     let request = Request::new("it", kind);
     let mut lines = measure(&input, &request, &progress).unwrap();
