@@ -49,7 +49,15 @@ pub(super) fn draw(
     let (Some(corrected), Some(tip)) = (given.corrected, outcome.tip.as_deref()) else {
         return Ok(lines);
     };
-    let chain = Chain::new(level, &given, scanner(outcome), corrected, tip, spec)?;
+    let chain = Chain::new(
+        level,
+        &given,
+        scanner(outcome),
+        corrected,
+        tip,
+        spec,
+        progress,
+    )?;
     let base = chain.measure(
         &chain.base,
         Some(chain.left_noise),
@@ -143,6 +151,8 @@ struct Chain<'a> {
     left_noise: f64,
     /// White noise to draw, nm.
     noise: f64,
+    /// Answers a cancel within a trial.
+    quiet: Progress,
 }
 
 impl<'a> Chain<'a> {
@@ -153,8 +163,10 @@ impl<'a> Chain<'a> {
         corrected: Corrected<'a>,
         tip: &'a TipResult,
         spec: &'a JobFile,
+        progress: &Progress,
     ) -> Result<Self> {
-        let quiet = Progress::new();
+        // Reports of the single steps would run over each other: those of the trials count.
+        let quiet = progress.silent();
         let scan = input.scan;
         let mut heights = morphology::dilate(corrected.surface.heights(), tip.tip.shape(), &quiet)?;
         Zip::from(&mut heights)
@@ -183,6 +195,7 @@ impl<'a> Chain<'a> {
             corrected,
             tip,
             spec,
+            quiet,
         })
     }
 
@@ -201,12 +214,7 @@ impl<'a> Chain<'a> {
         };
         let mut lines = Vec::new();
         for request in &self.spec.dimensions {
-            lines.extend(measure_one(
-                &input,
-                &self.scanner,
-                request,
-                &Progress::new(),
-            )?);
+            lines.extend(measure_one(&input, &self.scanner, request, &self.quiet)?);
         }
         Ok(lines)
     }
@@ -235,12 +243,11 @@ impl<'a> Chain<'a> {
     }
 
     fn trial(&self, random: &mut ChaCha8Rng) -> Result<Vec<Dimension>> {
-        // Reports of the single steps would run over each other: those of the trials count.
-        let quiet = Progress::new();
+        let quiet = &self.quiet;
         let noisy = self.noisy(random);
-        let level = leveling::level(&noisy, &self.leveling, &quiet)?;
+        let level = leveling::level(&noisy, &self.leveling, quiet)?;
         let tip = drawn_tip(self.tip, random.sample(StandardNormal))?;
-        let heights = morphology::erode(level.map.heights(), tip.shape(), &quiet)?;
+        let heights = morphology::erode(level.map.heights(), tip.shape(), quiet)?;
         let surface = level.map.with_heights(heights, "eroded");
         self.measure(&level.map, level.noise_nm, self.with(&tip, &surface))
     }
@@ -393,6 +400,7 @@ mod tests {
                 corrected,
                 tip,
                 &job.file,
+                &Progress::new(),
             )
             .unwrap();
             assert!(chain.left_noise < level.noise_nm.unwrap());

@@ -261,6 +261,20 @@ pub struct TipSpec {
 }
 
 impl JobFile {
+    /// Rewrites every path, so far relative to the folder `from`, as seen from the folder `to`.
+    pub fn move_paths(&mut self, from: &Path, to: &Path) {
+        let scan = &mut self.scan;
+        let further = [
+            &mut scan.retrace,
+            &mut scan.second,
+            &mut self.tip.file,
+            &mut self.tip.scan,
+        ];
+        for path in std::iter::once(&mut scan.file).chain(further.into_iter().flatten()) {
+            *path = relative_to(&from.join(&*path), to);
+        }
+    }
+
     /// A job on `file` with everything left to the program.
     pub fn on_scan(file: impl Into<PathBuf>) -> Self {
         Self {
@@ -526,24 +540,12 @@ impl Job {
         }
     }
 
-    /// Saves the job atomically to `path` and takes that as its home; the scan's and the tip's
-    /// paths are rewritten so that they still point to the same files.
+    /// Saves the job atomically to `path` and takes that as its home; its paths are rewritten so
+    /// that they still point to the same files.
     pub fn save(&mut self, path: &Path) -> Result<()> {
         let folder = path.parent().unwrap_or(Path::new("")).to_owned();
         let mut file = self.file.clone();
-        file.scan.file = relative_to(&self.folder.join(&file.scan.file), &folder);
-        for further in [&mut file.scan.retrace, &mut file.scan.second]
-            .into_iter()
-            .flatten()
-        {
-            *further = relative_to(&self.folder.join(&*further), &folder);
-        }
-        if let Some(tip) = &file.tip.file {
-            file.tip.file = Some(relative_to(&self.folder.join(tip), &folder));
-        }
-        if let Some(scan) = &file.tip.scan {
-            file.tip.scan = Some(relative_to(&self.folder.join(scan), &folder));
-        }
+        file.move_paths(&self.folder, &folder);
         let text = file.to_toml()?;
         files::write_atomically(path, text.as_bytes())?;
         self.file = file;

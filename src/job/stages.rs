@@ -213,7 +213,7 @@ impl Stages {
         }
         watch(&outcome);
 
-        let tip = self.tip_of(job, &level, &progress.part(0.1, 0.7))?;
+        let tip = self.tip_of(job, &level, &progress.part(0.12, 0.7))?;
         match &*tip {
             Ok(found) => {
                 if !found.identified {
@@ -380,9 +380,10 @@ fn find_tip(job: &Job, level: &Leveled, progress: &Progress) -> Result<TipOrReas
     let spec = &job.file.tip;
     let scan = &level.map;
     let own = match spec.own_scan() {
-        Some(path) => Some(tip_scan(job, path, progress)?),
+        Some(path) => Some(tip_scan(job, path, &progress.part(0.0, 0.1))?),
         None => None,
     };
+    let progress = &progress.part(0.1, 1.0);
     let shown = own.as_ref().unwrap_or(level);
     let sha256 = own.as_ref().and_then(|o| o.map.provenance().sha256.clone());
     if spec.from == TipFrom::KnownShape {

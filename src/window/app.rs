@@ -350,8 +350,10 @@ impl App {
                 self.laid = Some(LaidOver::new(path, uncertainty, found));
             }
             Done::Compared([first, second], result) => {
+                // An answer that comes late is of a tip that is not asked about any more.
                 if let Some(laid) = &mut self.laid
                     && std::sync::Arc::ptr_eq(&laid.found, &first)
+                    && laid.asked_about(&second)
                 {
                     laid.compared = Some((second, result.map_err(|e| e.to_string())));
                 }
@@ -417,9 +419,7 @@ impl App {
         } else {
             // Edited meanwhile: paths are seen from the new folder now, the rest stays unsaved.
             let mut now = opened.history.now().clone();
-            now.scan.file.clone_from(&job.file.scan.file);
-            now.tip.file.clone_from(&job.file.tip.file);
-            now.tip.scan.clone_from(&job.file.tip.scan);
+            now.move_paths(&opened.folder, &job.folder);
             opened.history.mark_saved(job.file);
             opened.history.edit(now, false);
         }

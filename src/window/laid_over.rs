@@ -22,7 +22,7 @@ pub struct LaidOver {
     /// The tip it was compared with, and what came of it; `None` while under way.
     pub compared: Option<(Arc<TipResult>, Result<Comparison, String>)>,
     /// The tip that a comparison was asked for.
-    pub asked: Option<Arc<TipResult>>,
+    asked: Option<Arc<TipResult>>,
 }
 
 impl LaidOver {
@@ -45,11 +45,16 @@ impl LaidOver {
 
     /// Whether a comparison with `tip` has to be asked for; from then on it counts as asked.
     pub fn must_compare(&mut self, tip: &Arc<TipResult>) -> bool {
-        let asked = self.asked.as_ref().is_some_and(|a| Arc::ptr_eq(a, tip));
+        let asked = self.asked_about(tip);
         if !asked {
             self.asked = Some(Arc::clone(tip));
         }
         !asked
+    }
+
+    /// Whether `tip` is the one last asked about.
+    pub fn asked_about(&self, tip: &Arc<TipResult>) -> bool {
+        self.asked.as_ref().is_some_and(|a| Arc::ptr_eq(a, tip))
     }
 
     /// The comparison with `tip`, once it is there.
