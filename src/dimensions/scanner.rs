@@ -151,7 +151,13 @@ fn widen(line: &mut Dimension, added: Vec<Component>) {
         return;
     };
     let outwards = after.symmetric(0.95).expanded - before.symmetric(0.95).expanded;
-    corrected.low = corrected.low.map(|low| (low - outwards).max(0.0));
+    // A difference has a sign; everything else is a length.
+    let least = if line.kind == Kind::Distance {
+        f64::NEG_INFINITY
+    } else {
+        0.0
+    };
+    corrected.low = corrected.low.map(|low| (low - outwards).max(least));
     corrected.high = corrected.high.map(|high| high + outwards);
     if let Some(u) = corrected.u {
         // What it was, correlations and all, with the new beside it.
@@ -208,6 +214,21 @@ mod tests {
 
     const ACROSS: [f64; 4] = [20.0, 50.0, 80.0, 50.0];
     const ALONG: [f64; 4] = [20.0, 50.0, 20.0, 150.0];
+
+    #[test]
+    fn a_falling_height_difference_stays_within_its_interval() {
+        let scanner = Scanner {
+            hysteresis_height_nm: Some(1.0),
+            ..Scanner::default()
+        };
+        let fallen = entered(
+            scanner,
+            line(Kind::Distance, "height difference", ACROSS, -12.0),
+        );
+        let corrected = fallen.corrected.unwrap();
+        let (low, high) = (corrected.low.unwrap(), corrected.high.unwrap());
+        assert!(low < -12.588 && high > -12.0 + 1.588, "{corrected:?}");
+    }
 
     /// Half a known shift, as a rectangular half-width (JCGM 100:2008, 4.3.7).
     #[test]

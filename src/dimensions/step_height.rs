@@ -618,7 +618,7 @@ fn correct(
         column = CorrectedValue::between(Some(a - all.expanded), Some(b + all.expanded));
         line.status = Some(Status::Bounded);
         line.flags.push(
-            "the tip is not identified: bounds only; a step between wide plateaus does not              depend on it, see the scanned value"
+            "the tip is not identified: bounds only; a step between wide plateaus does not depend on it, see the scanned value"
                 .to_owned(),
         );
     }

@@ -105,8 +105,11 @@ pub(super) fn draw(
         let tolerance = numerical_tolerance(u, 1) + 2.0 * doubt[0].max(doubt[1]);
         let (low, high) = (low - below, high + above);
         let budget = line.corrected.and_then(|c| c.low.zip(c.high));
-        let agrees = budget
-            .map(|(a, b)| (a - low.max(0.0)).abs() <= tolerance && (b - high).abs() <= tolerance);
+        let agrees = budget.map(|(a, b)| {
+            // Intervals of lengths end at 0, those of differences may go below.
+            let low = if a < 0.0 { low } else { low.max(0.0) };
+            (a - low).abs() <= tolerance && (b - high).abs() <= tolerance
+        });
         if agrees == Some(false) {
             line.flags.push(format!(
                 "Monte Carlo through the whole chain gives {low:.3} to {high:.3} {}, further from \
