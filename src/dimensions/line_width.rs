@@ -3,7 +3,7 @@
 
 use super::erosion;
 use super::sections::{Frame, Layout};
-use super::trace::{Correction, Feature, Trace};
+use super::trace::{self, Correction, Feature, Trace};
 use super::wall::{self, Hold};
 use super::{
     Axis, Corrected, CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer,
@@ -183,12 +183,7 @@ fn fill(
     match correction {
         Some(correction) => correct(line, frame, scan, &scanned, correction, i, calibration),
         None => {
-            if input.corrected.is_some() {
-                line.flags.push(
-                    "no corrected value: the edges are lost in the reconstructed surface"
-                        .to_owned(),
-                );
-            }
+            trace::flag_lost(line, input);
             line.budget = budget.into_components();
         }
     }

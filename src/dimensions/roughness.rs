@@ -7,7 +7,7 @@
 
 use super::line_width::common_flags;
 use super::statistics;
-use super::trace::{Feature, Trace};
+use super::trace::{self, Feature, Trace};
 use super::{Axis, CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer};
 use crate::error::Result;
 use crate::progress::Progress;
@@ -317,6 +317,7 @@ fn fill(
         line.flags.push(too_noisy(&scanned));
     }
     let Some(correction) = &feature.correction else {
+        trace::flag_lost(line, input);
         if length.as_scanned.is_none() {
             length.flags.push(no_length());
         }

@@ -2,7 +2,7 @@
 
 use super::line_width::common_flags;
 use super::statistics;
-use super::trace::{Correction, Feature, Trace};
+use super::trace::{self, Correction, Feature, Trace};
 use super::{
     Axis, Calibration, CorrectedValue, Dimension, Input, Kind, Request, Status, Value, answer,
 };
@@ -182,12 +182,7 @@ fn fill(line: &mut Dimension, input: &Input, feature: &Feature, fractions: &[f64
             correct(line, input, feature, correction, fractions, k, seen);
         }
         None => {
-            if input.corrected.is_some() {
-                line.flags.push(
-                    "no corrected value: the edges are lost in the reconstructed surface"
-                        .to_owned(),
-                );
-            }
+            trace::flag_lost(line, input);
             line.budget = budget.into_components();
         }
     }

@@ -58,6 +58,10 @@ pub(super) fn measure(
         .corrected
         .and_then(|c| Some((c, levels(sections::cut(c.surface, pixels), noise)?)));
     let Some((given, surface)) = surface else {
+        if input.corrected.is_some() {
+            line.flags
+                .push("no corrected value: the reconstruction shows no two levels".to_owned());
+        }
         line.budget = budget.into_components();
         return Ok(vec![line]);
     };

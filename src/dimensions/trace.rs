@@ -3,7 +3,7 @@
 use super::sections::{self, Frame, Layout};
 use super::statistics::{self, Level};
 use super::wall::{Outline, Wall};
-use super::{Axis, Corrected, Input, Request};
+use super::{Axis, Corrected, Dimension, Input, Request};
 use crate::error::Result;
 use crate::heightmap::HeightMap;
 use crate::uncertainty::{Pooled, Series};
@@ -58,6 +58,14 @@ impl<'a> Feature<'a> {
             scan,
             correction,
         })
+    }
+}
+
+/// Says why a line that could be measured on the scan only has no corrected value.
+pub(super) fn flag_lost(line: &mut Dimension, input: &Input) {
+    if input.corrected.is_some() {
+        line.flags
+            .push("no corrected value: the edges are lost in the reconstructed surface".to_owned());
     }
 }
 
