@@ -68,6 +68,9 @@ impl Progress {
 
     /// Says in words what is being done now ("estimating the tip").
     pub fn say(&self, label: &str) {
+        if self.span == 0.0 {
+            return;
+        }
         if let Ok(mut held) = self.shared.label.lock()
             && *held != label
         {
@@ -119,6 +122,19 @@ mod tests {
         let part = whole.part(0.5, 1.0).part(0.0, 0.5);
         part.report(1.0);
         assert!((whole.fraction() - 0.75).abs() < 1e-6);
+    }
+
+    #[test]
+    fn a_silent_handle_only_answers_a_cancel() {
+        let whole = Progress::new();
+        whole.say("drawing");
+        whole.report(0.4);
+        let silent = whole.silent();
+        silent.say("levelling");
+        silent.report(0.1);
+        assert_eq!((whole.label().as_str(), whole.fraction()), ("drawing", 0.4));
+        whole.cancel();
+        assert!(silent.check().is_err_and(|e| e.is_cancelled()));
     }
 
     #[test]
